@@ -1,0 +1,1 @@
+"""Room `check`: see DEVELOPERS.md."""

@@ -1,0 +1,1 @@
+"""Room `circuit`: see DEVELOPERS.md."""

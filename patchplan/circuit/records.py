@@ -1,0 +1,111 @@
+"""The Circuit: parts on nets, nothing else needed to simulate or solder it."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+
+from patchplan.equation.system import Source
+from patchplan.sizing.records import MultiplierFigures, OpAmpFigures
+
+#: Net order of each kind of part.
+KINDS = {
+    "resistor": ("a", "b"),
+    "potentiometer": ("end a", "wiper", "end b"),
+    "capacitor": ("a", "b"),
+    "op amp": ("plus", "minus", "out"),
+    "multiplier": ("x1", "x2", "y1", "y2", "z", "w"),
+    "switch": ("a", "b"),
+    "reference": ("out",),
+    "source": ("out",),
+    "decoupling": ("rail", "ground"),
+}
+GROUND = "0"
+
+
+@dataclass(frozen=True, slots=True)
+class Part:
+    """One part.
+
+    Attributes
+    ----------
+    ref
+        Reference designator: R1, C1, U1A (section A of package U1), U2, S1 ...
+    value
+        Ohm, farad, volts of a reference; volts per unit (signed) of a source; setting 0..1 of a potentiometer
+        (resistance between end a and wiper over ``total``); on-resistance of a switch.
+    total
+        Track resistance of a potentiometer [ohm].
+    model
+        Catalogue name of an active part, dielectric of a capacitor, name of the Source of a source.
+    closed
+        Of a switch: "operate" or "hold".
+    stage
+        Name of the patch stage it belongs to, "" for shared parts.
+    package, section
+        Package designator ("U1") and section ("A" to "D"); "" for passive parts.
+    """
+
+    ref: str
+    kind: str
+    nets: tuple[str, ...]
+    value: float = 0.0
+    tolerance: float = 0.0
+    stage: str = ""
+    package: str = ""
+    section: str = ""
+    model: str = ""
+    total: float = 0.0
+    closed: str = ""
+
+    def __str__(self) -> str:
+        return f"{self.ref} {self.kind} {' '.join(self.nets)} {self.value:.9g} {self.model} {self.closed}".rstrip()
+
+
+@dataclass(frozen=True, slots=True)
+class NodeMap:
+    """What a signal node means: v(node) = sign * volts_per_unit * signal + offset_volts."""
+
+    node: str
+    signal: str
+    sign: int
+    volts_per_unit: float
+    offset_volts: float
+    limit_volts: float
+    role: str
+
+
+@dataclass(frozen=True)
+class Circuit:
+    """The board.
+
+    Attributes
+    ----------
+    parts
+        All parts, in a stable order.
+    nodes
+        By net name: the nets that carry signals.
+    watched
+        Signal -> net.
+    time_scale
+        Circuit seconds per unit of problem time (needed to drive the sources).
+    duration
+        Run time [circuit s].
+    sources
+        The waveforms behind the source parts, by name.
+    """
+
+    parts: tuple[Part, ...]
+    nodes: Mapping[str, NodeMap]
+    watched: Mapping[str, str]
+    op_amp: OpAmpFigures
+    multiplier: MultiplierFigures
+    supply: tuple[float, float]
+    time_scale: float
+    duration: float
+    run: str
+    sources: Mapping[str, Source] = field(default_factory=dict)
+    notes: tuple[str, ...] = ()
+
+    def __str__(self) -> str:
+        return "\n".join(map(str, self.parts))

@@ -1,0 +1,1 @@
+"""Room `equation`: see DEVELOPERS.md."""

@@ -1,0 +1,1 @@
+"""Room `form`: see DEVELOPERS.md."""

@@ -1,0 +1,1 @@
+"""Room `patch`: see DEVELOPERS.md."""

@@ -1,0 +1,1 @@
+"""Room `reach`: see DEVELOPERS.md."""

@@ -1,0 +1,1 @@
+"""Room `sizing`: see DEVELOPERS.md."""

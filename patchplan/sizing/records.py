@@ -1,0 +1,172 @@
+"""What Sizing needs to know of the target, and what it decides."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+
+
+@dataclass(frozen=True, slots=True)
+class OpAmpFigures:
+    """Typical figures of the op amp, SI units.
+
+    Attributes
+    ----------
+    gain, gain_bandwidth
+        DC open-loop gain [V/V] and gain-bandwidth as an angular frequency [rad/s].
+    slew
+        [V/s].
+    low, high
+        Output swing into the rated load on the chosen supply [V].
+    offset, bias
+        Typical Vos [V] and Ib [A].
+    load
+        Rated load [ohm]: the summed load of an output is kept at or above it.
+    """
+
+    name: str
+    gain: float
+    gain_bandwidth: float
+    slew: float
+    low: float
+    high: float
+    offset: float
+    bias: float
+    load: float
+
+
+@dataclass(frozen=True, slots=True)
+class MultiplierFigures:
+    """Typical figures of the multiplier: W = X*Y/scale; ``limit`` is the full-scale input and output [V]."""
+
+    name: str
+    scale: float
+    limit: float
+    bandwidth: float
+    slew: float
+    offset: float
+    scale_error: float
+    bias: float
+
+
+@dataclass(frozen=True, slots=True)
+class Target:
+    """What the soldered board offers: purchasable values and the parts' figures.
+
+    ``resistors`` and ``capacitors`` are rising values inside the limits [ohm], [F]; ``reference`` is in volts;
+    ``switch_on`` is the operate switch's resistance [ohm], 0 where the run has no hold.
+    """
+
+    resistors: tuple[float, ...]
+    capacitors: tuple[float, ...]
+    resistor_tolerance: float
+    capacitor_tolerance: float
+    reference: float
+    reference_tolerance: float
+    op_amp: OpAmpFigures
+    multiplier: MultiplierFigures
+    switch_on: float
+    switch_leakage: float
+
+
+@dataclass(frozen=True, slots=True)
+class Leg:
+    """How one wire is made: one resistor, or a T of three (in, to ground, out) [ohm].
+
+    ``transfer`` is the resistance that would pass the same current into a virtual ground (switch not counted).
+    """
+
+    resistors: tuple[float, ...]
+
+    @property
+    def transfer(self) -> float:
+        """Equivalent resistance [ohm]: R, or R1 + R3 + R1*R3/R2 of a T."""
+        if len(self.resistors) == 1:
+            return self.resistors[0]
+        first, shunt, last = self.resistors
+        return first + last + first * last / shunt
+
+
+@dataclass(frozen=True, slots=True)
+class StageSizing:
+    """Values of one stage.
+
+    Attributes
+    ----------
+    legs
+        One for each wire of the Patch's stage, in its order; empty for multipliers, sources and the reference.
+    capacitor
+        Integrators only [F].
+    feedback
+        Feedback resistor of a summer or inverter, or the DC-limit resistor of an integrator; 0 where there is none [ohm].
+        With a knob: the value at the knob's nominal setting.
+    start
+        (resistor from the reference, resistor from the output) [ohm]; the first is 0 where the start value is 0;
+        None where the stage has no hold (``run = "free"`` and all stages but integrators).
+    start_volts
+        Start value that these resistors give [V], signed.
+    """
+
+    stage: str
+    legs: tuple[Leg, ...] = ()
+    capacitor: float = 0.0
+    feedback: float = 0.0
+    start: tuple[float, float] | None = None
+    start_volts: float = 0.0
+
+
+@dataclass(frozen=True, slots=True)
+class NodeScale:
+    """Scale of one node: v = sign * volts_per_unit * (signal - offset), ``peak`` and ``limit`` in volts."""
+
+    node: str
+    volts_per_unit: float
+    peak_volts: float
+    limit_volts: float
+
+
+@dataclass(frozen=True, slots=True)
+class Coefficient:
+    """One realised number: wanted and realised in problem units, with the fitted scale factors."""
+
+    at: str
+    wanted: float
+    realised: float
+
+    @property
+    def error_percent(self) -> float:
+        """Relative error [%]."""
+        return 100.0 * (self.realised / self.wanted - 1.0)
+
+
+@dataclass(frozen=True)
+class Sizing:
+    """Scale factors, speed and values.
+
+    Attributes
+    ----------
+    time_scale
+        Circuit seconds per unit of problem time.
+    window, limits
+        Lowest and highest usable time scale, and a sentence on what sets each end.
+    scales
+        By node.
+    stages
+        By stage name.
+    loop_errors
+        Relative error of each independent loop of the patch: what no choice of scale factors can take away.
+    faults
+        Sentences on what cannot be built; empty for a usable plan.
+    notes
+        Sentences for the plan: drift of modes, content below the DC-limit decade, forced choices.
+    """
+
+    time_scale: float
+    window: tuple[float, float]
+    limits: tuple[str, str]
+    scales: Mapping[str, NodeScale]
+    stages: Mapping[str, StageSizing]
+    coefficients: tuple[Coefficient, ...]
+    loop_errors: tuple[float, ...] = ()
+    faults: tuple[str, ...] = ()
+    notes: tuple[str, ...] = field(default=())
