@@ -93,6 +93,8 @@ class Circuit:
         Run time [circuit s].
     sources
         The waveforms behind the source parts, by name.
+    start
+        Node -> volts wanted at the start, for integrators that no hold network sets.
     """
 
     parts: tuple[Part, ...]
@@ -106,6 +108,7 @@ class Circuit:
     run: str
     sources: Mapping[str, Source] = field(default_factory=dict)
     notes: tuple[str, ...] = ()
+    start: Mapping[str, float] = field(default_factory=dict)
 
     def __str__(self) -> str:
         return "\n".join(map(str, self.parts))
