@@ -37,8 +37,8 @@ class Stage:
 
     Every integrator, summer and inverter inverts: coefficient * sign * (sign of the wire's node) < 0, where a knob
     counts with the sign of its nominal value. A knob whose range crosses zero has ``bipolar`` set: then the stage has
-    two wires, the two ends of its potentiometer, which carry the same signal in both polarities; the equation counts the
-    first wire only, and the sign rule does not bind (the potentiometer gives either sign).
+    two wires, the two ends of its potentiometer, which carry the same signal in both polarities; the equation counts
+    the first wire only, and the sign rule does not bind (the potentiometer gives either sign).
     """
 
     name: str
@@ -56,7 +56,8 @@ class Stage:
         wires = ", ".join(f"{w.coefficient}*{w.source}" for w in self.wires)
         knob = f" knob {self.knob}" if self.knob else ""
         start = f" from {self.start}" if self.kind == "integrator" else ""
-        return f"{self.name} {self.kind} {self.node} = {'+' if self.sign > 0 else '-'}{self.signal}{knob}{start} <- {wires}"
+        mark = "+" if self.sign > 0 else "-"
+        return f"{self.name} {self.kind} {self.node} = {mark}{self.signal}{knob}{start} <- {wires}"
 
 
 @dataclass(frozen=True)

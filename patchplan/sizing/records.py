@@ -98,7 +98,7 @@ class StageSizing:
     capacitor
         Integrators only [F].
     feedback
-        Feedback resistor of a summer or inverter, or the DC-limit resistor of an integrator; 0 where there is none [ohm].
+        Feedback resistor of a summer or inverter, or the DC-limit resistor of an integrator; 0 for none [ohm].
         With a knob: the value at the knob's nominal setting.
     start
         (resistor from the reference, resistor from the output) [ohm]; the first is 0 where the start value is 0;

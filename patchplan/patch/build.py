@@ -1,0 +1,213 @@
+"""From the Form to stages and wires."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass, field, replace
+from fractions import Fraction
+from typing import TypeAlias
+
+from patchplan.equation.system import Knob, Monomial, Row, System, Term
+from patchplan.equation.tree import Origin
+from patchplan.form.records import Form
+from patchplan.patch.naming import Names
+from patchplan.patch.products import plan_products
+from patchplan.patch.records import Patch, Stage, Wire
+from patchplan.patch.signs import Link, Signs, choose_signs
+
+REFERENCE = "1"
+_LETTERS = {"integrator": "I", "summer": "S", "inverter": "N", "multiplier": "M", "source": "V"}
+#: Key of what is taken, coefficient, place in the file.
+_Input: TypeAlias = tuple[str, Fraction, Origin | None]
+
+
+@dataclass
+class _Draft:
+    """A stage while it is drawn up: inputs are (key of the source, coefficient); keys are unique signal texts."""
+
+    key: str
+    kind: str
+    inputs: list[_Input] = field(default_factory=list)
+    start: Fraction = Fraction(0)
+    knob: Knob | None = None
+    origin: Origin | None = None
+
+    @property
+    def bipolar(self) -> bool:
+        """Whether the knob's range crosses zero."""
+        return self.knob is not None and self.knob.low < 0 < self.knob.high
+
+
+def build_patch(form: Form, *, hold: bool = True, node_limit: int = 2000) -> Patch:
+    """Draw the patch of a Form.
+
+    Parameters
+    ----------
+    form
+        The equations in board variables.
+    hold
+        Whether start values are set from the reference (a run that is reset); they then ask for its polarities.
+    node_limit
+        Of the search for the fewest sign stages.
+    """
+    drafts = _drafts(form.system)
+    signs = _signs(form, drafts, hold, node_limit)
+    return _assemble(form, drafts, signs, hold)
+
+
+def _drafts(system: System) -> dict[str, _Draft]:
+    """All stages but those that only turn a sign, by key, sources first."""
+    knobs = {k.name: k for k in system.knobs}
+    rows, knob_stages = _take_out_knobs((*system.rows, *system.signals))
+    states = {s.name: s for s in system.states}
+    terms = [t for r in (*rows, *(row for row, _ in knob_stages)) for t in r.terms]
+    used = {n for t in terms for n, _ in t.factors}
+    drafts: dict[str, _Draft] = {REFERENCE: _Draft(REFERENCE, "reference")}
+    watched = {name for name, _ in system.watch}
+    for source in system.sources:
+        if source.name in used or source.name in watched:
+            drafts[source.name] = _Draft(source.name, "source")
+    needed = [t.factors for t in terms if t.degree > 1]
+    for row in rows[: len(system.rows)]:
+        drafts[row.name] = _Draft(row.name, "integrator", _inputs(row), states[row.name].start, origin=row.origin)
+    for made, left, right in plan_products(needed):
+        pair: list[_Input] = [(_key(left), Fraction(1), None), (_key(right), Fraction(1), None)]
+        drafts[_key(made)] = _Draft(_key(made), "multiplier", pair)
+    for row, knob in knob_stages:
+        drafts[row.name] = _Draft(row.name, "summer", _inputs(row), knob=knobs[knob], origin=row.origin)
+    for row in rows[len(system.rows) :]:
+        drafts[row.name] = _Draft(row.name, "summer", _inputs(row), origin=row.origin)
+    for draft in [d for d in drafts.values() if d.bipolar]:
+        _feed_both_ends(draft, drafts)
+    return drafts
+
+
+def _inputs(row: Row) -> list[_Input]:
+    return [(_key(t.factors), t.coefficient, t.origin) for t in row.terms]
+
+
+def _key(factors: Monomial) -> str:
+    """Unique text of what a node carries; a single signal keeps its name."""
+    return "*".join(n if p == 1 else f"{n}^{p}" for n, p in factors) or REFERENCE
+
+
+def _take_out_knobs(rows: Iterable[Row]) -> tuple[list[Row], list[tuple[Row, str]]]:
+    """Replace each group of terms under one knob by that knob's stage.
+
+    Groups that are multiples of each other share the stage, so that one knob serves them all.
+
+    Returns
+    -------
+    tuple of list
+        Rows without knobs, and (row, knob) of the knob stages, named ``knob * (sum)``, inner ones first.
+    """
+    stages: dict[str, tuple[Row, str]] = {}
+
+    def strip(row: Row) -> Row:
+        plain = [t for t in row.terms if not t.knobs]
+        groups: dict[str, list[Term]] = {}
+        for term in row.terms:
+            if term.knobs:
+                inner = replace(term, knobs=term.knobs[1:])
+                groups.setdefault(term.knobs[0], []).append(inner)
+        for name, terms in groups.items():
+            lead = terms[0].coefficient
+            scaled = tuple(replace(t, coefficient=t.coefficient / lead) for t in terms)
+            body = strip(Row("", scaled))
+            text = " + ".join(f"{t.coefficient}*{_key(t.factors)}" for t in body.terms)
+            key = f"{name} * ({text})"
+            stages.setdefault(key, (Row(key, body.terms, terms[0].origin), name))
+            plain.append(Term(lead, ((key, 1),), (), terms[0].origin))
+        return Row(row.name, tuple(plain), row.origin)
+
+    stripped = [strip(row) for row in rows]
+    return stripped, list(stages.values())
+
+
+def _feed_both_ends(draft: _Draft, drafts: dict[str, _Draft]) -> None:
+    """Give a knob that crosses zero one node to span, so that its inverter can hold the other end."""
+    if len(draft.inputs) > 1 or draft.inputs[0][1] != 1:
+        inner = f"({draft.key})/{draft.knob.name if draft.knob else ''}"
+        drafts[inner] = _Draft(inner, "summer", draft.inputs, origin=draft.origin)
+        draft.inputs = [(inner, Fraction(1), draft.origin)]
+
+
+def _signs(form: Form, drafts: Mapping[str, _Draft], hold: bool, node_limit: int) -> Signs:
+    """Polarity of every node, from the links that inverting stages impose."""
+    links, forced = [], []
+    for draft in drafts.values():
+        if draft.bipolar:
+            forced.append(draft.inputs[0][0])
+        elif draft.kind in ("integrator", "summer"):
+            turn = -1 if draft.knob is not None and draft.knob.value < 0 else 1
+            links += [Link(draft.key, k, (turn if c > 0 else -turn)) for k, c, _ in draft.inputs]
+        if hold and draft.kind == "integrator" and draft.start:
+            links.append(Link(draft.key, REFERENCE, 1 if draft.start > 0 else -1, is_start=True))
+    fixed = {REFERENCE: 1, **{n: (1 if s > 0 else -1) for n, s in form.scales.items() if n in drafts}}
+    fixed |= {name: polarity for name, polarity in form.system.watch if polarity and name in drafts}
+    return choose_signs(list(drafts), links, fixed, forced, node_limit=node_limit)
+
+
+class _Board:
+    """Stages as they are numbered and wired."""
+
+    def __init__(self, drafts: Mapping[str, _Draft], signs: Signs) -> None:
+        names = self._names = Names()
+        self.signs = signs
+        self.stages: list[Stage] = []
+        self._counts: dict[str, int] = {}
+        self.node = {key: "ref" if key == REFERENCE else names.node(_node_wish(d)) for key, d in drafts.items()}
+        self.sign = {self.node[key]: signs.sign[key] for key in drafts}
+        for key in (k for k in drafts if k in signs.inverted):
+            self.node[f"-{key}"] = names.node(f"{self.node[key]}_n")
+            self.sign[self.node[f"-{key}"]] = -signs.sign[key]
+
+    def add(self, kind: str, at: str, signal: str, wires: Iterable[Wire] = (), draft: _Draft | None = None) -> None:
+        """Number a stage and keep it."""
+        self._counts[kind] = number = self._counts.get(kind, 0) + 1
+        name = f"{_LETTERS[kind]}{number}" if kind in _LETTERS else "REF"
+        stage = Stage(name, kind, at, signal, self.sign[at], tuple(wires))
+        if draft is not None:
+            knob = draft.knob.name if draft.knob else None
+            stage = replace(stage, start=draft.start, knob=knob, bipolar=draft.bipolar, origin=draft.origin)
+        self.stages.append(stage)
+
+    def place(self, key: str, draft: _Draft) -> None:
+        """Place one drafted stage, with the summer in front of it or the inverter behind it that its signs need."""
+        at = self.node[key]
+        if draft.kind in ("integrator", "summer") and not draft.bipolar:
+            wires, turned = self._wires(draft, at)
+            if turned:
+                front = self._names.node(f"{at}_s")
+                self.sign[front] = -self.sign[at]
+                self.add("summer", front, f"part of {key}", turned)
+                wires.append(Wire(front, Fraction(1)))
+        else:
+            wires = [Wire(self.node[k], c, o) for k, c, o in draft.inputs]
+            if draft.bipolar:
+                wires.append(Wire(self.node[f"-{draft.inputs[0][0]}"], Fraction(1)))
+        self.add(draft.kind, at, key, wires, draft)
+        if key in self.signs.inverted:
+            self.add("inverter", self.node[f"-{key}"], key, [Wire(at, Fraction(1))])
+
+    def _node_wish(draft: _Draft) -> str:
+    if draft.kind == "multiplier":
+        return "p_" + draft.key
+    if draft.kind == "summer" and draft.knob is not None:
+        return f"k_{draft.knob.name}"
+    return draft.key
+
+
+def _ordered(stages: list[Stage]) -> tuple[Stage, ...]:
+    """Reference, sources and integrators first, then every other stage after those that feed it."""
+    done = [s for s in stages if s.kind in ("reference", "source", "integrator")]
+    ready = {s.node for s in done}
+    rest = [s for s in stages if s.node not in ready]
+    while rest:
+        now = [s for s in rest if all(w.source in ready for w in s.wires)]
+        done += now
+        ready |= {s.node for s in now}
+        rest = [s for s in rest if s.node not in ready]
+    order = {"reference": 0, "source": 1, "integrator": 2}
+    return tuple(sorted(done, key=lambda s: order.get(s.kind, 3)))
+
