@@ -190,7 +190,42 @@ class _Board:
         if key in self.signs.inverted:
             self.add("inverter", self.node[f"-{key}"], key, [Wire(at, Fraction(1))])
 
-    def _node_wish(draft: _Draft) -> str:
+    def _wires(self, draft: _Draft, at: str) -> tuple[list[Wire], list[Wire]]:
+        """Wires that fit as they are, and those that need an inverting summer in front."""
+        direct: list[Wire] = []
+        turned: list[Wire] = []
+        knob_sign = -1 if draft.knob is not None and draft.knob.value < 0 else 1
+        for key, coefficient, origin in draft.inputs:
+            wire = Wire(self.node[key], coefficient, origin)
+            right = coefficient * knob_sign * self.sign[at] * self.sign[wire.source] < 0
+            if not right and key in self.signs.inverted:
+                wire, right = replace(wire, source=self.node[f"-{key}"]), True
+            (direct if right else turned).append(wire)
+        return direct, turned
+
+
+def _assemble(form: Form, drafts: Mapping[str, _Draft], signs: Signs, hold: bool) -> Patch:
+    """Number the stages, put in the sign stages and draw the wires."""
+    board = _Board(drafts, signs)
+    for key, draft in drafts.items():
+        if key != REFERENCE or _reference_used(drafts, hold):
+            board.place(key, draft)
+    system = form.system
+    watched = {name.removesuffix(".out"): board.node[name] for name, _ in system.watch}
+    sources = {s.name: s for s in system.sources if s.name in drafts}
+    turning = len(signs.inverted) + sum(s.signal.startswith("part of ") for s in board.stages)
+    knobs = {k.name: k for k in system.knobs}
+    return Patch(_ordered(board.stages), watched, sources, knobs, turning, signs.lower_bound)
+
+
+def _reference_used(drafts: Mapping[str, _Draft], hold: bool) -> bool:
+    return any(
+        (hold and d.kind == "integrator" and d.start) or any(k == REFERENCE for k, _, _ in d.inputs)
+        for d in drafts.values()
+    )
+
+
+def _node_wish(draft: _Draft) -> str:
     if draft.kind == "multiplier":
         return "p_" + draft.key
     if draft.kind == "summer" and draft.knob is not None:
@@ -210,4 +245,3 @@ def _ordered(stages: list[Stage]) -> tuple[Stage, ...]:
         rest = [s for s in rest if s.node not in ready]
     order = {"reference": 0, "source": 1, "integrator": 2}
     return tuple(sorted(done, key=lambda s: order.get(s.kind, 3)))
-
