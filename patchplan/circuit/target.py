@@ -1,0 +1,130 @@
+"""What the chosen parts, series and supply offer to Sizing."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping
+
+from patchplan.circuit.catalogue import Catalogue, PartData
+from patchplan.equation.problem import Build
+from patchplan.errors import CannotBuild
+from patchplan.sizing.records import MultiplierFigures, OpAmpFigures, Target
+from patchplan.sizing.series import values_between
+
+
+def target_of(build: Build, catalogue: Catalogue, *, multipliers: bool = True) -> Target:
+    """Purchasable values, swings and figures for a build.
+
+    Parameters
+    ----------
+    multipliers
+        Whether the patch has multipliers; without them the multiplier's supply is not looked at.
+
+    Raises
+    ------
+    CannotBuild
+        Where a part is unknown, the supply is outside a part's range, or the reference is outside the swing.
+    """
+    low, high = build.supply
+    op_amp = _op_amp(build, _part(catalogue.op_amps, build.op_amp, "op amp"))
+    if not op_amp.low < 0 < op_amp.high:
+        raise CannotBuild(
+            f"Ground must lie inside the swing of {op_amp.name}, which is {op_amp.low:.3g} V to {op_amp.high:.3g} V on "
+            f"a supply of {low:g} V to {high:g} V. Choose rails on both sides of 0 V."
+        )
+    if build.reference > min(op_amp.high, -op_amp.low):
+        raise CannotBuild(
+            f"The reference of {build.reference:g} V is outside the swing of {op_amp.name}, {op_amp.low:.3g} V to "
+            f"{op_amp.high:.3g} V, and is wanted in both polarities. Choose a lower reference or a higher supply."
+        )
+    switch = switch_for(build, catalogue) if build.run != "free" else None
+    return Target(
+        resistors=_values(build.resistors, build.resistor_limits, "resistor"),
+        capacitors=_values(build.capacitors, build.capacitor_limits, "capacitor"),
+        resistor_tolerance=build.resistor_tolerance,
+        capacitor_tolerance=build.capacitor_tolerance,
+        reference=build.reference,
+        reference_tolerance=build.reference_tolerance,
+        op_amp=op_amp,
+        multiplier=_multiplier(build, _part(catalogue.multipliers, build.multiplier, "multiplier"), multipliers),
+        switch_on=switch.si("on_resistance") if switch else 0.0,
+        switch_leakage=switch.si("leakage") if switch else 0.0,
+    )
+
+
+def switch_for(build: Build, catalogue: Catalogue) -> PartData:
+    """First analog switch of the catalogue that takes the supply.
+
+    Raises
+    ------
+    CannotBuild
+        Where none does.
+    """
+    total = build.supply[1] - build.supply[0]
+    for switch in catalogue.switches.values():
+        if switch.si("supply_min") <= total <= switch.si("supply_max"):
+            return switch
+    raise CannotBuild(
+        f"No analog switch of the catalogue takes a supply of {total:g} V in total. Add one as [part.NAME] with "
+        'kind = "switch", or choose run = "free", which needs no switches.'
+    )
+
+
+def _op_amp(build: Build, part: PartData) -> OpAmpFigures:
+    _check_supply(build, part)
+    low, high = build.supply
+    return OpAmpFigures(
+        name=part.name,
+        gain=part.si("gain"),
+        gain_bandwidth=2 * math.pi * part.si("gain_bandwidth"),
+        slew=part.si("slew"),
+        low=low + part.si("swing_low"),
+        high=high - part.si("swing_high"),
+        offset=part.si("offset"),
+        bias=part.si("bias"),
+        load=part.si("load"),
+    )
+
+
+def _multiplier(build: Build, part: PartData, wanted: bool) -> MultiplierFigures:
+    if wanted:
+        _check_supply(build, part)
+    low, high = build.supply
+    swing = min(high - part.si("swing_high"), -(low + part.si("swing_low")))
+    if wanted and swing <= 0:
+        raise CannotBuild(f"{part.name} has no swing on a supply of {low:g} V to {high:g} V. Choose a higher supply.")
+    return MultiplierFigures(
+        name=part.name,
+        scale=part.si("scale"),
+        limit=min(part.si("full_scale"), swing) if swing > 0 else part.si("full_scale"),
+        bandwidth=2 * math.pi * part.si("bandwidth"),
+        slew=part.si("slew"),
+        offset=part.si("offset"),
+        scale_error=part.si("scale_error"),
+        bias=part.si("bias"),
+    )
+
+
+def _check_supply(build: Build, part: PartData) -> None:
+    low, high = build.supply
+    least, largest = part.si("supply_min"), part.si("supply_max")
+    if not least <= high - low <= largest:
+        raise CannotBuild(
+            f"The supply of {low:g} V to {high:g} V is {high - low:g} V in total; {part.name} takes {least:g} V to "
+            f"{largest:g} V. Change build.supply or choose another part."
+        )
+
+
+def _part(parts: Mapping[str, PartData], name: str, kind: str) -> PartData:
+    if name not in parts:
+        raise CannotBuild(f"The {kind} {name} is not in the catalogue. Known are {', '.join(parts)}.")
+    return parts[name]
+
+
+def _values(series: str, limits: tuple[float, float], kind: str) -> tuple[float, ...]:
+    values = values_between(series, *limits)
+    if not values:
+        raise CannotBuild(
+            f"The series {series} has no {kind} between {limits[0]:g} and {limits[1]:g}. Widen the limits."
+        )
+    return values
