@@ -1,4 +1,4 @@
-"""The parts catalogue: figures with unit and source, from ``parts.toml`` and the ``[part.NAME]`` tables of a problem."""
+"""The parts catalogue: figures with unit and source, of ``parts.toml`` and of a problem's ``[part.NAME]`` tables."""
 
 from __future__ import annotations
 

@@ -1,0 +1,138 @@
+"""From Patch and Sizing to parts on nets."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import replace
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from patchplan.circuit.catalogue import Catalogue
+from patchplan.circuit.packages import assign_places, decoupling
+from patchplan.circuit.records import Circuit, NodeMap, Part
+from patchplan.circuit.stages import Board, add_stage
+from patchplan.circuit.target import switch_for
+from patchplan.equation.problem import Build, Recording
+from patchplan.equation.system import Source
+from patchplan.equation.waveform import Waveform
+from patchplan.form.records import Form
+from patchplan.patch.records import Patch
+from patchplan.sizing.records import Sizing, Target
+
+Array = NDArray[np.float64]
+
+
+def build_circuit(
+    form: Form,
+    patch: Patch,
+    sizing: Sizing,
+    target: Target,
+    build: Build,
+    catalogue: Catalogue,
+    *,
+    stand_ins: Mapping[str, tuple[Array, Array]] | None = None,
+) -> Circuit:
+    """Lay out the board.
+
+    An integrator's legs meet at a bus; the operate switch joins the bus to the summing node, the hold switch joins the
+    summing node to the start network. In hold the inputs are off the summing node: they would pull the start value.
+
+    Parameters
+    ----------
+    stand_ins
+        Waveforms (times, values) [problem units] for sources known only by their bounds.
+
+    Raises
+    ------
+    CannotBuild
+        Where the supply or a knob is out of the parts' reach.
+    """
+    held = build.run != "free"
+    switch = switch_for(build, catalogue) if held else None
+    places = assign_places(
+        patch, catalogue.op_amps[target.op_amp.name], catalogue.multipliers[target.multiplier.name], switch
+    )
+    board = Board(patch, sizing, target, places, switch.name if switch else "")
+    for stage in patch.stages:
+        add_stage(board, stage)
+    for part in decoupling(places):
+        board.put(part)
+    notes = (*board.notes, *places.notes, *_load_notes(board, catalogue))
+    return Circuit(
+        parts=tuple(board.parts),
+        nodes=_node_maps(form, patch, sizing),
+        watched=dict(patch.watched),
+        op_amp=target.op_amp,
+        multiplier=target.multiplier,
+        supply=build.supply,
+        time_scale=sizing.time_scale,
+        duration=float(form.system.duration) * sizing.time_scale,
+        run=build.run,
+        sources={name: _with_waveform(source, stand_ins or {}) for name, source in patch.sources.items()},
+        notes=notes,
+    )
+
+
+def replace_part(circuit: Circuit, ref: str, **changes: Any) -> Circuit:
+    """The circuit with some fields of one part changed.
+
+    Raises
+    ------
+    KeyError
+        Where no part has this designator.
+    """
+    if all(p.ref != ref for p in circuit.parts):
+        raise KeyError(ref)
+    return replace(circuit, parts=tuple(replace(p, **changes) if p.ref == ref else p for p in circuit.parts))
+
+
+def _node_maps(form: Form, patch: Patch, sizing: Sizing) -> dict[str, NodeMap]:
+    maps = {}
+    for stage in patch.stages:
+        scale = sizing.scales[stage.node]
+        offset = -stage.sign * scale.volts_per_unit * float(form.offsets.get(stage.signal, 0))
+        maps[stage.node] = NodeMap(
+            stage.node, stage.signal, stage.sign, scale.volts_per_unit, offset, scale.limit_volts, stage.kind
+        )
+    return maps
+
+
+def _with_waveform(source: Source, stand_ins: Mapping[str, tuple[Array, Array]]) -> Source:
+    if source.waveform is not None or source.name not in stand_ins:
+        return source
+    times, values = (tuple(float(v) for v in column) for column in stand_ins[source.name])
+    return replace(source, waveform=Waveform(recording=Recording(f"stand-in for {source.name}", times, values)))
+
+
+def _load_notes(board: Board, catalogue: Catalogue) -> list[str]:
+    """One sentence for each output that drives less than the load its part is rated for."""
+    rated = {
+        "op amp": (board.target.op_amp.name, board.target.op_amp.load),
+        "multiplier": (board.target.multiplier.name, catalogue.multipliers[board.target.multiplier.name].si("load")),
+    }
+    notes = []
+    for part in board.parts:
+        if part.kind in rated:
+            name, least = rated[part.kind]
+            load = load_at(board.parts, part.nets[-1])
+            if load < least * (1 - 1e-9):
+                notes.append(
+                    f"Node {part.nets[-1]} drives {load:.3g} ohm; {name} is rated for {least:.3g} ohm, so its swing may "
+                    "be less than planned. Larger resistors would mend it."
+                )
+    return notes
+
+
+def load_at(parts: list[Part] | tuple[Part, ...], net: str) -> float:
+    """Summed load of a net [ohm], every resistor on it taken as if its other end were ground; inf where none."""
+    conductance = 0.0
+    for part in parts:
+        if part.kind == "resistor" and net in part.nets and part.value:
+            conductance += 1 / part.value
+        elif part.kind == "potentiometer" and net in (part.nets[0], part.nets[2]):
+            # A rheostat's loop is at least as long as its setting; a track across two outputs carries twice the volts.
+            share = part.value if part.nets[1] == part.nets[2] else 0.5
+            conductance += 1 / (max(share, 1e-9) * part.total)
+    return 1 / conductance if conductance else float("inf")

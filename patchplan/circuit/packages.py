@@ -1,0 +1,90 @@
+"""Which section of which package each stage gets, and what each package needs beside it."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+
+from patchplan.circuit.catalogue import PartData
+from patchplan.circuit.records import GROUND, Part
+from patchplan.patch.records import Patch, Stage
+
+#: Rails of the board.
+RAILS = ("vcc", "vee")
+#: One across each rail of each package (common practice, no source) [F].
+DECOUPLING = 100e-9
+#: Stages that take an op amp.
+WITH_OP_AMP = ("integrator", "summer", "inverter")
+
+
+@dataclass(frozen=True, slots=True)
+class Place:
+    """A section of a package."""
+
+    package: str
+    section: str
+
+
+@dataclass(frozen=True)
+class Places:
+    """Sections by stage name.
+
+    Attributes
+    ----------
+    active
+        Op amp or multiplier of each stage.
+    operate, hold
+        Switch sections of each integrator; empty without a hold.
+    packages
+        Designators of all packages, in order.
+    notes
+        Sentences on sections left over.
+    """
+
+    active: dict[str, Place]
+    operate: dict[str, Place]
+    hold: dict[str, Place]
+    packages: tuple[str, ...]
+    notes: tuple[str, ...]
+
+
+def assign_places(patch: Patch, op_amp: PartData, multiplier: PartData, switch: PartData | None) -> Places:
+    """Fill packages in stage order: op amps, then multipliers, then switches.
+
+    Parameters
+    ----------
+    switch
+        None where the run has no hold.
+    """
+    amplified = [s for s in patch.stages if s.kind in WITH_OP_AMP]
+    products = [s for s in patch.stages if s.kind == "multiplier"]
+    integrators = [s for s in patch.stages if s.kind == "integrator"] if switch else []
+    active = _fill(amplified, op_amp.sections, 1)
+    count = _last(active)
+    multiplied = _fill(products, multiplier.sections, count + 1)
+    count = max(count, _last(multiplied))
+    operate = _fill(integrators, (switch.operate if switch else ()) or ("",), count + 1)
+    hold = _fill(integrators, (switch.hold if switch else ()) or ("",), count + 1)
+    if switch and not switch.hold:
+        # A part with one contact: two of them for each integrator.
+        hold = _fill(integrators, ("",), _last(operate) + 1)
+    count = max(count, _last(operate), _last(hold))
+    left = op_amp.sections[len(amplified) % len(op_amp.sections) :] if len(amplified) % len(op_amp.sections) else ()
+    notes = [f"Tie section {s} of U{_last(active)} as a follower: minus to out, plus to ground." for s in left]
+    return Places(active | multiplied, operate, hold, tuple(f"U{i}" for i in range(1, count + 1)), tuple(notes))
+
+
+def decoupling(places: Places) -> Iterator[Part]:
+    """Capacitors from both rails to ground for each package, without designators."""
+    for package in places.packages:
+        for rail in RAILS:
+            yield Part("", "decoupling", (rail, GROUND), DECOUPLING, 0.2, package=package, model="ceramic")
+
+
+def _fill(stages: Sequence[Stage], sections: Sequence[str], first: int) -> dict[str, Place]:
+    size = len(sections)
+    return {s.name: Place(f"U{first + i // size}", sections[i % size]) for i, s in enumerate(stages)}
+
+
+def _last(places: dict[str, Place]) -> int:
+    return max((int(p.package[1:]) for p in places.values()), default=0)

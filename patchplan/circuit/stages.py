@@ -1,0 +1,208 @@
+"""Each kind of stage as parts on nets."""
+
+from __future__ import annotations
+
+from collections import Counter
+from collections.abc import Callable
+from dataclasses import dataclass, field, replace
+
+from patchplan.circuit.knobs import TRACK_TOLERANCE, Dial, crossing, rheostat
+from patchplan.circuit.packages import Place, Places
+from patchplan.circuit.records import GROUND, Part
+from patchplan.patch.records import Patch, Stage
+from patchplan.sizing.records import Leg, Sizing, StageSizing, Target
+
+DIELECTRIC = "C0G or film"
+_LETTERS = {
+    "resistor": "R", "potentiometer": "RV", "capacitor": "C", "decoupling": "C", "switch": "S",
+    "reference": "REF", "source": "SRC",
+}  # fmt: skip
+
+
+@dataclass(frozen=True)
+class Board:
+    """What every stage needs to know, and the parts and notes laid down so far."""
+
+    patch: Patch
+    sizing: Sizing
+    target: Target
+    places: Places
+    switch_name: str
+    parts: list[Part] = field(default_factory=list)
+    notes: list[str] = field(default_factory=list)
+    numbers: Counter[str] = field(default_factory=Counter)
+
+    def put(self, part: Part) -> None:
+        """Lay down a part; passive ones get the next designator of their letter."""
+        letter = _LETTERS.get(part.kind)
+        if letter is not None:
+            self.numbers[letter] += 1
+            part = replace(part, ref=f"{letter}{self.numbers[letter]}")
+        self.parts.append(part)
+
+    def resistor(self, stage: Stage, a: str, b: str, value: float) -> None:
+        """Lay down a resistor."""
+        self.put(Part("", "resistor", (a, b), value, self.target.resistor_tolerance, stage.name))
+
+    def volts(self, node: str) -> float:
+        """Signed volts per unit of the signal at a node."""
+        return self.patch.by_node()[node].sign * self.sizing.scales[node].volts_per_unit
+
+
+def add_stage(board: Board, stage: Stage) -> None:
+    """Lay down one stage of the patch."""
+    makers: dict[str, Callable[[Board, Stage], None]] = {
+        "reference": _reference,
+        "source": _source,
+        "integrator": _integrator,
+        "summer": _summer,
+        "inverter": _summer,
+        "multiplier": _multiplier,
+    }
+    makers[stage.kind](board, stage)
+
+
+def _reference(board: Board, stage: Stage) -> None:
+    target = board.target
+    board.put(
+        Part("", "reference", (stage.node,), stage.sign * target.reference, target.reference_tolerance, stage.name)
+    )
+
+
+def _source(board: Board, stage: Stage) -> None:
+    board.put(Part("", "source", (stage.node,), board.volts(stage.node), 0.0, stage.name, model=stage.signal))
+    if not board.patch.sources[stage.signal].external:
+        board.notes.append(f"Source {stage.node} is a switch from the reference, closed and opened at its jumps.")
+
+
+def _op_amp(board: Board, stage: Stage) -> None:
+    place = board.places.active[stage.name]
+    name = board.target.op_amp.name
+    nets = (GROUND, f"{stage.node}_inv", stage.node)
+    ref = place.package + place.section
+    board.put(Part(ref, "op amp", nets, stage=stage.name, package=place.package, section=place.section, model=name))
+
+
+def _legs(board: Board, stage: Stage, legs: tuple[Leg, ...], into: str) -> None:
+    for index, (wire, leg) in enumerate(zip(stage.wires, legs, strict=True), 1):
+        _leg(board, stage, wire.source, leg, into, index)
+
+
+def _leg(board: Board, stage: Stage, source: str, leg: Leg, into: str, index: int) -> None:
+    if len(leg.resistors) == 1:
+        board.resistor(stage, source, into, leg.resistors[0])
+        return
+    middle = f"{stage.node}_t{index}"
+    for a, b, value in zip((source, middle, middle), (middle, GROUND, into), leg.resistors, strict=True):
+        board.resistor(stage, a, b, value)
+
+
+def _integrator(board: Board, stage: Stage) -> None:
+    sized = board.sizing.stages[stage.name]
+    inverting = f"{stage.node}_inv"
+    held = sized.start is not None and bool(board.switch_name)
+    _legs(board, stage, sized.legs, f"{stage.node}_bus" if held else inverting)
+    if held:
+        _switch(board, stage, (f"{stage.node}_bus", inverting), "operate", board.places.operate[stage.name])
+    _op_amp(board, stage)
+    tolerance = board.target.capacitor_tolerance
+    nets = (inverting, stage.node)
+    board.put(Part("", "capacitor", nets, sized.capacitor, tolerance, stage.name, model=DIELECTRIC))
+    if sized.feedback:
+        board.resistor(stage, inverting, stage.node, sized.feedback)
+    if held:
+        _start_network(board, stage, sized)
+
+
+def _start_network(board: Board, stage: Stage, sized: StageSizing) -> None:
+    assert sized.start is not None
+    from_reference, from_output = sized.start
+    middle = f"{stage.node}_ic"
+    _switch(board, stage, (f"{stage.node}_inv", middle), "hold", board.places.hold[stage.name])
+    if from_reference:
+        board.resistor(stage, _reference_node(board, -sized.start_volts), middle, from_reference)
+    board.resistor(stage, stage.node, middle, from_output)
+
+
+def _reference_node(board: Board, polarity: float) -> str:
+    """Node that carries the reference with the sign of ``polarity``."""
+    first = next((s for s in board.patch.stages if s.kind == "reference"), None)
+    inverted = (s for s in board.patch.stages if first and s.kind == "inverter" and s.wires[0].source == first.node)
+    for stage in (first, *inverted):
+        if stage is not None and stage.sign * polarity > 0:
+            return stage.node
+    raise ValueError(f"The patch has no {'positive' if polarity > 0 else 'negative'} reference for a start value.")
+
+
+def _switch(board: Board, stage: Stage, nets: tuple[str, str], closed: str, place: Place) -> None:
+    board.put(
+        Part(
+            "", "switch", nets, board.target.switch_on, 0.0, stage.name, place.package, place.section,
+            board.switch_name, closed=closed,
+        )
+    )  # fmt: skip
+
+
+def _summer(board: Board, stage: Stage) -> None:
+    sized = board.sizing.stages[stage.name]
+    inverting = f"{stage.node}_inv"
+    if stage.bipolar:
+        _crossing_leg(board, stage, sized, inverting)
+    else:
+        _legs(board, stage, sized.legs, inverting)
+    _op_amp(board, stage)
+    if stage.knob is None or stage.bipolar:
+        board.resistor(stage, inverting, stage.node, sized.feedback)
+    else:
+        _rheostat_feedback(board, stage, sized, inverting)
+
+
+def _rheostat_feedback(board: Board, stage: Stage, sized: StageSizing, inverting: str) -> None:
+    assert stage.knob is not None
+    knob = board.patch.knobs[stage.knob]
+    wire = stage.wires[0]
+    scales = board.sizing.scales
+    gain = abs(wire.coefficient) * scales[stage.node].volts_per_unit / scales[wire.source].volts_per_unit
+    # A knob that starts at zero has no feedback at its nominal setting to go by.
+    per_unit = sized.feedback / abs(knob.value) if knob.value else sized.legs[0].transfer * gain
+    ends = (float(knob.low), float(knob.high))
+    dial = rheostat(float(per_unit), float(knob.value), ends, board.target.resistors)
+    start = stage.node
+    if dial.fixed:
+        start = f"{stage.node}_w"
+        board.resistor(stage, stage.node, start, dial.fixed)
+    # The unused end is tied to the wiper, so that a lost wiper leaves the whole track in the loop.
+    _potentiometer(board, stage, (start, inverting, inverting), dial)
+
+
+def _crossing_leg(board: Board, stage: Stage, sized: StageSizing, inverting: str) -> None:
+    assert stage.knob is not None
+    knob = board.patch.knobs[stage.knob]
+    first, second = (w.source for w in stage.wires)
+    per_unit = board.volts(stage.node) * float(stage.wires[0].coefficient) / board.volts(first)
+    gains = (per_unit * float(knob.value), per_unit * float(knob.low), per_unit * float(knob.high))
+    ratio = -board.volts(second) / board.volts(first)
+    dial = crossing(stage, gains, ratio, sized.legs[0], sized.feedback)
+    _potentiometer(board, stage, (first, f"{stage.node}_w", second), dial)
+    _leg(board, stage, f"{stage.node}_w", sized.legs[0], inverting, 1)
+
+
+def _potentiometer(board: Board, stage: Stage, nets: tuple[str, str, str], dial: Dial) -> None:
+    board.put(Part("", "potentiometer", nets, dial.setting, TRACK_TOLERANCE, stage.name, total=dial.track))
+    knob = board.patch.knobs[stage.knob or ""]
+    board.notes.append(
+        f"{board.parts[-1].ref} sets {knob.name}: the dial covers {100 * min(dial.low, dial.high):.1f} % to "
+        f"{100 * max(dial.low, dial.high):.1f} % of its track for {float(knob.low):.4g} to {float(knob.high):.4g}; "
+        f"{float(knob.value):.4g} is at {100 * dial.setting:.1f} %."
+    )
+
+
+def _multiplier(board: Board, stage: Stage) -> None:
+    place = board.places.active[stage.name]
+    nodes = board.patch.by_node()
+    first, second = (w.source for w in stage.wires)
+    direct = stage.sign == nodes[first].sign * nodes[second].sign
+    x = (first, GROUND) if direct else (GROUND, first)
+    nets = (*x, second, GROUND, GROUND, stage.node)
+    name, ref = board.target.multiplier.name, place.package + place.section
+    board.put(Part(ref, "multiplier", nets, stage=stage.name, package=place.package, section=place.section, model=name))
