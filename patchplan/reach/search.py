@@ -1,0 +1,199 @@
+"""Ranges by simulation: the corners and a sample of the adjustable box, boards within tolerance, free waveforms."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from fractions import Fraction
+from itertools import product
+
+import numpy as np
+from numpy.typing import NDArray
+
+from patchplan.equation.constants import constant_value
+from patchplan.equation.problem import Build
+from patchplan.equation.system import System
+from patchplan.reach.curves import extremes
+from patchplan.reach.field import Bound, Field
+from patchplan.reach.inputs import Inputs
+from patchplan.reach.nominal import start_of, tabulate, uniform_grid
+from patchplan.reach.records import Run
+from patchplan.reach.solve import GrowsWithoutBoundError, solve
+
+Array = NDArray[np.float64]
+
+#: Boards of the ensemble, points of the sample of the box, rounds of climbing and points of each round.
+BOARDS, SAMPLE, ROUNDS, CLIMBERS = 16, 16, 2, 16
+#: All corners of the box up to this many adjustable parameters.
+CORNERS_UP_TO = 4
+#: Tolerance of these runs: far below the margins they serve.
+_TOLERANCE = 1e-5
+SEED = 20240229
+
+
+@dataclass(frozen=True)
+class Batch:
+    """Runs solved together: extremes of every name, shape ``(n_names, m)``, and the runs themselves.
+
+    Attributes
+    ----------
+    values, rates
+        Shape ``(n_names, m, n_times)``.
+    """
+
+    times: Array
+    values: Array
+    rates: Array
+
+    def extremes(self) -> tuple[Array, Array]:
+        """Lowest and highest value, each of shape ``(n_names, m)``."""
+        return extremes(self.times, self.values, self.rates)
+
+    def run(self, column: int, knobs: Mapping[str, float]) -> Run:
+        """One of the runs as a record."""
+        return Run(knobs, self.times, self.values[:, column], self.rates[:, column])
+
+
+def solve_batch(system: System, field: Field, weights: Array, inputs: Inputs, times: Array, peaks: Array) -> Batch:
+    """Solve m runs at once, weights of shape ``(n_terms, m)``.
+
+    Raises
+    ------
+    GrowsWithoutBoundError
+        One of the runs does.
+    """
+    bound = field.bind(weights)
+    start = np.repeat(start_of(system)[:, None], weights.shape[1], axis=1)
+    floor = 1e-2 * _TOLERANCE * (peaks + 1e-6 * peaks.max(initial=0.0) + 1e-300)
+    if start.size:
+        states = solve(bound, start, inputs, times, tolerance=_TOLERANCE, floor=floor)
+    else:
+        states = np.zeros((0, weights.shape[1], times.size))
+    return _tabulated(bound, inputs, times, states)
+
+
+def _tabulated(bound: Bound, inputs: Inputs, times: Array, states: Array) -> Batch:
+    tables = [
+        tabulate(bound.field.bind(bound.weights[:, j]), inputs, times, states[:, j]) for j in range(states.shape[1])
+    ]
+    return Batch(times, np.stack([t[0] for t in tables], axis=1), np.stack([t[1] for t in tables], axis=1))
+
+
+def coarse_grid(inputs: Inputs, times: Array) -> Array:
+    """About 600 times for further runs: half evenly spread, half where the nominal run needs them; edges twice."""
+    inner = np.unique(np.concatenate((times[:: max(1, len(times) // 300)], uniform_grid(inputs, 300))))
+    return np.sort(np.concatenate((inner, inputs.edges[1:-1])))
+
+
+def board_factors(system: System, field: Field, build: Build, *, size: float = 1.0) -> Array:
+    """Factors of the coefficients of boards whose parts lie within tolerance, shape ``(n_terms, BOARDS)``.
+
+    Every term has its own resistor, every state its own capacitor; each is off uniformly within its tolerance.
+    """
+    random = np.random.default_rng(SEED)
+    block = field.rate_block
+    resistors = random.uniform(-1, 1, (len(field.coefficients), BOARDS)) * build.resistor_tolerance
+    capacitors = random.uniform(-1, 1, (field.n_states, BOARDS)) * build.capacitor_tolerance
+    factors: Array = 1 + size * resistors
+    factors[block.terms] *= 1 + size * capacitors[block.rows]
+    return factors
+
+
+def knobs_at(system: System, points: Array) -> dict[str, Array]:
+    """Values of all knobs at points of the adjustable box, ``points`` of shape ``(m, n_adjustable)`` in 0 ... 1."""
+    rows = []
+    for point in points:
+        values = {}
+        for p, s in zip(system.adjustable, point, strict=True):
+            low, high = p.low or Fraction(0), p.high or Fraction(0)
+            values[p.name] = low + (high - low) * Fraction(float(s))
+        rows.append([float(constant_value(k.tree, values)) for k in system.knobs])
+    table = np.array(rows).reshape(len(points), len(system.knobs))
+    return {k.name: table[:, i] for i, k in enumerate(system.knobs)}
+
+
+def box_points(count: int) -> Array:
+    """Corners (or, with many parameters, ends of each axis) and a low-discrepancy sample of the unit box."""
+    from scipy.stats import qmc
+
+    if count <= CORNERS_UP_TO:
+        corners = np.array(list(product((0.0, 1.0), repeat=count)))
+    else:
+        corners = np.full((2 * count, count), 0.5)
+        corners[np.arange(2 * count), np.repeat(np.arange(count), 2)] = np.tile((0.0, 1.0), count)
+    sample = qmc.Sobol(count, rng=np.random.default_rng(SEED)).random(SAMPLE)
+    return np.concatenate((corners, sample))
+
+
+def climb_points(points: Array, lows: Array, highs: Array, radius: float, random: np.random.Generator) -> Array:
+    """New points around those where some signal is lowest or highest."""
+    worst = np.unique(np.concatenate((lows.argmin(axis=1), highs.argmax(axis=1))))
+    chosen = points[worst[np.arange(CLIMBERS) % worst.size]]
+    moved: Array = np.clip(chosen + random.uniform(-radius, radius, chosen.shape), 0.0, 1.0)
+    return moved
+
+
+@dataclass(frozen=True)
+class Excursion:
+    """How far runs go: lowest and highest of each name, ``(n_names,)``; the worst runs; sentences on what failed."""
+
+    low: Array
+    high: Array
+    runs: tuple[Run, ...] = ()
+    warnings: tuple[str, ...] = ()
+
+
+def search_box(system: System, field: Field, inputs: Inputs, times: Array, peaks: Array) -> Excursion:
+    """Runs over the adjustable box: corners, sample, then climbing from the worst.
+
+    Raises
+    ------
+    GrowsWithoutBoundError
+        A setting of the parameters makes the solution grow without bound.
+    """
+    random = np.random.default_rng(SEED)
+    points = box_points(len(system.adjustable))
+    seen, lows, highs, runs = points, [], [], {}
+    for i in range(ROUNDS + 1):
+        knobs = knobs_at(system, points)
+        batch = solve_batch(system, field, field.weights(knobs), inputs, times, peaks)
+        low, high = batch.extremes()
+        lows.append(low)
+        highs.append(high)
+        for j in np.unique(np.concatenate((low.argmin(axis=1), high.argmax(axis=1)))):
+            runs[len(seen) - len(points) + int(j)] = batch.run(int(j), {k: float(v[j]) for k, v in knobs.items()})
+        if i < ROUNDS:
+            points = climb_points(seen, np.hstack(lows), np.hstack(highs), 0.15 / 3**i, random)
+            seen = np.concatenate((seen, points))
+    low, high = np.hstack(lows), np.hstack(highs)
+    worst = sorted({int(j) for j in (*low.argmin(axis=1), *high.argmax(axis=1))})
+    return Excursion(low.min(axis=1), high.max(axis=1), tuple(runs[j] for j in worst if j in runs))
+
+
+def spread_of_boards(
+    system: System, field: Field, build: Build, inputs: Inputs, times: Array, peaks: Array
+) -> Excursion:
+    """Lowest and highest value of each name over boards with parts within tolerance."""
+    nominal = {k.name: float(k.value) for k in system.knobs}
+    for size in (1.0, 0.1):
+        weights = field.weights(nominal, board_factors(system, field, build, size=size))
+        try:
+            batch = solve_batch(system, field, weights, inputs, times, peaks)
+        except GrowsWithoutBoundError as error:
+            time = error.time
+            continue
+        low, high = batch.extremes()
+        said = (
+            ()
+            if size == 1.0
+            else (
+                f"With parts at the ends of their tolerance the solution may grow without bound near t = {time:.6g}.",
+            )
+        )
+        return Excursion(low.min(axis=1), high.max(axis=1), warnings=said)
+    none = np.zeros(len(field.names))
+    return Excursion(
+        none + np.inf,
+        none - np.inf,
+        warnings=(f"With parts slightly off the solution grows without bound near t = {time:.6g}.",),
+    )

@@ -1,0 +1,158 @@
+"""Numerical solution of any System: one run exactly, or many runs at once."""
+
+from __future__ import annotations
+
+import warnings
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from patchplan.errors import Fault, ProblemFaults
+from patchplan.reach.field import DENSE_LIMIT, Bound
+from patchplan.reach.inputs import Inputs
+
+Array = NDArray[np.float64]
+
+#: Steps allowed between two rows of the grid before a run counts as stuck.
+_STEPS = 20000
+
+
+class GrowsWithoutBoundError(Exception):
+    """A run left every bound, or could not be carried on, at ``time``."""
+
+    def __init__(self, time: float) -> None:
+        super().__init__(time)
+        self.time = time
+
+
+def grows_without_bound(time: float) -> ProblemFaults:
+    """The error for a problem whose solution ends before its run does."""
+    return ProblemFaults(
+        [
+            Fault(
+                f"The solution grows without bound at t = {time:.6g}.",
+                "Shorten the duration, or check signs, parameters and start values.",
+            )
+        ]
+    )
+
+
+def solve(field: Bound, start: Array, inputs: Inputs, times: Array, *, tolerance: float, floor: Array) -> Array:
+    """States on a grid in which every edge of the inputs appears twice (before, after) except the ends.
+
+    Parameters
+    ----------
+    field
+        One run: weights of shape ``(n_terms,)``; or m runs: ``(n_terms, m)``.
+    start
+        Shape ``(n,)`` or ``(n, m)``.
+    tolerance, floor
+        Relative tolerance of a step, and the absolute one: a number or shape ``(n,)``.
+
+    Returns
+    -------
+    Array
+        Shape ``(n, n_times)`` or ``(n, m, n_times)``.
+
+    Raises
+    ------
+    GrowsWithoutBoundError
+        With the time at which the run could not be carried on.
+    """
+    edges = inputs.edges
+    x = start
+    parts = []
+    first = 0
+    for begin, stop in zip(edges[:-1], edges[1:], strict=True):
+        # The stretch ends with the first of the two equal times at its stop.
+        last = int(np.searchsorted(times, stop, side="left"))
+        rows = _stretch(field, x, inputs, times[first : last + 1], (begin, stop), tolerance, floor)
+        parts.append(rows)
+        x = rows[..., -1]
+        first = last + 1
+    return np.concatenate(parts, axis=-1)
+
+
+def _stretch(
+    field: Bound, start: Array, inputs: Inputs, times: Array, ends: tuple[float, float], tolerance: float, floor: Array
+) -> Array:
+    if start.shape[0] > DENSE_LIMIT:
+        return _sparse_stretch(field, start, inputs, times, ends, tolerance, floor)
+    from scipy.integrate import odeint
+
+    depth, count = inputs.edge_depth, field.field.n_sources
+    low, high = ends[0] + depth, ends[1] - depth
+    shape = start.T.shape
+
+    def sources(t: float) -> Array | None:
+        return inputs.at(min(max(t, low), high)) if count else None
+
+    def single(t: float, x: Array) -> Array:
+        return field.rates(x, sources(t))
+
+    def many(t: float, x: Array) -> Array:
+        u = sources(t)
+        return field.rates(x.reshape(shape).T, None if u is None else u[:, None]).T.ravel()
+
+    band = start.shape[0] - 1
+    options: dict[str, Any] = {"ml": band, "mu": band} if start.ndim == 2 else {}
+    floors = np.broadcast_to(floor, (start.shape[0],))
+    with warnings.catch_warnings(), np.errstate(over="ignore", invalid="ignore"):
+        # A failed run is reported below, with its time.
+        warnings.simplefilter("ignore")
+        rows, info = odeint(
+            single if start.ndim == 1 else many,
+            start.T.ravel(),
+            times,
+            rtol=tolerance,
+            atol=np.tile(floors, start.size // start.shape[0]),
+            tfirst=True,
+            full_output=True,
+            mxstep=_STEPS,
+            hmax=(ends[1] - ends[0]) / 20,
+            **options,
+        )
+    if info["message"] != "Integration successful." or not np.isfinite(rows).all():
+        raise GrowsWithoutBoundError(_end_of_run(times, info["tcur"], rows))
+    return np.moveaxis(rows.reshape(-1, *shape), 0, -1).swapaxes(0, -2) if start.ndim == 2 else rows.T
+
+
+def _end_of_run(times: Array, reached: Array, rows: Array) -> float:
+    """The last time that the solver reached."""
+    for i, (wanted, got) in enumerate(zip(times[1:], reached, strict=True)):
+        if not (got >= wanted and np.isfinite(rows[i + 1]).all()):
+            return float(got) if times[i] <= got <= wanted else float(times[i])
+    return float(times[-1])
+
+
+def _sparse_stretch(
+    field: Bound, start: Array, inputs: Inputs, times: Array, ends: tuple[float, float], tolerance: float, floor: Array
+) -> Array:
+    """Many states: an implicit method of order 5 with the sparse Jacobian, one run after the other."""
+    if start.ndim == 2:
+        runs = [field.field.bind(field.weights[:, j]) for j in range(start.shape[1])]
+        solved = [_sparse_stretch(f, start[:, j], inputs, times, ends, tolerance, floor) for j, f in enumerate(runs)]
+        return np.stack(solved, axis=1)
+    from scipy.integrate import solve_ivp
+
+    low, high = ends[0] + inputs.edge_depth, ends[1] - inputs.edge_depth
+
+    def sources(t: float) -> Array | None:
+        return inputs.at(min(max(t, low), high)) if field.field.n_sources else None
+
+    with np.errstate(over="ignore", invalid="ignore"):
+        found = solve_ivp(
+            lambda t, x: field.rates(x, sources(t)),
+            (times[0], times[-1]),
+            start,
+            method="Radau",
+            t_eval=times,
+            rtol=max(tolerance, 1e-10),
+            atol=floor,
+            jac=lambda t, x: field.jacobian(x, sources(t)),
+        )
+    if not found.success or not np.isfinite(found.y).all():
+        raise GrowsWithoutBoundError(float(found.t[-1]) if found.t.size else float(times[0]))
+    states: Array = found.y
+    return states
