@@ -72,6 +72,7 @@ def build_circuit(
         run=build.run,
         sources={name: _with_waveform(source, stand_ins or {}) for name, source in patch.sources.items()},
         notes=notes,
+        start={} if held else _start_volts(patch, sizing),
     )
 
 
@@ -92,11 +93,20 @@ def _node_maps(form: Form, patch: Patch, sizing: Sizing) -> dict[str, NodeMap]:
     maps = {}
     for stage in patch.stages:
         scale = sizing.scales[stage.node]
-        offset = -stage.sign * scale.volts_per_unit * float(form.offsets.get(stage.signal, 0))
+        shift = float(form.offsets.get(stage.signal, 0))
+        offset = -stage.sign * scale.volts_per_unit * shift if shift else 0.0
         maps[stage.node] = NodeMap(
             stage.node, stage.signal, stage.sign, scale.volts_per_unit, offset, scale.limit_volts, stage.kind
         )
     return maps
+
+
+def _start_volts(patch: Patch, sizing: Sizing) -> dict[str, float]:
+    return {
+        s.node: s.sign * sizing.scales[s.node].volts_per_unit * float(s.start)
+        for s in patch.stages
+        if s.kind == "integrator"
+    }
 
 
 def _with_waveform(source: Source, stand_ins: Mapping[str, tuple[Array, Array]]) -> Source:
@@ -119,8 +129,8 @@ def _load_notes(board: Board, catalogue: Catalogue) -> list[str]:
             load = load_at(board.parts, part.nets[-1])
             if load < least * (1 - 1e-9):
                 notes.append(
-                    f"Node {part.nets[-1]} drives {load:.3g} ohm; {name} is rated for {least:.3g} ohm, so its swing may "
-                    "be less than planned. Larger resistors would mend it."
+                    f"Node {part.nets[-1]} drives {load:.3g} ohm; {name} is rated for {least:.3g} ohm, so its swing "
+                    "may be less than planned. Larger resistors would mend it."
                 )
     return notes
 

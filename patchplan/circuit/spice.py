@@ -1,0 +1,108 @@
+"""The Circuit as a netlist that a general SPICE simulator runs unchanged."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterator, Mapping
+
+from patchplan.circuit.records import Circuit, NodeMap, Part
+from patchplan.circuit.spice_models import multiplier_model, num, op_amp_model
+from patchplan.circuit.spice_sources import SourceText
+
+#: An open switch, and the least resistance of an end of a potentiometer [ohm].
+_OPEN, _LEAST_OHM = 1e12, 1e-3
+#: The trapezoidal rule takes nothing away from a lossless loop; the tolerances hold the summing nodes to microvolts.
+_OPTIONS = ".options method=trap reltol=1e-5 vntol=1e-8 abstol=1e-12 chgtol=1e-16"
+
+
+def largest_step(duration: float, rate: float) -> float:
+    """Largest time step that keeps a loop of angular frequency ``rate`` in phase [s].
+
+    The trapezoidal rule is late by (w h)^2/12 of each cycle's phase; 1e-3 rad over the run is allowed.
+
+    Parameters
+    ----------
+    duration
+        Run [circuit s].
+    rate
+        Fastest rate of the signals [rad/s].
+    """
+    most = duration / 200
+    return min(most, math.sqrt(12e-3 / (rate * duration)) / rate) if rate > 0 else most
+
+
+def spice_text(circuit: Circuit, start: Mapping[str, float], *, max_step: float, title: str = "patchplan board") -> str:
+    """Netlist of the nominal board in operate, from its start to the end of the run.
+
+    Parameters
+    ----------
+    start
+        Net -> volts at the start of operate; outputs and inverting inputs count.
+    max_step
+        Largest time step [circuit s], see :func:`largest_step`.
+    """
+    lines = [f"* {title}".replace("\n", " "), *_head(circuit)]
+    kinds = {p.kind for p in circuit.parts}
+    lines += op_amp_model(circuit.op_amp) if "op amp" in kinds else []
+    lines += multiplier_model(circuit.multiplier) if "multiplier" in kinds else []
+    sources = SourceText(circuit)
+    for part in circuit.parts:
+        if part.kind == "source":
+            sources.add(part)
+        else:
+            lines += _element(part)
+    lines += [*sources.lines, *_start(circuit, start), _OPTIONS]
+    lines += [f".tran {num(max_step)} {num(circuit.duration)} 0 {num(max_step)}", ".end", ""]
+    return "\n".join(lines)
+
+
+def _head(circuit: Circuit) -> Iterator[str]:
+    yield f"* One unit of problem time lasts {num(circuit.time_scale)} s here."
+    for node in circuit.nodes.values():
+        yield f"* {_meaning(node)}"
+    for signal, net in circuit.watched.items():
+        yield f"* {signal} is brought out at {net}."
+
+
+def _meaning(node: NodeMap) -> str:
+    offset = f" + {num(node.offset_volts)} V" if node.offset_volts else ""
+    return f"v({node.node}) = {num(node.sign * node.volts_per_unit)} V * ({node.signal}){offset}, {node.role}"
+
+
+def _element(part: Part) -> list[str]:
+    nets = " ".join(part.nets)
+    if part.kind in ("resistor", "capacitor"):
+        return [f"{part.ref} {nets} {num(part.value)}"]
+    if part.kind == "potentiometer":
+        return _potentiometer(part)
+    if part.kind == "switch":
+        value = max(part.value, _LEAST_OHM) if part.closed == "operate" else _OPEN
+        return [f"* {part.ref}: closed in {part.closed}", f"R{part.ref} {nets} {num(value)}"]
+    if part.kind == "op amp":
+        return [f"X{part.ref} {nets} opamp"]
+    if part.kind == "multiplier":
+        return [f"X{part.ref} {nets} mult"]
+    if part.kind == "reference":
+        return [f"V{part.ref} {nets} 0 DC {num(part.value)}"]
+    return [f"* {part.ref}: {num(part.value)} F from {part.nets[0]} to ground at {part.package}"]
+
+
+def _potentiometer(part: Part) -> list[str]:
+    end_a, wiper, end_b = part.nets
+    halves = ((end_a, wiper, part.value, "a"), (wiper, end_b, 1 - part.value, "b"))
+    lines = [f"* {part.ref}: {num(part.total)} ohm, set to {num(part.value)}"]
+    for a, b, share, end in halves:
+        if a != b:
+            lines.append(f"R{part.ref}{end} {a} {b} {num(max(share * part.total, _LEAST_OHM))}")
+    return lines
+
+
+def _start(circuit: Circuit, start: Mapping[str, float]) -> Iterator[str]:
+    """Start values of every output, inverting input and inner pole."""
+    for part in circuit.parts:
+        if part.kind in ("op amp", "multiplier"):
+            out = part.nets[-1]
+            volts = num(start[out])
+            yield f".ic v({out})={volts} v(x{part.ref.lower()}.p)={volts}"
+        if part.kind == "op amp":
+            yield f".ic v({part.nets[1]})={num(start[part.nets[1]])}"

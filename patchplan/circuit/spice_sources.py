@@ -1,0 +1,163 @@
+"""Waveforms of the sources as SPICE elements."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from fractions import Fraction
+
+import numpy as np
+from numpy.typing import NDArray
+
+from patchplan.circuit.records import Circuit, Part
+from patchplan.circuit.spice_models import num
+from patchplan.equation.tree import PIECEWISE, Binary, Call, Minus, Name, Node, Number
+from patchplan.equation.waveform import Waveform
+
+Array = NDArray[np.float64]
+
+#: A jump takes this part of the run.
+RISE = 1e-6
+#: Straight pieces that stand for one smooth stretch of a piecewise function of a curved argument.
+_CURVED_PIECES = 400
+#: Functions of the tree that SPICE knows under another name.
+_NAMES = {"log": "ln", "sign": "sgn"}
+_PER_LINE = 8
+
+
+class SourceText:
+    """Writes the source parts of one circuit; piecewise functions of time become voltage sources of their own."""
+
+    def __init__(self, circuit: Circuit) -> None:
+        self.circuit = circuit
+        self.lines: list[str] = []
+        self._helpers: dict[Node, str] = {}
+
+    def add(self, part: Part) -> None:
+        """Append the lines of one source part."""
+        source = self.circuit.sources.get(part.model)
+        node = self.circuit.nodes.get(part.nets[0])
+        offset = node.offset_volts if node else 0.0
+        self.lines.append(f"* {part.ref}: {part.model}, {num(part.value)} V per unit")
+        if source is None or source.waveform is None:
+            low, high = (float(b) for b in (source.within if source and source.within else (0, 0)))
+            middle = part.value * (low + high) / 2 + offset
+            self.lines.append(f"* known only by its bounds {num(low)} to {num(high)}: the middle stands in")
+            self.lines.append(f"V{part.ref} {part.nets[0]} 0 DC {num(middle)}")
+        elif source.waveform.recording is not None:
+            times, values = (np.array(c) for c in (source.waveform.recording.times, source.waveform.recording.values))
+            self._piecewise_linear(f"V{part.ref} {part.nets[0]}", times, part.value * values + offset)
+        elif source.waveform.tree is not None:
+            text = self.expression(source.waveform.tree)
+            level = f"+({num(offset)})" if offset else ""
+            self.lines.append(f"B{part.ref} {part.nets[0]} 0 V={num(part.value)}*({text}){level}")
+
+    def expression(self, tree: Node) -> str:
+        """A function of time in SPICE's words."""
+        if isinstance(tree, Number):
+            return f"({num(float(tree.value))})"
+        if isinstance(tree, Name):
+            return num(math.pi) if tree.name == "pi" else f"(time*{num(1 / self.circuit.time_scale)})"
+        if isinstance(tree, Minus):
+            return f"(-{self.expression(tree.operand)})"
+        if isinstance(tree, Binary):
+            return self._binary(tree)
+        if tree.function in PIECEWISE - {"abs", "sign"}:
+            return f"v({self._helper(tree)})"
+        inner = self.expression(tree.arguments[0])
+        return f"{_NAMES.get(tree.function, tree.function)}({inner})"
+
+    def _binary(self, tree: Binary) -> str:
+        left = self.expression(tree.left)
+        if tree.operator != "^":
+            return f"({left}{tree.operator}{self.expression(tree.right)})"
+        power = _constant(tree.right)
+        if power is None:
+            return f"exp({self.expression(tree.right)}*ln({left}))"
+        if power.denominator != 1:
+            return f"pow({left},{num(float(power))})"
+        # SPICE dialects differ on powers of negative numbers; a magnitude has one meaning in all of them.
+        magnitude = abs(power.numerator) - power.numerator % 2
+        text = f"pow(abs({left}),{magnitude})" if magnitude else "1"
+        text = f"({left}*{text})" if power.numerator % 2 else text
+        return f"(1/{text})" if power < 0 else text
+
+    def _helper(self, call: Call) -> str:
+        """Node that carries a piecewise function of time."""
+        if call not in self._helpers:
+            name = f"pw_source_{len(self._helpers) + 1}"
+            self._helpers[call] = name
+            times, values = self._pieces(call)
+            self._piecewise_linear(f"V{name} {name}", times, values)
+        return self._helpers[call]
+
+    def _pieces(self, call: Call) -> tuple[Array, Array]:
+        """Corners (times, values) of a function of time, two at a jump."""
+        duration = self.circuit.duration / self.circuit.time_scale
+        wave = Waveform(call)
+        jumps = [t for t in wave.jumps(duration) if 0 < t < duration * (1 - RISE)]
+        edges = np.array([0.0, *jumps, duration])
+        straight = _is_affine(call.arguments[0])
+        grid = np.linspace(0.0, 1.0, 2 if straight else _CURVED_PIECES + 1)
+        start, length = edges[:-1, None], np.diff(edges)[:, None]
+        times = start + length * grid
+        # Both ends are taken from inside the piece, where the function is sure to be on this side of the jump.
+        inside = np.clip(grid, 1e-3, 1 - 1e-3)
+        values = np.asarray(wave.values((start + length * inside).ravel()), float).reshape(times.shape)
+        if straight:
+            slope = (values[:, 1] - values[:, 0]) / (1 - 2e-3)
+            values = np.stack([values[:, 0] - 1e-3 * slope, values[:, 1] + 1e-3 * slope], axis=1)
+        return times.ravel(), values.ravel()
+
+    def _piecewise_linear(self, head: str, times: Array, values: Array) -> None:
+        """A PWL element; of two equal times the second comes one rise later."""
+        circuit = self.circuit
+        seconds = times * circuit.time_scale
+        seconds = seconds + np.append(0.0, np.diff(times) <= 0) * RISE * circuit.duration
+        self.lines.append(f"{head} 0 PWL(")
+        points = [f"{time:.12g} {num(value)}" for time, value in zip(seconds, values, strict=True)]
+        self.lines += [f"+ {line}" for line in _wrapped(points)]
+        self.lines.append("+ )")
+
+
+def _wrapped(points: Sequence[str]) -> list[str]:
+    return [" ".join(points[i : i + _PER_LINE]) for i in range(0, len(points), _PER_LINE)]
+
+
+def _constant(tree: Node) -> Fraction | None:
+    if isinstance(tree, Number):
+        return tree.value
+    if isinstance(tree, Minus):
+        inner = _constant(tree.operand)
+        return None if inner is None else -inner
+    if isinstance(tree, Binary) and tree.operator == "/":
+        top, bottom = _constant(tree.left), _constant(tree.right)
+        return None if top is None or not bottom else top / bottom
+    return None
+
+
+def _is_affine(tree: Node) -> bool:
+    """Whether a tree in t is a straight line, as far as its shape tells."""
+    if isinstance(tree, Number | Name):
+        return True
+    if isinstance(tree, Minus):
+        return _is_affine(tree.operand)
+    if isinstance(tree, Binary):
+        if tree.operator in "+-":
+            return _is_affine(tree.left) and _is_affine(tree.right)
+        if tree.operator == "*":
+            return (_free_of_time(tree.left) and _is_affine(tree.right)) or (
+                _free_of_time(tree.right) and _is_affine(tree.left)
+            )
+        return tree.operator == "/" and _free_of_time(tree.right) and _is_affine(tree.left)
+    return False
+
+
+def _free_of_time(tree: Node) -> bool:
+    if isinstance(tree, Name):
+        return tree.name != "t"
+    if isinstance(tree, Minus):
+        return _free_of_time(tree.operand)
+    if isinstance(tree, Binary):
+        return _free_of_time(tree.left) and _free_of_time(tree.right)
+    return isinstance(tree, Number) or all(map(_free_of_time, tree.arguments))
