@@ -1,0 +1,123 @@
+"""The straight run from a problem to a plan, and the choice between a few of them."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator
+from dataclasses import asdict, dataclass, replace
+
+from patchplan.check.compare import check_circuit
+from patchplan.check.records import Verdict
+from patchplan.circuit.build import build_circuit
+from patchplan.circuit.catalogue import load_catalogue
+from patchplan.circuit.target import target_of
+from patchplan.equation.explicit import build_system
+from patchplan.equation.problem import Problem
+from patchplan.form.offsets import find_form
+from patchplan.patch.build import build_patch
+from patchplan.ranges import find_ranges
+from patchplan.reach.reference import find_reach
+from patchplan.report.records import Plan
+from patchplan.sensitivity import find_sensitivity
+from patchplan.sizing.size import size
+
+
+@dataclass(frozen=True, slots=True)
+class Choices:
+    """Every free decision of a plan.
+
+    Attributes
+    ----------
+    offsets
+        Whether signals far from zero may be carried as a difference.
+    speed
+        "free", "real time", or how many times faster than the problem; None takes the problem file's wish.
+    think
+        How long to search: low, normal or high.
+    """
+
+    offsets: bool = True
+    speed: str | float | None = None
+    think: str = "normal"
+
+
+def plan(
+    problem: Problem, *, accept: float = 5.0, think: str = "normal", progress: Callable[[str], None] | None = None
+) -> Plan:
+    """Plan a problem with the best of a short list of choices.
+
+    Parameters
+    ----------
+    accept
+        Largest nominal error of a plan that follows its equation [% of peak].
+    progress
+        Called with the name of each step as it begins.
+
+    Raises
+    ------
+    ProblemFaults
+        Where the problem file cannot be used.
+    CannotBuild
+        Where no part of the catalogue serves the wishes (supply, reference).
+    """
+    best: Plan | None = None
+    for choices in _short_list(think):
+        found = plan_with(problem, choices, accept=accept, progress=progress)
+        if best is None or _merit(found) < _merit(best):
+            best = found
+        if best.verdict.verdict == "follows" and best.verdict.max_error_percent < accept / 5:
+            break
+        if not best.form.offsets and len(best.form.notes) == len(best.form.scales):
+            break
+    assert best is not None
+    return best
+
+
+def plan_with(
+    problem: Problem, choices: Choices, *, accept: float = 5.0, progress: Callable[[str], None] | None = None
+) -> Plan:
+    """One straight run with all decisions taken."""
+    say = progress or (lambda step: None)
+    build = problem.build
+    say("Reading the equations")
+    system = build_system(problem)
+    catalogue = load_catalogue(problem.own_parts)
+    target = target_of(build, catalogue)
+    say("Solving the problem")
+    reach = find_reach(system, problem.ranges, build)
+    form = find_form(system, reach, problem.terminals, offsets=choices.offsets)
+    say("Drawing the patch")
+    patch = build_patch(form, hold=build.run != "free")
+    ranges = find_ranges(patch, form, reach)
+    sensitivity = find_sensitivity(form, patch, ranges)
+    say("Choosing values")
+    speed = build.speed if choices.speed is None else choices.speed
+    sizing = size(form, patch, ranges, sensitivity, target, speed=speed, run=build.run, think=choices.think)
+    warnings = (*form.notes, *reach.warnings, *sizing.notes)
+    found = Plan(
+        problem, system, reach, form, patch, ranges, sensitivity, target, sizing, None,
+        not_buildable(sizing.faults), asdict(choices), warnings,
+    )  # fmt: skip
+    if sizing.faults:
+        return found
+    circuit = build_circuit(form, patch, sizing, target, build, catalogue)
+    say("Checking the board")
+    verdict = check_circuit(
+        circuit, reach.reference, sensitivity, patch, sizing, target, accept=accept, system=form.system
+    )
+    return replace(found, circuit=circuit, verdict=verdict, warnings=(*warnings, *circuit.notes, *verdict.warnings))
+
+
+def not_buildable(faults: tuple[str, ...]) -> Verdict:
+    """Verdict of a plan that the parts at hand cannot realise."""
+    return Verdict("not_buildable", 0.0, 0.0, 0.0, None, (), (), (), warnings=faults)
+
+
+def _short_list(think: str) -> Iterator[Choices]:
+    yield Choices(think=think)
+    yield Choices(offsets=False, think=think)
+
+
+def _merit(found: Plan) -> tuple[int, float]:
+    """Smaller is better: verdict first, then nominal error."""
+    order = ("follows", "inaccurate", "overload", "not_buildable")
+    return order.index(found.verdict.verdict), found.verdict.max_error_percent

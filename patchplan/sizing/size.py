@@ -1,0 +1,254 @@
+"""Scale factors, speed and purchasable values, decided together."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import replace
+from math import exp, pi
+
+import numpy as np
+from numpy.typing import NDArray
+
+from patchplan.form.records import Form
+from patchplan.patch.records import Patch, Stage
+from patchplan.quantity import engineering
+from patchplan.ranges import Ranges
+from patchplan.sensitivity import Sensitivity
+from patchplan.sizing.drift import (
+    LIMITED,
+    content_below,
+    drift_share,
+    limit_resistor,
+    offset_rate,
+    slow_modes,
+)
+from patchplan.sizing.model import Model, build_model
+from patchplan.sizing.records import Coefficient, Leg, NodeScale, Sizing, StageSizing, Target
+from patchplan.sizing.speed import Speed, choose_speed
+from patchplan.sizing.trial import Values, choose_values
+from patchplan.sizing.values import FEEDBACK
+
+Array = NDArray[np.float64]
+#: The search may shift the planner's own speed by this factor either way.
+SPEED_PLAY = 1.5
+#: A coefficient further off than this was not in reach of the parts.
+OUT_OF_REACH = 0.1
+
+
+def size(
+    form: Form,
+    patch: Patch,
+    ranges: Ranges,
+    sensitivity: Sensitivity,
+    target: Target,
+    *,
+    speed: str | float = "free",
+    run: str = "once",
+    think: str = "normal",
+) -> Sizing:
+    """Choose volts per unit, time scale and all values.
+
+    Parameters
+    ----------
+    speed
+        "free", "real time", or how many times faster than the problem the circuit runs.
+    run
+        "once", "repeat" or "free"; a free run may need DC-limit resistors.
+    think
+        How many starting points the search takes: low, normal or high.
+    """
+    unit = float(form.system.time_unit_seconds)
+    given = None if speed == "free" else unit if speed == "real time" else unit / float(speed)
+    pace = choose_speed(form, patch, ranges, sensitivity, target, given=given)
+    bounds = (pace.chosen, pace.chosen)
+    if given is None:
+        bounds = max(pace.window[0], pace.chosen / SPEED_PLAY), min(pace.window[1], pace.chosen * SPEED_PLAY)
+        bounds = bounds if bounds[0] < bounds[1] else (pace.chosen, pace.chosen)
+    limited = _limited_stages(form, patch, ranges) if run == "free" else ()
+    model = build_model(form, patch, ranges, target, bounds, _weights(patch, sensitivity))
+    values = choose_values(model, target, comfortable=dict.fromkeys(limited, LIMITED), think=think)
+    scales = _node_scales(patch, ranges, model, values)
+    stages = {s.name: _stage(s, patch, target, values, scales) for s in patch.stages}
+    for name in limited:
+        node = next(s.node for s in patch.stages if s.name == name)
+        stages[name] = replace(stages[name], feedback=limit_resistor(stages[name], target, model.limit[node]))
+    time_scale = exp(model.at(model.speed, values.theta))
+    sizing = Sizing(
+        time_scale,
+        pace.window,
+        pace.limits,
+        scales,
+        stages,
+        _coefficients(patch, model, values),
+        tuple(float(e) for e in values.loop_errors),
+        _faults(pace, given, model, values, patch),
+    )
+    notes = _drift_notes(form, patch, ranges, sensitivity, target, sizing)
+    return replace(sizing, notes=(*notes, *_content_notes(sizing, patch, ranges)))
+
+
+def _limited_stages(form: Form, patch: Patch, ranges: Ranges) -> tuple[str, ...]:
+    """Integrators that get a DC-limit resistor: those that carry a mode near zero in a run without reset."""
+    states = {m.state for m in slow_modes(form, ranges, patch)}
+    return tuple(s.name for s in patch.stages if s.kind == "integrator" and s.signal in states)
+
+
+def _weights(patch: Patch, sensitivity: Sensitivity) -> dict[tuple[str, int], float]:
+    """Weight of each coefficient: how far the watched signals move for it, never below a quarter of the largest."""
+    if not sensitivity.wires or not sensitivity.watched:
+        return {}
+    moved = np.abs(sensitivity.coefficient).max(axis=(0, 2))
+    most = float(moved.max()) or 1.0
+    weights = {key: 0.25 + 0.75 * float(m) / most for key, m in zip(sensitivity.wires, moved, strict=True)}
+    for stage in patch.stages:
+        if stage.name in sensitivity.start:
+            change = float(np.abs(sensitivity.start[stage.name]).max(initial=0.0)) * abs(float(stage.start))
+            weights[stage.name, -1] = 0.25 + 0.75 * min(1.0, change / most)
+    return weights
+
+
+def _node_scales(patch: Patch, ranges: Ranges, model: Model, values: Values) -> dict[str, NodeScale]:
+    scales = {}
+    for stage in patch.stages:
+        factor = exp(model.at(model.scale[stage.node], values.theta))
+        peak = factor * ranges.nodes[stage.node].peak
+        scales[stage.node] = NodeScale(stage.node, factor, peak, model.limit[stage.node])
+    return scales
+
+
+def _stage(stage: Stage, patch: Patch, target: Target, values: Values, scales: Mapping[str, NodeScale]) -> StageSizing:
+    """Values of one stage, from the parts that the search chose."""
+    if stage.kind not in ("integrator", "summer", "inverter"):
+        return StageSizing(stage.name)
+    if stage.kind == "inverter":
+        both = _nearest(target.resistors, 1e4)
+        return StageSizing(stage.name, (Leg((both,)),), feedback=both)
+    if stage.bipolar:
+        return _bipolar(stage, patch, target, scales)
+    legs = tuple(Leg(values.parts[stage.name, index]) for index in range(len(stage.wires)))
+    if stage.kind == "summer":
+        if stage.knob:
+            return StageSizing(stage.name, legs, feedback=_knob_feedback(stage, patch, legs, scales))
+        feedback = values.parts.get((stage.name, "Rf"), (_nearest(target.resistors, 1e4),))[0]
+        return StageSizing(stage.name, legs, feedback=feedback)
+    capacitor = values.parts.get((stage.name, "C"), (_nearest(target.capacitors, 1e-8),))[0]
+    start, volts = _start(stage, target, values)
+    return StageSizing(stage.name, legs, capacitor, start=start, start_volts=volts)
+
+
+def _start(stage: Stage, target: Target, values: Values) -> tuple[tuple[float, float] | None, float]:
+    """Start resistors and the volts they give; none where the board has no hold."""
+    if not target.switch_on:
+        return None, 0.0
+    if not stage.start:
+        return (0.0, _nearest(target.resistors, 2e4)), 0.0
+    first, second = values.parts[stage.name, -1]
+    volts = target.reference * second / first
+    return (first, second), volts * stage.sign * (1 if stage.start > 0 else -1)
+
+
+def _knob_feedback(stage: Stage, patch: Patch, legs: tuple[Leg, ...], scales: Mapping[str, NodeScale]) -> float:
+    """Feedback [ohm] at the nominal setting that makes the heaviest leg exact; the knob sets it."""
+    knob = abs(float(patch.knobs[stage.knob or ""].value))
+    here = scales[stage.node].volts_per_unit
+    gains = [abs(float(w.coefficient)) * knob * here / scales[w.source].volts_per_unit for w in stage.wires]
+    heaviest = int(np.argmax(gains))
+    return gains[heaviest] * legs[heaviest].transfer
+
+
+def _bipolar(stage: Stage, patch: Patch, target: Target, scales: Mapping[str, NodeScale]) -> StageSizing:
+    """A knob through zero: full scale a little above the range's end, the setting does the rest."""
+    knob = patch.knobs[stage.knob or ""]
+    most = max(abs(float(knob.low)), abs(float(knob.high)))
+    wire = stage.wires[0]
+    gain = most * abs(float(wire.coefficient)) * scales[stage.node].volts_per_unit
+    gain /= scales[wire.source].volts_per_unit
+    feedback = np.array([r for r in target.resistors if FEEDBACK[0] <= r <= FEEDBACK[1]] or target.resistors)
+    wanted = feedback / (1.05 * gain)
+    best = int(np.argmin(np.abs(np.log(wanted / 4e4))))
+    below = [r for r in target.resistors if r <= wanted[best]]
+    leg = Leg((below[-1] if below else target.resistors[0],))
+    return StageSizing(stage.name, (leg,), feedback=float(feedback[best]))
+
+
+def _nearest(values: tuple[float, ...], wanted: float) -> float:
+    return min(values, key=lambda v: abs(np.log(v / wanted)))
+
+
+def _coefficients(patch: Patch, model: Model, values: Values) -> tuple[Coefficient, ...]:
+    """Wanted and realised numbers of every wire and start value."""
+    by_name = {s.name: s for s in patch.stages}
+    rows = []
+    for ratio, error in zip(model.ratios, values.errors, strict=True):
+        stage = by_name[ratio.stage]
+        if ratio.kind == "start":
+            wanted = float(stage.start)
+            rows.append(Coefficient(f"{stage.node}(0)", wanted, wanted / (1.0 + error)))
+        else:
+            wire = stage.wires[ratio.wire]
+            knob = float(patch.knobs[stage.knob].value) if stage.knob else 1.0
+            wanted = float(wire.coefficient) * knob
+            rows.append(Coefficient(f"{stage.node}<-{wire.source}", wanted, wanted * (1.0 + error)))
+    return tuple(rows)
+
+
+def _faults(pace: Speed, given: float | None, model: Model, values: Values, patch: Patch) -> tuple[str, ...]:
+    """What the parts cannot do, a sentence each."""
+    faults = []
+    low, high = pace.window
+    if given is None and low > high:
+        faults.append(
+            f"No speed serves every stage: {pace.limits[0]} asks for at least {engineering(low, 's')} per unit of "
+            f"time, {pace.limits[1]} for at most {engineering(high, 's')}; faster parts or wider value limits would "
+            f"mend it."
+        )
+    nodes = {s.name: s for s in patch.stages}
+    for ratio, error in zip(model.ratios, values.errors, strict=True):
+        if abs(error) > OUT_OF_REACH:
+            stage = nodes[ratio.stage]
+            where = (
+                f"the start value of {stage.signal}"
+                if ratio.kind == "start"
+                else (f"the input {stage.wires[ratio.wire].source} of {stage.name}")
+            )
+            faults.append(
+                f"No purchasable value reaches {where} (off by {100 * error:.0f} %); wider resistor_limits or "
+                f"capacitor_limits, or another speed, would mend it."
+            )
+    return tuple(faults)
+
+
+def _drift_notes(
+    form: Form, patch: Patch, ranges: Ranges, sensitivity: Sensitivity, target: Target, sizing: Sizing
+) -> list[str]:
+    """Which signals drift and how fast, for every mode near zero."""
+    notes = []
+    by_signal = {s.signal: s for s in patch.stages if s.kind == "integrator"}
+    for state in dict.fromkeys(m.state for m in slow_modes(form, ranges, patch)):
+        stage = by_signal[state]
+        rate = offset_rate(sizing.stages[stage.name], target)
+        factor = sizing.scales[stage.node].volts_per_unit
+        share, seen = drift_share(stage.name, rate, sensitivity, factor, sizing.time_scale)
+        text = f"{state} holds what offsets push into it: about {engineering(rate, 'V/s')} at {stage.node}"
+        text += f", {100 * share:.2g} % of peak at {seen} by the end of the run" if seen else ""
+        limit = sizing.stages[stage.name].feedback
+        notes.append(text + (f"; {engineering(limit, 'Ω')} across its capacitor bounds it." if limit else "."))
+    return notes
+
+
+def _content_notes(sizing: Sizing, patch: Patch, ranges: Ranges) -> list[str]:
+    """Watched signals with content below a decade above a DC-limit corner, where the integrator is of little use."""
+    notes = []
+    for stage in patch.stages:
+        values = sizing.stages[stage.name]
+        if stage.kind != "integrator" or not values.feedback:
+            continue
+        corner = sizing.time_scale / (2 * pi * values.feedback * values.capacitor)
+        for signal, node in patch.watched.items():
+            share = content_below(ranges.values[node], ranges.times, 10 * corner)
+            if share > 0.01:
+                notes.append(
+                    f"{signal} has {100 * share:.0f} % of its content below {10 * corner:.3g} cycles per unit of time, "
+                    f"ten times the DC-limit corner of {stage.name}: there the integrator is more than 1 % off."
+                )
+    return notes

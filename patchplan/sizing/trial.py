@@ -1,0 +1,215 @@
+"""One attempt at values from a starting point of scale factors and speed, and the best of several."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from math import log
+
+import numpy as np
+from numpy.typing import NDArray
+
+from patchplan.sizing.model import Model
+from patchplan.sizing.records import Target
+from patchplan.sizing.search import Loops, Menu, descend, find_loops, split_rest
+from patchplan.sizing.speed import COMFORTABLE
+from patchplan.sizing.values import (
+    Choice,
+    Unknowns,
+    find_unknowns,
+    pick_capacitor,
+    pick_feedback,
+    plain,
+    resistor,
+    start_ratios,
+    wanted_products,
+)
+
+Array = NDArray[np.float64]
+#: Attempts by how hard to think; each is a starting point, not a number of seconds.
+ATTEMPTS = {"low": 4, "normal": 12, "high": 60}
+#: How far a value may lie from the wanted one at the start of an attempt, in logs: three steps of E24.
+WIDTH = 0.3
+
+
+@dataclass(frozen=True)
+class Values:
+    """Chosen parts and scale factors.
+
+    Attributes
+    ----------
+    parts
+        (stage, what) -> the part values behind that unknown.
+    theta
+        Fitted logs of scale factors and speed.
+    worst
+        Largest weighted relative error left.
+    loop_errors
+        Errors of the independent loops, shape ``(n_loops,)``.
+    errors
+        Relative error of each row, shape ``(n_rows,)``.
+    """
+
+    parts: dict[tuple[str, int | str], tuple[float, ...]]
+    theta: Array
+    worst: float
+    loop_errors: Array
+    errors: Array
+
+
+@dataclass(frozen=True)
+class _Board:
+    """What all attempts share."""
+
+    model: Model
+    target: Target
+    unknowns: Unknowns
+    matrix: Array
+    constant: Array
+    weights: Array
+    loops: Loops
+    comfortable: Mapping[str, float]
+
+
+def matrix_of(model: Model) -> tuple[Array, Array]:
+    """A of shape ``(n_rows, n_theta)`` and b of shape ``(n_rows,)``."""
+    matrix = np.zeros((len(model.ratios), len(model.low)))
+    for row, ratio in enumerate(model.ratios):
+        for column, value in ratio.want.slope.items():
+            matrix[row, column] += value
+    return matrix, np.array([r.want.constant for r in model.ratios])
+
+
+def choose_values(
+    model: Model,
+    target: Target,
+    *,
+    comfortable: Mapping[str, float] | None = None,
+    think: str = "normal",
+    seed: int = 1,
+) -> Values:
+    """Search R, C, scale factors and speed together, from several starting points.
+
+    Parameters
+    ----------
+    comfortable
+        Stage -> resistance its capacitor is chosen for [ohm], where the usual one does not serve.
+    think
+        Key of :data:`ATTEMPTS`.
+    seed
+        Of the starting points; the same seed gives the same values.
+    """
+    matrix, constant = matrix_of(model)
+    weights = np.array([r.weight for r in model.ratios])
+    unknowns = find_unknowns(model.ratios, model.feedback)
+    board = _Board(model, target, unknowns, matrix, constant, weights, find_loops(matrix, weights), comfortable or {})
+    random = np.random.default_rng(seed)
+    attempts = [_attempt(board, number, random) for number in range(_count(len(unknowns.names), think))]
+    attempts.sort(key=lambda found: found[0])
+    best = [_finish(board, y, choices) for _, y, choices in attempts[:4]]
+    return min(best, key=lambda values: values.worst)
+
+
+def _count(unknowns: int, think: str) -> int:
+    """Fewer attempts for boards whose pairs of moves are many."""
+    return max(2, round(ATTEMPTS[think] * min(1.0, 40 / max(unknowns, 1))))
+
+
+def _attempt(board: _Board, number: int, random: np.random.Generator) -> tuple[float, Array, list[Choice]]:
+    """Descend from one starting point: the middle first, then scattered ones."""
+    model = board.model
+    theta = model.centre
+    if number:
+        theta = theta + random.uniform(-0.35, 0.35, len(theta)) * (model.high - model.low)
+    wanted = wanted_products(model, theta)
+    picked = _stage_values(board, wanted, random, number)
+    choices, centre = _choices(board, wanted, picked)
+    y = np.array([c.logs[np.argmin(np.abs(c.logs - w))] for c, w in zip(choices, centre, strict=True)])
+    menu = _menu(board, choices, centre)
+    for _ in range(2):
+        y = descend(board.loops, board.unknowns.incidence, board.constant - _shift(board, y), menu, y)
+    left = board.loops.errors(board.unknowns.incidence @ y - board.constant + _shift(board, y))
+    return float(left @ left), y, choices
+
+
+def _stage_values(
+    board: _Board, wanted: Array, random: np.random.Generator, number: int
+) -> dict[tuple[str, int | str], float]:
+    """Capacitors and feedback resistors to begin from."""
+    rows: dict[tuple[str, str], list[int]] = {}
+    for row, ratio in enumerate(board.model.ratios):
+        if ratio.kind != "start":
+            rows.setdefault((ratio.stage, "C" if ratio.kind == "integrator" else "Rf"), []).append(row)
+    picked: dict[tuple[str, int | str], float] = {}
+    for (stage, what), members in rows.items():
+        if what == "C":
+            rank = int(random.integers(0, 3)) if number else 0
+            near = board.comfortable.get(stage, COMFORTABLE)
+            picked[stage, what] = pick_capacitor(wanted[members], board.target, rank, near)
+        elif stage not in board.model.feedback:
+            picked[stage, what] = pick_feedback(wanted[members], board.target)
+    return picked
+
+
+def _choices(board: _Board, wanted: Array, picked: dict[tuple[str, int | str], float]) -> tuple[list[Choice], Array]:
+    """What each unknown may be, and the log it should have, shape ``(n_unknowns,)``."""
+    at = {(r.stage, r.wire): row for row, r in enumerate(board.model.ratios)}
+    choices, centre = [], []
+    for stage, what in board.unknowns.names:
+        if what == "C" or what == "Rf":
+            series = board.target.capacitors if what == "C" else board.target.resistors
+            choices.append(plain(series))
+            centre.append(log(picked[stage, what]))
+        elif what == -1:
+            choices.append(start_ratios(board.target.resistors))
+            centre.append(log(wanted[at[stage, -1]]))
+        else:
+            ratio = float(wanted[at[stage, int(what)]])
+            ohms = ratio / picked[stage, "C"] if (stage, "C") in picked else ratio * picked.get((stage, "Rf"), 1.0)
+            choices.append(resistor(ohms, board.target))
+            centre.append(log(ohms))
+    return choices, np.array(centre)
+
+
+def _menu(board: _Board, choices: list[Choice], centre: Array) -> Menu:
+    """Moves of the attempt: near values of every resistor and start ratio; capacitors and feedbacks stay."""
+    unknown, value = [], []
+    for column, ((_, what), choice) in enumerate(zip(board.unknowns.names, choices, strict=True)):
+        if what in ("C", "Rf"):
+            continue
+        near = choice.logs[choice.near(float(centre[column]), WIDTH)]
+        if near.size > 24:
+            near = near[np.argsort(np.abs(near - centre[column]), kind="stable")[:24]]
+        unknown.append(np.full(near.size, column))
+        value.append(near)
+    if not unknown:
+        return Menu(np.zeros(0, dtype=np.intp), np.zeros(0))
+    return Menu(np.concatenate(unknown).astype(np.intp), np.concatenate(value))
+
+
+def _shift(board: _Board, y: Array) -> Array:
+    """log of what the operate switch and the op amp's finite bandwidth add to each R*C, shape ``(n_rows,)``.
+
+    All legs of a stage share the switch, so that Ron counts as Ron * sum(1/R); at infinite gain an integrator of gains
+    g is slower by 1 + sum(g)/w_t (Franco 2019).
+    """
+    column = {name: c for c, name in enumerate(board.unknowns.names)}
+    extra: dict[str, float] = {}
+    for ratio in board.model.ratios:
+        if ratio.kind == "integrator":
+            conductance = float(np.exp(-y[column[ratio.stage, ratio.wire]]))
+            slow = conductance / float(np.exp(y[column[ratio.stage, "C"]])) / board.target.op_amp.gain_bandwidth
+            extra[ratio.stage] = extra.get(ratio.stage, 0.0) + board.target.switch_on * conductance + slow
+    return np.array([np.log1p(extra[r.stage]) if r.kind == "integrator" else 0.0 for r in board.model.ratios])
+
+
+def _finish(board: _Board, y: Array, choices: list[Choice]) -> Values:
+    """Split what is left over the scale factors and name the parts."""
+    residual = board.unknowns.incidence @ y - board.constant + _shift(board, y)
+    theta, worst = split_rest(board.matrix, residual, board.weights, board.model.low, board.model.high)
+    errors = np.expm1(-(residual - board.matrix @ theta))
+    parts = {
+        name: choice.parts[int(np.argmin(np.abs(choice.logs - value)))]
+        for name, choice, value in zip(board.unknowns.names, choices, y, strict=True)
+    }
+    return Values(parts, theta, worst, board.loops.errors(residual), errors)

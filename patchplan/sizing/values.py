@@ -1,0 +1,149 @@
+"""Unknown values of the board and what they may be: resistors, T legs, capacitors, feedback, start ratios."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from functools import lru_cache
+from math import exp, log
+
+import numpy as np
+from numpy.typing import NDArray
+
+from patchplan.sizing.model import Model, Ratio
+from patchplan.sizing.records import Leg, Target
+from patchplan.sizing.speed import COMFORTABLE
+
+Array = NDArray[np.float64]
+#: Feedback resistors of summers sit between these, for the pole with the input capacitance [ohm].
+FEEDBACK = (5e3, 1e5)
+#: Start networks hold through a feedback resistor near this value [ohm] (common practice, no source).
+START_FEEDBACK = 2e4
+
+
+@dataclass(frozen=True)
+class Choice:
+    """What one unknown may be: rising log values, and the parts behind each."""
+
+    logs: Array
+    parts: tuple[tuple[float, ...], ...]
+
+    def near(self, wanted: float, width: float) -> Array:
+        """Positions of the values within ``width`` of a wanted log, at least the nearest one."""
+        low, high = np.searchsorted(self.logs, [wanted - width, wanted + width])
+        if low == high:
+            nearest = int(np.argmin(np.abs(self.logs - wanted)))
+            return np.array([nearest])
+        return np.arange(low, high)
+
+
+@dataclass(frozen=True)
+class Unknowns:
+    """Columns of y: one for each wire, start ratio, capacitor and feedback resistor.
+
+    Attributes
+    ----------
+    names
+        (stage, what): what is a wire's index, -1 for the start ratio, ``C`` or ``Rf``.
+    incidence
+        B, shape ``(n_rows, n_unknowns)``.
+    """
+
+    names: tuple[tuple[str, int | str], ...]
+    incidence: Array
+
+    def column(self, stage: str, what: int | str) -> int:
+        """Column of one unknown."""
+        return self.names.index((stage, what))
+
+
+def find_unknowns(ratios: tuple[Ratio, ...], continuous: Mapping[str, int]) -> Unknowns:
+    """Columns and incidence: R*C for integrators, R/Rf for summers, the ratio itself for start values."""
+    names: dict[tuple[str, int | str], int] = {}
+    entries: list[tuple[int, int, float]] = []
+    for row, ratio in enumerate(ratios):
+        entries.append((row, names.setdefault((ratio.stage, ratio.wire), len(names)), 1.0))
+        if ratio.kind == "integrator":
+            entries.append((row, names.setdefault((ratio.stage, "C"), len(names)), 1.0))
+        elif ratio.kind == "summer" and ratio.stage not in continuous:
+            entries.append((row, names.setdefault((ratio.stage, "Rf"), len(names)), -1.0))
+    incidence = np.zeros((len(ratios), len(names)))
+    if entries:
+        rows, columns, values = zip(*entries, strict=True)
+        incidence[list(rows), list(columns)] = values
+    return Unknowns(tuple(names), incidence)
+
+
+@lru_cache(maxsize=8)
+def plain(values: tuple[float, ...]) -> Choice:
+    """One part out of a series."""
+    return Choice(np.log(np.array(values)), tuple((v,) for v in values))
+
+
+def resistor(wanted: float, target: Target) -> Choice:
+    """One resistor, or a T of three where the wanted transfer resistance is above the largest [ohm]."""
+    if wanted <= 1.03 * target.resistors[-1]:
+        return plain(target.resistors)
+    return _t_legs(target.resistors, wanted)
+
+
+@lru_cache(maxsize=64)
+def _t_legs(resistors: tuple[float, ...], wanted: float) -> Choice:
+    """T legs R1 = R3 with any shunt; the smallest arms whose shunt stays twice above the smallest resistor."""
+    values = np.array(resistors)
+    reach = 2 * values + values**2 / (2 * values[0])
+    arm = float(values[min(int(np.searchsorted(reach, wanted)), len(values) - 1)])
+    shunts = values[values <= arm]
+    parts = [(arm, float(s), arm) for s in shunts[::-1]]
+    return Choice(np.log(np.array([Leg(p).transfer for p in parts])), tuple(parts))
+
+
+@lru_cache(maxsize=8)
+def start_ratios(resistors: tuple[float, ...]) -> Choice:
+    """All ratios R2/R1 of two purchasable resistors, each with R2 nearest to :data:`START_FEEDBACK`."""
+    values = np.array(resistors)
+    seconds = values[(values >= START_FEEDBACK / 4) & (values <= START_FEEDBACK * 5)]
+    if seconds.size == 0:
+        seconds = values
+    ratio = np.round(np.log(seconds[:, None] / values[None, :]), 9)
+    order = np.argsort(np.abs(np.log(seconds / START_FEEDBACK)), kind="stable")
+    best: dict[float, tuple[float, float]] = {}
+    for second in order:
+        for first in range(len(values)):
+            best.setdefault(float(ratio[second, first]), (float(values[first]), float(seconds[second])))
+    logs = sorted(best)
+    return Choice(np.array(logs), tuple(best[x] for x in logs))
+
+
+def pick_capacitor(wanted: Array, target: Target, rank: int = 0, comfortable: float = COMFORTABLE) -> float:
+    """Capacitor for a stage whose R*C products are wanted [s]; ``rank`` 0 is the best, 1 the next.
+
+    Out-of-range resistors count most, then the distance of their middle from ``comfortable`` [ohm].
+    """
+    capacitors = np.array(target.capacitors)
+    resistors = wanted[None, :] / capacitors[:, None]
+    over = np.maximum(np.log(resistors / target.resistors[-1]), 0) + np.maximum(
+        np.log(target.resistors[0] / resistors), 0
+    )
+    middle = np.abs(np.log(np.sqrt(resistors.min(axis=1) * resistors.max(axis=1)) / comfortable))
+    order = np.argsort(100 * over.sum(axis=1) + middle, kind="stable")
+    return float(capacitors[order[min(rank, len(order) - 1)]])
+
+
+def pick_feedback(wanted: Array, target: Target) -> float:
+    """Feedback resistor of a summer whose ratios R/Rf are wanted: legs and feedback around 20k, all in range."""
+    values = np.array([v for v in target.resistors if FEEDBACK[0] <= v <= FEEDBACK[1]] or target.resistors)
+    legs = wanted[None, :] * values[:, None]
+    over = np.maximum(np.log(legs / target.resistors[-1]), 0) + np.maximum(np.log(target.resistors[0] / legs), 0)
+    middle = np.abs(np.log(np.sqrt(values * np.sqrt(legs.min(axis=1) * legs.max(axis=1))) / 2e4))
+    return float(values[np.argmin(100 * over.sum(axis=1) + middle)])
+
+
+def wanted_products(model: Model, theta: Array) -> Array:
+    """exp(b + A theta): wanted R*C, R/Rf and start ratios, shape ``(n_rows,)``."""
+    return np.array([exp(model.at(r.want, theta)) for r in model.ratios])
+
+
+def log_or_zero(value: float) -> float:
+    """Natural log, 0 for 0."""
+    return log(value) if value else 0.0
