@@ -4,14 +4,15 @@ from __future__ import annotations
 
 import difflib
 import math
-import re
 import tomllib
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field, replace
+from fractions import Fraction
 from pathlib import Path
 from typing import Any
 
 from patchplan.errors import Fault, ProblemFaults
+from patchplan.quantity import SUFFIXES, parse_quantity
 
 #: Figures of each kind of part: key -> (unit, meaning).
 FIGURES: dict[str, dict[str, tuple[str, str]]] = {
@@ -55,10 +56,13 @@ FIGURES: dict[str, dict[str, tuple[str, str]]] = {
         "charge_injection": ("C", "charge injected when it opens, typical"),
     },
 }
+#: Figures that mean nothing at 0.
+_POSITIVE = frozenset(
+    {"supply_max", "gain", "gain_bandwidth", "slew", "load", "scale", "full_scale", "bandwidth", "on_resistance"}
+)
 #: Keys of a part table that are no figures.
-_TEXT_KEYS = ("kind", "like", "text", "source", "pins", "operate", "hold")
-_PREFIXES = {"": 1.0, "f": 1e-15, "p": 1e-12, "n": 1e-9, "u": 1e-6, "m": 1e-3, "k": 1e3, "M": 1e6, "G": 1e9}
-_QUANTITY = re.compile(r"([-+]?[0-9.]+(?:[eE][-+]?[0-9]+)?)\s*(.*)")
+_TEXT_KEYS = ("kind", "like", "text", "source")
+_PREFIXES = {"": 0, **SUFFIXES}
 _SOURCE_OF_OWN = "stated in the problem file"
 _FILE = Path(__file__).with_name("parts.toml")
 
@@ -162,26 +166,23 @@ def figure_value(quantity: Any, unit: str) -> float:
     if isinstance(quantity, int | float):
         value = float(quantity)
     else:
-        match = _QUANTITY.fullmatch(quantity.strip())
-        factor = _unit_factor(match[2], unit) if match else None
-        if match is None or factor is None:
+        number, written = parse_quantity(quantity)
+        power = _power_of_ten(written, unit) if written else 0
+        if power is None:
             raise ValueError(f"{quantity!r} is no quantity in {unit}.")
-        # One decimal conversion instead of a product, so that "13 V/us" is exactly 13e6.
-        value = float(match[1]) * factor if factor >= 1 else float(match[1]) / round(1 / factor)
+        value = float(number * Fraction(10) ** power)
     if not math.isfinite(value) or value < 0:
         raise ValueError(f"{quantity!r} is not a finite number of at least 0.")
     return value
 
 
-def _unit_factor(text: str, unit: str) -> float | None:
-    """Factor from a written unit to the SI unit; None where they do not match."""
-    if unit == "1" and text in ("%", ""):
-        return 0.01 if text else 1.0
-    if unit == "V/s" and text.endswith("s") and "/" in text:
-        top, _, bottom = text.partition("/")
-        volts, seconds = _unit_factor(top, "V"), _PREFIXES.get(bottom[:-1])
-        return None if volts is None or seconds is None else volts * round(1 / seconds)
-    return _PREFIXES.get(text.removesuffix(unit)) if text.endswith(unit) else None
+def _power_of_ten(written: str, unit: str) -> int | None:
+    """Power of ten from a written unit to the SI unit; None where they do not match."""
+    if unit == "V/s" and written.endswith("s") and "/" in written:
+        top, _, bottom = written.partition("/")
+        volts, seconds = _power_of_ten(top, "V"), _PREFIXES.get(bottom[:-1])
+        return None if volts is None or seconds is None else volts - seconds
+    return _PREFIXES.get(written.removesuffix(unit)) if written.endswith(unit) else None
 
 
 def _known_part(kind: str, name: str, table: Mapping[str, Any]) -> PartData:
@@ -248,7 +249,7 @@ def _own_figures(name: str, kind: str, table: Mapping[str, Any], faults: list[Fa
     known = FIGURES[kind]
     for key, quantity in table.items():
         place = f"part.{name}.{key}"
-        if key in _TEXT_KEYS[:4]:
+        if key in _TEXT_KEYS:
             continue
         if key not in known:
             near = difflib.get_close_matches(key, known, 1)
@@ -257,7 +258,10 @@ def _own_figures(name: str, kind: str, table: Mapping[str, Any], faults: list[Fa
             continue
         unit, meaning = known[key]
         try:
-            yield key, Figure(figure_value(quantity, unit), unit, _SOURCE_OF_OWN)
+            value = figure_value(quantity, unit)
+            if value == 0 and key in _POSITIVE:
+                raise ValueError("It is 0.")
+            yield key, Figure(value, unit, _SOURCE_OF_OWN)
         except ValueError as error:
             faults.append(Fault(f"{key} ({meaning}) cannot be used: {error}", _example(unit), place))
 

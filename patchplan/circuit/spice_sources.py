@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 
 from patchplan.circuit.records import Circuit, Part
 from patchplan.circuit.spice_models import num
+from patchplan.equation.problem import Recording
 from patchplan.equation.tree import PIECEWISE, Binary, Call, Minus, Name, Node, Number
 from patchplan.equation.waveform import Waveform
 
@@ -45,7 +46,7 @@ class SourceText:
             self.lines.append(f"* known only by its bounds {num(low)} to {num(high)}: the middle stands in")
             self.lines.append(f"V{part.ref} {part.nets[0]} 0 DC {num(middle)}")
         elif source.waveform.recording is not None:
-            times, values = (np.array(c) for c in (source.waveform.recording.times, source.waveform.recording.values))
+            times, values = self._within_run(source.waveform.recording)
             self._piecewise_linear(f"V{part.ref} {part.nets[0]}", times, part.value * values + offset)
         elif source.waveform.tree is not None:
             text = self.expression(source.waveform.tree)
@@ -95,19 +96,22 @@ class SourceText:
         """Corners (times, values) of a function of time, two at a jump."""
         duration = self.circuit.duration / self.circuit.time_scale
         wave = Waveform(call)
-        jumps = [t for t in wave.jumps(duration) if 0 < t < duration * (1 - RISE)]
-        edges = np.array([0.0, *jumps, duration])
-        straight = _is_affine(call.arguments[0])
-        grid = np.linspace(0.0, 1.0, 2 if straight else _CURVED_PIECES + 1)
-        start, length = edges[:-1, None], np.diff(edges)[:, None]
-        times = start + length * grid
-        # Both ends are taken from inside the piece, where the function is sure to be on this side of the jump.
-        inside = np.clip(grid, 1e-3, 1 - 1e-3)
-        values = np.asarray(wave.values((start + length * inside).ravel()), float).reshape(times.shape)
-        if straight:
-            slope = (values[:, 1] - values[:, 0]) / (1 - 2e-3)
-            values = np.stack([values[:, 0] - 1e-3 * slope, values[:, 1] + 1e-3 * slope], axis=1)
+        edges = np.array([0.0, *(t for t in wave.jumps(duration) if t < duration * (1 - RISE)), duration])
+        times = edges[:-1, None] + np.diff(edges)[:, None] * np.linspace(0.0, 1.0, _CURVED_PIECES + 1)
+        values = wave.values(times)
+        values[:, -1] = wave.before(edges[1:])
+        chords = np.linspace(values[:, 0], values[:, -1], _CURVED_PIECES + 1, axis=1)
+        if np.allclose(values, chords, rtol=0.0, atol=1e-9 * float(np.abs(values).max())):
+            times, values = times[:, [0, -1]], values[:, [0, -1]]
         return times.ravel(), values.ravel()
+
+    def _within_run(self, recording: Recording) -> tuple[Array, Array]:
+        """Rows of a recording, cut to the run."""
+        duration = self.circuit.duration / self.circuit.time_scale
+        times, values = np.array(recording.times), np.array(recording.values)
+        inner = (times > 0) & (times < duration)
+        ends = np.interp([0.0, duration], times, values)
+        return np.array([0.0, *times[inner], duration]), np.array([ends[0], *values[inner], ends[1]])
 
     def _piecewise_linear(self, head: str, times: Array, values: Array) -> None:
         """A PWL element; of two equal times the second comes one rise later."""
@@ -134,30 +138,3 @@ def _constant(tree: Node) -> Fraction | None:
         top, bottom = _constant(tree.left), _constant(tree.right)
         return None if top is None or not bottom else top / bottom
     return None
-
-
-def _is_affine(tree: Node) -> bool:
-    """Whether a tree in t is a straight line, as far as its shape tells."""
-    if isinstance(tree, Number | Name):
-        return True
-    if isinstance(tree, Minus):
-        return _is_affine(tree.operand)
-    if isinstance(tree, Binary):
-        if tree.operator in "+-":
-            return _is_affine(tree.left) and _is_affine(tree.right)
-        if tree.operator == "*":
-            return (_free_of_time(tree.left) and _is_affine(tree.right)) or (
-                _free_of_time(tree.right) and _is_affine(tree.left)
-            )
-        return tree.operator == "/" and _free_of_time(tree.right) and _is_affine(tree.left)
-    return False
-
-
-def _free_of_time(tree: Node) -> bool:
-    if isinstance(tree, Name):
-        return tree.name != "t"
-    if isinstance(tree, Minus):
-        return _free_of_time(tree.operand)
-    if isinstance(tree, Binary):
-        return _free_of_time(tree.left) and _free_of_time(tree.right)
-    return isinstance(tree, Number) or all(map(_free_of_time, tree.arguments))
