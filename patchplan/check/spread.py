@@ -1,0 +1,103 @@
+"""How far boards of one design differ from each other, from the linear sensitivities."""
+
+from __future__ import annotations
+
+from math import sqrt
+
+import numpy as np
+from numpy.typing import NDArray
+
+from patchplan.patch.records import Patch, Stage
+from patchplan.sensitivity import Sensitivity
+from patchplan.sizing.records import Leg, Sizing, StageSizing, Target
+
+Array = NDArray[np.float64]
+
+
+def spread_of(sensitivity: Sensitivity, patch: Patch, sizing: Sizing, target: Target) -> dict[str, Array]:
+    """Standard deviation between boards by cause, each of shape ``(n_watched, n_times)``, fraction of the error base.
+
+    Parameters
+    ----------
+    sensitivity, patch, sizing, target
+        The plan; a tolerance t is taken as uniform, sigma = t / sqrt(3).
+
+    Returns
+    -------
+    dict
+        ``resistors``, ``capacitors``, ``reference``, ``offsets``, ``multipliers``. Causes are independent.
+    """
+    resistor, capacitor = target.resistor_tolerance / sqrt(3), target.capacitor_tolerance / sqrt(3)
+    columns: dict[str, list[Array]] = {
+        "resistors": [], "capacitors": [], "reference": [], "offsets": [], "multipliers": []
+    }  # fmt: skip
+    wires = {key: i for i, key in enumerate(sensitivity.wires)}
+    stages = {name: i for i, name in enumerate(sensitivity.stages)}
+    for stage in patch.stages:
+        if stage.kind in ("reference", "source"):
+            continue
+        own = [
+            sensitivity.coefficient[:, wires[key]] for i in range(len(stage.wires)) if (key := (stage.name, i)) in wires
+        ]
+        rate = sensitivity.rate[:, stages[stage.name]]
+        volts = sizing.scales[stage.node].volts_per_unit
+        if stage.kind == "multiplier":
+            columns["multipliers"] += [target.multiplier.scale_error * x for x in own]
+            columns["multipliers"].append(target.multiplier.offset / volts * rate)
+            continue
+        sized = sizing.stages[stage.name]
+        for leg, response in zip(sized.legs, own, strict=False):
+            columns["resistors"].append(resistor * _leg_factor(leg) * response)
+        shared = np.sum(own, axis=0) if own else np.zeros_like(rate)
+        if stage.kind == "integrator":
+            columns["capacitors"].append(capacitor * shared)
+        else:
+            columns["resistors"].append(resistor * shared)
+        columns["offsets"].append(target.op_amp.offset * _offset_gain(stage, sized, sizing.time_scale) / volts * rate)
+        if sized.start is not None and sized.start[0]:
+            start = sensitivity.start[stage.name] * sized.start_volts / volts
+            columns["resistors"].append(sqrt(2) * resistor * start)
+    columns["reference"].append(target.reference_tolerance / sqrt(3) * _reference(sensitivity, patch, sizing, wires))
+    shape = sensitivity.coefficient.shape[::2]
+    return {cause: np.sqrt(sum((x**2 for x in list_), np.zeros(shape))) for cause, list_ in columns.items()}
+
+
+def _reference(sensitivity: Sensitivity, patch: Patch, sizing: Sizing, wires: dict[tuple[str, int], int]) -> Array:
+    """Response to a relative change of the reference, shape ``(n_watched, n_times)``."""
+    total = np.zeros(sensitivity.coefficient.shape[::2])
+    references = {s.node for s in patch.stages if s.kind == "reference"}
+    for stage in patch.stages:
+        for i, wire in enumerate(stage.wires):
+            if wire.source in references and (stage.name, i) in wires:
+                total += sensitivity.coefficient[:, wires[stage.name, i]]
+        sized = sizing.stages.get(stage.name)
+        if stage.kind == "integrator" and sized is not None and sized.start is not None and sized.start[0]:
+            volts = stage.sign * sizing.scales[stage.node].volts_per_unit
+            total += sensitivity.start[stage.name] * sized.start_volts / volts
+    return total
+
+
+def _leg_factor(leg: Leg) -> float:
+    """Relative change of a leg's transfer per relative change of its resistors, root sum of squares."""
+    if len(leg.resistors) == 1:
+        return 1.0
+    first, shunt, last = leg.resistors
+    cross = first * last / shunt
+    return sqrt((first + cross) ** 2 + cross**2 + (last + cross) ** 2) / leg.transfer
+
+
+def _offset_gain(stage: Stage, sized: StageSizing, time_scale: float) -> float:
+    """Volts at the output, or volts per unit of problem time of an integrator, for one volt of offset."""
+    conductance = sum(_into(leg) for leg in sized.legs)
+    if stage.kind == "integrator":
+        feedback = 1.0 / sized.feedback if sized.feedback else 0.0
+        return (conductance + feedback) / sized.capacitor * time_scale
+    return 1.0 + sized.feedback * conductance
+
+
+def _into(leg: Leg) -> float:
+    """Conductance that the summing node sees into a leg, its source at ground [S]."""
+    if len(leg.resistors) == 1:
+        return 1.0 / leg.resistors[0]
+    first, shunt, last = leg.resistors
+    return 1.0 / (last + first * shunt / (first + shunt))
