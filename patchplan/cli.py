@@ -1,0 +1,150 @@
+"""The command line: the only place that prints."""
+
+from __future__ import annotations
+
+import sys
+from collections.abc import Callable
+from enum import StrEnum
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated
+
+import typer
+
+if TYPE_CHECKING:
+    from patchplan.report.records import Plan
+
+app = typer.Typer(
+    add_completion=False, rich_markup_mode=None, pretty_exceptions_enable=False, no_args_is_help=True,
+    help="From a differential equation to an op-amp integrator circuit that obeys it.",
+)  # fmt: skip
+
+#: Exit codes.
+FOLLOWS, FAILS, BAD_INPUT, INTERRUPTED = 0, 1, 2, 130
+
+
+class Think(StrEnum):
+    """How long to search."""
+
+    low = "low"
+    normal = "normal"
+    high = "high"
+
+
+@app.command()
+def plan(
+    file: Annotated[Path, typer.Argument(help="Problem file (TOML).", metavar="FILE")],
+    into: Annotated[Path | None, typer.Option(help="Folder of the plan; default outputs/<name of FILE>.")] = None,
+    accept: Annotated[float, typer.Option(min=0.0, help="Largest error that counts as following [% of peak].")] = 5.0,
+    as_json: Annotated[bool, typer.Option("--json", help="Print plan.json and nothing else.")] = False,
+    quiet: Annotated[bool, typer.Option("--quiet", help="Print nothing but faults.")] = False,
+    no_pictures: Annotated[bool, typer.Option("--no-pictures", help="Draw nothing.")] = False,
+    trust_paths: Annotated[bool, typer.Option("--trust-paths", help="Let FILE name files outside its folder.")] = False,
+    think: Annotated[Think, typer.Option(help="How long to search.")] = Think.normal,
+) -> None:
+    """Plan the circuit for a problem file and write the plan folder.
+
+    Exit code 0: follows the equation; 1: planned but inaccurate, overloaded or not buildable; 2: bad input.
+    """
+    folder = into or Path("outputs") / file.stem
+
+    def work() -> int:
+        from patchplan.report.folder import may_write
+
+        may_write(folder)
+        made = _planned(file, accept, trust_paths, think, folder, not no_pictures, quiet or as_json)
+        _show(made, folder, as_json, quiet)
+        return FOLLOWS if made.verdict.verdict == "follows" else FAILS
+
+    raise typer.Exit(_guarded(work))
+
+
+@app.command()
+def start(
+    file: Annotated[Path, typer.Argument(help="File to write.", metavar="[FILE]")] = Path("problem.toml"),
+) -> None:
+    """Write a commented problem file to begin from; an existing file is left alone."""
+
+    def work() -> int:
+        text = Path(__file__).with_name("report").joinpath("start.toml").read_bytes()
+        try:
+            with file.open("xb") as stream:
+                stream.write(text)
+        except FileExistsError:
+            _complain(f"{file} exists and was left alone. Name another file, or move this one.")
+            return BAD_INPUT
+        typer.echo(f"Written to {file}. Next: patchplan plan {file}")
+        return FOLLOWS
+
+    raise typer.Exit(_guarded(work))
+
+
+@app.command()
+def parts() -> None:
+    """List the op amps, multipliers and switches of the catalogue."""
+
+    def work() -> int:
+        from patchplan.circuit.catalogue import load_catalogue
+        from patchplan.report.parts_list import parts_list
+
+        typer.echo(parts_list(load_catalogue()), nl=False)
+        return FOLLOWS
+
+    raise typer.Exit(_guarded(work))
+
+
+def main() -> None:
+    """Entry point of the ``patchplan`` command."""
+    app(prog_name="patchplan")
+
+
+def _planned(
+    file: Path, accept: float, trust_paths: bool, think: Think, folder: Path, pictures: bool, silent: bool
+) -> Plan:
+    """Read, plan and write."""
+    from patchplan.report.progress import shown_progress
+
+    with shown_progress(silent) as progress:
+        progress("reading")
+        from patchplan.circuit.catalogue import catalogue_names
+        from patchplan.equation.reader import read_problem
+        from patchplan.pipeline import plan as make_plan
+        from patchplan.report.write import write_plan
+
+        problem = read_problem(file, part_names=catalogue_names(), trust_paths=trust_paths)
+        made = make_plan(problem, accept=accept, think=think.value, progress=progress)
+        progress("writing")
+        write_plan(made, folder, pictures=pictures)
+    return made
+
+
+def _show(made: Plan, folder: Path, as_json: bool, quiet: bool) -> None:
+    if as_json:
+        typer.echo((folder / "plan.json").read_text(encoding="utf-8"), nl=False)
+    elif not quiet:
+        from patchplan.report.summary import summary
+
+        typer.echo(summary(made, folder, colour=sys.stdout.isatty()), nl=False)
+
+
+def _guarded(work: Callable[[], int]) -> int:
+    """Exit code of some work; what the user can mend is said without a traceback."""
+    from patchplan.errors import CannotBuild, PatchplanError
+
+    try:
+        return work()
+    except CannotBuild as error:
+        _complain(f"Cannot be built with these parts. {error}")
+        return FAILS
+    except PatchplanError as error:
+        _complain(str(error))
+    except OSError as error:
+        place = f"{error.filename}: " if error.filename else ""
+        _complain(f"{place}{error.strerror or error}. Nothing more was written.")
+    except KeyboardInterrupt:
+        _complain("Interrupted. The plan folder is as it was.")
+        return INTERRUPTED
+    return BAD_INPUT
+
+
+def _complain(text: str) -> None:
+    typer.echo(text, err=True)

@@ -1,0 +1,106 @@
+"""report.html: one page that needs no network."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from pathlib import Path
+
+from patchplan.quantity import engineering
+from patchplan.report import style, words
+from patchplan.report.plan_json import notes_of, warnings_of
+from patchplan.report.records import Plan
+from patchplan.report.tables import (
+    Table,
+    budget_table,
+    coefficient_table,
+    node_table,
+    parts_table,
+    signal_table,
+    source_table,
+    stage_table,
+)
+
+_TEMPLATE = Path(__file__).with_name("page.html")
+#: What a node may be off in hold before something is wrong: offsets, 1 % parts; common practice, no source.
+_HOLD_TOLERANCE_VOLTS = 0.05
+_HOLD_TOLERANCE = 0.02
+
+
+def page(
+    plan: Plan, start: Mapping[str, float], drawings: Mapping[str, str], sources: dict[str, str], files: Sequence[str]
+) -> str:
+    """HTML text of a plan that was built.
+
+    Parameters
+    ----------
+    start
+        Volts of every net in hold, or at the start of the run where the board has no hold.
+    drawings
+        File name -> SVG text; they are put into the page.
+    sources
+        Source -> name of its waveform file.
+    files
+        Names of the files of the folder.
+    """
+    from jinja2 import Environment
+    from markupsafe import Markup
+
+    assert plan.circuit is not None
+    template = Environment(autoescape=True).from_string(_TEMPLATE.read_text(encoding="utf-8"))
+    return template.render(
+        title=plan.problem.title,
+        light=style.page_variables(style.LIGHT),
+        dark=style.page_variables(style.DARK),
+        works=plan.verdict.verdict == "follows",
+        story=words.story(plan),
+        reasons=words.reasons(plan),
+        remedies=words.remedies(plan),
+        warnings=warnings_of(plan),
+        notes=notes_of(plan),
+        # The pictures come from our own drawing; it escapes every name in them.
+        drawings=[(name, Markup(embedded(svg, name))) for name, svg in drawings.items()],
+        tables=[
+            signal_table(plan), node_table(plan), source_table(plan, sources), stage_table(plan),
+            coefficient_table(plan), budget_table(plan), parts_table(plan.circuit),
+        ],
+        steps=steps(plan),
+        static=static_table(plan, start),
+        cautions=words.CAUTIONS,
+        problem=plan.problem.text,
+        files=files,
+    )  # fmt: skip
+
+
+def embedded(svg: str, name: str) -> str:
+    """SVG to put into a page: hues follow the page, and identifiers are unlike those of the other pictures."""
+    body = svg[svg.index("<svg") :]
+    prefix = name.rpartition(".")[0]
+    for mark in ('id="', 'href="#', "url(#"):
+        body = body.replace(mark, f"{mark}{prefix}-")
+    return style.themed(body)
+
+
+def steps(plan: Plan) -> tuple[str, ...]:
+    """Order of power-up for this board."""
+    assert plan.circuit is not None
+    low, high = plan.circuit.supply
+    target, waits = plan.target, [
+        max(v.start) * v.capacitor for v in plan.sizing.stages.values() if v.start is not None
+    ]  # fmt: skip
+    hold = words.HOLD.format(wait=engineering(max(10 * max(waits), 1e-3), "s", 2)) if waits else words.NO_HOLD
+    values = {"low": low, "high": high, "reference": target.reference, "hold": hold}
+    values["tolerance"] = words.percent(100 * target.reference_tolerance)
+    return tuple(step.format(**values) for step in words.POWER_UP)
+
+
+def static_table(plan: Plan, start: Mapping[str, float]) -> Table:
+    """What a voltmeter should show at each signal node in hold."""
+    assert plan.circuit is not None
+    rows = []
+    for node, meaning in plan.circuit.nodes.items():
+        if node in start:
+            allowed = _HOLD_TOLERANCE_VOLTS + _HOLD_TOLERANCE * abs(start[node])
+            rows.append((node, meaning.signal, f"{start[node]:+.3f} V", f"± {allowed:.2f} V"))
+    return Table(
+        "Static check", ("node", "signal", "expected", "allowed"), tuple(rows), frozenset({2, 3}), words.STATIC_NOTE
+    )

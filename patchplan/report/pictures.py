@@ -1,0 +1,247 @@
+"""Pictures of a plan as SVG: watched signals, node swings, error budget."""
+
+from __future__ import annotations
+
+import io
+import re
+from collections.abc import Iterable
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from patchplan.check.records import Curve
+from patchplan.circuit.records import NodeMap
+from patchplan.quantity import engineering
+from patchplan.report import style
+from patchplan.report.records import Plan
+from patchplan.report.tables import swing_volts
+from patchplan.report.words import percent, plain
+
+if TYPE_CHECKING:
+    from matplotlib.axes import Axes
+    from matplotlib.figure import Figure
+
+Array = NDArray[np.float64]
+
+#: Signals and rows drawn at most; the tables hold all.
+MOST_SIGNALS = 12
+MOST_ROWS = 40
+#: Points drawn of a curve at most, as pairs of least and largest value.
+MOST_POINTS = 3000
+
+
+def pictures(plan: Plan) -> dict[str, str]:
+    """File name -> SVG text: ``signal_*.svg``, ``nodes.svg`` and ``budget.svg``; empty where nothing was built."""
+    circuit = plan.circuit
+    if circuit is None:
+        return {}
+    import matplotlib
+
+    settings: Any = dict(style.PICTURE_SETTINGS)
+    with matplotlib.rc_context(settings):
+        drawn: dict[str, str] = {}
+        for curve in plan.verdict.curves[:MOST_SIGNALS]:
+            node = circuit.nodes[circuit.watched[curve.name]]
+            drawn[unused_name("signal", curve.name, "svg", drawn)] = _svg(signal_picture(plan, curve, node))
+        drawn["nodes.svg"] = _svg(swing_picture(plan))
+        if plan.verdict.budget:
+            drawn["budget.svg"] = _svg(budget_picture(plan))
+    return drawn
+
+
+def unused_name(stem: str, name: str, suffix: str, taken: Iterable[str]) -> str:
+    """File name for a signal, legal everywhere and unlike the names taken, without regard to case."""
+    base = re.sub(r"[^A-Za-z0-9]+", "_", name.replace("'", "_d")).strip("_")[:40] or "signal"
+    used = {t.lower() for t in taken}
+    number, wish = 2, f"{stem}_{base}.{suffix}"
+    while wish.lower() in used:
+        number, wish = number + 1, f"{stem}_{base}_{number}.{suffix}"
+    return wish
+
+
+def signal_picture(plan: Plan, curve: Curve, node: NodeMap) -> Figure:
+    """The circuit over the equation's solution, and their difference below on the same time axis."""
+    figure = _figure(style.SIGNAL_HEIGHT)
+    upper = figure.add_axes((0.13, 0.40, 0.75, 0.50))
+    lower = figure.add_axes((0.13, 0.12, 0.75, 0.21), sharex=upper)
+    _signal_panel(upper, plan, curve, node)
+    _difference_panel(lower, plan, curve)
+    return figure
+
+
+def _signal_panel(axes: Axes, plan: Plan, curve: Curve, node: NodeMap) -> None:
+    axes.set_title(f"{curve.name} at node {node.node}")
+    axes.plot(*thinned(curve.times, curve.reference), label="equation", **style.SOLUTION_LINE)
+    axes.plot(*thinned(curve.times, curve.circuit), label="circuit", **style.CIRCUIT_LINE)
+    seen = np.concatenate([curve.reference, curve.circuit])
+    axes.set_ylim(*_view(seen[np.isfinite(seen)], _limits_in_units(node)))
+    axes.set_xlim(float(curve.times[0]), float(curve.times[-1]))
+    axes.set_ylabel(f"{curve.name} [problem units]")
+    axes.tick_params(labelbottom=False)
+    axes.legend(loc="lower right", bbox_to_anchor=(1.0, 1.0), ncols=2, borderaxespad=0.2)
+    volts = _volts_axis(axes, node)
+    _band(volts, node.limit_volts)
+    if plan.verdict.horizon is not None:
+        _horizon(axes, plan.verdict.horizon)
+
+
+def _volts_axis(axes: Axes, node: NodeMap) -> Axes:
+    """Right axis with the same curve in volts; it runs downwards where the node carries the negative."""
+    volts = axes.twinx()
+    volts.set_ylim(*(node.sign * node.volts_per_unit * end + node.offset_volts for end in axes.get_ylim()))
+    volts.set_ylabel(f"v({node.node}) [V]")
+    # The band belongs to the volts, the curves to the units, and the curves must lie on top.
+    axes.set_zorder(volts.get_zorder() + 1)
+    axes.patch.set_visible(False)
+    return volts
+
+
+def _band(volts: Axes, limit: float) -> None:
+    """Sand where the node may go, with its edges marked, as far as they lie in view."""
+    volts.axhspan(-limit, limit, color=style.LIGHT["sand"], alpha=style.BAND_OPACITY, linewidth=0)
+    low, high = sorted(volts.get_ylim())
+    down = volts.yaxis_inverted()
+    place: dict[str, Any] = {"xycoords": volts.get_yaxis_transform(), "textcoords": "offset points"}
+    for edge in (-limit, limit):
+        if low <= edge <= high:
+            volts.axhline(edge, **style.EDGE_LINE)
+            on_top = (edge > 0) != down
+            label, shift = f"limit {edge:+.3g} V", -2 if on_top else 2
+            volts.annotate(
+                label, (0.01, edge), (0, shift), va="top" if on_top else "bottom", fontsize=style.SMALL, **place
+            )
+
+
+def _difference_panel(axes: Axes, plan: Plan, curve: Curve) -> None:
+    difference = curve.circuit - curve.reference
+    axes.axhline(0.0, **style.ZERO_LINE)
+    axes.plot(*thinned(curve.times, difference), **style.DIFFERENCE_LINE)
+    reach = 1.15 * float(np.max(np.abs(difference), initial=0.0, where=np.isfinite(difference))) or 1.0
+    axes.set_ylim(-reach, reach)
+    axes.set_ylabel("difference\n[problem units]", fontsize=style.SMALL)
+    axes.set_xlabel(f"problem time [{plan.system.time_unit}]; 1 {plan.system.time_unit} takes "
+                    f"{engineering(plan.sizing.time_scale, 's')} on the board")  # fmt: skip
+    base = error_base(plan, curve)
+    right = axes.twinx()
+    right.set_ylim(-100 * reach / base, 100 * reach / base)
+    right.set_ylabel("[% of peak]")
+    if plan.verdict.horizon is not None:
+        _horizon(axes, plan.verdict.horizon)
+
+
+def error_base(plan: Plan, curve: Curve) -> float:
+    """What 100 % error means for a watched signal [problem units]."""
+    if curve.name in plan.sensitivity.watched:
+        return float(plan.sensitivity.base[plan.sensitivity.watched.index(curve.name)]) or 1.0
+    return float(np.max(np.abs(curve.reference))) or 1.0
+
+
+def _horizon(axes: Axes, time: float) -> None:
+    axes.axvline(time, color=style.LIGHT["over"], linewidth=0.9, linestyle=(0, (1, 2)))
+    place: dict[str, Any] = {"xycoords": axes.get_xaxis_transform(), "textcoords": "offset points"}
+    axes.annotate(
+        "compared up to here",
+        (time, 0.02),
+        (-3, 0),
+        ha="right",
+        fontsize=style.SMALL,
+        color=style.LIGHT["over"],
+        **place,
+    )
+
+
+def swing_picture(plan: Plan) -> Figure:
+    """Swing of every node against its limits, those closest to their limit first."""
+    assert plan.circuit is not None
+    rows = [(*swing_volts(plan, node), node.limit_volts, node) for node in plan.circuit.nodes.values()]
+    rows = sorted(rows, key=lambda row: -max(-row[0], row[1]) / row[2])[:MOST_ROWS]
+    low, high, limit = (np.array(column) for column in tuple(zip(*rows, strict=True))[:3])
+    share = np.maximum(-low, high) / limit
+    places = range(len(rows))
+    figure, axes = _chart(len(rows), "Node swings against their limits")
+    axes.barh(places, 2 * limit, 0.84, -limit, color=style.LIGHT["sand"], alpha=style.BAND_OPACITY)
+    axes.barh(places, high - low, 0.42, low, color=[style.LIGHT["over" if s > 1 else "inside"] for s in share])
+    for place, (edge, used) in enumerate(zip(limit, share, strict=True)):
+        text = f" {100 * used:.0f} % of {plain(edge)} V" + (", over" if used > 1 else "")
+        axes.text(edge * max(used, 1.0), place, text, va="center", fontsize=style.SMALL)
+    widest = float(np.max(limit * np.maximum(share, 1.0)))
+    axes.set_xlim(-1.08 * widest, 1.45 * widest)
+    axes.set_yticks(places, [f"{node.node} ({'-' if node.sign < 0 else '+'}{node.signal})" for *_, node in rows])
+    axes.set_xlabel("node voltage [V]")
+    return figure
+
+
+def budget_picture(plan: Plan) -> Figure:
+    """Error budget, largest cause first."""
+    rows = sorted(plan.verdict.budget, key=lambda cause: -cause.error_percent)[:15]
+    figure, axes = _chart(len(rows), "Where the error comes from")
+    values = [row.error_percent for row in rows]
+    axes.barh(range(len(rows)), values, 0.5, color=style.LIGHT["circuit"])
+    for place, value in enumerate(values):
+        axes.text(value, place, " " + percent(value), va="center", fontsize=style.SMALL)
+    axes.set_xlim(0.0, 1.18 * max(values) or 1.0)
+    axes.set_yticks(range(len(rows)), [_clipped(row.cause) for row in rows])
+    axes.set_xlabel("error [% of peak]")
+    return figure
+
+
+def thinned(times: Array, values: Array) -> tuple[Array, Array]:
+    """The curve with least and largest value of each stretch of rows, so that no peak is lost.
+
+    Returns
+    -------
+    tuple
+        Times and values, shape ``(n,)`` with n at most :data:`MOST_POINTS` and two ends.
+    """
+    if times.size <= MOST_POINTS:
+        return times, values
+    length = -(-times.size // (MOST_POINTS // 2))
+    whole = times.size // length * length
+    blocks = values[:whole].reshape(-1, length)
+    starts = np.arange(0, whole, length)
+    picks = [starts + blocks.argmin(axis=1), starts + blocks.argmax(axis=1), [0, times.size - 1]]
+    chosen = np.unique(np.concatenate(picks))
+    return times[chosen], values[chosen]
+
+
+def _view(seen: Array, limits: tuple[float, float]) -> tuple[float, float]:
+    """Ends of the left axis: the curves, and the limits too where the curves use a fair part of them."""
+    low, high = (float(seen.min()), float(seen.max())) if seen.size else (-1.0, 1.0)
+    if high - low > 0.25 * (limits[1] - limits[0]):
+        low, high = min(low, limits[0]), max(high, limits[1])
+    pad = 0.06 * (high - low) or 0.1 * abs(high) or 1.0
+    return low - pad, high + pad
+
+
+def _limits_in_units(node: NodeMap) -> tuple[float, float]:
+    scale = node.sign * node.volts_per_unit
+    low, high = sorted((edge - node.offset_volts) / scale for edge in (-node.limit_volts, node.limit_volts))
+    return low, high
+
+
+def _chart(rows: int, title: str) -> tuple[Figure, Axes]:
+    """Figure with one row an entry, the first on top."""
+    height = style.CHART_MARGIN + style.ROW_HEIGHT * max(rows, 2)
+    figure = _figure(height)
+    axes = figure.add_axes((0.30, 0.55 / height, 0.66, (height - style.CHART_MARGIN) / height))
+    axes.set_title(title)
+    axes.set_ylim(max(rows, 2) - 0.5, -0.5)
+    axes.tick_params(axis="y", length=0)
+    return figure, axes
+
+
+def _figure(height: float) -> Figure:
+    from matplotlib.figure import Figure
+
+    return Figure(figsize=(style.PICTURE_WIDTH, height))
+
+
+def _svg(figure: Figure) -> str:
+    buffer = io.StringIO()
+    figure.savefig(buffer, format="svg", metadata={"Date": None, "Creator": None})
+    return buffer.getvalue()
+
+
+def _clipped(text: str, most: int = 38) -> str:
+    return text if len(text) <= most else text[: most - 1] + "…"

@@ -1,0 +1,214 @@
+"""plan.json: the contract between a plan and whatever reads it later."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Sequence
+from typing import Any
+
+from patchplan import __version__
+from patchplan.check.records import Verdict
+from patchplan.circuit.records import Circuit, NodeMap
+from patchplan.patch.records import Patch, Stage
+from patchplan.report.codec import decode, encode, rounded
+from patchplan.report.records import Plan
+from patchplan.sizing.records import Sizing, StageSizing
+
+CONTRACT = 1
+
+
+def plan_data(plan: Plan, files: Sequence[str] = ()) -> dict[str, Any]:
+    """Everything that plan.json holds, as plain data in the order of the contract.
+
+    Parameters
+    ----------
+    plan
+        The plan; one that cannot be built gives a verdict and empty tables.
+    files
+        Names of the files of the folder.
+    """
+    sizing = plan.sizing
+    return {
+        "contract": CONTRACT,
+        "title": plan.problem.title,
+        "version": __version__,
+        "files": list(files),
+        "warnings": list(sentences_of(plan)),
+        "notes": list(notes_of(plan)),
+        "faults": list(sizing.faults),
+        "time_scale": rounded(sizing.time_scale),
+        "time_scale_window": [rounded(end) for end in sizing.window],
+        "time_scale_limits": list(sizing.limits),
+        "check": _check(plan.verdict),
+        "signals": [_signal(plan, meaning) for meaning in plan.circuit.nodes.values()] if plan.circuit else [],
+        "stages": [_stage(plan, stage) for stage in plan.patch.stages] if plan.circuit else [],
+        "counts": dict(sorted(plan.patch.counts().items())),
+        "sign_stages_lower_bound": plan.patch.sign_stages_lower_bound,
+        "coefficients": _coefficients(sizing),
+        "parts": _parts(plan.circuit) if plan.circuit else [],
+        "choices": encode(plan.choices),
+        "problem": plan.problem.text,
+        "records": records_of(plan),
+    }
+
+
+def plan_text(data: dict[str, Any]) -> str:
+    """Text of plan.json: one row of a table a line.
+
+    Raises
+    ------
+    ValueError
+        Where a number is not finite.
+    """
+    return "{\n" + ",\n".join(f"{_json(key)}: {_value(value)}" for key, value in data.items()) + "\n}\n"
+
+
+def records_of(plan: Plan) -> dict[str, Any]:
+    """Patch, Sizing and Circuit as data; sources that the Patch holds already are not repeated."""
+    circuit = encode(plan.circuit)
+    if plan.circuit and plan.circuit.sources == plan.patch.sources:
+        circuit["sources"] = None
+    return {"patch": encode(plan.patch), "sizing": encode(plan.sizing), "circuit": circuit}
+
+
+def rebuild(data: dict[str, Any]) -> tuple[Patch, Sizing, Circuit | None]:
+    """Patch, Sizing and Circuit from the ``records`` of plan.json.
+
+    Numbers come back to 9 digits, exact rationals exactly, without the origins of terms. The Circuit is None where the
+    plan could not be built.
+    """
+    patch: Patch = decode(Patch, data["patch"])
+    sizing: Sizing = decode(Sizing, data["sizing"])
+    circuit = data["circuit"]
+    if circuit is not None and circuit["sources"] is None:
+        circuit = {**circuit, "sources": data["patch"]["sources"]}
+    return patch, sizing, decode(Circuit | None, circuit)
+
+
+def sentences_of(plan: Plan) -> tuple[str, ...]:
+    """All that the stages have to say, each sentence once, in the order of the stages."""
+    return tuple(dict.fromkeys((*plan.reach.warnings, *plan.warnings, *plan.verdict.warnings)))
+
+
+def warnings_of(plan: Plan) -> tuple[str, ...]:
+    """The sentences that are no note on a decision and no reason of a failure."""
+    told = {*notes_of(plan), *plan.sizing.faults}
+    return tuple(sentence for sentence in sentences_of(plan) if sentence not in told)
+
+
+def notes_of(plan: Plan) -> tuple[str, ...]:
+    """What the stages decided and why, each sentence once."""
+    return tuple(dict.fromkeys((*plan.form.notes, *plan.sizing.notes, *(plan.circuit.notes if plan.circuit else ()))))
+
+
+def transfer_gains(plan: Plan, stage: Stage) -> tuple[float, ...]:
+    """Gain of each input of a stage, as built and positive.
+
+    Integrators: [1/s of circuit time] with the operate switch in series; summers and inverters: [V/V]; multipliers:
+    one gain [1/V] for the product, repeated.
+    """
+    values = plan.sizing.stages.get(stage.name, StageSizing(stage.name))
+    if stage.kind == "multiplier":
+        return (1.0 / plan.target.multiplier.scale,) * len(stage.wires)
+    if stage.kind == "integrator":
+        series = plan.target.switch_on if values.start is not None else 0.0
+        return tuple(1.0 / ((leg.transfer + series) * values.capacitor) for leg in values.legs)
+    if stage.bipolar:
+        return _bipolar_gains(plan, stage)
+    return tuple(values.feedback / leg.transfer for leg in values.legs)
+
+
+def _bipolar_gains(plan: Plan, stage: Stage) -> tuple[float, ...]:
+    """Net gain of a potentiometer between both polarities of one signal, counted on its first end."""
+    wire, scales, signs = stage.wires[0], plan.sizing.scales, {s.node: s.sign for s in plan.patch.stages}
+    knob = float(plan.patch.knobs[stage.knob].value) if stage.knob else 1.0
+    ratio = scales[stage.node].volts_per_unit / scales[wire.source].volts_per_unit
+    return (-float(wire.coefficient) * knob * ratio * stage.sign * signs[wire.source], 0.0)
+
+
+def _stage(plan: Plan, stage: Stage) -> dict[str, Any]:
+    values = plan.sizing.stages.get(stage.name, StageSizing(stage.name))
+    inputs = [
+        {"node": wire.source, "gain": rounded(gain)}
+        for wire, gain in zip(stage.wires, transfer_gains(plan, stage), strict=True)
+    ]
+    if stage.kind == "integrator" and values.feedback:
+        inputs.append({"node": stage.node, "gain": rounded(1 / (values.feedback * values.capacitor))})
+    return {
+        "name": stage.name,
+        "kind": stage.kind,
+        "output": stage.node,
+        "start_volts": rounded(values.start_volts) if stage.kind == "integrator" else None,
+        "inputs": inputs,
+    }
+
+
+def _signal(plan: Plan, meaning: NodeMap) -> dict[str, Any]:
+    low, high = units_range(plan, meaning)
+    peak = max(abs(meaning.volts_per_unit * end * meaning.sign + meaning.offset_volts) for end in (low, high))
+    return {
+        "name": meaning.signal,
+        "node": meaning.node,
+        "role": meaning.role,
+        "volts_per_unit": rounded(meaning.volts_per_unit),
+        "sign": meaning.sign,
+        "offset_volts": rounded(meaning.offset_volts),
+        "low_units": rounded(low),
+        "high_units": rounded(high),
+        "peak_units": rounded(max(abs(low), abs(high))),
+        "peak_volts": rounded(peak),
+        "limit_volts": rounded(meaning.limit_volts),
+        "known_by": plan.ranges.nodes[meaning.node].known_by if meaning.node in plan.ranges.nodes else "stated",
+    }
+
+
+def units_range(plan: Plan, meaning: NodeMap) -> tuple[float, float]:
+    """Lowest and highest value of a node's signal [problem units], its offset included."""
+    planned = plan.ranges.nodes.get(meaning.node)
+    if planned is None:
+        return 1.0, 1.0
+    offset = -meaning.offset_volts / (meaning.sign * meaning.volts_per_unit)
+    return planned.low + offset, planned.high + offset
+
+
+def _coefficients(sizing: Sizing) -> list[dict[str, Any]]:
+    return [
+        {
+            "at": row.at,
+            "wanted": rounded(row.wanted),
+            "realised": rounded(row.realised),
+            "error_percent": rounded(row.error_percent),
+        }
+        for row in sizing.coefficients
+    ]
+
+
+def _parts(circuit: Circuit) -> list[dict[str, Any]]:
+    return [encode(part) for part in circuit.parts]
+
+
+def _check(verdict: Verdict) -> dict[str, Any]:
+    def finite(row: dict[str, Any]) -> dict[str, Any]:
+        return {key: None if isinstance(item, str) and key.endswith("_percent") else item for key, item in row.items()}
+
+    data = {
+        "verdict": verdict.verdict,
+        "max_error_percent": rounded(verdict.max_error_percent),
+        "rms_error_percent": rounded(verdict.rms_error_percent),
+        "spread_percent": rounded(verdict.spread_percent),
+        "horizon": None if verdict.horizon is None else rounded(verdict.horizon),
+    }
+    tables = {name: encode(getattr(verdict, name)) for name in ("signals", "nodes", "budget")}
+    return data | {name: [finite(row) for row in rows] for name, rows in tables.items()}
+
+
+def _value(value: Any) -> str:
+    if isinstance(value, list) and value:
+        return "[\n" + ",\n".join(f"  {_json(row)}" for row in value) + "\n]"
+    if isinstance(value, dict) and value:
+        return "{\n" + ",\n".join(f"  {_json(key)}: {_json(item)}" for key, item in value.items()) + "\n}"
+    return _json(value)
+
+
+def _json(value: Any) -> str:
+    return json.dumps(value, ensure_ascii=False, allow_nan=False)

@@ -1,0 +1,65 @@
+"""All colours, fonts and sizes of pictures, pages and the terminal."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Any
+
+#: Hues by their job, on light paper.
+LIGHT: Mapping[str, str] = {
+    "ink": "#1f2a33", "paper": "#fbfaf6", "circuit": "#b4552d", "solution": "#3c6e8f",
+    "inside": "#5d7f3b", "over": "#7d3c68", "sand": "#d9cfb8", "quiet": "#6b7278",
+}  # fmt: skip
+
+#: The same hues, lighter, on a dark page; sand turns into a dim band.
+DARK: Mapping[str, str] = {
+    "ink": "#e8e4d9", "paper": "#1b2329", "circuit": "#e08a60", "solution": "#7fb2d4",
+    "inside": "#9dc274", "over": "#c987b3", "sand": "#4a4a40", "quiet": "#a4abb0",
+}  # fmt: skip
+
+#: Line forms, so that no meaning hangs on colour alone.
+SOLUTION_LINE: Mapping[str, Any] = {"color": LIGHT["solution"], "linewidth": 1.1, "linestyle": "-"}
+CIRCUIT_LINE: Mapping[str, Any] = {"color": LIGHT["circuit"], "linewidth": 1.6, "linestyle": (0, (4, 2.5))}
+DIFFERENCE_LINE: Mapping[str, Any] = {"color": LIGHT["circuit"], "linewidth": 1.0}
+EDGE_LINE: Mapping[str, Any] = {"color": LIGHT["quiet"], "linewidth": 0.8, "linestyle": "-"}
+ZERO_LINE: Mapping[str, Any] = {"color": LIGHT["quiet"], "linewidth": 0.6, "linestyle": ":"}
+#: Opacity of the sand band behind the curves.
+BAND_OPACITY = 0.35
+
+#: Inches.
+PICTURE_WIDTH = 7.4
+SIGNAL_HEIGHT = 4.2
+ROW_HEIGHT = 0.27
+CHART_MARGIN = 1.0
+#: Points.
+SMALL = 7.5
+
+#: Comes with matplotlib, so that text is laid out alike everywhere.
+SANS = ("DejaVu Sans",)
+
+#: Settings of matplotlib; text stays text in SVG, and identifiers do not change from run to run.
+PICTURE_SETTINGS: Mapping[str, Any] = {
+    "figure.facecolor": LIGHT["paper"], "axes.facecolor": LIGHT["paper"], "savefig.facecolor": LIGHT["paper"],
+    "text.color": LIGHT["ink"], "axes.labelcolor": LIGHT["ink"], "axes.edgecolor": LIGHT["quiet"],
+    "xtick.color": LIGHT["ink"], "ytick.color": LIGHT["ink"], "axes.titlecolor": LIGHT["ink"],
+    "font.family": list(SANS), "font.size": 9.0, "axes.titlesize": 10.0,
+    "axes.titlelocation": "left", "axes.titley": 1.0,
+    "axes.linewidth": 0.8, "axes.grid": False, "legend.frameon": False, "legend.fontsize": 8.5,
+    "svg.fonttype": "none", "svg.hashsalt": "patchplan", "path.simplify_threshold": 0.4,
+    "axes.formatter.useoffset": False, "axes.formatter.limits": (-4, 5), "mathtext.default": "regular",
+}  # fmt: skip
+
+#: Terminal colours, used on a terminal only.
+TERMINAL: Mapping[str, str] = {"title": "\x1b[1m", "good": "\x1b[32m", "bad": "\x1b[35m", "end": "\x1b[0m"}
+
+
+def page_variables(hues: Mapping[str, str]) -> str:
+    """CSS custom properties of one set of hues."""
+    return " ".join(f"--{name}: {hue};" for name, hue in hues.items())
+
+
+def themed(svg: str) -> str:
+    """SVG whose hues follow the page's light or dark setting; for embedding only."""
+    for name, hue in LIGHT.items():
+        svg = svg.replace(hue, f"var(--{name})")
+    return svg

@@ -1,0 +1,83 @@
+"""What the terminal shows of a plan: plain text in 80 columns."""
+
+from __future__ import annotations
+
+import textwrap
+from pathlib import Path
+
+from patchplan.report import words
+from patchplan.report.plan_json import warnings_of
+from patchplan.report.records import Plan
+from patchplan.report.style import TERMINAL
+from patchplan.report.tables import Table, node_table
+
+WIDTH = 80
+#: Rows of the node table on the terminal; nodes.csv has all.
+MOST_NODES = 16
+
+
+def summary(plan: Plan, folder: Path | None = None, *, colour: bool = False) -> str:
+    """Does it work, how fast, made of what, what each node does, where the error comes from, where the files are.
+
+    Parameters
+    ----------
+    folder
+        Where the plan was written, None where it was not.
+    colour
+        Whether to colour title and verdict for a terminal.
+    """
+    works = plan.verdict.verdict == "follows"
+    told = words.story(plan)
+    blocks = [_painted(plan.problem.title, "title", colour)]
+    blocks.append(_painted(_wrapped(told[0]), "good" if works else "bad", colour))
+    blocks += [_wrapped(reason) for reason in words.reasons(plan)]
+    blocks += [_wrapped(f"To mend it: {remedy}") for remedy in words.remedies(plan)]
+    if plan.circuit is not None:
+        blocks += map(_wrapped, (*words.speed(plan), words.made_of(plan)))
+        blocks += ["", *_columns(_first_rows(node_table(plan))), ""]
+        blocks += [_wrapped(s) for s in (words.largest_error(plan),) if s]
+    blocks += [_wrapped(f"Warning: {warning}") for warning in warnings_of(plan)]
+    if folder is not None:
+        start = "report.html" if plan.circuit is not None else "plan.json"
+        blocks.append(_wrapped(f"Written to {folder} (start with {start})"))
+    return "\n".join(blocks) + "\n"
+
+
+def _wrapped(text: str) -> str:
+    return textwrap.fill(text, WIDTH, initial_indent="  ", subsequent_indent="  ", break_on_hyphens=False,
+                         break_long_words=False)  # fmt: skip
+
+
+def _first_rows(table: Table) -> Table:
+    """The table cut to what a screen takes, nodes closest to their limit kept."""
+    if len(table.rows) <= MOST_NODES:
+        return table
+    fullest = sorted(table.rows, key=lambda row: -float(row[-1].split()[0]))[:MOST_NODES]
+    rows = tuple(row for row in table.rows if row in fullest)
+    left_out = len(table.rows) - len(rows)
+    return Table(table.title, table.headers, rows, table.numeric, f"and {left_out} more in nodes.csv")
+
+
+def _columns(table: Table) -> list[str]:
+    """Lines of a table, cut to the width of the page."""
+    cells = [table.headers, *table.rows]
+    widths = [max(len(row[i]) for row in cells) for i in range(len(table.headers))]
+    spare = WIDTH - 2 - 2 * (len(widths) - 1) - sum(widths)
+    widths[1] = max(8, widths[1] + min(spare, 0))
+    lines = []
+    for row in cells:
+        fitted = [_cut(cell, width) for cell, width in zip(row, widths, strict=True)]
+        placed = (
+            c.rjust(w) if i in table.numeric else c.ljust(w)
+            for i, (c, w) in enumerate(zip(fitted, widths, strict=True))
+        )
+        lines.append("  " + "  ".join(placed).rstrip())
+    return lines + ([f"  {table.note}"] if table.note else [])
+
+
+def _cut(text: str, width: int) -> str:
+    return text if len(text) <= width else text[: width - 1] + "…"
+
+
+def _painted(text: str, role: str, colour: bool) -> str:
+    return f"{TERMINAL[role]}{text}{TERMINAL['end']}" if colour else text

@@ -1,0 +1,211 @@
+"""Tables of a plan: as text for people, and as CSV for programs."""
+
+from __future__ import annotations
+
+import csv
+import io
+from collections.abc import Iterable, Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+
+from patchplan.circuit.records import Circuit, NodeMap, Part
+from patchplan.quantity import engineering
+from patchplan.report.plan_json import transfer_gains, units_range
+from patchplan.report.records import Plan
+from patchplan.report.words import percent, plain
+
+#: Unit of a part's value, for people and in parts.csv.
+VALUE_UNITS = {"resistor": ("Ω", "ohm"), "potentiometer": ("Ω", "ohm"), "capacitor": ("F", "F"),
+               "reference": ("V", "V"), "switch": ("Ω", "ohm"), "decoupling": ("F", "F")}  # fmt: skip
+
+#: What a multiplier's input takes at least [ohm]; common practice, no source.
+_INPUT_OHM = 1e6
+
+
+@dataclass(frozen=True)
+class Table:
+    """A table of texts; ``numeric`` holds the columns that are set flush right."""
+
+    title: str
+    headers: tuple[str, ...]
+    rows: tuple[tuple[str, ...], ...]
+    numeric: frozenset[int] = frozenset()
+    note: str = ""
+
+
+def node_table(plan: Plan) -> Table:
+    """What each node carries: signal, volts per unit, swing and share of its limit."""
+    circuit = plan.circuit
+    rows = [] if circuit is None else [_node_row(plan, meaning) for meaning in circuit.nodes.values()]
+    headers = ("node", "signal", "one unit is", "swings", "of limit")
+    return Table("Nodes", headers, tuple(rows), frozenset({2, 3, 4}))
+
+
+def _node_row(plan: Plan, meaning: NodeMap) -> tuple[str, ...]:
+    low, high = swing_volts(plan, meaning)
+    share = max(abs(low), abs(high)) / meaning.limit_volts if meaning.limit_volts else 0.0
+    unit = engineering(meaning.sign * meaning.volts_per_unit, "V")
+    offset = f" + {plain(meaning.offset_volts)} V" if meaning.offset_volts else ""
+    return meaning.node, meaning.signal, unit + offset, f"{low:.1f} … {high:.1f} V", f"{100 * share:.0f} %"
+
+
+def swing_volts(plan: Plan, meaning: NodeMap) -> tuple[float, float]:
+    """Lowest and highest voltage of a node: in the check, or as planned where the check has none [V]."""
+    volts = plan.verdict.volts.get(meaning.node)
+    if volts is not None and volts.size:
+        return float(np.min(volts)), float(np.max(volts))
+    ends = [meaning.sign * meaning.volts_per_unit * end + meaning.offset_volts for end in units_range(plan, meaning)]
+    return min(ends), max(ends)
+
+
+def coefficient_table(plan: Plan) -> Table:
+    """Every coefficient: wanted, realised, error."""
+    rows = tuple(
+        (c.at, f"{c.wanted:.6g}", f"{c.realised:.6g}", f"{c.error_percent:+.3f} %") for c in plan.sizing.coefficients
+    )
+    note = "In problem units, after all rounding, with the fitted scale factors and speed."
+    return Table("Coefficients", ("at", "wanted", "realised", "error"), rows, frozenset({1, 2, 3}), note)
+
+
+def stage_table(plan: Plan) -> Table:
+    """Every stage with its output, inputs and values."""
+    rows = tuple(_stage_row(plan, index) for index in range(len(plan.patch.stages))) if plan.circuit else ()
+    return Table("Stages", ("stage", "kind", "output", "inputs and gains", "start"), rows, frozenset({4}))
+
+
+def _stage_row(plan: Plan, index: int) -> tuple[str, ...]:
+    stage = plan.patch.stages[index]
+    values = plan.sizing.stages.get(stage.name)
+    unit = {"integrator": "/s", "multiplier": "/V"}.get(stage.kind, "")
+    gains = zip(stage.wires, transfer_gains(plan, stage), strict=True)
+    if stage.kind == "multiplier":
+        inputs = (
+            f"{' × '.join(w.source for w in stage.wires)} × {engineering(1 / plan.target.multiplier.scale, '')}{unit}"
+        )
+    else:
+        inputs = ", ".join(f"{wire.source} × {plain(gain, 4)}{unit}" for wire, gain in gains)
+    if stage.kind == "integrator" and values and values.feedback:
+        inputs += f", DC limit {engineering(values.feedback, 'Ω')}"
+    start = f"{values.start_volts:.3f} V" if values and stage.kind == "integrator" else ""
+    return stage.name, stage.kind, stage.node, inputs, start
+
+
+def parts_table(circuit: Circuit) -> Table:
+    """Parts gathered by kind and value."""
+    groups: dict[tuple[str, str, str], list[str]] = {}
+    for part in circuit.parts:
+        groups.setdefault((part.kind, value_text(part), part.model), []).append(part.ref)
+    rows = tuple((str(len(refs)), *key, _shortened(refs)) for key, refs in groups.items())
+    return Table("Parts", ("count", "kind", "value", "type", "references"), rows, frozenset({0}))
+
+
+def value_text(part: Part) -> str:
+    """Value of a part for people; "" where it has none."""
+    if part.kind == "potentiometer":
+        return f"{engineering(part.total, 'Ω')} set to {part.value:.3f}"
+    if part.kind not in VALUE_UNITS or not part.value:
+        return ""
+    tolerance = f" {percent(100 * part.tolerance)}" if part.tolerance else ""
+    return engineering(part.value, VALUE_UNITS[part.kind][0]) + tolerance
+
+
+def budget_table(plan: Plan) -> Table:
+    """Where the error comes from, largest first."""
+    rows = tuple(
+        (c.cause, percent(c.error_percent)) for c in sorted(plan.verdict.budget, key=lambda c: -c.error_percent)
+    )
+    note = "Each line alone, percent of the signal's peak; lines may cancel in the sum."
+    return Table("Error budget", ("cause", "error"), rows, frozenset({1}), note)
+
+
+def signal_table(plan: Plan) -> Table:
+    """Errors of every watched signal."""
+    rows = tuple(
+        (s.name, *map(percent, (s.max_error_percent, s.rms_error_percent, s.spread_percent, s.stretched_error_percent)),
+         f"{s.frequency_error_percent:+.3f} %")
+        for s in plan.verdict.signals
+    )  # fmt: skip
+    headers = ("signal", "largest", "rms", "spread of boards", "after best stretch", "frequency")
+    note = "Percent of peak (of half the swing where the node carries an offset)."
+    return Table("Watched signals", headers, rows, frozenset(range(1, 6)), note)
+
+
+def source_table(plan: Plan, files: dict[str, str]) -> Table:
+    """Signals that come from outside: scale, file, and what impedance they may have.
+
+    Parameters
+    ----------
+    files
+        Source name -> name of its waveform file.
+    """
+    rows = [_source_row(plan, stage.signal, stage.node, stage.sign, files) for stage in plan.patch.stages
+            if stage.kind == "source" and stage.signal in files] if plan.circuit else []  # fmt: skip
+    note = "A source impedance above this adds more than 0.1 % of error in the lightest input."
+    return Table(
+        "Sources", ("source", "node", "one unit is", "impedance up to", "file"), tuple(rows), frozenset({2, 3}), note
+    )
+
+
+def _source_row(plan: Plan, name: str, node: str, sign: int, files: dict[str, str]) -> tuple[str, ...]:
+    scale = plan.sizing.scales[node].volts_per_unit
+    sized = plan.sizing.stages
+    legs = [
+        leg.transfer
+        for stage in plan.patch.stages
+        if stage.name in sized
+        for wire, leg in zip(stage.wires, sized[stage.name].legs, strict=False)
+        if wire.source == node
+    ]
+    # All legs load the source together; the drop over its impedance is the same for each.
+    load = 1 / sum(1 / ohm for ohm in legs) if legs else _INPUT_OHM
+    return name, node, engineering(sign * scale, "V"), engineering(load / 1000, "Ω", 2), files[name]
+
+
+def nodes_csv(data: dict[str, Any]) -> str:
+    """nodes.csv: the ``signals`` of plan.json with the check's peaks."""
+    peaks = {row["node"]: row for row in data["check"]["nodes"]}
+    headers = tuple(data["signals"][0]) if data["signals"] else ()
+    rows = [
+        (*row.values(), peaks[row["node"]]["peak_volts"] if row["node"] in peaks else "") for row in data["signals"]
+    ]
+    return csv_text((*headers, "checked_peak_volts"), rows)
+
+
+def parts_csv(circuit: Circuit) -> str:
+    """parts.csv: one row a part, values in SI units."""
+    headers = ("ref", "kind", "value", "unit", "tolerance_percent", "model", "nets", "stage", "package", "section")
+    return csv_text(headers, map(_part_row, circuit.parts))
+
+
+def _part_row(part: Part) -> tuple[Any, ...]:
+    value = part.total if part.kind == "potentiometer" else part.value
+    unit = VALUE_UNITS.get(part.kind, ("", ""))[1]
+    tolerance = f"{100 * part.tolerance:.9g}" if part.tolerance else ""
+    shown = f"{value:.9g}" if unit else ""
+    return (
+        part.ref,
+        part.kind,
+        shown,
+        unit,
+        tolerance,
+        part.model,
+        " ".join(part.nets),
+        part.stage,
+        part.package,
+        part.section,
+    )
+
+
+def csv_text(headers: Sequence[str], rows: Iterable[Sequence[Any]]) -> str:
+    """CSV with plain line ends."""
+    buffer = io.StringIO()
+    writer = csv.writer(buffer, lineterminator="\n")
+    writer.writerow(headers)
+    writer.writerows(rows)
+    return buffer.getvalue()
+
+
+def _shortened(refs: Sequence[str], most: int = 12) -> str:
+    return " ".join(refs[:most]) + (f" and {len(refs) - most} more" if len(refs) > most else "")

@@ -1,0 +1,175 @@
+"""All sentences that a person reads, and how numbers are written for people."""
+
+from __future__ import annotations
+
+import math
+
+from patchplan.quantity import engineering
+from patchplan.report.records import Plan
+
+
+def percent(value: float) -> str:
+    """Two digits as a percentage: ``0.31 %``."""
+    if not math.isfinite(value):
+        return "an unknown share"
+    if abs(value) < 0.001:
+        return "0 %" if value == 0 else "below 0.001 %"
+    return f"{value:.0f} %" if abs(value) >= 99.5 else f"{value:.2g} %"
+
+
+def plain(value: float, digits: int = 3) -> str:
+    """A number with as many digits as it deserves and no exponent where one can be spared."""
+    text = f"{value:.{digits}g}"
+    return f"{value:.0f}" if "e" in text and 1 <= abs(value) < 1e6 else text
+
+
+def counted(number: int, noun: str) -> str:
+    """``1 package``, ``27 parts``, ``no multiplier``."""
+    if number == 0:
+        return f"no {noun}"
+    return f"{number} {noun}" + ("" if number == 1 else "s")
+
+
+def headline(plan: Plan) -> str:
+    """The verdict in one sentence: what does not work comes first."""
+    verdict = plan.verdict
+    if verdict.verdict == "not_buildable" or plan.circuit is None:
+        return "Cannot be built with these parts."
+    largest = percent(verdict.max_error_percent)
+    if verdict.verdict == "overload":
+        return f"Does not work: {_list([n.node for n in verdict.nodes if not n.ok])} would leave the linear range."
+    if verdict.verdict == "inaccurate":
+        return f"Does not follow the equation closely enough: the error reaches {largest} of peak."
+    limit = min((n.limit_volts for n in verdict.nodes), default=math.inf)
+    within = f"Follows the equation within {largest} of peak"
+    if verdict.horizon is not None:
+        unit = plan.system.time_unit
+        within += f" up to {plain(verdict.horizon)} {unit}, as far as a chaotic system can be followed"
+    spread = percent(verdict.spread_percent)
+    inside = (
+        f"; every node stays inside {plain(limit)} V"
+        if len({n.limit_volts for n in verdict.nodes}) == 1
+        else ("; every node stays inside its limit")
+    )
+    return f"{within} (boards spread {spread}){inside}."
+
+
+def reasons(plan: Plan) -> tuple[str, ...]:
+    """Why a plan does not work, one sentence each; empty where it does."""
+    verdict = plan.verdict
+    faults = plan.sizing.faults
+    if verdict.verdict == "overload":
+        return tuple(
+            f"{n.node} reaches {plain(n.peak_volts)} V where {plain(n.limit_volts)} V is the limit, "
+            f"{engineering(n.time, 's')} after the start of the run. {n.cause}".rstrip()
+            for n in verdict.nodes
+            if not n.ok
+        )
+    if verdict.verdict == "inaccurate":
+        return tuple(f"{c.cause}: {percent(c.error_percent)}." for c in verdict.budget[:3])
+    return faults if verdict.verdict == "not_buildable" or plan.circuit is None else ()
+
+
+def remedies(plan: Plan) -> tuple[str, ...]:
+    """What would mend a plan that does not work."""
+    build, verdict = plan.problem.build, plan.verdict.verdict
+    if verdict == "overload":
+        return ("State the range of the signal under [ranges], so that its scale factor leaves more room.",)
+    if verdict != "inaccurate":
+        return ()
+    ways = [] if build.speed == "free" else ['Let the planner choose the speed: speed = "free" under [build].']
+    ways.append("Take a faster or more precise op amp, or a finer resistor series, under [build].")
+    ways.append("Or accept more with --accept, if the rig can live with it.")
+    return tuple(ways)
+
+
+def speed(plan: Plan) -> tuple[str, ...]:
+    """How fast the board runs, and the window of speeds: one or two sentences."""
+    sizing, unit = plan.sizing, plan.system.time_unit
+    second = float(plan.system.time_unit_seconds)
+    if not sizing.time_scale > 0:
+        return ()
+    takes = f"1 {unit} of the problem takes {engineering(sizing.time_scale, 's')} on the board"
+    first = f"Runs {_factor(second / sizing.time_scale)}: {takes}."
+    slow, fast = (second / end if end else math.inf for end in (sizing.window[1], sizing.window[0]))
+    window = f"{_times(slow)} to {_times(fast)} times real time would do."
+    ends = (f"Slow end: {_sentence(sizing.limits[1])}", f"Fast end: {_sentence(sizing.limits[0])}")
+    return first, " ".join((window, *ends))
+
+
+def made_of(plan: Plan) -> str:
+    """Stages, packages and parts in one sentence."""
+    counts, patch = plan.patch.counts(), plan.patch
+    pieces = [counted(counts.get(kind, 0), kind) for kind in ("integrator", "summer", "inverter", "multiplier")]
+    if patch.sign_stages and patch.sign_stages <= patch.sign_stages_lower_bound:
+        pieces[2] += f" ({counted(patch.sign_stages, 'sign stage')}, the fewest possible)"
+    sentence = _list([p for p in pieces if not p.startswith("no ") or p.endswith("multiplier")])
+    if plan.circuit is None:
+        return sentence + "."
+    packages = {p.package for p in plan.circuit.parts if p.package}
+    return f"{sentence}; {counted(len(packages), 'package')}, {counted(len(plan.circuit.parts), 'part')}."
+
+
+def largest_error(plan: Plan) -> str:
+    """The top of the error budget, "" where there is none."""
+    if not plan.verdict.budget:
+        return ""
+    top = max(plan.verdict.budget, key=lambda cause: cause.error_percent)
+    return f"Largest error: {top.cause}, {percent(top.error_percent)}."
+
+
+def story(plan: Plan) -> tuple[str, ...]:
+    """The plan told in about five sentences."""
+    return tuple(s for s in (headline(plan), *speed(plan), made_of(plan), largest_error(plan)) if s)
+
+
+CAUTIONS = (
+    "Supplies: set the current limit low for the first power-up, and check polarity and volts before the op amps are "
+    "in place. A reversed supply destroys every package at once.",
+    "Driven machines: an actuator, motor or loop under test can move without warning when a plan starts, saturates or "
+    "loses a wire. Keep people out of its reach, and have a stop that does not go through this board.",
+    "Local codes and licensed practice come first. This plan is a calculation, no release for use on people, on mains, "
+    "or where a failure can hurt.",
+    "Figures of the catalogue may be from memory, as it says there: confirm them with the maker's data sheet.",
+)
+
+POWER_UP = (
+    "Look over the board bare: no shorts between the rails and ground, every decoupling capacitor at its package.",
+    "Without packages, apply {low:.3g} V and {high:.3g} V and measure both rails at every socket.",
+    "Switch off, fit the packages, set the current limit to what the packages need at rest and half as much again.",
+    "Switch on. Measure the reference: it should stand at {reference:.4g} V within {tolerance}.",
+    "{hold}",
+    "Connect the sources, outputs at zero, then operate. Compare each watched terminal with its picture.",
+)
+
+HOLD = "Put the board in hold, wait {wait}, and check the volts in the table below, node by node."
+NO_HOLD = "This board has no hold: it runs from power-up. Check each node against the limits of its swing below."
+STATIC_NOTE = (
+    "Integrators stand at their start values; summers, inverters and multipliers follow from them. The allowance "
+    "covers 1 % parts and usual offsets; common practice, no source. A node far off points at the stage that drives it."
+)
+
+
+def _factor(factor: float) -> str:
+    if math.isclose(factor, 1.0, rel_tol=1e-6):
+        return "in real time"
+    return (
+        f"{_times(factor)} times faster than real time"
+        if factor > 1
+        else f"{_times(1 / factor)} times slower than real time"
+    )
+
+
+def _times(factor: float) -> str:
+    """Factors from 1000 up with blanks between groups."""
+    if not math.isfinite(factor):
+        return "any number of"
+    return f"{float(f'{factor:.3g}'):,.0f}".replace(",", " ") if factor >= 1000 else plain(factor)
+
+
+def _sentence(text: str) -> str:
+    return text if text.endswith(".") or not text else text + "."
+
+
+def _list(items: list[str]) -> str:
+    return items[0] if len(items) == 1 else ", ".join(items[:-1]) + " and " + items[-1] if items else ""
