@@ -1,149 +1,195 @@
-"""The board's signals against the Reference: error figures, the best stretch of time, peaks against limits."""
+"""The verdict on a board: simulate it, compare it with the Reference, say where the error comes from."""
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Mapping
+from dataclasses import replace
 
 import numpy as np
 from numpy.typing import NDArray
 
-from patchplan.check.records import NodePeak
-from patchplan.check.simulate import Traces
+from patchplan.check.figures import Difference, difference, error_base, node_peaks, settled, signal_of
+from patchplan.check.horizon import horizon_of
+from patchplan.check.network import DENSE_LIMIT
+from patchplan.check.records import Cause, Curve, NodePeak, SignalError, Verdict
+from patchplan.check.simulate import Traces, simulate
+from patchplan.check.spread import spread_of
 from patchplan.circuit.records import Circuit
+from patchplan.equation.system import System
+from patchplan.patch.records import Patch
 from patchplan.reach.records import Reference
+from patchplan.sensitivity import Sensitivity
+from patchplan.sizing.records import Sizing, Target
 
 Array = NDArray[np.float64]
 
-#: A peak may pass its limit by this fraction: the rounding of a reference that stands at the limit.
-_LIMIT_SLACK = 1e-6
-#: Stretches of time looked for.
-_LARGEST_STRETCH = 0.1
-_STRETCH_STEPS = 8
+#: Tolerance of the runs of the error budget; their differences are shown with two digits.
+_BUDGET_TOLERANCE = 1e-6
+#: How far off a switch's resistance is in the budget (common practice, no source); its nominal value is counted in R.
+_SWITCH_OFF = 1.1
+#: Time constants of an op amp, 1/w_t each, that an output is given to follow a jump.
+_SETTLING = 100.0
+_REMEDY = {
+    "resistors": "Resistors of a closer tolerance or trimmers would lower it.",
+    "capacitors": "Measured capacitors, or capacitors of a closer tolerance, would lower it.",
+    "reference": "A closer reference would lower it.",
+    "offsets": "An op amp of lower offset, or trimmed offsets, would lower it.",
+    "multipliers": "A multiplier of a better class, or one with its scale and offsets trimmed, would lower it.",
+}
 
 
-@dataclass(frozen=True, slots=True)
-class Difference:
-    """Error figures of one signal [% of the base]."""
-
-    largest: float
-    rms: float
-    stretched: float
-    frequency: float
-
-
-def signal_of(circuit: Circuit, traces: Traces, net: str) -> Array:
-    """Signal that a net carries, shape ``(n_times,)`` [problem units]."""
-    node = circuit.nodes[net]
-    return np.asarray((traces.of(net) - node.offset_volts) / (node.sign * node.volts_per_unit))
-
-
-def error_base(circuit: Circuit, reference: Reference, signal: str) -> float:
-    """What 100 % means: the signal's peak in the Reference, or half its swing where its node carries an offset."""
-    values = reference.of(signal)
-    base = np.abs(values).max()
-    if circuit.nodes[circuit.watched[signal]].offset_volts:
-        base = np.ptp(values) / 2.0
-    return float(base) or 1.0
-
-
-def settled(reference: Reference, signal: str, base: float, wait: float) -> NDArray[np.bool_]:
-    """Rows of the Reference that count, shape ``(n_times,)``.
-
-    A signal that jumps in the Reference cannot jump on a board: rows from the jump to ``wait`` after it are left out.
+def check_circuit(
+    circuit: Circuit,
+    reference: Reference,
+    sensitivity: Sensitivity,
+    patch: Patch,
+    sizing: Sizing,
+    target: Target,
+    *,
+    system: System,
+    accept: float = 5.0,
+    budget: bool = True,
+) -> Verdict:
+    """Simulate the nominal board and compare it with the Reference.
 
     Parameters
     ----------
-    wait
-        Time that the board's outputs need for a jump [problem time].
+    circuit
+        The board; the simulation sees its parts and nets alone.
+    reference
+        The truth.
+    sensitivity, patch, sizing, target
+        Used for the spread between boards and the horizon only.
+    system
+        Decides whether there can be a horizon at all.
+    accept
+        Largest error at which the board follows its equation [% of peak].
+    budget
+        Whether the causes of error are told apart; it takes one run for each.
     """
-    times, values = reference.times, reference.of(signal)
-    counts = np.ones(len(times), bool)
-    for row in np.flatnonzero((np.diff(times) == 0.0) & (np.abs(np.diff(values)) > 1e-6 * base)) + 1:
-        counts[row : np.searchsorted(times, times[row] + wait, side="right")] = False
-    return counts
+    times = reference.times * circuit.time_scale
+    traces = simulate(circuit, times=times, waveforms=reference.waveforms)
+    horizon = horizon_of(system, sensitivity, patch, sizing)
+    rows = len(traces.times)
+    if horizon is not None:
+        rows = min(rows, max(int(np.searchsorted(reference.times, horizon, side="right")), 1))
+    spreads = spread_of(sensitivity, patch, sizing, target)
+    within = sensitivity.times <= (np.inf if horizon is None else horizon)
+    total = np.sqrt(sum((s**2 for s in spreads.values()), np.zeros(1)))[:, within].max(axis=1)
+    spread = dict(zip(sensitivity.watched, (100.0 * total).tolist(), strict=True))
+    signals = tuple(
+        _signal_error(name, _compare(circuit, reference, traces, name, rows), spread.get(name, 0.0))
+        for name in circuit.watched
+    )
+    nodes = node_peaks(circuit, traces)
+    largest = max((s.max_error_percent for s in signals), default=0.0)
+    causes = _budget(circuit, reference, traces, rows) if budget and not traces.failure else ()
+    return Verdict(
+        verdict=_word(nodes, traces, largest, accept),
+        max_error_percent=largest,
+        rms_error_percent=max((s.rms_error_percent for s in signals), default=0.0),
+        spread_percent=max(spread.values(), default=0.0),
+        horizon=horizon,
+        signals=signals,
+        nodes=nodes,
+        budget=causes,
+        curves=_curves(circuit, reference, traces),
+        times=traces.times,
+        volts={net: traces.of(net) for net in circuit.nodes},
+        warnings=_warnings(traces, nodes, horizon, spreads, within, accept),
+    )
 
 
-def difference(
-    times: Array, wanted: Array, rates: Array, found: Array, base: float, counts: NDArray[np.bool_]
-) -> Difference:
-    """Error figures of one signal.
-
-    Parameters
-    ----------
-    times, wanted, rates
-        The Reference: times, values and their time derivative, shape ``(n_times,)``.
-    found
-        The board's values at the same times.
-    base
-        What 100 % means [problem units].
-    counts
-        Rows that count.
-
-    Notes
-    -----
-    The stretched figure compares found(t) with wanted((1 + a) t) at the a of least squares (Gauss-Newton from a = 0);
-    a is the frequency error, positive where the board runs fast.
-    """
-    if not counts.any():
-        return Difference(100.0, 100.0, 100.0, 0.0)
-    weight = np.gradient(times) if len(times) > 1 else np.ones(1)
-    weight = np.where(counts, np.abs(weight), 0.0) + 1e-300
-    error = found - wanted
-    largest = float(np.abs(error[counts]).max())
-    rms = float(np.sqrt(np.average(error**2, weights=weight)))
-    stretch = _best_stretch(times, wanted, rates, found, weight)
-    stretched = np.abs(found - np.interp((1.0 + stretch) * times, times, wanted))
-    inside = counts & ((1.0 + stretch) * times <= times[-1])
-    least = float(stretched[inside].max())
-    if least >= largest:
-        least, stretch = largest, 0.0
-    percent = 100.0 / base
-    return Difference(percent * largest, percent * rms, percent * least, 100.0 * stretch)
+def _word(nodes: tuple[NodePeak, ...], traces: Traces, largest: float, accept: float) -> str:
+    if traces.failure or not all(n.ok for n in nodes):
+        return "overload"
+    return "follows" if largest <= accept else "inaccurate"
 
 
-def _best_stretch(times: Array, wanted: Array, rates: Array, found: Array, weight: Array) -> float:
-    stretch, best, least = 0.0, 0.0, np.inf
-    for _ in range(_STRETCH_STEPS):
-        moved = (1.0 + stretch) * times
-        inside = np.where(moved <= times[-1], weight, 0.0)
-        error = found - np.interp(moved, times, wanted)
-        square = float(np.average(error**2, weights=inside))
-        if square >= least:
-            break
-        best, least = stretch, square
-        slope = times * np.interp(moved, times, rates)
-        curvature = float(np.sum(inside * slope**2))
-        if curvature == 0.0:
-            break
-        stretch += float(np.sum(inside * slope * error)) / curvature
-        stretch = float(np.clip(stretch, -_LARGEST_STRETCH, _LARGEST_STRETCH))
-    return best
+def _compare(circuit: Circuit, reference: Reference, traces: Traces, name: str, rows: int) -> Difference:
+    found = signal_of(circuit, traces, circuit.watched[name])[:rows]
+    base = error_base(circuit, reference, name)
+    index = reference.names.index(name)
+    counts = settled(reference, name, base, _wait(circuit))[:rows]
+    wanted, rates = reference.values[index, :rows], reference.rates[index, :rows]
+    return difference(reference.times[:rows], wanted, rates, found, base, counts)
 
 
-def node_peaks(circuit: Circuit, traces: Traces) -> tuple[NodePeak, ...]:
-    """Peak of every signal node against its limit, and of every further op amp output against the swing."""
-    limits = {net: node.limit_volts for net, node in circuit.nodes.items()}
-    swing = max(-circuit.op_amp.low, circuit.op_amp.high)
-    for part in circuit.parts:
-        if part.kind == "op amp":
-            limits.setdefault(part.nets[2], swing)
-    peaks = []
-    for net, limit in limits.items():
-        volts = traces.of(net)
-        row = int(np.argmax(np.abs(volts)))
-        peak, time = abs(float(volts[row])), float(traces.times[row])
-        ok = peak <= limit * (1.0 + _LIMIT_SLACK)
-        cause = "" if ok else _cause(circuit, net, peak, limit, time)
-        peaks.append(NodePeak(net, peak, limit, ok, time, cause))
-    return tuple(peaks)
+def _wait(circuit: Circuit) -> float:
+    """Time that outputs are given to follow a jump [problem time]."""
+    amp = circuit.op_amp
+    return (_SETTLING / amp.gain_bandwidth + (amp.high - amp.low) / amp.slew) / circuit.time_scale
 
 
-def _cause(circuit: Circuit, net: str, peak: float, limit: float, time: float) -> str:
-    role = "the limit of the node"
-    for part in circuit.parts:
-        if part.kind == "multiplier" and net in part.nets:
-            full = circuit.multiplier.limit
-            role = f"the full scale of multiplier {part.ref}" if limit >= full * (1 - 1e-9) else role
-        elif part.kind == "op amp" and part.nets[2] == net and limit > circuit.multiplier.limit * (1 + 1e-9):
-            role = f"the swing of op amp {part.ref}"
-    return f"Node {net} reaches {peak:.3g} V at {time:.3g} s of circuit time; {role} is {limit:.3g} V."
+def _signal_error(name: str, error: Difference, spread: float) -> SignalError:
+    return SignalError(name, error.largest, error.rms, spread, error.stretched, error.frequency)
+
+
+def _curves(circuit: Circuit, reference: Reference, traces: Traces) -> tuple[Curve, ...]:
+    rows = len(traces.times)
+    return tuple(
+        Curve(name, reference.times[:rows], reference.of(name)[:rows], signal_of(circuit, traces, net))
+        for name, net in circuit.watched.items()
+    )
+
+
+def _budget(circuit: Circuit, reference: Reference, nominal: Traces, rows: int) -> tuple[Cause, ...]:
+    """Error of the board without any limit but its rounded values, and what each limit changes."""
+    kinds = {p.kind for p in circuit.parts}
+    times = nominal.times[:rows]
+
+    def run(board: Circuit, **ideal: bool) -> Traces:
+        return simulate(board, times=times, waveforms=reference.waveforms, tolerance=_BUDGET_TOLERANCE, **ideal)
+
+    limits = {"finite gain": "gain", "bandwidth": "bandwidth", "slew": "slew", "bias current": "bias"}
+    if "multiplier" in kinds:
+        limits["multiplier bandwidth"] = "multiplier"
+    perfect = run(circuit, **dict.fromkeys(limits.values(), False))
+    rounding = max(_compare(circuit, reference, perfect, name, rows).largest for name in circuit.watched)
+    causes = [Cause("rounding", rounding)]
+    if len(circuit.parts) <= 3 * DENSE_LIMIT:
+        alone = {cause: run(circuit, **{flag: False}) for cause, flag in limits.items()}
+        if "switch" in kinds:
+            parts = tuple(replace(p, value=p.value * _SWITCH_OFF) if p.kind == "switch" else p for p in circuit.parts)
+            alone["switch resistance 10 % off"] = run(replace(circuit, parts=parts))
+    else:
+        alone = {"op amps and multipliers together": perfect}
+    causes += [Cause(cause, _apart(circuit, reference, nominal, other)) for cause, other in alone.items()]
+    return tuple(sorted(causes, key=lambda c: -c.error_percent))
+
+
+def _apart(circuit: Circuit, reference: Reference, one: Traces, other: Traces) -> float:
+    """Largest distance of the watched signals of two runs [% of the base]."""
+    rows = min(len(one.times), len(other.times))
+    worst = 0.0
+    for name, net in circuit.watched.items():
+        base = error_base(circuit, reference, name)
+        counts = settled(reference, name, base, _wait(circuit))[:rows]
+        off = signal_of(circuit, one, net)[:rows] - signal_of(circuit, other, net)[:rows]
+        worst = max(worst, 100.0 * float(np.abs(off[counts]).max(initial=0.0)) / base)
+    return worst
+
+
+def _warnings(
+    traces: Traces,
+    nodes: tuple[NodePeak, ...],
+    horizon: float | None,
+    spreads: Mapping[str, Array],
+    within: NDArray[np.bool_],
+    accept: float,
+) -> tuple[str, ...]:
+    found = [*traces.warnings, *([traces.failure] if traces.failure else []), *(n.cause for n in nodes if not n.ok)]
+    if horizon is not None:
+        found.append(
+            f"The sensitivity grows exponentially: errors and spread are compared up to {horizon:.4g} of problem time; "
+            "beyond it only ranges and distributions mean anything."
+        )
+    total = np.sqrt(sum((s**2 for s in spreads.values()), np.zeros(1)))[:, within]
+    signal, time = np.unravel_index(int(np.argmax(total)), total.shape)
+    if 100.0 * total[signal, time] > accept:
+        cause = max(spreads, key=lambda c: float(spreads[c][:, within][signal, time]))
+        found.append(
+            f"Boards of this design will differ by {100.0 * total[signal, time]:.2g} % (one standard deviation), above "
+            f"the {accept:g} % accepted, mostly by {cause}. {_REMEDY[cause]}"
+        )
+    return tuple(found)
