@@ -38,10 +38,13 @@ def step_points() -> Array:
 
 
 def weights_at(s: Array, derivative: int = 0) -> Array:
-    """Weights of a step's points in its polynomial (or a derivative of it) at places s, shape ``(n_s, n_points)``."""
+    """Weights of a step's points in its polynomial at places s, shape ``(n_s, n_points)``.
+
+    ``derivative`` counts derivatives by s; -1 is the integral from 0.
+    """
     inverse = np.linalg.inv(step_points()[:, None] ** np.arange(STAGES + 1))
     powers = np.arange(STAGES + 1)
-    factor = np.ones(STAGES + 1)
+    factor = 1 / (powers + 1) if derivative == -1 else np.ones(STAGES + 1)
     for i in range(derivative):
         factor = factor * np.maximum(powers - i, 0)
     out: Array = (factor * s[:, None] ** np.maximum(powers - derivative, 0)) @ inverse
@@ -101,4 +104,13 @@ class Pieces:
         step = np.clip(np.searchsorted(self.starts, wanted, side="right") - 1, 0, len(self.starts) - 1)
         weights = weights_at((wanted - self.starts[step]) / self.lengths[step])
         out: Array = np.einsum("ts,tsn->nt", weights, self.points[step])
+        return out
+
+    def integral(self, wanted: Array) -> Array:
+        """Integral from the start of the run to any times, shape ``(n, n_wanted)``."""
+        whole = np.einsum("s,ksn,k->kn", weights_at(np.ones(1), -1)[0], self.points, self.lengths)
+        before = np.concatenate((np.zeros((1, whole.shape[1])), np.cumsum(whole, axis=0)[:-1]))
+        step = np.clip(np.searchsorted(self.starts, wanted, side="right") - 1, 0, len(self.starts) - 1)
+        weights = weights_at((wanted - self.starts[step]) / self.lengths[step], -1) * self.lengths[step, None]
+        out: Array = before[step].T + np.einsum("ts,tsn->nt", weights, self.points[step])
         return out

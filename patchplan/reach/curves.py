@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -91,3 +93,43 @@ def refined(times: Array, error: Array, *, most: int, aim: float = LINEAR_ERROR)
     inner = np.arange(counts.sum()) - np.repeat(np.cumsum(counts) - counts, counts)
     grid = first + np.repeat(np.diff(times) / counts, counts) * inner
     return np.append(grid, times[-1])
+
+
+@dataclass(frozen=True)
+class Curves:
+    """Several curves on one grid.
+
+    Attributes
+    ----------
+    times
+        Shape ``(n,)``, rising; equal times mark a jump.
+    values, rates
+        Shape ``(n_curves, n)``.
+    """
+
+    times: Array
+    values: Array
+    rates: Array
+
+    @property
+    def jumps(self) -> Array:
+        """Times that stand twice in the grid."""
+        return self.times[1:][np.diff(self.times) == 0]
+
+    def at(self, wanted: Array) -> tuple[Array, Array]:
+        """Values (cubic) and rates (linear) at other times."""
+        left = np.clip(np.searchsorted(self.times, wanted, side="right") - 1, 0, len(self.times) - 2)
+        step = self.times[left + 1] - self.times[left]
+        share = np.where(step > 0, (wanted - self.times[left]) / np.where(step > 0, step, 1.0), 1.0)
+        rates = self.rates[:, left] * (1 - share) + self.rates[:, left + 1] * share
+        return resample(self.times, self.values, self.rates, wanted), rates
+
+    def jump(self, time: float) -> tuple[Array, Array, Array]:
+        """Rise of the values, rise of the rates, and the values after a jump, each of shape ``(n_curves,)``."""
+        first = int(np.searchsorted(self.times, time, side="left"))
+        before, after = self.values[:, first], self.values[:, first + 1]
+        return after - before, self.rates[:, first + 1] - self.rates[:, first], after
+
+    def coarse_ends(self, every: int) -> Array:
+        """Every so many times of the grid, its end and its jumps."""
+        return np.unique(np.concatenate((self.times[::every], self.times[-1:], self.jumps)))
