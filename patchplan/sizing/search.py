@@ -12,7 +12,6 @@ import numpy as np
 from numpy.typing import NDArray
 
 Array = NDArray[np.float64]
-Index = NDArray[np.intp]
 
 
 @dataclass(frozen=True)
@@ -47,9 +46,16 @@ def find_loops(matrix: Array, weights: Array) -> Loops:
 
 @dataclass(frozen=True)
 class Menu:
-    """Candidate values: entry k lets unknown ``unknown[k]`` take the log value ``value[k]``."""
+    """Moves: move k sets the unknowns marked in column k to the log values there.
 
-    unknown: Index
+    Attributes
+    ----------
+    touched, value
+        Shape ``(n_unknowns, n_moves)``. A move of one resistor touches one unknown; a move of a capacitor takes all
+        resistors of its stage along.
+    """
+
+    touched: Array
     value: Array
 
 
@@ -63,7 +69,7 @@ def descend(loops: Loops, incidence: Array, offset: Array, menu: Menu, start: Ar
     offset
         b less what is fixed, shape ``(n_rows,)``: residual = B y - offset.
     menu
-        Candidate values, ``n_moves`` of them.
+        Candidate moves.
     start
         Log values to begin from, shape ``(n_unknowns,)``.
     sweeps
@@ -76,24 +82,21 @@ def descend(loops: Loops, incidence: Array, offset: Array, menu: Menu, start: Ar
     """
     effect = loops.basis.T @ (loops.weights[:, None] * incidence)
     y = start.copy()
-    errors = loops.errors(incidence @ y - offset)
-    coupling = effect.T @ effect
-    pairs_of_moves = coupling[np.ix_(menu.unknown, menu.unknown)]
-    same = menu.unknown[:, None] == menu.unknown[None, :]
-    for _ in range(sweeps):
-        step = menu.value - y[menu.unknown]
-        single = 2.0 * step * (errors @ effect)[menu.unknown] + step**2 * coupling.diagonal()[menu.unknown]
-        paired = single[:, None] + single[None, :] + 2.0 * pairs_of_moves * np.outer(step, step)
-        paired[same] = np.inf
-        first, second = divmod(int(np.argmin(paired)), len(step))
+    clash = (menu.touched.T @ menu.touched) > 0
+    target = effect @ (menu.touched * menu.value)
+    for _ in range(sweeps if effect.size and menu.value.size else 0):
+        errors = loops.errors(incidence @ y - offset)
+        change = target - effect @ (menu.touched * y[:, None])
+        single = 2.0 * (errors @ change) + np.einsum("lk,lk->k", change, change)
+        paired = single[:, None] + single[None, :] + 2.0 * (change.T @ change)
+        paired[clash] = np.inf
+        first, second = divmod(int(np.argmin(paired)), len(single))
         alone = int(np.argmin(single))
         moves = [alone] if single[alone] <= paired[first, second] else [first, second]
-        gain = min(single[alone], paired[first, second])
-        if gain > -1e-14:
+        if min(single[alone], paired[first, second]) > -1e-14:
             break
         for move in moves:
-            y[menu.unknown[move]] = menu.value[move]
-        errors = loops.errors(incidence @ y - offset)
+            y = np.where(menu.touched[:, move] > 0, menu.value[:, move], y)
     return y
 
 

@@ -179,7 +179,7 @@ def _coefficients(patch: Patch, model: Model, values: Values) -> tuple[Coefficie
     """Wanted and realised numbers of every wire and start value."""
     by_name = {s.name: s for s in patch.stages}
     rows = []
-    for ratio, error in zip(model.ratios, values.errors, strict=True):
+    for ratio, error in zip(model.ratios, values.errors.tolist(), strict=True):
         stage = by_name[ratio.stage]
         if ratio.kind == "start":
             wanted = float(stage.start)

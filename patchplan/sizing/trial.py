@@ -26,10 +26,14 @@ from patchplan.sizing.values import (
 )
 
 Array = NDArray[np.float64]
-#: Attempts by how hard to think; each is a starting point, not a number of seconds.
-ATTEMPTS = {"low": 4, "normal": 12, "high": 60}
+#: By how hard to think: most attempts (starting points, not seconds), and the norm of the loop errors that is good
+#: enough: normally a tenth of what 1 % resistors spread.
+ATTEMPTS = {"low": (20, 1e-3), "normal": (120, 4e-4), "high": (2000, 4e-5)}
 #: How far a value may lie from the wanted one at the start of an attempt, in logs: three steps of E24.
 WIDTH = 0.3
+#: The same for capacitors: two steps of E6, and the most values of one start ratio that a menu holds.
+CAPACITOR_WIDTH = 0.9
+MOST_NEAR = 16
 
 
 @dataclass(frozen=True)
@@ -104,15 +108,20 @@ def choose_values(
     unknowns = find_unknowns(model.ratios, model.feedback)
     board = _Board(model, target, unknowns, matrix, constant, weights, find_loops(matrix, weights), comfortable or {})
     random = np.random.default_rng(seed)
-    attempts = [_attempt(board, number, random) for number in range(_count(len(unknowns.names), think))]
+    attempts: list[tuple[float, Array, list[Choice]]] = []
+    enough = ATTEMPTS[think][1]
+    for number in range(_count(len(unknowns.names), think)):
+        attempts.append(_attempt(board, number, random))
+        if attempts[-1][0] < enough:
+            break
     attempts.sort(key=lambda found: found[0])
-    best = [_finish(board, y, choices) for _, y, choices in attempts[:4]]
+    best = [_finish(board, y, choices) for _, y, choices in attempts[:3]]
     return min(best, key=lambda values: values.worst)
 
 
 def _count(unknowns: int, think: str) -> int:
     """Fewer attempts for boards whose pairs of moves are many."""
-    return max(2, round(ATTEMPTS[think] * min(1.0, 40 / max(unknowns, 1))))
+    return max(3, round(ATTEMPTS[think][0] * min(1.0, 20 / max(unknowns, 1))))
 
 
 def _attempt(board: _Board, number: int, random: np.random.Generator) -> tuple[float, Array, list[Choice]]:
@@ -129,7 +138,7 @@ def _attempt(board: _Board, number: int, random: np.random.Generator) -> tuple[f
     for _ in range(2):
         y = descend(board.loops, board.unknowns.incidence, board.constant - _shift(board, y), menu, y)
     left = board.loops.errors(board.unknowns.incidence @ y - board.constant + _shift(board, y))
-    return float(left @ left), y, choices
+    return float(np.sqrt(left @ left)), y, choices
 
 
 def _stage_values(
@@ -172,19 +181,28 @@ def _choices(board: _Board, wanted: Array, picked: dict[tuple[str, int | str], f
 
 
 def _menu(board: _Board, choices: list[Choice], centre: Array) -> Menu:
-    """Moves of the attempt: near values of every resistor and start ratio; capacitors and feedbacks stay."""
-    unknown, value = [], []
-    for column, ((_, what), choice) in enumerate(zip(board.unknowns.names, choices, strict=True)):
-        if what in ("C", "Rf"):
-            continue
-        near = choice.logs[choice.near(float(centre[column]), WIDTH)]
-        if near.size > 24:
-            near = near[np.argsort(np.abs(near - centre[column]), kind="stable")[:24]]
-        unknown.append(np.full(near.size, column))
-        value.append(near)
-    if not unknown:
-        return Menu(np.zeros(0, dtype=np.intp), np.zeros(0))
-    return Menu(np.concatenate(unknown).astype(np.intp), np.concatenate(value))
+    """Moves of an attempt: near values of each resistor and start ratio; capacitors take their resistors along."""
+    names = board.unknowns.names
+    moves: list[dict[int, float]] = []
+    for column, ((stage, what), choice) in enumerate(zip(names, choices, strict=True)):
+        if what == "C":
+            legs = [c for c, (s, w) in enumerate(names) if s == stage and isinstance(w, int) and w >= 0]
+            near = choice.logs[choice.near(float(centre[column]), CAPACITOR_WIDTH)]
+            for value in near[np.abs(near - centre[column]) > 1e-9]:
+                wanted = centre[legs] + centre[column] - value
+                nearest = [
+                    choices[c].logs[np.argmin(np.abs(choices[c].logs - w))] for c, w in zip(legs, wanted, strict=True)
+                ]
+                moves.append({column: float(value), **dict(zip(legs, map(float, nearest), strict=True))})
+        elif what != "Rf":
+            near = choice.logs[choice.near(float(centre[column]), WIDTH)]
+            near = near[np.argsort(np.abs(near - centre[column]), kind="stable")[:MOST_NEAR]]
+            moves += [{column: float(value)} for value in near]
+    touched, value = np.zeros((len(names), len(moves))), np.zeros((len(names), len(moves)))
+    for k, move in enumerate(moves):
+        for column, wanted_log in move.items():
+            touched[column, k], value[column, k] = 1.0, wanted_log
+    return Menu(touched, value)
 
 
 def _shift(board: _Board, y: Array) -> Array:
