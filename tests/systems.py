@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from fractions import Fraction
+from itertools import pairwise
 
 from patchplan.equation.system import Knob, Row, Source, State, System, Term, row_of
 from patchplan.equation.tree import Name
@@ -67,6 +68,6 @@ def lorenz() -> System:
 def companion(order: int) -> System:
     """x^(n) = -(x + x' + ...): a chain of integrators with all-negative feedback."""
     names = ["x" + "'" * k for k in range(order)]
-    rows = {low: [term(1, high)] for low, high in zip(names, names[1:], strict=False)}
+    rows = {low: [term(1, high)] for low, high in pairwise(names)}
     rows[names[-1]] = [term(-1, n) for n in names]
     return system(dict.fromkeys(names, 0), rows)

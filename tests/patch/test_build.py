@@ -7,12 +7,12 @@ from fractions import Fraction
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from systems import companion, knob, lorenz, system, term, van_der_pol
 
 from patchplan.equation.system import System
 from patchplan.form.records import Form
 from patchplan.patch.build import build_patch
 from patchplan.patch.read_back import read_back
+from tests.systems import companion, knob, lorenz, system, term, van_der_pol
 
 
 def assert_same_equations(made: System) -> None:

@@ -8,11 +8,11 @@ import numpy as np
 import pytest
 from scipy.sparse import csr_array
 from scipy.sparse.csgraph import maximum_bipartite_matching
-from systems import companion
 
 from patchplan.form.records import Form
 from patchplan.patch.build import build_patch
 from patchplan.patch.signs import Link, choose_signs, wrong_links
+from tests.systems import companion
 
 
 def brute_force(names: list[str], links: list[Link]) -> int:
