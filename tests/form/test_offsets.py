@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from fractions import Fraction
+from math import prod
 
 import numpy as np
 
@@ -18,7 +19,7 @@ def reach_with(**ranges: tuple[float, float]) -> Reach:
 
 
 def value(row, point):
-    return sum(t.coefficient * np.prod([point[n] ** p for n, p in t.factors], initial=1) for t in row.terms)
+    return sum(t.coefficient * prod(point[n] ** p for n, p in t.factors) for t in row.terms)
 
 
 def test_shifted_rates_are_the_old_rates_at_the_shifted_point():
