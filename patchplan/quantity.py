@@ -95,7 +95,7 @@ def engineering(value: float | Fraction, unit: str, digits: int = 3) -> str:
     rounded = Decimal(f"{number:.{digits - 1}e}")
     power = 3 * (rounded.adjusted() // 3)
     if power not in _PREFIXES:
-        return f"{rounded:e} {unit}".rstrip()
+        return f"{number:.{digits}g} {unit}".rstrip()
     mantissa = f"{rounded.scaleb(-power):f}"
     mantissa = mantissa.rstrip("0").rstrip(".") if "." in mantissa else mantissa
     return f"{mantissa}{' ' if unit else ''}{_PREFIXES[power]}{unit}"

@@ -50,7 +50,8 @@ def render(faults: Iterable[Fault], *, text: str, file: str, spans: Mapping[str,
         first = starts[number - 1]
         last = starts[number] - 1 if number < len(starts) else len(text)
         head = f"{file}:{number}:{start - first + 1}: {fault.found} {fault.remedy}".rstrip()
-        lines = _marked(text[first:last], start - first, end - first)
+        nowhere = not fault.key and fault.span is None
+        lines = [] if nowhere else _marked(text[first:last], start - first, end - first)
         blocks.append("\n".join([_printable(head), *lines]))
     return "\n".join(blocks)
 
@@ -78,7 +79,8 @@ def _marked(line: str, start: int, end: int) -> list[str]:
     end = min(max(end, start + 1), max(len(line), start + 1))
     if len(line) > _LONGEST:
         cut = max(start - _AROUND, 0)
-        line, start, end = line[cut : start + _AROUND], start - cut, min(end - cut, start - cut + _AROUND)
+        end = min(end, start + _AROUND) - cut
+        line, start = ("…" if cut else line[:1]) + line[cut + 1 : start + _AROUND], start - cut
     blank = "".join("\t" if letter == "\t" else " " for letter in line[:start])
     return [f"    {_printable(line)}", f"    {blank}{'^' * (end - start)}"]
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 import re
 import tomllib
 from collections.abc import Collection, Mapping
+from contextlib import suppress
 from fractions import Fraction
 from pathlib import Path
 from typing import Any, NoReturn
@@ -13,7 +14,7 @@ from patchplan.equation.constants import names_of
 from patchplan.equation.faults import in_file_order, render
 from patchplan.equation.parameters import read_parameters
 from patchplan.equation.problem import TIME_UNITS, Equation, Problem
-from patchplan.equation.reading import Reading, kind_of
+from patchplan.equation.reading import Reading, TooManyFaultsError, kind_of
 from patchplan.equation.signals import read_inputs, read_ranges, read_start, read_terminals, read_watch
 from patchplan.equation.spans import Layout, scan
 from patchplan.equation.syntax import parse_equation
@@ -28,6 +29,11 @@ _KEYS = (
     "title", "equations", "duration", "time_unit", "watch",
     "parameters", "start", "inputs", "ranges", "terminals", "build", "part",
 )  # fmt: skip
+# Time and memory that a dotted key costs grow with the square of its parts.
+_LONG_KEY = re.compile(r"(?<![\w-])(?:[\w-]++[ \t]*+\.[ \t]*+){16}")
+_STRING_OR_COMMENT = re.compile(
+    r'''"""(?:\\.|[^\\])*?"""|\'{3}.*?\'{3}|"(?:\\.|[^"\\\n])*"|\'[^\'\n]*\'|#[^\n]*''', re.DOTALL
+)
 _WORD = re.compile(r"(?<![\w.])[A-Za-z_][A-Za-z0-9_]*")
 
 
@@ -53,7 +59,9 @@ def read_problem(
     text, file, folder = _loaded(source)
     data, layout = _document(text, file)
     reading = Reading(text, file, folder, layout, data, trust_paths)
-    problem = _problem(reading, part_names)
+    problem = None
+    with suppress(TooManyFaultsError):
+        problem = _problem(reading, part_names)
     if problem is None or reading.faults:
         faults = in_file_order(reading.faults, text, layout.values)
         raise ProblemFaults(faults, render(faults, text=text, file=file, spans=layout.values))
@@ -89,6 +97,8 @@ def _give_up(fault: Fault, file: str, text: str = "") -> NoReturn:
 
 
 def _document(text: str, file: str) -> tuple[dict[str, Any], Layout]:
+    if _LONG_KEY.search(_STRING_OR_COMMENT.sub("_", text)):
+        _give_up(Fault("A key has over 16 parts joined by dots.", "Write short keys."), file)
     try:
         return tomllib.loads(text, parse_float=_number), scan(text)
     except RecursionError:
@@ -134,11 +144,7 @@ def _problem(reading: Reading, part_names: Mapping[str, Collection[str]] | None)
     equations = _equations(reading)
     duration = _duration(reading)
     inputs = read_inputs(reading, duration)
-    signals = {n.name for e in equations for side in (e.left, e.right) for n in names_of(side)} - {"t", "pi"}
-    signals = (signals | inputs.keys()) - parameters.keys()
-    if len(equations) < len(_listed(data.get("equations"))):
-        # An equation at fault may hold the signal that seems missing.
-        signals |= reading.names
+    signals = _signals(reading, equations, inputs.keys() - parameters.keys())
     start, ranges = read_start(reading, signals), read_ranges(reading, signals)
     terminals, watch = read_terminals(reading, signals), read_watch(reading, signals)
     title = reading.string("title", data.get("title", Path(reading.file).stem), "the title")
@@ -150,6 +156,14 @@ def _problem(reading: Reading, part_names: Mapping[str, Collection[str]] | None)
         title, tuple(equations), duration, time_unit, watch, parameters, start, inputs, ranges, terminals,
         build, own_parts, reading.text, reading.file, reading.folder, reading.layout.values,
     )  # fmt: skip
+
+
+def _signals(reading: Reading, equations: list[Equation], inputs: Collection[str]) -> set[str] | None:
+    """Names that start values and the like may use; None where an equation at fault may hold more."""
+    if not 0 < len(equations) == len(_listed(reading.data.get("equations"))):
+        return None
+    words = {name.name for e in equations for side in (e.left, e.right) for name in names_of(side)}
+    return (words | set(inputs)) - {"t", "pi"} - reading.values.keys() - reading.broken
 
 
 def _listed(value: Any) -> list[Any]:
@@ -221,13 +235,15 @@ def _time_unit(reading: Reading) -> str | None:
 
 def _own_parts(reading: Reading) -> dict[str, dict[str, Any]]:
     parts = reading.table("part", reading.data.get("part", {}))
-    return {name: _floats(reading.table(f"part.{name}", part)) for name, part in parts.items()}
+    return {name: _floats(reading, f"part.{name}", reading.table(f"part.{name}", part)) for name, part in parts.items()}
 
 
-def _floats(value: Any) -> Any:
+def _floats(reading: Reading, key: str, value: Any) -> Any:
     """A TOML value with plain floats, as the parts catalogue reads its own files."""
     if isinstance(value, dict):
-        return {key: _floats(item) for key, item in value.items()}
+        return {name: _floats(reading, f"{key}.{name}", item) for name, item in value.items()}
     if isinstance(value, list):
-        return [_floats(item) for item in value]
+        return [_floats(reading, f"{key}[{index}]", item) for index, item in enumerate(value)]
+    if isinstance(value, float):
+        reading.plain(key, value, "a finite number")
     return float(value) if isinstance(value, Fraction) else value

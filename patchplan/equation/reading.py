@@ -19,7 +19,15 @@ from patchplan.quantity import parse_quantity, shown
 
 Given = TypeVar("Given")
 
+#: A file with more faults is no problem file; reading it on would only cost time.
+MAX_FAULTS = 500
+_LONGEST_NAME, _MOST_NAMES = 60, 300
+
 SIGNAL = re.compile(r"([A-Za-z_][A-Za-z0-9_]*)('*)")
+
+
+class TooManyFaultsError(Exception):
+    """The list of faults is full."""
 
 
 @dataclass
@@ -48,21 +56,28 @@ class Reading:
     broken: set[str] = field(default_factory=set)
     faults: list[Fault] = field(default_factory=list)
 
+    def note(self, fault: Fault) -> None:
+        """Note a fault; after very many the reading ends."""
+        self.faults.append(fault)
+        if len(self.faults) >= MAX_FAULTS:
+            raise TooManyFaultsError
+
     def fault(self, key: str, found: str, remedy: str, span: tuple[int, int] | None = None) -> None:
         """Note a fault of the value at `key`."""
-        self.faults.append(Fault(found, remedy, key, span))
+        self.note(Fault(found, remedy, key, span))
 
     def key_fault(self, key: str, found: str, remedy: str) -> None:
         """Note a fault of the key itself."""
         place = self.layout.keys.get(key)
-        self.faults.append(Fault(found, remedy, "" if place else key, place))
+        self.note(Fault(found, remedy, "" if place else key, place))
 
     def attempt(self, work: Callable[[], Given]) -> Given | None:
         """Result of `work`, or None with its faults noted."""
         try:
             return work()
         except ProblemFaults as error:
-            self.faults.extend(error.faults)
+            for fault in error.faults:
+                self.note(fault)
             return None
 
     def table(self, key: str, value: Any) -> dict[str, Any]:
@@ -213,8 +228,8 @@ def kind_of(value: Any) -> str:
 
 def nearest(word: str, known: Iterable[str], otherwise: str = "") -> str:
     """Remedy that names the nearest known word, else `otherwise` or all of them."""
-    listed = list(known)
-    near = get_close_matches(word, listed, 1, 0.6) or [k for k in listed if k.lower() == word.lower()][:1]
+    listed = [name for name in known if len(name) <= _LONGEST_NAME][:_MOST_NAMES]
+    near = get_close_matches(word[:_LONGEST_NAME], listed, 1) or [k for k in listed if k.lower() == word.lower()]
     if near:
         return f'Did you mean "{near[0]}"?'
-    return otherwise or f"Known here: {', '.join(listed)}."
+    return otherwise or f"Known here: {', '.join(listed[:30])}."

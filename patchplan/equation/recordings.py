@@ -17,7 +17,7 @@ from patchplan.quantity import shown
 MAX_BYTES = 64 * 2**20
 
 
-class _RowFault(Exception):
+class _RowError(Exception):
     """What is wrong with the file, and what mends it."""
 
 
@@ -47,7 +47,7 @@ def read_recording(reading: Reading, key: str, given: Mapping[str, Any], duratio
         reading.fault(f"{key}.file", f"{shown(file)} is not UTF-8 text.", "Save it as CSV in UTF-8.")
     except (OSError, csv.Error) as error:
         reading.fault(f"{key}.file", f"{shown(file)} cannot be read: {error}.", "Save it as CSV with commas.")
-    except _RowFault as error:
+    except _RowError as error:
         found, remedy = error.args
         reading.fault(f"{key}.file", f"{shown(file)}: {found}", remedy)
     else:
@@ -100,11 +100,11 @@ def _recording(file: str, rows: Iterator[tuple[int, list[str]]], columns: tuple[
     for line, row in rows:
         time, value = (_cell(row, column, line) for column in columns)
         if times and time <= times[-1]:
-            raise _RowFault(f"in line {line} the time {time:g} follows {times[-1]:g}.", "Let times rise row by row.")
+            raise _RowError(f"in line {line} the time {time:g} follows {times[-1]:g}.", "Let times rise row by row.")
         times.append(time)
         values.append(value)
     if len(times) < 2:
-        raise _RowFault(f"it has {len(times)} row{'s' * (len(times) != 1)} of numbers.", "Give two rows or more.")
+        raise _RowError(f"it has {len(times)} row{'s' * (len(times) != 1)} of numbers.", "Give two rows or more.")
     return Recording(file, tuple(times), tuple(values))
 
 
@@ -115,14 +115,14 @@ def _cell(row: list[str], column: int, line: int) -> float:
     except ValueError:
         number = math.nan
     if not math.isfinite(number):
-        raise _RowFault(f"in line {line} {shown(text)} is no finite number.", "Write a number with a decimal point.")
+        raise _RowError(f"in line {line} {shown(text)} is no finite number.", "Write a number with a decimal point.")
     return number
 
 
 def _check_cover(recording: Recording, duration: Fraction | None) -> None:
     first, last = recording.times[0], recording.times[-1]
     if duration is not None and (first > 0 or last < float(duration)):
-        raise _RowFault(
+        raise _RowError(
             f"it runs from {first:g} to {last:g}, the problem from 0 to {float(duration):g}.",
             "Record the whole run, or shorten the duration.",
         )

@@ -63,30 +63,30 @@ def _in_time(reading: Reading, key: str, tree: Node) -> bool:
     return not wrong
 
 
-def read_start(reading: Reading, signals: Collection[str]) -> dict[str, Fraction]:
+def read_start(reading: Reading, signals: Collection[str] | None) -> dict[str, Fraction]:
     """The ``[start]`` table: exact values by signal with primes."""
     return _by_signal(reading, "start", signals, reading.constant)
 
 
-def read_ranges(reading: Reading, signals: Collection[str]) -> dict[str, tuple[Fraction, Fraction]]:
+def read_ranges(reading: Reading, signals: Collection[str] | None) -> dict[str, tuple[Fraction, Fraction]]:
     """The ``[ranges]`` table: [low, high] by signal with primes."""
     return _by_signal(reading, "ranges", signals, lambda key, value: reading.pair(key, value, reading.constant))
 
 
-def read_terminals(reading: Reading, signals: Collection[str]) -> dict[str, Terminal]:
+def read_terminals(reading: Reading, signals: Collection[str] | None) -> dict[str, Terminal]:
     """The ``[terminals]`` table by signal with primes."""
     return _by_signal(reading, "terminals", signals, lambda key, value: _terminal(reading, key, value))
 
 
 def _by_signal(
-    reading: Reading, table: str, signals: Collection[str], read: Callable[[str, Any], Given | None]
+    reading: Reading, table: str, signals: Collection[str] | None, read: Callable[[str, Any], Given | None]
 ) -> dict[str, Given]:
     found: dict[str, Given] = {}
     for name, given in reading.table(table, reading.data.get(table, {})).items():
         key = f"{table}.{name}"
         if not reading.name(key, name, primes=True):
             continue
-        if name.rstrip("'") not in signals:
+        if signals is not None and name.rstrip("'") not in signals:
             reading.key_fault(
                 key, f"No equation holds a signal {shown(name)}.", nearest(name.rstrip("'"), sorted(signals))
             )
@@ -110,20 +110,21 @@ def _terminal(reading: Reading, key: str, given: Any) -> Terminal | None:
     return None if volts is None or offset is None else Terminal(volts, offset)
 
 
-def read_watch(reading: Reading, signals: Collection[str]) -> tuple[Watch, ...]:
+def read_watch(reading: Reading, signals: Collection[str] | None) -> tuple[Watch, ...]:
     """The watched signals; empty where the file does not say."""
     given = reading.data.get("watch", [])
     if not isinstance(given, list):
         reading.fault("watch", f"watch is {kind_of(given)}.", 'Write a list: watch = ["x", "y"].')
         return ()
-    watched = list(_watched(reading, given, signals))
-    for index, watch in watched:
-        if watch.signal in {other.signal for _, other in watched if _ < index}:
+    watched: dict[str, Watch] = {}
+    for index, watch in _watched(reading, given, signals):
+        if watch.signal in watched:
             reading.fault(f"watch[{index}]", f'"{watch.signal}" is watched twice.', "Remove one of the two.")
-    return tuple(watch for _, watch in watched)
+        watched[watch.signal] = watch
+    return tuple(watched.values())
 
 
-def _watched(reading: Reading, given: list[Any], signals: Collection[str]) -> Iterator[tuple[int, Watch]]:
+def _watched(reading: Reading, given: list[Any], signals: Collection[str] | None) -> Iterator[tuple[int, Watch]]:
     for index, item in enumerate(given):
         key = f"watch[{index}]"
         text = reading.string(key, item, "the signal's name")
@@ -134,7 +135,7 @@ def _watched(reading: Reading, given: list[Any], signals: Collection[str]) -> It
             reading.fault(key, f"{shown(text)} is no signal.", 'Write a name, its prime marks, + or - before: "-z".')
             continue
         sign, name, primes = match.groups()
-        if name not in signals:
+        if signals is not None and name not in signals:
             reading.fault(
                 key, f"No equation holds a signal {shown(name + primes)}.", nearest(name, sorted(signals)),
                 (match.start(2), match.end(3)),

@@ -7,6 +7,9 @@ from dataclasses import dataclass, field
 
 Span = tuple[int, int]
 
+#: Deepest list or table that is read.
+MAX_DEPTH = 20
+
 _BLANK = re.compile(r"(?:[ \t\r\n]|#[^\n]*)*")
 _BARE_KEY = re.compile(r"[A-Za-z0-9_-]+")
 _SCALAR = re.compile(r"[^,\]}#\n]+")
@@ -32,7 +35,13 @@ class Layout:
 
 
 def scan(text: str) -> Layout:
-    """Layout of a text that ``tomllib`` has accepted."""
+    """Layout of a text that ``tomllib`` has accepted.
+
+    Raises
+    ------
+    RecursionError
+        Where lists or tables are nested deeper than ``MAX_DEPTH``.
+    """
     scanner = _Scanner(text)
     scanner.document()
     return scanner.layout
@@ -61,6 +70,7 @@ class _Scanner:
     def __init__(self, text: str) -> None:
         self.text = text
         self.at = 0
+        self.depth = 0
         self.layout = Layout()
         self.counts: dict[str, int] = {}
 
@@ -106,6 +116,7 @@ class _Scanner:
                 return name, span
             self.layout.keys.setdefault(name, span)
             self.layout.values.setdefault(name, span)
+            name = f"{name}[{self.counts[name]}]" if name in self.counts else name
             self.at += 1
 
     def bare(self) -> str:
@@ -138,6 +149,9 @@ class _Scanner:
 
     def value(self, name: str) -> None:
         self.skip()
+        self.depth += 1
+        if self.depth > MAX_DEPTH:
+            raise RecursionError
         start = self.at
         opening = self.text[start : start + 1]
         if opening == "[":
@@ -150,6 +164,7 @@ class _Scanner:
             self.at = start + len(match[0].rstrip())
         else:
             self.at += 1
+        self.depth -= 1
         self.layout.values[name] = (start, self.at)
 
     def array(self, name: str) -> None:

@@ -259,9 +259,11 @@ def check_growth(tree: Node, key: str) -> tuple[int, int]:
         degree, terms = _constant_right(tree, degree, terms, left_degree, left_terms)
     if degree > MAX_DEGREE or terms > MAX_TERMS:
         start, end = (tree.origin.start, tree.origin.end) if tree.origin else (0, 0)
+        size = f"degree {degree}" if MAX_DEGREE < degree <= 10**6 else f"up to {terms} terms"
+        size = "a degree over a million" if degree > 10**6 else size
         refuse(
-            f"Multiplied out this has degree {min(degree, 10**9)} and up to {min(terms, 10**9)} terms; "
-            f"{MAX_DEGREE} and {MAX_TERMS} are allowed.", "Use a lower power or fewer terms.", key, start, end,
+            f"Multiplied out this has {size}; degree {MAX_DEGREE} and {MAX_TERMS} terms are allowed.",
+            "Use a lower power or fewer terms.", key, start, end,
         )  # fmt: skip
     return degree, terms
 
@@ -275,7 +277,7 @@ def _constant_right(tree: Binary, degree: int, terms: int, base_degree: int, bas
         constant_value(Binary("/", Number(Fraction(1)), tree.right, tree.origin), {})
         return degree, terms
     power = constant_value(tree.right, {})
-    count = min(abs(int(power)), 10**6)
+    count = abs(int(power))
     if base_terms == 1 or count > MAX_DEGREE:
         return base_degree * count, 1
     return base_degree * count, comb(base_terms + count - 1, count)

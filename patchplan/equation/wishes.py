@@ -15,7 +15,7 @@ from patchplan.quantity import shown
 SERIES = ("E3", "E6", "E12", "E24", "E48", "E96", "E192")
 RUNS = ("once", "repeat", "free")
 
-_KEYS = tuple(f.name for f in fields(Build) if f.name != "reference_tolerance") + ("pairs",)
+_KEYS = (*(f.name for f in fields(Build) if f.name != "reference_tolerance"), "pairs")
 _VOLTS = ("V",)
 _OHMS = ("Ω", "Ω", "ohm", "Ohm", "ohms")
 _FARADS = ("F",)
