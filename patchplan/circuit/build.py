@@ -13,7 +13,7 @@ from patchplan.circuit.catalogue import Catalogue
 from patchplan.circuit.packages import assign_places, decoupling
 from patchplan.circuit.records import Circuit, NodeMap, Part
 from patchplan.circuit.stages import Board, add_stage
-from patchplan.circuit.target import switch_for
+from patchplan.circuit.target import check_multiplier, switch_for
 from patchplan.equation.problem import Build, Recording
 from patchplan.equation.system import Source
 from patchplan.equation.waveform import Waveform
@@ -49,6 +49,8 @@ def build_circuit(
     CannotBuild
         Where the supply or a knob is out of the parts' reach.
     """
+    if patch.counts().get("multiplier"):
+        check_multiplier(build, catalogue)
     held = build.run != "free"
     switch = switch_for(build, catalogue) if held else None
     places = assign_places(

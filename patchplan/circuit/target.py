@@ -12,13 +12,10 @@ from patchplan.sizing.records import MultiplierFigures, OpAmpFigures, Target
 from patchplan.sizing.series import values_between
 
 
-def target_of(build: Build, catalogue: Catalogue, *, multipliers: bool = True) -> Target:
+def target_of(build: Build, catalogue: Catalogue) -> Target:
     """Purchasable values, swings and figures for a build.
 
-    Parameters
-    ----------
-    multipliers
-        Whether the patch has multipliers; without them the multiplier's supply is not looked at.
+    The multiplier's supply is left to :func:`check_multiplier`, as a board without multipliers does not need it.
 
     Raises
     ------
@@ -46,7 +43,7 @@ def target_of(build: Build, catalogue: Catalogue, *, multipliers: bool = True) -
         reference=build.reference,
         reference_tolerance=build.reference_tolerance,
         op_amp=op_amp,
-        multiplier=_multiplier(build, _part(catalogue.multipliers, build.multiplier, "multiplier"), multipliers),
+        multiplier=_multiplier(build, _part(catalogue.multipliers, build.multiplier, "multiplier")),
         switch_on=switch.si("on_resistance") if switch else 0.0,
         switch_leakage=switch.si("leakage") if switch else 0.0,
     )
@@ -86,13 +83,28 @@ def _op_amp(build: Build, part: PartData) -> OpAmpFigures:
     )
 
 
-def _multiplier(build: Build, part: PartData, wanted: bool) -> MultiplierFigures:
-    if wanted:
-        _check_supply(build, part)
-    low, high = build.supply
-    swing = min(high - part.si("swing_high"), -(low + part.si("swing_low")))
-    if wanted and swing <= 0:
+def check_multiplier(build: Build, catalogue: Catalogue) -> None:
+    """Refuse a supply that the multiplier does not take.
+
+    Raises
+    ------
+    CannotBuild
+        With the range that it takes.
+    """
+    part = catalogue.multipliers[build.multiplier]
+    _check_supply(build, part)
+    if _multiplier_swing(build, part) <= 0:
+        low, high = build.supply
         raise CannotBuild(f"{part.name} has no swing on a supply of {low:g} V to {high:g} V. Choose a higher supply.")
+
+
+def _multiplier_swing(build: Build, part: PartData) -> float:
+    low, high = build.supply
+    return min(high - part.si("swing_high"), -(low + part.si("swing_low")))
+
+
+def _multiplier(build: Build, part: PartData) -> MultiplierFigures:
+    swing = _multiplier_swing(build, part)
     return MultiplierFigures(
         name=part.name,
         scale=part.si("scale"),
