@@ -25,8 +25,8 @@ from patchplan.sizing.drift import (
 from patchplan.sizing.model import Model, build_model
 from patchplan.sizing.records import Coefficient, Leg, NodeScale, Sizing, StageSizing, Target
 from patchplan.sizing.speed import Speed, choose_speed
-from patchplan.sizing.trial import Values, choose_values
-from patchplan.sizing.values import FEEDBACK
+from patchplan.sizing.trial import choose_values
+from patchplan.sizing.values import FEEDBACK, Values
 
 Array = NDArray[np.float64]
 #: The search may shift the planner's own speed by this factor either way.

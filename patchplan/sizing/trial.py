@@ -9,16 +9,16 @@ from math import log
 import numpy as np
 from numpy.typing import NDArray
 
+from patchplan.sizing.large import choose_large
 from patchplan.sizing.model import Model
 from patchplan.sizing.records import Target
 from patchplan.sizing.search import Loops, Menu, descend, find_loops, split_rest
-from patchplan.sizing.speed import COMFORTABLE
 from patchplan.sizing.values import (
     Choice,
     Unknowns,
+    Values,
     find_unknowns,
-    pick_capacitor,
-    pick_feedback,
+    pick_stage_values,
     plain,
     resistor,
     start_ratios,
@@ -34,31 +34,8 @@ WIDTH = 0.3
 #: The same for capacitors: two steps of E6, and the most values of one start ratio that a menu holds.
 CAPACITOR_WIDTH = 0.9
 MOST_NEAR = 16
-
-
-@dataclass(frozen=True)
-class Values:
-    """Chosen parts and scale factors.
-
-    Attributes
-    ----------
-    parts
-        (stage, what) -> the part values behind that unknown.
-    theta
-        Fitted logs of scale factors and speed.
-    worst
-        Largest weighted relative error left.
-    loop_errors
-        Errors of the independent loops, shape ``(n_loops,)``.
-    errors
-        Relative error of each row, shape ``(n_rows,)``.
-    """
-
-    parts: dict[tuple[str, int | str], tuple[float, ...]]
-    theta: Array
-    worst: float
-    loop_errors: Array
-    errors: Array
+#: Boards with more ratios than this take the search that grows no faster than the board.
+LARGE = 150
 
 
 @dataclass(frozen=True)
@@ -103,6 +80,8 @@ def choose_values(
     seed
         Of the starting points; the same seed gives the same values.
     """
+    if len(model.ratios) > LARGE:
+        return choose_large(model, target, comfortable=comfortable or {})
     matrix, constant = matrix_of(model)
     weights = np.array([r.weight for r in model.ratios])
     unknowns = find_unknowns(model.ratios, model.feedback)
@@ -131,7 +110,8 @@ def _attempt(board: _Board, number: int, random: np.random.Generator) -> tuple[f
     if number:
         theta = theta + random.uniform(-0.35, 0.35, len(theta)) * (model.high - model.low)
     wanted = wanted_products(model, theta)
-    picked = _stage_values(board, wanted, random, number)
+    rank = (lambda: int(random.integers(0, 3))) if number else (lambda: 0)
+    picked = pick_stage_values(model, board.target, wanted, board.comfortable, rank)
     choices, centre = _choices(board, wanted, picked)
     y = np.array([c.logs[np.argmin(np.abs(c.logs - w))] for c, w in zip(choices, centre, strict=True)])
     menu = _menu(board, choices, centre)
@@ -139,25 +119,6 @@ def _attempt(board: _Board, number: int, random: np.random.Generator) -> tuple[f
         y = descend(board.loops, board.unknowns.incidence, board.constant - _shift(board, y), menu, y)
     left = board.loops.errors(board.unknowns.incidence @ y - board.constant + _shift(board, y))
     return float(np.sqrt(left @ left)), y, choices
-
-
-def _stage_values(
-    board: _Board, wanted: Array, random: np.random.Generator, number: int
-) -> dict[tuple[str, int | str], float]:
-    """Capacitors and feedback resistors to begin from."""
-    rows: dict[tuple[str, str], list[int]] = {}
-    for row, ratio in enumerate(board.model.ratios):
-        if ratio.kind != "start":
-            rows.setdefault((ratio.stage, "C" if ratio.kind == "integrator" else "Rf"), []).append(row)
-    picked: dict[tuple[str, int | str], float] = {}
-    for (stage, what), members in rows.items():
-        if what == "C":
-            rank = int(random.integers(0, 3)) if number else 0
-            near = board.comfortable.get(stage, COMFORTABLE)
-            picked[stage, what] = pick_capacitor(wanted[members], board.target, rank, near)
-        elif stage not in board.model.feedback:
-            picked[stage, what] = pick_feedback(wanted[members], board.target)
-    return picked
 
 
 def _choices(board: _Board, wanted: Array, picked: dict[tuple[str, int | str], float]) -> tuple[list[Choice], Array]:

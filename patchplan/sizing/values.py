@@ -2,10 +2,10 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from functools import lru_cache
-from math import exp, log
+from math import exp
 
 import numpy as np
 from numpy.typing import NDArray
@@ -35,6 +35,31 @@ class Choice:
             nearest = int(np.argmin(np.abs(self.logs - wanted)))
             return np.array([nearest])
         return np.arange(low, high)
+
+
+@dataclass(frozen=True)
+class Values:
+    """Chosen parts and scale factors.
+
+    Attributes
+    ----------
+    parts
+        (stage, what) -> the part values behind that unknown.
+    theta
+        Fitted logs of scale factors and speed.
+    worst
+        Largest weighted relative error left.
+    loop_errors
+        Errors of the independent loops, shape ``(n_loops,)``.
+    errors
+        Relative error of each row, shape ``(n_rows,)``.
+    """
+
+    parts: dict[tuple[str, int | str], tuple[float, ...]]
+    theta: Array
+    worst: float
+    loop_errors: Array
+    errors: Array
 
 
 @dataclass(frozen=True)
@@ -139,11 +164,27 @@ def pick_feedback(wanted: Array, target: Target) -> float:
     return float(values[np.argmin(100 * over.sum(axis=1) + middle)])
 
 
+def pick_stage_values(
+    model: Model, target: Target, wanted: Array, comfortable: Mapping[str, float], rank: Callable[[], int]
+) -> dict[tuple[str, int | str], float]:
+    """Capacitors (``C``) and feedback resistors (``Rf``) by stage, for the products and ratios wanted of its rows.
+
+    ``rank`` says which capacitor of a stage's order of merit to take; ``comfortable`` as in ``choose_values``.
+    """
+    rows: dict[tuple[str, str], list[int]] = {}
+    for row, ratio in enumerate(model.ratios):
+        if ratio.kind != "start":
+            rows.setdefault((ratio.stage, "C" if ratio.kind == "integrator" else "Rf"), []).append(row)
+    picked: dict[tuple[str, int | str], float] = {}
+    for (stage, what), members in rows.items():
+        if what == "C":
+            near = comfortable.get(stage, COMFORTABLE)
+            picked[stage, what] = pick_capacitor(wanted[members], target, rank(), near)
+        elif stage not in model.feedback:
+            picked[stage, what] = pick_feedback(wanted[members], target)
+    return picked
+
+
 def wanted_products(model: Model, theta: Array) -> Array:
     """exp(b + A theta): wanted R*C, R/Rf and start ratios, shape ``(n_rows,)``."""
     return np.array([exp(model.at(r.want, theta)) for r in model.ratios])
-
-
-def log_or_zero(value: float) -> float:
-    """Natural log, 0 for 0."""
-    return log(value) if value else 0.0
