@@ -10,7 +10,8 @@ from pathlib import Path
 import pytest
 from filelock import FileLock
 
-import patchplan
+from patchplan.equation.reader import read_problem
+from patchplan.pipeline import plan as make_plan
 from patchplan.report.records import Plan
 from tests.cases.convert import problem_text, read_cases
 
@@ -38,7 +39,7 @@ class Plans:
         stored = self.folder / f"{name}.pickle"
         with FileLock(self.folder / f"{name}.lock"):
             if not stored.exists():
-                plan = patchplan.plan(patchplan.read_problem(self.problem_file(name)))
+                plan = make_plan(read_problem(self.problem_file(name)))
                 stored.write_bytes(pickle.dumps(plan))
                 return plan
         # Written by another worker of this run, never by anybody else.

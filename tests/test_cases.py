@@ -7,8 +7,9 @@ import pytest
 from numpy.typing import NDArray
 from scipy.interpolate import CubicHermiteSpline
 
-import patchplan
+from patchplan.equation.reader import read_problem
 from patchplan.errors import ProblemFaults
+from patchplan.pipeline import plan as make_plan
 from patchplan.reach.records import Reference
 from patchplan.report.records import Plan
 from tests.cases.convert import FUNCTIONS_OF_STATES
@@ -108,7 +109,7 @@ def test_errors_over_all_cases(plans: Plans) -> None:
 def test_functions_of_states_are_refused(plans: Plans, name: str) -> None:
     """One sentence that names what stands in the way, with the place in the file."""
     with pytest.raises(ProblemFaults) as caught:
-        patchplan.plan(patchplan.read_problem(plans.problem_file(name)))
+        make_plan(read_problem(plans.problem_file(name)))
     text = str(caught.value)
     assert FUNCTIONS_OF_STATES[name] in text
     assert "state" in text or "unknown" in text

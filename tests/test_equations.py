@@ -10,10 +10,11 @@ from numpy.typing import NDArray
 from scipy.signal import impulse
 from scipy.special import ellipj
 
-import patchplan
+from patchplan.equation.reader import read_problem
 from patchplan.equation.system import Row
 from patchplan.errors import PatchplanError
 from patchplan.patch.read_back import read_back
+from patchplan.pipeline import plan as make_plan
 from patchplan.report.records import Plan
 from tests.plans import EQUATIONS, Plans
 
@@ -155,7 +156,7 @@ def test_rigid_body_is_elliptic(plans: Plans) -> None:
 @pytest.mark.parametrize("name", ["oscillator", "two_mass_drive", "rigid_body"])
 def test_second_plan_is_the_same(plans: Plans, name: str) -> None:
     """Same input, same board: part by part."""
-    again = patchplan.plan(patchplan.read_problem(EQUATIONS / f"{name}.toml"))
+    again = make_plan(read_problem(EQUATIONS / f"{name}.toml"))
     first = plans.of(name)
     assert str(again.circuit) == str(first.circuit)
     assert again.verdict.max_error_percent == first.verdict.max_error_percent
@@ -167,4 +168,4 @@ def test_a_road_that_is_too_short_is_refused(tmp_path: Path) -> None:
     (tmp_path / "seat.toml").write_text(text, encoding="utf-8")
     (tmp_path / "road.csv").write_text((EQUATIONS / "road.csv").read_text(encoding="utf-8"), encoding="utf-8")
     with pytest.raises(PatchplanError, match=r"road\.csv"):
-        patchplan.plan(patchplan.read_problem(tmp_path / "seat.toml"))
+        make_plan(read_problem(tmp_path / "seat.toml"))

@@ -8,13 +8,35 @@ import time
 from pathlib import Path
 
 import numpy as np
+from patchplan.equation.explicit import build_system
 
+from patchplan.circuit.build import build_circuit
+from patchplan.circuit.catalogue import load_catalogue
+from patchplan.circuit.target import target_of
+from patchplan.equation.reader import read_problem
+from patchplan.form.offsets import find_form
+from patchplan.patch.build import build_patch
+from patchplan.ranges import find_ranges
+from patchplan.reach.reference import find_reach
+from patchplan.sensitivity import find_sensitivity
+from patchplan.sizing.size import size
 from tests.bench.ladder import ladder_text
 
 
 def to_circuit(path: Path) -> None:
-    """Read the file and go as far as the Circuit."""
-    raise NotImplementedError
+    """Read the file and go as far as the Circuit: the pipeline's calls without the check."""
+    problem = read_problem(path)
+    system = build_system(problem)
+    catalogue = load_catalogue(problem.own_parts)
+    target = target_of(problem.build, catalogue)
+    reach = find_reach(system, problem.ranges, problem.build)
+    form = find_form(system, reach, problem.terminals)
+    patch = build_patch(form)
+    ranges = find_ranges(patch, form, reach)
+    sensitivity = find_sensitivity(form, patch, ranges)
+    sizing = size(form, patch, ranges, sensitivity, target, speed="free", run="once", think="normal")
+    assert not sizing.faults, sizing.faults
+    build_circuit(form, patch, sizing, target, problem.build, catalogue)
 
 
 def seconds(n: int, folder: Path, *, runs: int) -> float:

@@ -8,8 +8,9 @@ import tempfile
 import time
 from pathlib import Path
 
+PATCHPLAN = (sys.executable, "-c", "from patchplan.cli import main; main()")
 ROOT = Path(__file__).parents[2]
-HELP = ([sys.executable, "-m", "patchplan", "--help"], [sys.executable, "-c", "import typer"])
+HELP = ([*PATCHPLAN, "--help"], [sys.executable, "-c", "import typer"])
 LIBRARIES = "import sympy, scipy.integrate, scipy.optimize, matplotlib.figure"
 
 
@@ -37,7 +38,7 @@ def main() -> None:
     ours, theirs = best_ratio(*HELP, runs=runs)
     print(line("patchplan --help", ours, "import typer", theirs, 3))
     with tempfile.TemporaryDirectory() as folder:
-        plan = [sys.executable, "-m", "patchplan", "plan", "equations/oscillator.toml", "--into", f"{folder}/plan"]
+        plan = [*PATCHPLAN, "plan", "equations/oscillator.toml", "--into", f"{folder}/plan"]
         ours, theirs = best_ratio([*plan, "--quiet"], [sys.executable, "-c", LIBRARIES], runs=runs)
     print(line("patchplan plan, with pictures", ours, "import libraries", theirs, 2))
 
