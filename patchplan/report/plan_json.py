@@ -6,13 +6,13 @@ import json
 from collections.abc import Sequence
 from typing import Any
 
-from patchplan import __version__
 from patchplan.check.records import Verdict
 from patchplan.circuit.records import Circuit, NodeMap
 from patchplan.patch.records import Patch, Stage
 from patchplan.report.codec import decode, encode, rounded
 from patchplan.report.records import Plan
 from patchplan.sizing.records import Sizing, StageSizing
+from patchplan.version import __version__
 
 CONTRACT = 1
 
