@@ -67,9 +67,9 @@ _STRENGTH = ("simulated", "stated", "proved")
 def find_ranges(patch: Patch, form: Form, reach: Reach) -> Ranges:
     """Range of every node of the patch, and its signal over the nominal run.
 
-    The patch is evaluated on every run, stage by stage. Nodes whose signal Reach knows take its range; others widen what
-    the runs show by what their inputs' ranges hold beyond the runs, or, where an input is known only by bounds, take the
-    interval of all combinations of their inputs' ranges.
+    The patch is evaluated on every run, stage by stage. Nodes whose signal Reach knows take its range; others widen
+    what the runs show by what their inputs' ranges hold beyond the runs, or, where an input is known only by bounds,
+    take the interval of all combinations of their inputs' ranges.
     """
     tables = [evaluate(patch, form, reach.reference.names, run) for run in reach.runs]
     seen = _Seen(patch, reach, tables)

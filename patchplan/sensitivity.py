@@ -70,8 +70,9 @@ _LARGEST = 1e100
 def find_sensitivity(form: Form, patch: Patch, ranges: Ranges) -> Sensitivity:
     """Linear responses of the watched signals to small changes of the patch, along the nominal run.
 
-    The patch is linearised about the nominal run (variational equations; Hairer, Norsett & Wanner 1993, Solving Ordinary
-    Differential Equations I, section I.14). An integrator's input sum is taken as zero before the run starts, as in hold.
+    The patch is linearised about the nominal run (variational equations; Hairer, Norsett & Wanner 1993, Solving
+    Ordinary Differential Equations I, section I.14). An integrator's input sum counts as zero before the run starts, as
+    it does in hold, so that lateness also loses its first value.
     """
     plan = _Plan(form, patch, ranges)
     adjoint = len(plan.integrators) > FORWARD_LIMIT and not any(s.kind == "multiplier" for s in patch.stages)
@@ -273,7 +274,8 @@ def _kick(plan: _Plan, time: float) -> Array:
     added = _additions(_slopes(plan, _influence(plan, values, 1)))[0]
     row = {node: i for i, node in enumerate(plan.nodes)}
     jumps = np.array([(bend if s.kind == "integrator" else rise)[row[s.node]] for s in plan.stages])
-    return added * jumps
+    kick: Array = added * jumps
+    return kick
 
 
 def _seen_at(plan: _Plan, times: Array, states: Array) -> Array:

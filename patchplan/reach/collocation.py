@@ -78,7 +78,8 @@ class Pieces:
         parts = np.maximum(parts, self.lengths / self.lengths.sum() * least)
         if total > most:
             parts = parts * (0.5 * most / total)
-        return np.ceil(parts).clip(1).astype(int)
+        counts: NDArray[np.int_] = np.ceil(parts).clip(1).astype(int)
+        return counts
 
     def grid(self, parts: NDArray[np.int_], jumps: Array) -> tuple[Array, Array]:
         """Times and values ``(n, n_times)`` with each step in parts; jumps appear twice, the end of the run once."""

@@ -57,7 +57,7 @@ def extremes(times: Array, values: Array, rates: Array) -> tuple[Array, Array]:
 def resample(times: Array, values: Array, rates: Array, wanted: Array) -> Array:
     """Values at other times by the cubic that matches values and slopes, shape ``(..., n_wanted)``."""
     left = np.clip(np.searchsorted(times, wanted, side="right") - 1, 0, len(times) - 2)
-    # At the last of two equal times searchsorted lands behind the jump, so no interval here has length 0 unless at the end.
+    # searchsorted lands behind a jump, so only an interval at the very end can have length 0.
     step = times[left + 1] - times[left]
     safe = np.where(step > 0, step, 1.0)
     s = np.where(step > 0, (wanted - times[left]) / safe, 1.0)
@@ -69,7 +69,7 @@ def resample(times: Array, values: Array, rates: Array, wanted: Array) -> Array:
 
 
 def linear_error(times: Array, values: Array, rates: Array) -> Array:
-    """How far linear interpolation errs in each interval, as a part of each curve's peak; the largest over curves, ``(n - 1,)``."""
+    """How far linear interpolation errs in each interval, ``(n - 1,)``: the largest part of any curve's peak."""
     h = np.diff(times)
     peak = np.abs(values).max(axis=-1, keepdims=True)
     peak = np.where(peak > 0, peak, 1.0)
@@ -114,7 +114,8 @@ class Curves:
     @property
     def jumps(self) -> Array:
         """Times that stand twice in the grid."""
-        return self.times[1:][np.diff(self.times) == 0]
+        found: Array = self.times[1:][np.diff(self.times) == 0]
+        return found
 
     def at(self, wanted: Array) -> tuple[Array, Array]:
         """Values (cubic) and rates (linear) at other times."""

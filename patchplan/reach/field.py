@@ -108,7 +108,7 @@ class Bound:
         self._rates = (field.rate_block, self._matrix(field.rate_block))
 
     def _matrix(self, block: Block) -> Any:
-        """Matrix from products to rows: dense for small blocks; only the incidence where every run has its own weights."""
+        """Matrix from products to rows, dense for small blocks; ones where every run has its own weights."""
         terms = block.rows.size
         per_run = self.weights.ndim == 2
         values = np.ones(terms) if per_run else self.weights[block.terms]
@@ -180,18 +180,18 @@ class Bound:
         return out
 
     def jacobian(self, states: Array, sources: Array | None = None) -> Any:
-        """Derivative of the rates by the states for one run: ``scipy.sparse.csc_array``, shape ``(n_states, n_states)``."""
+        """Derivative of the rates by the states for one run, sparse, shape ``(n_states, n_states)``."""
         by_value = self.linear_part(states, sources)
         return by_value[:, : self.field.n_states].tocsc()
 
     def linear_part(self, states: Array, sources: Array | None = None) -> Any:
-        """Derivative of the rates by (states, sources), the signals eliminated: sparse, ``(n_states, n_states + n_sources)``."""
+        """Derivative of the rates by (states, sources), signals eliminated: sparse, ``(n_states, n_states + n_sources)``."""
         rates, signals = self.derivatives(states, sources)
         given = self.field.n_states + self.field.n_sources
         return (rates[:, :given] + rates[:, given:] @ signals).tocsc()
 
     def derivatives(self, states: Array, sources: Array | None = None) -> tuple[Any, Any]:
-        """Derivative of the rates by all names, and of the signals by (states, sources) with earlier signals eliminated.
+        """Derivative of the rates by all names, and of the signals by (states, sources), earlier signals eliminated.
 
         Returns
         -------

@@ -47,9 +47,9 @@ class Inputs:
                 jumps += list(times[1:][np.diff(times) == 0])
         edges = np.unique(np.clip(np.array(jumps, float), 0.0, self.duration))
         apart = np.append(True, np.diff(edges) > 4 * _INSIDE * self.duration)
-        edges = edges[apart]
-        edges[-1] = self.duration
-        return edges
+        kept: Array = edges[apart]
+        kept[-1] = self.duration
+        return kept
 
     def values(self, times: Array) -> Array:
         """Every source at the times, shape ``(n_sources, n_times)``."""
@@ -67,6 +67,10 @@ class Inputs:
     def at(self, time: float) -> Array:
         """Every source at one time, shape ``(n_sources,)``."""
         return self.values(np.array([time]))[:, 0]
+
+    def column(self, run: int) -> Inputs:
+        """The inputs of one of several runs: here all runs have the same."""
+        return self
 
     def inside(self, times: Array, start: float, stop: float) -> Array:
         """Values at times of one stretch, its ends seen from inside."""
@@ -89,7 +93,7 @@ class Inputs:
         return self.values(np.clip(times, low, high)), slopes
 
     def _stretch_of(self, times: Array) -> tuple[Array, Array]:
-        """Start and stop of the stretch each grid time belongs to; the first of two equal times belongs to the earlier one."""
+        """Start and stop of the stretch of each grid time; the first of two equal times belongs to the earlier one."""
         index = np.searchsorted(self.edges, times, side="right") - 1
         first = np.append(np.diff(times) == 0, False)
         index = np.clip(index - first, 0, len(self.edges) - 2)

@@ -26,7 +26,7 @@ class _Stepper:
         from scipy.sparse import csc_array
 
         self.size = matrix.shape[0]
-        self.matrix = csc_array(matrix).toarray() if self.size <= _DENSE else csc_array(matrix)
+        self.matrix: Any = csc_array(matrix).toarray() if self.size <= _DENSE else csc_array(matrix)
         self._kept: dict[str, Any] = {}
         scheme = radau(STAGES)[1]
         poles, vectors = np.linalg.eig(scheme)
@@ -45,8 +45,11 @@ class _Stepper:
 
     def _dense(self, h: float) -> tuple[Array, Array]:
         scheme, unit = radau(STAGES)[1], np.eye(self.size)
-        whole = np.eye(STAGES * self.size) - h * np.kron(scheme, self.matrix)
-        return np.linalg.solve(whole, h * np.kron(scheme, unit)), np.linalg.inv(unit - h * self.real_pole * self.matrix)
+        size = STAGES * self.size
+        both = np.einsum("jl,pab->pjalb", scheme, np.stack((self.matrix, unit))).reshape(2, size, size)
+        return np.linalg.solve(np.eye(size) - h * both[0], h * both[1]), np.linalg.inv(
+            unit - h * self.real_pole * self.matrix
+        )
 
     def _sparse(self, h: float) -> list[Any]:
         from scipy.sparse import eye_array
@@ -64,10 +67,12 @@ class _Stepper:
         slopes = f + self.matrix @ x
         factors = self._factors(h)
         if self.size <= _DENSE:
-            return x + (factors[0] @ slopes.ravel()).reshape(STAGES, self.size)
+            step: Array = x + (factors[0] @ slopes.ravel()).reshape(STAGES, self.size)
+            return step
         turned = self.forth @ slopes
         solved = [self._solve(lu, h * pole * row) for lu, pole, row in zip(factors, self.poles, turned, strict=True)]
-        return x + (self.back @ np.array(solved)).real
+        step = x + (self.back @ np.array(solved)).real
+        return step
 
     @staticmethod
     def _solve(lu: Any, right: Array) -> Array:
@@ -77,10 +82,8 @@ class _Stepper:
     def damp(self, h: float, defect: Array) -> Array:
         """A defect as an error of the solution: stiff parts, which decay within the step, are filtered out."""
         factors = self._factors(h)
-        if self.size <= _DENSE:
-            return factors[1] @ defect
         real = int(np.argmin(np.abs(self.poles.imag)))
-        solved: Array = factors[real].solve(defect)
+        solved: Array = factors[1] @ defect if self.size <= _DENSE else factors[real].solve(defect)
         return solved
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
+from itertools import pairwise
 from typing import Any
 
 import numpy as np
@@ -10,10 +11,10 @@ from numpy.typing import NDArray
 
 from patchplan.equation.system import System
 from patchplan.reach.curves import LINEAR_ERROR, linear_error, refined, resample
-from patchplan.reach.field import Bound
+from patchplan.reach.field import Bound, Field
 from patchplan.reach.inputs import Inputs
 from patchplan.reach.linear import Forcing, solve_linear
-from patchplan.reach.solve import GrowsWithoutBoundError, solve
+from patchplan.reach.solve import GrowsWithoutBoundError, floors, solve
 
 Array = NDArray[np.float64]
 
@@ -29,11 +30,16 @@ def start_of(system: System) -> Array:
     return np.array([float(s.start) for s in system.states])
 
 
-def uniform_grid(inputs: Inputs, points: int) -> Array:
-    """Grid of about so many points, each inner edge of the inputs twice, at least 4 parts between edges."""
+def point_limit(field: Field) -> int:
+    """Most points of a grid on which every name is tabulated."""
+    return int(min(MOST_POINTS, max(2 * LEAST_POINTS, MOST_NUMBERS // len(field.names))))
+
+
+def uniform_grid(edges: Array, points: int) -> Array:
+    """Grid of about so many points, each inner edge twice, at least 4 parts between edges."""
     pieces = []
-    for begin, stop in zip(inputs.edges[:-1], inputs.edges[1:], strict=True):
-        count = max(4, int(np.ceil(points * (stop - begin) / inputs.duration)))
+    for begin, stop in pairwise(edges.tolist()):
+        count = max(4, int(np.ceil(points * (stop - begin) / edges[-1])))
         pieces.append(np.linspace(begin, stop, count + 1))
     return np.concatenate(pieces)
 
@@ -52,11 +58,11 @@ def solve_nominal(system: System, field: Bound, inputs: Inputs) -> tuple[Array, 
     GrowsWithoutBoundError
         With the time.
     """
-    most = int(min(MOST_POINTS, max(2 * LEAST_POINTS, MOST_NUMBERS // len(field.field.names))))
+    most = point_limit(field.field)
     if system.is_linear and field.field.n_states:
         return _linear(system, field, inputs, most)
     start = start_of(system)
-    times = uniform_grid(inputs, LEAST_POINTS)
+    times = uniform_grid(inputs.edges, LEAST_POINTS)
     rough = start[:, None] * np.ones_like(times)
     floor = 1e-9 * np.maximum(np.abs(start), np.abs(start).max(initial=0.0) * 1e-3 + 1e-12)
     for _ in range(3):
@@ -66,8 +72,7 @@ def solve_nominal(system: System, field: Bound, inputs: Inputs) -> tuple[Array, 
         times = refined(times, error, most=most)
         if error.max() < 1e-2 or len(times) > most / 2:
             break
-    peaks = np.abs(rough).max(axis=1)
-    floor = _TIGHT * (peaks + 1e-6 * peaks.max(initial=0.0) + 1e-300)
+    floor = floors(np.abs(rough).max(axis=1), _TIGHT)
 
     def states(times: Array) -> Array:
         return (

@@ -39,7 +39,8 @@ class Reference:
 
     def of(self, name: str) -> Array:
         """Values of one signal, shape ``(n_times,)``."""
-        return self.values[self.names.index(name)]
+        row: Array = self.values[self.names.index(name)]
+        return row
 
 
 @dataclass(frozen=True)

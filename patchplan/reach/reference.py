@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
+from dataclasses import dataclass, field
 from fractions import Fraction
 
 import numpy as np
@@ -10,15 +11,39 @@ from numpy.typing import NDArray
 
 from patchplan.equation.problem import Build
 from patchplan.equation.system import System
+from patchplan.reach.bounds import free_sources, impulse, worst_case, worst_waveform
 from patchplan.reach.curves import extremes
 from patchplan.reach.field import Field, field_of
-from patchplan.reach.inputs import Inputs
+from patchplan.reach.free import search_waveforms
+from patchplan.reach.inputs import Inputs, Stored
 from patchplan.reach.nominal import solve_nominal
 from patchplan.reach.records import Range, Reach, Reference, Run
-from patchplan.reach.search import coarse_grid, search_box, spread_of_boards
+from patchplan.reach.search import box_points, coarse_grid, knobs_at, search_box, spread_of_boards
 from patchplan.reach.solve import GrowsWithoutBoundError, grows_without_bound
 
 Array = NDArray[np.float64]
+
+_EXACT = "exact solution of linear equations with known inputs"
+_GAIN = "half the width of each input's bounds times the peak gain over the run, around the response to their middle"
+_BOARDS = "the margin is how far boards with parts within tolerance go beyond the nominal one"
+_BOX = "simulated over corners and a sample of the adjustable parameters"
+_SEARCHED = (
+    "simulated with the worst input waveforms that a search found; other waveforms within the bounds may go further"
+)
+
+
+@dataclass(frozen=True)
+class _Ends:
+    """Lowest and highest value of every name so far, margins beyond them, how they are known, and the runs behind them."""
+
+    low: Array
+    high: Array
+    known_by: str
+    reason: str
+    below: Array | float = 0.0
+    above: Array | float = 0.0
+    runs: tuple[Run, ...] = ()
+    warnings: tuple[str, ...] = field(default=())
 
 
 def find_reach(system: System, stated: Mapping[str, tuple[Fraction, Fraction]], build: Build) -> Reach:
@@ -38,59 +63,116 @@ def find_reach(system: System, stated: Mapping[str, tuple[Fraction, Fraction]], 
     ProblemFaults
         The solution grows without bound within the run.
     """
-    field = field_of(system)
+    numeric = field_of(system)
     try:
-        return _with_stated(_reach(system, field, build), stated)
+        return _with_stated(_reach(system, numeric, build), stated)
     except GrowsWithoutBoundError as error:
         raise grows_without_bound(error.time) from None
 
 
-def _reach(system: System, field: Field, build: Build) -> Reach:
-    inputs = Inputs(system)
+def _reach(system: System, numeric: Field, build: Build) -> Reach:
     knobs = system.knob_values()
-    times, values, rates = solve_nominal(system, field.bind(field.weights(knobs)), inputs)
-    reference = Reference(field.names, times, values, rates, tuple(inputs.edges[1:-1].tolist()))
+    bound = numeric.bind(numeric.weights(knobs))
+    stand_ins: dict[str, Stored] = {}
+    worst: _Ends | None = None
+    if free_sources(system):
+        middle = solve_nominal(system, bound, Inputs(system))
+        worst, stand_ins = (_linear_worst if system.is_linear else _searched_worst)(system, numeric, middle)
+    inputs = Inputs(system, stand_ins)
+    times, values, rates = solve_nominal(system, bound, inputs)
+    reference = Reference(numeric.names, times, values, rates, tuple(inputs.edges[1:-1].tolist()), stand_ins)
     nominal = Run(knobs, times, values, rates)
     low, high = extremes(times, values, rates)
-    if system.is_linear and not system.adjustable:
-        reason = "exact solution of linear equations with known inputs"
-        found = {
-            n: Range(n, float(a), float(b), "proved", 0.0, reason)
-            for n, a, b in zip(field.names, low, high, strict=True)
-        }
-        return Reach(reference, found, (nominal,))
-    return _simulated(system, field, build, inputs, reference, nominal, (low, high))
+    ends = _Ends(low, high, "proved", _EXACT)
+    if worst is not None:
+        reason = worst.reason
+        ends = _Ends(np.minimum(low, worst.low), np.maximum(high, worst.high), worst.known_by, reason)
+    if not system.is_linear or (system.adjustable and worst is None):
+        ends = _simulated(system, numeric, build, inputs, nominal, ends)
+    elif system.adjustable:
+        ends = _linear_box(system, numeric, inputs, nominal, ends)
+    return Reach(reference, _ranges(system, numeric, ends), (nominal, *ends.runs), ends.warnings)
 
 
-def _simulated(
-    system: System,
-    field: Field,
-    build: Build,
-    inputs: Inputs,
-    reference: Reference,
-    nominal: Run,
-    ends: tuple[Array, Array],
-) -> Reach:
-    grid = coarse_grid(inputs, reference.times)
-    peaks = np.abs(reference.values[: field.n_states]).max(axis=1)
-    boards = spread_of_boards(system, field, build, inputs, grid, peaks)
-    below, above = np.maximum(ends[0] - boards.low, 0.0), np.maximum(boards.high - ends[1], 0.0)
-    low, high = ends
-    runs = (nominal,)
-    what = "simulated; the margin is how far boards with parts within tolerance go beyond the nominal one"
+def _linear_worst(
+    system: System, numeric: Field, middle: tuple[Array, Array, Array]
+) -> tuple[_Ends, dict[str, Stored]]:
+    """Proved bounds, and the waveforms that drive the first watched signal furthest."""
+    bound = numeric.bind(numeric.weights(system.knob_values()))
+    free = free_sources(system)
+    responses = [impulse(system, bound, name) for name, _, _ in free]
+    low, high = worst_case(middle, responses, [half for _, _, half in free])
+    row = numeric.names.index(system.watch[0][0]) if system.watch else 0
+    sign = -1.0 if middle[1][row, -1] < 0 else 1.0
+    duration = float(system.duration)
+    stand_ins = {
+        name: worst_waveform(response, row, mid, half, sign, duration)
+        for (name, mid, half), response in zip(free, responses, strict=True)
+    }
+    return _Ends(low, high, "proved", _GAIN), stand_ins
+
+
+def _searched_worst(
+    system: System, numeric: Field, middle: tuple[Array, Array, Array]
+) -> tuple[_Ends, dict[str, Stored]]:
+    bound, duration = numeric.bind(numeric.weights(system.knob_values())), float(system.duration)
+    peaks = np.abs(middle[1][: numeric.n_states]).max(axis=1)
+    for end in (-1.0, 1.0):
+        levels = {n: (np.array([0.0, duration]), np.full(2, mid + end * half)) for n, mid, half in free_sources(system)}
+        steady = solve_nominal(system, bound, Inputs(system, levels))
+        peaks = np.maximum(peaks, np.abs(steady[1][: numeric.n_states]).max(axis=1))
+    found = search_waveforms(system, numeric, peaks)
+    return _Ends(found.low, found.high, "simulated", _SEARCHED), found.stand_ins
+
+
+def _simulated(system: System, numeric: Field, build: Build, inputs: Inputs, nominal: Run, ends: _Ends) -> _Ends:
+    """Widen by the adjustable box and by boards within tolerance."""
+    grid = coarse_grid(inputs, nominal.times)
+    peaks = np.abs(nominal.values[: numeric.n_states]).max(axis=1)
+    boards = spread_of_boards(system, numeric, build, inputs, grid, peaks)
+    alone = extremes(nominal.times, nominal.values, nominal.rates)
+    below, above = np.maximum(alone[0] - boards.low, 0.0), np.maximum(boards.high - alone[1], 0.0)
+    how = [ends.reason] if ends.known_by == "simulated" else []
+    low, high, runs = ends.low, ends.high, ends.runs
     if system.adjustable:
-        box = search_box(system, field, inputs, grid, peaks)
-        low, high, runs = np.minimum(low, box.low), np.maximum(high, box.high), (nominal, *box.runs)
-        what = "simulated over corners and a sample of the adjustable parameters; " + what.partition("; ")[2]
-    known = {s.name for s in system.sources}
+        box = search_box(system, numeric, inputs, grid, peaks)
+        low, high, runs = np.minimum(low, box.low), np.maximum(high, box.high), box.runs
+        how.append(_BOX)
+    reason = "; ".join([*(how or ["simulated"]), _BOARDS])
+    return _Ends(low, high, "simulated", reason, below, above, runs, boards.warnings)
+
+
+def _linear_box(system: System, numeric: Field, inputs: Inputs, nominal: Run, ends: _Ends) -> _Ends:
+    """Peak gains at the corners and a sample of the adjustable box."""
+    points = box_points(len(system.adjustable))
+    knobs = knobs_at(system, points)
+    free = free_sources(system)
+    low, high = ends.low, ends.high
+    for i in range(len(points)):
+        bound = numeric.bind(numeric.weights({name: v[i] for name, v in knobs.items()}))
+        middle = solve_nominal(system, bound, Inputs(system))
+        responses = [impulse(system, bound, name) for name, _, _ in free]
+        here = worst_case(middle, responses, [half for _, _, half in free])
+        low, high = np.minimum(low, here[0]), np.maximum(high, here[1])
+    peaks = np.abs(nominal.values[: numeric.n_states]).max(axis=1)
+    box = search_box(system, numeric, inputs, coarse_grid(inputs, nominal.times), peaks)
+    return _Ends(low, high, "simulated", f"{_BOX}; at each, {_GAIN}", runs=box.runs)
+
+
+def _ranges(system: System, numeric: Field, ends: _Ends) -> dict[str, Range]:
+    below, above = (np.broadcast_to(x, ends.low.shape) for x in (ends.below, ends.above))
     found = {}
-    for i, name in enumerate(field.names):
-        if name in known:
-            found[name] = Range(name, float(low[i]), float(high[i]), "proved", 0.0, "known function of time")
+    for i, name in enumerate(numeric.names):
+        low, high = float(ends.low[i] - below[i]), float(ends.high[i] + above[i])
+        found[name] = Range(name, low, high, ends.known_by, float(max(below[i], above[i])), ends.reason)
+    for i, source in enumerate(system.sources, start=numeric.n_states):
+        if source.waveform is None and source.within is not None:
+            low, high = (float(x) for x in source.within)
+            found[source.name] = Range(source.name, low, high, "proved", 0.0, "bounds given in the problem file")
         else:
-            margin = float(max(below[i], above[i]))
-            found[name] = Range(name, float(low[i] - below[i]), float(high[i] + above[i]), "simulated", margin, what)
-    return Reach(reference, found, runs, boards.warnings)
+            known = float(ends.low[i]), float(ends.high[i])
+            found[source.name] = Range(source.name, *known, "proved", 0.0, "known function of time")
+    return found
 
 
 def _with_stated(reach: Reach, stated: Mapping[str, tuple[Fraction, Fraction]]) -> Reach:

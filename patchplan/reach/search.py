@@ -18,7 +18,7 @@ from patchplan.reach.field import Bound, Field
 from patchplan.reach.inputs import Inputs
 from patchplan.reach.nominal import start_of, tabulate, uniform_grid
 from patchplan.reach.records import Run
-from patchplan.reach.solve import GrowsWithoutBoundError, solve
+from patchplan.reach.solve import GrowsWithoutBoundError, floors, solve
 
 Array = NDArray[np.float64]
 
@@ -64,7 +64,7 @@ def solve_batch(system: System, field: Field, weights: Array, inputs: Inputs, ti
     """
     bound = field.bind(weights)
     start = np.repeat(start_of(system)[:, None], weights.shape[1], axis=1)
-    floor = 1e-2 * _TOLERANCE * (peaks + 1e-6 * peaks.max(initial=0.0) + 1e-300)
+    floor = floors(peaks, 1e-2 * _TOLERANCE)
     if start.size:
         states = solve(bound, start, inputs, times, tolerance=_TOLERANCE, floor=floor)
     else:
@@ -73,15 +73,15 @@ def solve_batch(system: System, field: Field, weights: Array, inputs: Inputs, ti
 
 
 def _tabulated(bound: Bound, inputs: Inputs, times: Array, states: Array) -> Batch:
-    tables = [
-        tabulate(bound.field.bind(bound.weights[:, j]), inputs, times, states[:, j]) for j in range(states.shape[1])
-    ]
+    tables = []
+    for j in range(states.shape[1]):
+        tables.append(tabulate(bound.field.bind(bound.weights[:, j]), inputs.column(j), times, states[:, j]))
     return Batch(times, np.stack([t[0] for t in tables], axis=1), np.stack([t[1] for t in tables], axis=1))
 
 
 def coarse_grid(inputs: Inputs, times: Array) -> Array:
     """About 600 times for further runs: half evenly spread, half where the nominal run needs them; edges twice."""
-    inner = np.unique(np.concatenate((times[:: max(1, len(times) // 300)], uniform_grid(inputs, 300))))
+    inner = np.unique(np.concatenate((times[:: max(1, len(times) // 300)], uniform_grid(inputs.edges, 300))))
     return np.sort(np.concatenate((inner, inputs.edges[1:-1])))
 
 

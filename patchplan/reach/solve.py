@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import warnings
+from itertools import pairwise
 from typing import Any
 
 import numpy as np
@@ -38,6 +39,13 @@ def grows_without_bound(time: float) -> ProblemFaults:
     )
 
 
+def floors(peaks: Array, tolerance: float) -> Array:
+    """Absolute tolerance for each state: a part of its peak; a state that never moves takes it from the others."""
+    largest = float(peaks.max(initial=0.0)) or 1e-6
+    out: Array = tolerance * (peaks + 1e-6 * largest)
+    return out
+
+
 def solve(field: Bound, start: Array, inputs: Inputs, times: Array, *, tolerance: float, floor: Array) -> Array:
     """States on a grid in which every edge of the inputs appears twice (before, after) except the ends.
 
@@ -64,7 +72,7 @@ def solve(field: Bound, start: Array, inputs: Inputs, times: Array, *, tolerance
     x = start
     parts = []
     first = 0
-    for begin, stop in zip(edges[:-1], edges[1:], strict=True):
+    for begin, stop in pairwise(edges.tolist()):
         # The stretch ends with the first of the two equal times at its stop.
         last = int(np.searchsorted(times, stop, side="left"))
         rows = _stretch(field, x, inputs, times[first : last + 1], (begin, stop), tolerance, floor)
@@ -79,8 +87,10 @@ def _stretch(
 ) -> Array:
     if start.shape[0] > DENSE_LIMIT:
         return _sparse_stretch(field, start, inputs, times, ends, tolerance, floor)
-    from scipy.integrate import odeint
+    from scipy import integrate
 
+    # The stubs know no tolerance for each component.
+    odeint: Any = integrate.odeint
     depth, count = inputs.edge_depth, field.field.n_sources
     low, high = ends[0] + depth, ends[1] - depth
     shape = start.T.shape
@@ -93,7 +103,7 @@ def _stretch(
 
     def many(t: float, x: Array) -> Array:
         u = sources(t)
-        return field.rates(x.reshape(shape).T, None if u is None else u[:, None]).T.ravel()
+        return field.rates(x.reshape(shape).T, None if u is None else u.reshape(count, -1)).T.ravel()
 
     band = start.shape[0] - 1
     options: dict[str, Any] = {"ml": band, "mu": band} if start.ndim == 2 else {}
@@ -115,7 +125,8 @@ def _stretch(
         )
     if info["message"] != "Integration successful." or not np.isfinite(rows).all():
         raise GrowsWithoutBoundError(_end_of_run(times, info["tcur"], rows))
-    return np.moveaxis(rows.reshape(-1, *shape), 0, -1).swapaxes(0, -2) if start.ndim == 2 else rows.T
+    states: Array = rows.reshape(-1, *shape).transpose(2, 1, 0) if start.ndim == 2 else rows.T
+    return states
 
 
 def _end_of_run(times: Array, reached: Array, rows: Array) -> float:

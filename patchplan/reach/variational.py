@@ -14,7 +14,7 @@ STEP_STAGES = 3
 
 
 def stage_times(ends: Array) -> Array:
-    """Times of the stages of steps between ``ends``, shape ``((n_ends - 1) * 3,)``; the last of each just before its end."""
+    """Times of the stages of steps, shape ``((n_ends - 1) * 3,)``; the last of each stands just before its end."""
     nodes = np.minimum(radau(STEP_STAGES)[0], 1 - 1e-9)
     times: Array = (ends[:-1, None] + np.diff(ends)[:, None] * nodes).ravel()
     return times
