@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import replace
 from typing import Any
 
@@ -22,6 +22,9 @@ from patchplan.patch.records import Patch
 from patchplan.sizing.records import Sizing, Target
 
 Array = NDArray[np.float64]
+
+#: What a voltage reference gives before it sags [A] (common practice, no source).
+REFERENCE_AMPERE = 10e-3
 
 
 def build_circuit(
@@ -120,15 +123,18 @@ def _with_waveform(source: Source, stand_ins: Mapping[str, tuple[Array, Array]])
 
 def _load_notes(board: Board, catalogue: Catalogue) -> list[str]:
     """One sentence for each output that drives less than the load its part is rated for."""
+    target = board.target
     rated = {
-        "op amp": (board.target.op_amp.name, board.target.op_amp.load),
-        "multiplier": (board.target.multiplier.name, catalogue.multipliers[board.target.multiplier.name].si("load")),
+        "op amp": (target.op_amp.name, target.op_amp.load),
+        "multiplier": (target.multiplier.name, catalogue.multipliers[target.multiplier.name].si("load")),
+        "reference": ("a reference", target.reference / REFERENCE_AMPERE),
     }
+    loads = output_loads(board.parts)
     notes = []
     for part in board.parts:
         if part.kind in rated:
             name, least = rated[part.kind]
-            load = load_at(board.parts, part.nets[-1])
+            load = loads.get(part.nets[-1], float("inf"))
             if load < least * (1 - 1e-9):
                 notes.append(
                     f"Node {part.nets[-1]} drives {load:.3g} ohm; {name} is rated for {least:.3g} ohm, so its swing "
@@ -137,14 +143,28 @@ def _load_notes(board: Board, catalogue: Catalogue) -> list[str]:
     return notes
 
 
-def load_at(parts: list[Part] | tuple[Part, ...], net: str) -> float:
-    """Summed load of a net [ohm], every resistor on it taken as if its other end were ground; inf where none."""
-    conductance = 0.0
+def output_loads(parts: Sequence[Part]) -> dict[str, float]:
+    """Summed load of every net [ohm], in hold or operate, whichever is heavier; nets without load are left out.
+
+    Every branch is taken as if its far end were at ground, which is exact for virtual grounds and safe for the rest.
+    """
+    operate, hold = _conductances(parts, "operate"), _conductances(parts, "hold")
+    return {net: 1 / max(operate.get(net, 0.0), hold.get(net, 0.0)) for net in (operate | hold)}
+
+
+def _conductances(parts: Sequence[Part], closed: str) -> dict[str, float]:
+    summing = {p.nets[1] for p in parts if p.kind == "op amp"}
+    # Behind an open switch no current flows.
+    off = {n for p in parts if p.kind == "switch" and p.closed != closed for n in p.nets} - summing
+    behind = {p.nets[0]: p.value * p.total for p in parts if p.kind == "potentiometer" and p.nets[1] == p.nets[2]}
+    sums: dict[str, float] = {}
     for part in parts:
-        if part.kind == "resistor" and net in part.nets and part.value:
-            conductance += 1 / part.value
-        elif part.kind == "potentiometer" and net in (part.nets[0], part.nets[2]):
-            # A rheostat's loop is at least as long as its setting; a track across two outputs carries twice the volts.
-            share = part.value if part.nets[1] == part.nets[2] else 0.5
-            conductance += 1 / (max(share, 1e-9) * part.total)
-    return 1 / conductance if conductance else float("inf")
+        if part.kind == "resistor" and off.isdisjoint(part.nets):
+            for here, far in (part.nets, part.nets[::-1]):
+                sums[here] = sums.get(here, 0.0) + 1 / (part.value + behind.get(far, 0.0))
+        elif part.kind == "potentiometer":
+            # A rheostat counts at its setting; a track across two outputs has twice the volts.
+            ohm = part.value * part.total if part.nets[1] == part.nets[2] else part.total / 2
+            for net in dict.fromkeys((part.nets[0], part.nets[2])):
+                sums[net] = sums.get(net, 0.0) + 1 / max(ohm, 1e-3)
+    return sums

@@ -86,7 +86,8 @@ class SourceText:
     def _helper(self, call: Call) -> str:
         """Node that carries a piecewise function of time."""
         if call not in self._helpers:
-            name = f"pw_source_{len(self._helpers) + 1}"
+            # No net of a board ends in an underscore.
+            name = f"wave_{len(self._helpers) + 1}_"
             self._helpers[call] = name
             times, values = self._pieces(call)
             self._piecewise_linear(f"V{name} {name}", times, values)

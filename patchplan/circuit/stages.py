@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections import Counter
 from collections.abc import Callable
 from dataclasses import dataclass, field, replace
+from functools import cached_property
 
 from patchplan.circuit.knobs import TRACK_TOLERANCE, Dial, crossing, rheostat
 from patchplan.circuit.packages import Place, Places
@@ -32,6 +33,18 @@ class Board:
     notes: list[str] = field(default_factory=list)
     numbers: Counter[str] = field(default_factory=Counter)
 
+    @cached_property
+    def by_node(self) -> dict[str, Stage]:
+        """Stages by the node they drive."""
+        return self.patch.by_node()
+
+    @cached_property
+    def references(self) -> tuple[Stage, ...]:
+        """The reference and the inverters on it."""
+        first = next((s for s in self.patch.stages if s.kind == "reference"), None)
+        inverted = (s for s in self.patch.stages if first and s.kind == "inverter" and s.wires[0].source == first.node)
+        return (first, *inverted) if first else ()
+
     def put(self, part: Part) -> None:
         """Lay down a part; passive ones get the next designator of their letter."""
         letter = _LETTERS.get(part.kind)
@@ -46,7 +59,7 @@ class Board:
 
     def volts(self, node: str) -> float:
         """Signed volts per unit of the signal at a node."""
-        return self.patch.by_node()[node].sign * self.sizing.scales[node].volts_per_unit
+        return self.by_node[node].sign * self.sizing.scales[node].volts_per_unit
 
 
 def add_stage(board: Board, stage: Stage) -> None:
@@ -126,10 +139,8 @@ def _start_network(board: Board, stage: Stage, sized: StageSizing) -> None:
 
 def _reference_node(board: Board, polarity: float) -> str:
     """Node that carries the reference with the sign of ``polarity``."""
-    first = next((s for s in board.patch.stages if s.kind == "reference"), None)
-    inverted = (s for s in board.patch.stages if first and s.kind == "inverter" and s.wires[0].source == first.node)
-    for stage in (first, *inverted):
-        if stage is not None and stage.sign * polarity > 0:
+    for stage in board.references:
+        if stage.sign * polarity > 0:
             return stage.node
     raise ValueError(f"The patch has no {'positive' if polarity > 0 else 'negative'} reference for a start value.")
 
@@ -199,7 +210,7 @@ def _potentiometer(board: Board, stage: Stage, nets: tuple[str, str, str], dial:
 
 def _multiplier(board: Board, stage: Stage) -> None:
     place = board.places.active[stage.name]
-    nodes = board.patch.by_node()
+    nodes = board.by_node
     first, second = (w.source for w in stage.wires)
     direct = stage.sign == nodes[first].sign * nodes[second].sign
     x = (first, GROUND) if direct else (GROUND, first)

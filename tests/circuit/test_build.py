@@ -6,7 +6,7 @@ from fractions import Fraction
 
 import pytest
 
-from patchplan.circuit.build import build_circuit, load_at, replace_part
+from patchplan.circuit.build import build_circuit, output_loads, replace_part
 from patchplan.circuit.records import Circuit, Part
 from patchplan.circuit.target import target_of
 from patchplan.equation.problem import Build
@@ -148,7 +148,20 @@ def test_an_overloaded_output_is_noted():
     (note,) = [n for n in circuit.notes if "rated" in n]
     # 1 kohm beside the leg of 99.98 kohm.
     assert note.startswith("Node x_d_n drives 990 ohm; TL07x is rated for 2e+03 ohm")
-    assert load_at(circuit.parts, "x_d_n") == pytest.approx(1 / (1 / 1e3 + 1 / 99.98e3))
+    assert output_loads(circuit.parts)["x_d_n"] == pytest.approx(1 / (1 / 1e3 + 1 / 99.98e3))
+
+
+def test_load_counts_what_the_switches_let_through():
+    parts = oscillator().parts
+    # In operate the leg of the next integrator, in hold the start network of its own stage.
+    assert output_loads(parts)["x"] == pytest.approx(10e3)
+    legs_alone = tuple(p for p in parts if p.ref != "R5")
+    assert output_loads(legs_alone)["x"] == pytest.approx(99.98e3)
+    fixed, pot = (
+        Part("R1", "resistor", ("o", "o_w"), 2e3),
+        Part("RV1", "potentiometer", ("o_w", "i", "i"), 0.3, total=1e4),
+    )
+    assert output_loads((fixed, pot))["o"] == pytest.approx(5e3)
 
 
 def test_offsets_become_volts_and_sources_keep_their_units():
