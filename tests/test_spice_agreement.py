@@ -15,6 +15,7 @@ from tests.circuit.spice import run_ngspice
 from tests.plans import Plans
 
 Array = NDArray[np.float64]
+Spice = Callable[[str], tuple[dict[str, Array], Array]]
 
 #: What each plan is here for.
 PLANS = {
@@ -34,7 +35,7 @@ PLANS = {
 
 
 @pytest.fixture(scope="module")
-def spice(plans: Plans) -> Callable[[str], tuple[dict[str, Array], Array]]:
+def spice(plans: Plans) -> Spice:
     """Waveforms of a plan's netlist, each run once."""
 
     @functools.cache
@@ -55,9 +56,7 @@ def error_against(times: Array, wanted: Array, spice_times: Array, found: Array,
 
 
 @pytest.mark.parametrize("name", PLANS)
-def test_spice_follows_the_reference(
-    plans: Plans, spice: Callable[[str], tuple[dict[str, Array], Array]], name: str
-) -> None:
+def test_spice_follows_the_reference(plans: Plans, spice: Spice, name: str) -> None:
     """Within the error that the check predicted plus 0.5 % of peak, at every watched signal."""
     plan = plans.of(name)
     volts, seconds = spice(name)
@@ -76,9 +75,7 @@ def test_spice_follows_the_reference(
 
 
 @pytest.mark.parametrize("name", PLANS)
-def test_spice_equals_the_check(
-    plans: Plans, spice: Callable[[str], tuple[dict[str, Array], Array]], name: str
-) -> None:
+def test_spice_equals_the_check(plans: Plans, spice: Spice, name: str) -> None:
     """Within 0.5 % of the peak of the tool's own simulation, at every node that carries a signal."""
     plan = plans.of(name)
     volts, seconds = spice(name)
