@@ -15,33 +15,70 @@ Array = NDArray[np.float64]
 
 
 @dataclass(frozen=True)
+class Effect:
+    """What row errors do to the watched signals.
+
+    Attributes
+    ----------
+    response
+        Shape ``(n_points, n_rows)``: change of a watched signal at one time, as a fraction of peak, per unit of
+        residual r - b - A theta of a row.
+    base
+        Shape ``(n_points,)``: error that is there already, such as lag.
+    """
+
+    response: Array
+    base: Array
+
+
+@dataclass(frozen=True)
 class Loops:
-    """The independent loops of a weighted system r = b + A theta + e.
+    """The part of the predicted error that no theta can take away: basis' (shape (r - b) + base).
 
     Attributes
     ----------
     basis
-        Orthonormal basis of what theta cannot reach, shape ``(n_rows, n_loops)``.
-    weights
-        Row weights, shape ``(n_rows,)``.
+        Orthonormal, shape ``(n_rows, n_loops)``.
+    shape
+        Square root of the error measure, shape ``(n_rows, n_rows)``.
+    base
+        Shape ``(n_rows,)``.
     """
 
     basis: Array
-    weights: Array
+    shape: Array
+    base: Array
 
     def errors(self, residual: Array) -> Array:
         """Loop errors of residuals r - b, shape ``(n_loops,)``."""
-        loops: Array = self.basis.T @ (self.weights * residual)
+        loops: Array = self.basis.T @ (self.shape @ residual + self.base)
         return loops
 
 
-def find_loops(matrix: Array, weights: Array) -> Loops:
-    """Left null space of the weighted system by a complete QR decomposition with pivoting."""
+def find_loops(matrix: Array, effect: Effect) -> Loops:
+    """Loops under the measure (mean square of the predicted error) + (share * row errors)^2.
+
+    The second part keeps single coefficients near even where the watched signals hardly show them; its share grows with
+    the largest response, so that both count on chaotic and on docile problems.
+    """
+    from scipy.linalg import null_space, qr
+
+    points, rows = effect.response.shape
+    share = max(1.0, 0.1 * float(np.abs(effect.response).max(initial=0.0)))
+    stacked = np.vstack([effect.response / np.sqrt(max(points, 1)), share * np.eye(rows)])
+    q, shape = qr(stacked, mode="economic")
+    base = q[:points].T @ (effect.base / np.sqrt(max(points, 1)))
+    basis = null_space((shape @ matrix).T) if matrix.shape[1] else np.eye(rows)
+    return Loops(basis, shape, base)
+
+
+def loop_errors(matrix: Array, residual: Array) -> Array:
+    """Plain relative error of each independent loop, whatever it does to the signals."""
     from scipy.linalg import null_space
 
-    if matrix.shape[1] == 0:
-        return Loops(np.eye(len(weights)), weights)
-    return Loops(null_space((weights[:, None] * matrix).T), weights)
+    basis = null_space(matrix.T) if matrix.shape[1] else np.eye(len(residual))
+    errors: Array = basis.T @ residual
+    return errors
 
 
 @dataclass(frozen=True)
@@ -80,7 +117,7 @@ def descend(loops: Loops, incidence: Array, offset: Array, menu: Menu, start: Ar
     Array
         Log values, shape ``(n_unknowns,)``, from which no single or paired move of the menu improves.
     """
-    effect = loops.basis.T @ (loops.weights[:, None] * incidence)
+    effect = loops.basis.T @ (loops.shape @ incidence)
     y = start.copy()
     clash = (menu.touched.T @ menu.touched) > 0
     target = effect @ (menu.touched * menu.value)
@@ -100,34 +137,33 @@ def descend(loops: Loops, incidence: Array, offset: Array, menu: Menu, start: Ar
     return y
 
 
-def split_rest(matrix: Array, target: Array, weights: Array, low: Array, high: Array) -> tuple[Array, float]:
-    """Theta inside its bounds that shares the rest out: least largest weighted error first, then most exact rows.
+def split_rest(matrix: Array, residual: Array, effect: Effect, low: Array, high: Array) -> tuple[Array, float]:
+    """Theta inside its bounds that shares the rest out, and the largest predicted error of a watched signal.
 
-    Two linear programs (HiGHS through scipy): minimise max |w (r - b - A theta)|, then sum |w (r - b - A theta)| at
-    that maximum.
+    A linear program (HiGHS through scipy): least largest predicted error plus a twentieth of the largest row error.
 
     Returns
     -------
     tuple
-        theta, shape ``(n_theta,)``, and the largest weighted error; (centre, inf) where no theta fits.
+        theta, shape ``(n_theta,)``, and the predicted error as a fraction of peak; (centre, inf) where no theta fits.
     """
     from scipy.optimize import linprog
 
     rows, columns = matrix.shape
     if rows == 0 or columns == 0:
-        return (low + high) / 2, float(np.max(np.abs(weights * target), initial=0.0))
-    a = weights[:, None] * matrix
-    r = weights * target
-    ones = np.ones((rows, 1))
-    upper = np.block([[a, -ones], [-a, -ones]])
-    limits = np.concatenate([r, -r])
-    bounds = [*zip(low, high, strict=True), (0, None)]
-    worst = linprog(np.r_[np.zeros(columns), 1.0], A_ub=upper, b_ub=limits, bounds=bounds)
+        return (low + high) / 2, _predicted(effect, residual)
+    seen, share = effect.response @ matrix, effect.response @ residual + effect.base
+    point, one = np.ones((len(share), 1)), np.ones((rows, 1))
+    none_p, none_r = np.zeros((len(share), 1)), np.zeros((rows, 1))
+    upper = np.block([[-seen, -point, none_p], [seen, -point, none_p], [-matrix, none_r, -one], [matrix, none_r, -one]])
+    limits = np.concatenate([-share, share, -residual, residual])
+    bounds = [*zip(low, high, strict=True), (0, None), (0, None)]
+    worst = linprog(np.r_[np.zeros(columns), 1.0, 0.05], A_ub=upper, b_ub=limits, bounds=bounds)
     if worst.x is None:
         return (low + high) / 2, float("inf")
-    most = float(np.asarray(worst.x)[-1]) * (1 + 1e-9) + 1e-12
-    spread = np.block([[a, -np.eye(rows)], [-a, -np.eye(rows)]])
-    cost = np.r_[np.zeros(columns), np.ones(rows)]
-    fine = linprog(cost, A_ub=spread, b_ub=limits, bounds=[*zip(low, high, strict=True), *[(0, most)] * rows])
-    theta = np.asarray((fine if fine.x is not None else worst).x, dtype=float)[:columns]
-    return theta, float(np.max(np.abs(r - a @ theta)))
+    theta = np.asarray(worst.x, dtype=float)[:columns]
+    return theta, _predicted(effect, residual - matrix @ theta)
+
+
+def _predicted(effect: Effect, residual: Array) -> float:
+    return float(np.max(np.abs(effect.response @ residual + effect.base), initial=0.0))

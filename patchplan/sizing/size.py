@@ -24,6 +24,7 @@ from patchplan.sizing.drift import (
 )
 from patchplan.sizing.model import Model, build_model
 from patchplan.sizing.records import Coefficient, Leg, NodeScale, Sizing, StageSizing, Target
+from patchplan.sizing.search import Effect
 from patchplan.sizing.speed import Speed, choose_speed
 from patchplan.sizing.trial import choose_values
 from patchplan.sizing.values import FEEDBACK, Values
@@ -31,6 +32,8 @@ from patchplan.sizing.values import FEEDBACK, Values
 Array = NDArray[np.float64]
 #: The search may shift the planner's own speed by this factor either way.
 SPEED_PLAY = 1.5
+#: Most points in time, over all watched signals, at which errors are predicted during the search.
+MOST_POINTS = 400
 #: A coefficient further off than this was not in reach of the parts.
 OUT_OF_REACH = 0.1
 
@@ -66,7 +69,8 @@ def size(
         bounds = bounds if bounds[0] < bounds[1] else (pace.chosen, pace.chosen)
     limited = _limited_stages(form, patch, ranges) if run == "free" else ()
     model = build_model(form, patch, ranges, target, bounds, _weights(patch, sensitivity))
-    values = choose_values(model, target, comfortable=dict.fromkeys(limited, LIMITED), think=think)
+    effect = _effect(model, patch, sensitivity, pace)
+    values = choose_values(model, target, effect, comfortable=dict.fromkeys(limited, LIMITED), think=think)
     scales = _node_scales(patch, ranges, model, values)
     stages = {s.name: _stage(s, patch, target, values, scales) for s in patch.stages}
     for name in limited:
@@ -105,6 +109,25 @@ def _weights(patch: Patch, sensitivity: Sensitivity) -> dict[tuple[str, int], fl
             change = float(np.abs(sensitivity.start[stage.name]).max(initial=0.0)) * abs(float(stage.start))
             weights[stage.name, -1] = 0.25 + 0.75 * min(1.0, change / most)
     return weights
+
+
+def _effect(model: Model, patch: Patch, sensitivity: Sensitivity, pace: Speed) -> Effect:
+    """Watched signals' response to the model's rows, thinned to :data:`MOST_POINTS`, with the lag that speed costs.
+
+    A residual above zero makes an integrator's or summer's coefficient smaller, but a start value larger.
+    """
+    starts = {s.name: float(s.start) for s in patch.stages if s.kind == "integrator"}
+    at = {key: i for i, key in enumerate(sensitivity.wires)}
+    stride = max(1, -(-len(sensitivity.watched) * len(sensitivity.times) // MOST_POINTS))
+    columns = []
+    for ratio in model.ratios:
+        if ratio.kind == "start":
+            moved = sensitivity.start[ratio.stage] * starts[ratio.stage]
+        else:
+            moved = -sensitivity.coefficient[:, at[ratio.stage, ratio.wire]]
+        columns.append(moved[:, ::stride].ravel())
+    base = pace.lag[:, ::stride].ravel() / pace.chosen
+    return Effect(np.array(columns).reshape(len(columns), -1).T, base)
 
 
 def _node_scales(patch: Patch, ranges: Ranges, model: Model, values: Values) -> dict[str, NodeScale]:

@@ -30,13 +30,15 @@ COMFORTABLE = 5e4
 class Speed:
     """The window of the time scale [circuit s per unit of problem time] and the choice in it.
 
-    ``predicted`` is the error expected from bandwidth and bias current at the chosen speed, as a fraction of peak.
+    ``predicted`` is the error expected from bandwidth and bias current at the chosen speed, as a fraction of peak;
+    ``lag`` the error by bandwidth alone, times the time scale, shape ``(n_watched, n_times)``.
     """
 
     window: tuple[float, float]
     limits: tuple[str, str]
     chosen: float
     predicted: float
+    lag: Array
 
 
 def middle_scales(form: Form, patch: Patch, ranges: Ranges, target: Target) -> dict[str, float]:
@@ -87,7 +89,8 @@ def choose_speed(
     scales = middle_scales(form, patch, ranges, target)
     gains = integrator_gains(patch, scales)
     parts = lag_errors(patch, sensitivity, target, scales)
-    lag = float(np.max(np.abs(sum(parts)), initial=0.0))
+    late = parts[0] + parts[1]
+    lag = float(np.max(np.abs(late), initial=0.0))
     low, low_text = max(_fast_ends(patch, ranges, target, scales, gains, parts))
     high, high_text = min(_slow_ends(patch, sensitivity, target, scales, gains))
     if given is not None:
@@ -100,7 +103,7 @@ def choose_speed(
         error = lag / grid + bias
         chosen = float(grid[np.argmax(error <= 1.1 * error.min() + SLACK)])
     predicted = lag / chosen + bias_error(patch, sensitivity, target, scales, gains, chosen)
-    return Speed((low, high), (low_text, high_text), chosen, predicted)
+    return Speed((low, high), (low_text, high_text), chosen, predicted, late)
 
 
 def lag_errors(

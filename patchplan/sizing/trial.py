@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 from patchplan.sizing.large import choose_large
 from patchplan.sizing.model import Model
 from patchplan.sizing.records import Target
-from patchplan.sizing.search import Loops, Menu, descend, find_loops, split_rest
+from patchplan.sizing.search import Effect, Loops, Menu, descend, find_loops, loop_errors, split_rest
 from patchplan.sizing.values import (
     Choice,
     Unknowns,
@@ -26,9 +26,9 @@ from patchplan.sizing.values import (
 )
 
 Array = NDArray[np.float64]
-#: By how hard to think: most attempts (starting points, not seconds), and the norm of the loop errors that is good
-#: enough: normally a tenth of what 1 % resistors spread.
-ATTEMPTS = {"low": (20, 1e-3), "normal": (120, 4e-4), "high": (2000, 4e-5)}
+#: By how hard to think: most attempts (starting points, not seconds), and the predicted error that is good enough, as a
+#: fraction of peak: normally a tenth of what 1 % resistors spread in a signal that follows one of them.
+ATTEMPTS = {"low": (20, 2e-3), "normal": (120, 5e-4), "high": (2000, 5e-5)}
 #: How far a value may lie from the wanted one at the start of an attempt, in logs: three steps of E24.
 WIDTH = 0.3
 #: The same for capacitors: two steps of E6, and the most values of one start ratio that a menu holds.
@@ -47,7 +47,7 @@ class _Board:
     unknowns: Unknowns
     matrix: Array
     constant: Array
-    weights: Array
+    effect: Effect
     loops: Loops
     comfortable: Mapping[str, float]
 
@@ -64,6 +64,7 @@ def matrix_of(model: Model) -> tuple[Array, Array]:
 def choose_values(
     model: Model,
     target: Target,
+    effect: Effect,
     *,
     comfortable: Mapping[str, float] | None = None,
     think: str = "normal",
@@ -73,6 +74,8 @@ def choose_values(
 
     Parameters
     ----------
+    effect
+        What residuals of the model's rows do to the watched signals.
     comfortable
         Stage -> resistance its capacitor is chosen for [ohm], where the usual one does not serve.
     think
@@ -83,9 +86,8 @@ def choose_values(
     if len(model.ratios) > LARGE:
         return choose_large(model, target, comfortable=comfortable or {})
     matrix, constant = matrix_of(model)
-    weights = np.array([r.weight for r in model.ratios])
     unknowns = find_unknowns(model.ratios, model.feedback)
-    board = _Board(model, target, unknowns, matrix, constant, weights, find_loops(matrix, weights), comfortable or {})
+    board = _Board(model, target, unknowns, matrix, constant, effect, find_loops(matrix, effect), comfortable or {})
     random = np.random.default_rng(seed)
     attempts: list[tuple[float, Array, list[Choice]]] = []
     enough = ATTEMPTS[think][1]
@@ -185,10 +187,10 @@ def _shift(board: _Board, y: Array) -> Array:
 def _finish(board: _Board, y: Array, choices: list[Choice]) -> Values:
     """Split what is left over the scale factors and name the parts."""
     residual = board.unknowns.incidence @ y - board.constant + _shift(board, y)
-    theta, worst = split_rest(board.matrix, residual, board.weights, board.model.low, board.model.high)
+    theta, worst = split_rest(board.matrix, residual, board.effect, board.model.low, board.model.high)
     errors = np.expm1(-(residual - board.matrix @ theta))
     parts = {
         name: choice.parts[int(np.argmin(np.abs(choice.logs - value)))]
         for name, choice, value in zip(board.unknowns.names, choices, y, strict=True)
     }
-    return Values(parts, theta, worst, board.loops.errors(residual), errors)
+    return Values(parts, theta, worst, loop_errors(board.matrix, residual), errors)

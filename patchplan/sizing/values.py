@@ -48,9 +48,9 @@ class Values:
     theta
         Fitted logs of scale factors and speed.
     worst
-        Largest weighted relative error left.
+        Largest predicted error of a watched signal, as a fraction of peak.
     loop_errors
-        Errors of the independent loops, shape ``(n_loops,)``.
+        Relative errors of the independent loops, shape ``(n_loops,)``.
     errors
         Relative error of each row, shape ``(n_rows,)``.
     """
