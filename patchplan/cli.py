@@ -6,12 +6,9 @@ import sys
 from collections.abc import Callable
 from enum import StrEnum
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated
+from typing import Annotated
 
 import typer
-
-if TYPE_CHECKING:
-    from patchplan.report.records import Plan
 
 app = typer.Typer(
     add_completion=False, rich_markup_mode=None, pretty_exceptions_enable=False, no_args_is_help=True,
@@ -51,9 +48,13 @@ def plan(
         from patchplan.report.folder import may_write
 
         may_write(folder)
-        made = _planned(file, accept, trust_paths, think, folder, not no_pictures, quiet or as_json)
-        _show(made, folder, as_json, quiet)
-        return FOLLOWS if made.verdict.verdict == "follows" else FAILS
+        with_words = not (quiet or as_json)
+        code, text = _planned(file, accept, trust_paths, think, folder, not no_pictures, with_words)
+        if as_json:
+            text = (folder / "plan.json").read_text(encoding="utf-8")
+        if as_json or not quiet:
+            typer.echo(text, nl=False)
+        return code
 
     raise typer.Exit(_guarded(work))
 
@@ -98,43 +99,39 @@ def main() -> None:
 
 
 def _planned(
-    file: Path, accept: float, trust_paths: bool, think: Think, folder: Path, pictures: bool, silent: bool
-) -> Plan:
-    """Read, plan and write."""
+    file: Path, accept: float, trust_paths: bool, think: Think, folder: Path, pictures: bool, with_words: bool
+) -> tuple[int, str]:
+    """Read, plan and write; the exit code and what to say."""
     from patchplan.report.progress import shown_progress
 
-    with shown_progress(silent) as progress:
-        progress("reading")
+    with shown_progress(with_words) as progress:
+        progress("Reading the problem")
         from patchplan.circuit.catalogue import catalogue_names
         from patchplan.equation.reader import read_problem
-        from patchplan.pipeline import plan as make_plan
-        from patchplan.report.write import write_plan
 
         problem = read_problem(file, part_names=catalogue_names(), trust_paths=trust_paths)
-        made = make_plan(problem, accept=accept, think=think.value, progress=progress)
-        progress("writing")
+        from patchplan.errors import CannotBuild
+        from patchplan.pipeline import plan as make_plan
+        from patchplan.report.summary import refusal, summary
+        from patchplan.report.write import write_plan, write_refusal
+
+        colour = sys.stdout.isatty()
+        try:
+            made = make_plan(problem, accept=accept, think=think.value, progress=progress)
+        except CannotBuild as error:
+            write_refusal(problem, str(error), folder)
+            return FAILS, refusal(problem.title, str(error), folder, colour=colour)
+        progress("Writing the plan")
         write_plan(made, folder, pictures=pictures)
-    return made
-
-
-def _show(made: Plan, folder: Path, as_json: bool, quiet: bool) -> None:
-    if as_json:
-        typer.echo((folder / "plan.json").read_text(encoding="utf-8"), nl=False)
-    elif not quiet:
-        from patchplan.report.summary import summary
-
-        typer.echo(summary(made, folder, colour=sys.stdout.isatty()), nl=False)
+    return (FOLLOWS if made.verdict.verdict == "follows" else FAILS), summary(made, folder, colour=colour)
 
 
 def _guarded(work: Callable[[], int]) -> int:
     """Exit code of some work; what the user can mend is said without a traceback."""
-    from patchplan.errors import CannotBuild, PatchplanError
+    from patchplan.errors import PatchplanError
 
     try:
         return work()
-    except CannotBuild as error:
-        _complain(f"Cannot be built with these parts. {error}")
-        return FAILS
     except PatchplanError as error:
         _complain(str(error))
     except OSError as error:

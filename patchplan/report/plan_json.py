@@ -3,11 +3,14 @@
 from __future__ import annotations
 
 import json
+import math
 from collections.abc import Sequence
+from dataclasses import replace
 from typing import Any
 
 from patchplan.check.records import Verdict
 from patchplan.circuit.records import Circuit, NodeMap
+from patchplan.equation.problem import Problem
 from patchplan.patch.records import Patch, Stage
 from patchplan.report.codec import decode, encode, rounded
 from patchplan.report.records import Plan
@@ -49,6 +52,30 @@ def plan_data(plan: Plan, files: Sequence[str] = ()) -> dict[str, Any]:
         "choices": encode(plan.choices),
         "problem": plan.problem.text,
         "records": records_of(plan),
+    }
+
+
+def refusal_data(problem: Problem, reason: str, files: Sequence[str] = ()) -> dict[str, Any]:
+    """What plan.json holds where the parts rule a problem out before anything is planned."""
+    verdict = Verdict("not_buildable", math.nan, math.nan, math.nan, None, (), (), ())
+    return {
+        "contract": CONTRACT,
+        "title": problem.title,
+        "version": __version__,
+        "files": list(files),
+        "warnings": [reason],
+        "notes": [],
+        "faults": [reason],
+        "time_scale": None,
+        "time_scale_window": [None, None],
+        "time_scale_limits": ["", ""],
+        "check": _check(verdict),
+        **{table: [] for table in ("signals", "stages", "coefficients", "parts")},
+        "counts": {},
+        "sign_stages_lower_bound": 0,
+        "choices": {},
+        "problem": problem.text,
+        "records": {"patch": {}, "sizing": {}, "circuit": None},
     }
 
 
@@ -191,6 +218,8 @@ def _check(verdict: Verdict) -> dict[str, Any]:
     def finite(row: dict[str, Any]) -> dict[str, Any]:
         return {key: None if isinstance(item, str) and key.endswith("_percent") else item for key, item in row.items()}
 
+    if verdict.verdict == "not_buildable":
+        verdict = replace(verdict, max_error_percent=math.nan, rms_error_percent=math.nan, spread_percent=math.nan)
     data = {
         "verdict": verdict.verdict,
         "max_error_percent": rounded(verdict.max_error_percent),

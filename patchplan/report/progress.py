@@ -12,15 +12,15 @@ DELAY = 1.0
 
 
 @contextmanager
-def shown_progress(silent: bool) -> Iterator[Callable[[str], None]]:
+def shown_progress(wanted: bool) -> Iterator[Callable[[str], None]]:
     """Context that gives a function to call with the name of each stage.
 
     Parameters
     ----------
-    silent
-        Whether to show nothing in any case.
+    wanted
+        Whether to show anything at all.
     """
-    if silent or not sys.stderr.isatty():
+    if not wanted or not sys.stderr.isatty():
         yield lambda stage: None
         return
     line = _Line()

@@ -43,6 +43,13 @@ def summary(plan: Plan, folder: Path | None = None, *, colour: bool = False) -> 
     return "\n".join(blocks) + "\n"
 
 
+def refusal(title: str, reason: str, folder: Path, *, colour: bool = False) -> str:
+    """The same for a problem that the parts rule out before anything is planned."""
+    blocks = [_painted(title, "title", colour), _painted(_wrapped(words.NOT_BUILDABLE), "bad", colour)]
+    blocks += [_wrapped(reason), _wrapped(f"Written to {folder} (start with plan.json)")]
+    return "\n".join(blocks) + "\n"
+
+
 def _wrapped(text: str) -> str:
     return textwrap.fill(text, WIDTH, initial_indent="  ", subsequent_indent="  ", break_on_hyphens=False,
                          break_long_words=False)  # fmt: skip

@@ -7,6 +7,8 @@ import math
 from patchplan.quantity import engineering
 from patchplan.report.records import Plan
 
+NOT_BUILDABLE = "Cannot be built with these parts."
+
 
 def percent(value: float) -> str:
     """Two digits as a percentage: ``0.31 %``."""
@@ -34,7 +36,7 @@ def headline(plan: Plan) -> str:
     """The verdict in one sentence: what does not work comes first."""
     verdict = plan.verdict
     if verdict.verdict == "not_buildable" or plan.circuit is None:
-        return "Cannot be built with these parts."
+        return NOT_BUILDABLE
     largest = percent(verdict.max_error_percent)
     if verdict.verdict == "overload":
         return f"Does not work: {_list([n.node for n in verdict.nodes if not n.ok])} would leave the linear range."

@@ -9,12 +9,13 @@ from pathlib import Path
 import numpy as np
 from numpy.typing import NDArray
 
+from patchplan.equation.problem import Problem
 from patchplan.report.board import board_of
 from patchplan.report.folder import MANIFEST, replace_folder
 from patchplan.report.page import page
 from patchplan.report.pictures import pictures as draw
 from patchplan.report.pictures import unused_name
-from patchplan.report.plan_json import plan_data, plan_text
+from patchplan.report.plan_json import plan_data, plan_text, refusal_data
 from patchplan.report.records import Plan
 from patchplan.report.tables import csv_text, nodes_csv, parts_csv
 
@@ -46,6 +47,18 @@ def write_plan(plan: Plan, folder: Path, *, pictures: bool = True, board: Board 
     files = plan_folder(plan, pictures=pictures, board=board)
     replace_folder(folder, files)
     return tuple(files)
+
+
+def write_refusal(problem: Problem, reason: str, folder: Path) -> tuple[str, ...]:
+    """Write the folder of a problem for which no plan could be begun: plan.json with the verdict alone.
+
+    Raises
+    ------
+    FolderRefused
+        See :func:`patchplan.report.folder.replace_folder`.
+    """
+    replace_folder(folder, {MANIFEST: plan_text(refusal_data(problem, reason, [MANIFEST])).encode()})
+    return (MANIFEST,)
 
 
 def plan_folder(plan: Plan, *, pictures: bool = True, board: Board = board_of) -> dict[str, bytes]:
@@ -88,7 +101,8 @@ def problem_files(plan: Plan, taken: list[str]) -> dict[str, bytes]:
     }
     for file in sorted(recordings):
         name = os.path.normpath(file)
-        if os.path.isabs(name) or name.startswith("..") or name in (*taken, *files):
+        used = {other.lower() for other in (*taken, *files)}
+        if os.path.isabs(name) or name.startswith("..") or name.lower() in used:
             name = unused_name("recording", Path(file).stem, "csv", (*taken, *files))
         files[name] = (plan.problem.folder / file).read_bytes()
     return files

@@ -18,7 +18,7 @@ from patchplan.check.records import Verdict
 from patchplan.equation.tree import Node, Number
 from patchplan.equation.waveform import Waveform
 from patchplan.report.codec import decode, encode
-from patchplan.report.plan_json import plan_data, plan_text, rebuild, records_of, transfer_gains
+from patchplan.report.plan_json import plan_data, plan_text, rebuild, records_of, refusal_data, transfer_gains
 from patchplan.report.records import Plan
 
 SCHEMA = json.loads(Path(patchplan.report.__file__).with_name("plan.schema.json").read_text(encoding="utf-8"))
@@ -37,6 +37,12 @@ def read_back(plan: Plan) -> dict:
         raise AssertionError(f"{word} is no JSON")
 
     return json.loads(plan_text(plan_data(plan, ["plan.json"])), parse_constant=refuse)
+
+
+def test_refusal_holds_to_the_schema(plan):
+    data = json.loads(plan_text(refusal_data(plan.problem, "The supply is too low.", ["plan.json"])))
+    jsonschema.validate(data, SCHEMA)
+    assert set(data) == set(plan_data(plan))
 
 
 def test_schema_is_itself_sound():

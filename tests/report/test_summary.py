@@ -1,0 +1,121 @@
+"""What a person reads on the terminal."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+from pathlib import Path
+
+import numpy as np
+import pytest
+
+from patchplan.check.records import NodePeak
+from patchplan.report import words
+from patchplan.report.pictures import MOST_POINTS, thinned, unused_name
+from patchplan.report.summary import WIDTH, summary
+from tests.report.test_plan_json import unbuildable
+
+
+def test_summary_answers_in_order(plan):
+    text = summary(plan, Path("outputs/plain"))
+    wanted = [
+        "Plain oscillator", "Follows the equation within 0.31 % of peak (boards spread 0.9 %)", "stays inside 12 V",
+        "Runs 100 times faster than real time", "2 integrators, 1 inverter", "node signal", "-9.0 … 9.0 V", "75 %",
+        "Largest error: gain-bandwidth of INT2, 0.22 %.", "Written to outputs/plain (start with report.html)",
+    ]  # fmt: skip
+    flat = " ".join(text.split())
+    places = [flat.find(" ".join(phrase.split())) for phrase in wanted]
+    assert -1 not in places
+    assert places == sorted(places)
+
+
+def test_summary_keeps_to_the_width_and_to_plain_text(plan):
+    long = replace(plan.circuit.nodes["x"], signal="alpha*x*y + beta*x*z - gamma*z*z*z*z + delta*x*x*y*y*z")
+    wide = replace(plan, circuit=replace(plan.circuit, nodes={**plan.circuit.nodes, "x": long}))
+    for shown in (plan, wide, unbuildable(plan)):
+        text = summary(shown, Path("outputs/plain"))
+        assert max(map(len, text.splitlines())) <= WIDTH
+        assert "\x1b" not in text
+        assert "!" not in text
+
+
+def test_colour_is_added_to_the_same_words(plan):
+    import re
+
+    assert re.sub(r"\x1b\[\d+m", "", summary(plan, colour=True)) == summary(plan)
+
+
+def test_many_nodes_are_cut_to_the_fullest(plan):
+    node = plan.circuit.nodes["x_d"]
+    nodes = {f"n{i}": replace(node, node=f"n{i}", limit_volts=100.0) for i in range(40)} | {
+        "x": plan.circuit.nodes["x"]
+    }
+    text = summary(replace(plan, circuit=replace(plan.circuit, nodes=nodes)))
+    assert "and 25 more in nodes.csv" in text
+    assert "\n  x " in text
+
+
+def test_failure_says_what_then_why_then_what_mends_it(plan):
+    verdict = replace(plan.verdict, verdict="inaccurate", max_error_percent=8.4)
+    text = summary(replace(plan, verdict=verdict))
+    order = [
+        "Does not follow the equation closely enough: the error reaches 8.4 %",
+        "gain-bandwidth of INT2",
+        "To mend it",
+    ]
+    flat = " ".join(text.split())
+    assert [flat.find(phrase) for phrase in order] == sorted(flat.find(phrase) for phrase in order)
+    assert -1 not in [flat.find(phrase) for phrase in order]
+
+
+def test_overload_names_node_time_and_cause(plan):
+    peak = NodePeak("x_d", 14.26, 12.0, False, 3.2e-3, "Its range was stated too small.")
+    text = summary(replace(plan, verdict=replace(plan.verdict, verdict="overload", nodes=(peak,))))
+    flat = " ".join(text.split())
+    assert "x_d reaches 14.3 V where 12 V is the limit, 3.2 ms after the start of the run. Its range was" in flat
+
+
+def test_what_cannot_be_built_says_so_first(plan):
+    lines = summary(unbuildable(plan), Path("out")).splitlines()
+    assert lines[1:4] == [
+        "  Cannot be built with these parts.",
+        "  No resistor of the series is large enough.",
+        "  Written to out (start with plan.json)",
+    ]
+
+
+def test_chaos_has_its_horizon_in_the_headline(plan):
+    told = words.headline(replace(plan, verdict=replace(plan.verdict, horizon=5.25)))
+    assert "up to 5.25 s" in told
+
+
+@pytest.mark.parametrize(
+    ("value", "text"),
+    [(0.3123, "0.31 %"), (12.0, "12 %"), (0.05, "0.05 %"), (250.0, "250 %"), (0.0, "0 %"), (2e-5, "below 0.001 %")],
+)
+def test_percent(value, text):
+    assert words.percent(value) == text
+
+
+@pytest.mark.parametrize(
+    ("scale", "text"), [(1.0, "in real time"), (0.25, "4 times faster"), (20.0, "20 times slower")]
+)
+def test_speed(plan, scale, text):
+    assert text in words.speed(replace(plan, sizing=replace(plan.sizing, time_scale=scale)))[0]
+
+
+def test_thinning_keeps_every_peak_and_both_ends():
+    times = np.linspace(0, 1, 100_001)
+    values = np.sin(40 * times)
+    values[34_567], values[70_001] = 3.0, -5.0
+    t, v = thinned(times, values)
+    assert t.size <= MOST_POINTS + 2
+    assert (v.max(), v.min(), t[0], t[-1]) == (3.0, -5.0, 0.0, 1.0)
+    assert np.all(np.diff(t) > 0)
+    np.testing.assert_array_equal(v, values[np.searchsorted(times, t)])
+
+
+def test_file_names_are_legal_and_differ_without_regard_to_case():
+    taken: list[str] = []
+    for name in ("x", "X", "x'", "cos(2*t)", "../../etc"):
+        taken.append(unused_name("signal", name, "svg", taken))
+    assert taken == ["signal_x.svg", "signal_X_2.svg", "signal_x_d.svg", "signal_cos_2_t.svg", "signal_etc.svg"]
