@@ -1,0 +1,165 @@
+"""Well-posedness as a list of small named checks; each gives faults, none stops the others."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping
+from difflib import get_close_matches
+from fractions import Fraction
+
+import numpy as np
+
+from patchplan.equation.algebra import Algebra
+from patchplan.equation.knobs import divisors
+from patchplan.equation.outline import Outline, name_faults
+from patchplan.equation.problem import Problem
+from patchplan.equation.tree import Call, Node, Number
+from patchplan.equation.waveform import SAMPLES, numeric_tree
+from patchplan.errors import Fault
+
+#: More jumps in one run than any board is asked to follow.
+MOST_JUMPS = 20_000
+
+_PERIODIC = ("square", "triangle", "sawtooth")
+
+
+def faults_before(problem: Problem, outline: Outline) -> list[Fault]:
+    """Faults that show before any mathematics."""
+    checks = (_duration, _recordings, name_faults, _terminals_of_inputs)
+    return [fault for check in checks for fault in check(problem, outline)]
+
+
+def _duration(problem: Problem, _: Outline) -> Iterator[Fault]:
+    if problem.duration <= 0:
+        yield Fault("The duration is not above zero.", "Write the length of the run in problem time.", "duration")
+
+
+def _recordings(problem: Problem, _: Outline) -> Iterator[Fault]:
+    for name, given in problem.inputs.items():
+        if given.recording is None:
+            continue
+        times = given.recording.times
+        if times[0] > 0.0 or times[-1] < float(problem.duration):
+            yield Fault(
+                f"The recording {given.recording.file} runs from {times[0]:.9g} to {times[-1]:.9g}, the problem from 0 "
+                f"to {float(problem.duration):.9g}.",
+                "Record the whole run, or shorten the duration.", f"inputs.{name}",
+            )  # fmt: skip
+
+
+def _terminals_of_inputs(problem: Problem, _: Outline) -> Iterator[Fault]:
+    for name in (*problem.terminals, *problem.ranges):
+        base = name.rstrip("'")
+        table = "terminals" if name in problem.terminals else "ranges"
+        if base in problem.parameters:
+            yield Fault(f'"{base}" is a parameter, no signal.', "Name a signal.", f"{table}.{name}")
+
+
+def start_faults(
+    problem: Problem, orders: Mapping[str, int], at_rest: frozenset[str], outline: Outline
+) -> Iterator[Fault]:
+    """Start values that are missing, and those of names that are no state."""
+    wanted = [name + "'" * k for name, order in orders.items() if name not in at_rest for k in range(order)]
+    for name in wanted:
+        if name not in problem.start:
+            shown = f'"{name}"' if "'" in name else name
+            yield Fault(f"The start value of {name} is missing.", f"Write {shown} = 0.0 under [start].", "start")
+    for name in problem.start:
+        if name in wanted:
+            continue
+        base = name.rstrip("'")
+        if base in at_rest:
+            yield Fault(f"{name} comes from a block in s, which starts at rest.", "Remove it.", f"start.{name}")
+        elif base in outline.definitions:
+            yield Fault(f"{name} follows from its definition and has no start value.", "Remove it.", f"start.{name}")
+        elif base in orders:
+            yield Fault(
+                f"{base} is of order {orders[base]}; {name} follows from the equations.", "Remove it.", f"start.{name}"
+            )
+        else:
+            near = get_close_matches(name, wanted, 1)
+            guess = f'Did you mean "{near[0]}"?' if near else "Remove it."
+            yield Fault(f"{name} is no state of the equations.", guess, f"start.{name}")
+
+
+def count_faults(outline: Outline, orders: Mapping[str, int], equations: int) -> Iterator[Fault]:
+    """As many differential equations as unknowns."""
+    if equations != len(orders):
+        names = ", ".join(orders) or "none"
+        yield Fault(
+            f"{equations} differential equations stand for {len(orders)} unknowns ({names}).",
+            "Give one equation for each unknown; a name with a prime is an unknown.", "equations",
+        )  # fmt: skip
+
+
+def regular_faults(trees: Mapping[str, tuple[Node, str]], duration: Fraction) -> Iterator[Fault]:
+    """Functions of time that have no finite value at the start or within the run.
+
+    Parameters
+    ----------
+    trees
+        Name shown -> (tree in t, key for the fault where the tree carries no place).
+    """
+    for name, (tree, key) in trees.items():
+        found = _irregular(tree, float(duration))
+        if found is not None:
+            when = "at the start" if found == 0.0 else f"at t = {found:.6g}"
+            place = tree.origin
+            yield Fault(
+                f"{name} has no finite value {when}.", "Change the function, or the duration.",
+                place.key if place else key, (place.start, place.end) if place else None,
+            )  # fmt: skip
+
+
+def _irregular(tree: Node, duration: float) -> float | None:
+    """First time found in the run at which the tree has no finite value."""
+    t = np.linspace(0.0, duration, SAMPLES)
+    values = numeric_tree(tree, t)
+    places = [float(t[i]) for i in np.flatnonzero(~np.isfinite(values))[:1]]
+    for divisor in divisors(tree):
+        below = numeric_tree(divisor, t)
+        crossed = (below[:-1] * below[1:] < 0.0) | (below[:-1] == 0.0)
+        # A divisor that jumps across zero, such as a square wave, never is zero.
+        jumped = np.abs(np.diff(below)) > 0.5 * np.nanmax(np.abs(below), initial=0.0)
+        places += [float(t[i]) for i in np.flatnonzero(crossed & ~jumped)[:1]]
+        places += [float(t[i]) for i in np.flatnonzero(below == 0.0)[:1]]
+    return min(places) if places else None
+
+
+def jump_faults(trees: Mapping[str, tuple[Node, str]], duration: Fraction) -> Iterator[Fault]:
+    """Periodic functions with a period that is no positive number, or with jumps beyond count."""
+    for name, (tree, key) in trees.items():
+        for call in _calls(tree):
+            if call.function not in _PERIODIC:
+                continue
+            ends = numeric_tree(call.arguments[0], np.array([0.0, float(duration)]))
+            period = float(numeric_tree(call.arguments[1], np.zeros(1))[0])
+            if not isinstance(call.arguments[1], Number) or period <= 0.0:
+                yield Fault(f"The period in {name} is no positive number.", "Write a positive constant.", key)
+            elif not abs(ends[1] - ends[0]) / period < MOST_JUMPS / 2:
+                yield Fault(
+                    f"{name} has over {MOST_JUMPS} jumps in the run.", "Use a longer period, or a shorter run.", key
+                )
+
+
+def _calls(tree: Node) -> Iterator[Call]:
+    stack = [tree]
+    while stack:
+        node = stack.pop()
+        if isinstance(node, Call):
+            yield node
+            stack += node.arguments
+        else:
+            stack += [getattr(node, x) for x in ("operand", "left", "right") if hasattr(node, x)]
+
+
+def time_trees(algebra: Algebra) -> dict[str, tuple[Node, str]]:
+    """Every function of time met, by the text shown for it."""
+    from patchplan.equation.polynomial import Kind
+    from patchplan.equation.tree import text_of
+
+    found: dict[str, tuple[Node, str]] = {}
+    for atom, tree in algebra.functions.items():
+        if atom.kind is Kind.TIME:
+            key = f"inputs.{atom.name}" if atom.name in algebra.named else "equations"
+            found[text_of(algebra.written[atom])] = (tree, key)
+    return found

@@ -1,0 +1,211 @@
+"""What each name of a problem stands for in its polynomials, and the equations as polynomials."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from fractions import Fraction
+
+from patchplan.equation.algebra import Algebra, fault_at
+from patchplan.equation.choice import sorted_signals
+from patchplan.equation.constants import names_of
+from patchplan.equation.laplace import realise
+from patchplan.equation.model import Definitions
+from patchplan.equation.outline import Outline
+from patchplan.equation.polynomial import Atom, Kind, Polynomial
+from patchplan.equation.problem import Equation, Input, Problem
+from patchplan.equation.tree import Name, Node
+from patchplan.errors import Fault, ProblemFaults
+
+
+def algebra_of(problem: Problem, outline: Outline) -> tuple[Algebra, list[Fault]]:
+    """Meaning of every name, and the faults of inputs."""
+    adjustable = frozenset(p.name for p in problem.parameters.values() if p.adjustable)
+    fixed = {p.name: p.value for p in problem.parameters.values() if not p.adjustable}
+    timed = _time_definitions(problem, outline)
+    sources = {n: _reason(i, problem) for n, i in problem.inputs.items() if _reason(i, problem)}
+    formulas = {n: i.tree for n, i in problem.inputs.items() if i.tree is not None and n not in sources}
+    signals = frozenset({*outline.unknowns, *outline.outputs, *outline.definitions} - timed.keys())
+    named: set[str] = set()
+    algebra = Algebra(fixed, adjustable, {}, frozenset(), sources, signals, problem.duration)
+    faults: list[Fault] = []
+    for name, tree in formulas.items():
+        try:
+            value = algebra.polynomial(tree)
+        except ProblemFaults as error:
+            faults += error.faults
+            continue
+        if value.value is not None:
+            fixed[name] = value.value
+            continue
+        algebra.formulas[name] = tree
+        if Kind.PARAMETER not in value.kinds():
+            named.add(name)
+    algebra.formulas.update(timed)
+    algebra.named = frozenset(named)
+    algebra.functions.clear()
+    algebra.written.clear()
+    return algebra, faults
+
+
+def _reason(given: Input, problem: Problem) -> str:
+    """Why an input arrives as it is, "" where it is a formula that may be rewritten."""
+    if given.recording is not None:
+        return "a recording"
+    if given.within is not None:
+        return "known only by its bounds"
+    return "brought in through a terminal" if given.name in problem.terminals else ""
+
+
+def _time_definitions(problem: Problem, outline: Outline) -> dict[str, Node]:
+    """Definitions that are functions of time alone."""
+    known = {"t", "pi", *problem.parameters}
+    known |= {n for n, i in problem.inputs.items() if not _reason(i, problem)}
+    found: dict[str, Node] = {}
+    for _ in outline.definitions:
+        before = len(found)
+        for name, equation in outline.definitions.items():
+            parts = names_of(equation.right)
+            if name not in found and all(n.name in known | found.keys() and not n.primes for n in parts):
+                found[name] = equation.right
+        if len(found) == before:
+            break
+    return found
+
+
+@dataclass(frozen=True)
+class Meaning:
+    """Equations as polynomials.
+
+    Attributes
+    ----------
+    equations
+        By a running number: the polynomial that is zero, and its line.
+    definitions
+        Sorted; time-only ones too, which no polynomial names.
+    unknowns
+        Names of the file and of the states of blocks in s.
+    at_rest
+        Those that start at zero without being asked.
+    """
+
+    algebra: Algebra
+    equations: dict[int, tuple[Polynomial, Equation]]
+    definitions: Definitions
+    unknowns: tuple[str, ...]
+    at_rest: frozenset[str]
+
+
+def meaning_of(problem: Problem, outline: Outline) -> Meaning:
+    """Polynomials of all equations.
+
+    Raises
+    ------
+    ProblemFaults
+        All faults of all equations: functions and quotients of signals, loops among definitions.
+    """
+    algebra, faults = algebra_of(problem, outline)
+    equations: dict[int, tuple[Polynomial, Equation]] = {}
+    definitions: dict[Atom, Polynomial] = {}
+    at_rest: list[str] = []
+    for equation in outline.equations:
+        try:
+            equations[len(equations)] = _zero(equation, algebra), equation
+        except ProblemFaults as error:
+            faults += error.faults
+    for name, equation in outline.definitions.items():
+        try:
+            definitions[Atom(Kind.SIGNAL, name)] = algebra.polynomial(equation.right)
+        except ProblemFaults as error:
+            faults += error.faults
+    faults += _blocks(problem, outline, algebra, equations, definitions, at_rest)
+    if faults:
+        raise ProblemFaults(faults)
+    ordered, loop = sorted_signals(definitions)
+    if loop:
+        raise ProblemFaults([_loop(loop, outline)])
+    unknowns = (*outline.unknowns, *at_rest)
+    return Meaning(algebra, equations, Definitions(ordered, algebra), unknowns, frozenset(at_rest))
+
+
+def _zero(equation: Equation, algebra: Algebra) -> Polynomial:
+    faults: list[Fault] = []
+    sides = []
+    for side in (equation.left, equation.right):
+        try:
+            sides.append(algebra.polynomial(side))
+        except ProblemFaults as error:
+            faults += error.faults
+    if faults:
+        raise ProblemFaults(faults)
+    return sides[0] - sides[1]
+
+
+def _blocks(
+    problem: Problem, outline: Outline, algebra: Algebra, equations: dict[int, tuple[Polynomial, Equation]],
+    definitions: dict[Atom, Polynomial], at_rest: list[str],
+) -> list[Fault]:  # fmt: skip
+    """Put the states of the block in s among the equations."""
+    faults: list[Fault] = []
+    taken = frozenset({*problem.parameters, *problem.inputs, *outline.unknowns, *outline.definitions})
+    for equation in outline.blocks[1:]:
+        faults.append(
+            fault_at(
+                equation.left, "not built in this version: a second block in s.",
+                "Write one of them as a differential equation.",
+            )
+        )  # fmt: skip
+    for equation in outline.blocks[:1]:
+        try:
+            made = realise(equation, algebra, taken)
+        except ProblemFaults as error:
+            faults += error.faults
+            continue
+        definitions.update(made.definitions)
+        for state, rate in made.rates.items():
+            zero = Polynomial.of(Atom(Kind.SIGNAL, state.name, 1)) - rate
+            equations[len(equations)] = zero, equation
+            at_rest.append(state.name)
+    return faults
+
+
+def _loop(loop: list[Atom], outline: Outline) -> Fault:
+    names = [a.name for a in loop]
+    equation = next((outline.definitions[n] for n in names if n in outline.definitions), None)
+    place = equation.left if equation else Name(names[0])
+    circle = " needs ".join([*names, names[0]])
+    return fault_at(
+        place, f"Algebraic loop: {circle}.", "Solve it for one of them by hand, or put an integrator into it."
+    )
+
+
+def start_of(given: Input, algebra: Algebra) -> Fraction:
+    """Value of an input just after t = 0 (0, or the bound nearest to it, where only bounds are known)."""
+    import numpy as np
+
+    from patchplan.equation.waveform import Waveform
+
+    if given.within is not None:
+        low, high = given.within
+        return min(max(low, Fraction(0)), high)
+    tree = algebra.folded(given.tree) if given.tree is not None else None
+    return Fraction(repr(float(Waveform(tree, given.recording).values(np.zeros(1))[0])))
+
+
+def slope_of(given: Input, algebra: Algebra, primes: int) -> Fraction:
+    """Derivative of an input just after t = 0: of its formula, of the first leg of its recording, 0 within bounds."""
+    import numpy as np
+
+    from patchplan.equation.calculus import tree_derivative
+    from patchplan.equation.waveform import numeric_tree
+
+    if given.recording is not None:
+        after = next(i for i, x in enumerate(given.recording.times) if x > 0.0)
+        times, values = given.recording.times, given.recording.values
+        leg = (values[after] - values[after - 1]) / (times[after] - times[after - 1])
+        return Fraction(repr(leg)) if primes == 1 else Fraction(0)
+    if given.tree is None:
+        return Fraction(0)
+    tree = algebra.folded(given.tree)
+    for _ in range(primes):
+        tree = tree_derivative(tree)
+    return Fraction(repr(float(numeric_tree(tree, np.zeros(1))[0])))
