@@ -210,12 +210,12 @@ def _stack(blocks: list[Matrix]) -> Matrix:
 
 
 def _rate_rows(circuit: Circuit, layout: Layout, rows: dict[str, int], voltage: Matrix, current: Matrix) -> Matrix:
-    from scipy.sparse import diags_array, eye_array
+    from scipy.sparse import csr_array, diags_array, eye_array
 
     def volts(parts: tuple[Part, ...], pin: int) -> Matrix:
         return voltage[[rows[p.nets[pin]] for p in parts]]
 
-    blocks = []
+    blocks: list[Matrix] = [csr_array((0, layout.n_columns))]
     if layout.capacitors:
         blocks.append(diags_array([1.0 / p.value for p in layout.capacitors]) @ current)
     if layout.op_amps:

@@ -152,12 +152,15 @@ def _integrate(
 
     if not len(state):
         return np.zeros((len(times), 0)), ""
+    unique, back = np.unique(times, return_inverse=True)
     try:
         if model.sparse:
-            return _integrate_sparse(model, at, rates, state, times, tolerance)
-        return _integrate_dense(rates, jacobian, state, times, tolerance)
+            states, failure = _integrate_sparse(model, at, rates, state, unique, tolerance)
+        else:
+            states, failure = _integrate_dense(rates, jacobian, state, unique, tolerance)
+        return states[back[: np.searchsorted(back, len(states))]], failure
     except _TooLong:
-        return state[None, :], (
+        return np.tile(state, (int(np.sum(times == times[0])), 1)), (
             f"The run was given up at {reached:.4g} s: the board moves far faster there than its signals do. "
             "Look for positive feedback around an op amp."
         )
@@ -193,11 +196,9 @@ def _integrate_sparse(
 ) -> tuple[Array, str]:
     from scipy.integrate import solve_ivp
 
-    unique, back = np.unique(times, return_inverse=True)
     result = solve_ivp(
-        lambda t, x: rates(x, t), (times[0], times[-1]), state, method="BDF", t_eval=unique, rtol=tolerance,
+        lambda t, x: rates(x, t), (times[0], times[-1]), state, method="BDF", t_eval=times, rtol=tolerance,
         atol=tolerance * _VOLTS, jac=lambda t, x: model.jacobian(x, at(t)),
     )  # fmt: skip
-    count = int(np.searchsorted(back, result.y.shape[1]))
-    failure = "" if result.success else f"The integration stopped at {unique[result.y.shape[1] - 1]:.4g} s."
-    return result.y.T[back[:count]], failure
+    failure = "" if result.success else f"The integration stopped at {result.t[-1]:.4g} s."
+    return result.y.T, failure

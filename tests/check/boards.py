@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import json
 import math
 from dataclasses import replace
+from pathlib import Path
 
 from patchplan.circuit.records import GROUND, Circuit, NodeMap, Part
 from patchplan.sizing.records import MultiplierFigures, OpAmpFigures
@@ -11,6 +13,11 @@ from patchplan.sizing.records import MultiplierFigures, OpAmpFigures
 OP_AMP = OpAmpFigures("jfet", 2e5, 2 * math.pi * 3e6, 13e6, -12.0, 12.0, 3e-3, 65e-12, 2e3)
 MULTIPLIER = MultiplierFigures("four quadrant", 10.0, 10.0, 2 * math.pi * 1e6, 20e6, 5e-3, 0.01, 0.8e-6)
 SWITCH_OHM = 100.0
+#: Published and worked figures by name, see cases/README.md.
+FORMULAS = {
+    f["id"]: f["example"]
+    for f in json.loads((Path(__file__).parents[1] / "cases" / "formulas.json").read_text(encoding="utf-8"))["formulas"]
+}
 
 
 class Board:
@@ -42,12 +49,14 @@ class Board:
     def integrator(self, out: str, inputs: list[tuple[str, float]], farad: float, *, start: float = 0.0,
                    leak: float = 0.0, hold: bool = True, stage: str = "") -> None:  # fmt: skip
         summing = f"{out}_sum" if hold else f"{out}_in"
+        # All legs share the operate switch, so each is shortened to pass the current that is wanted of it.
+        share = 1.0 - SWITCH_OHM * sum(1.0 / ohm for _, ohm in inputs) if hold else 1.0
         for net, ohm in inputs:
-            self.add("resistor", net, summing, value=ohm, stage=stage)
+            self.add("resistor", net, summing, value=ohm * share, stage=stage)
         self.add("capacitor", f"{out}_in", out, value=farad, stage=stage)
         self.add("op amp", GROUND, f"{out}_in", out, stage=stage)
         if leak:
-            self.add("resistor", out, summing, value=leak, stage=stage)
+            self.add("resistor", out, f"{out}_in", value=leak, stage=stage)
         if not hold:
             return
         self.add("switch", summing, f"{out}_in", value=SWITCH_OHM, closed="operate", stage=stage)
@@ -76,8 +85,8 @@ def oscillator(
     Signals: net x carries -x, net v carries x', net vi carries -x'.
     """
     board = Board(time_scale=ohm * farad, duration=2 * math.pi * cycles * ohm * farad, op_amp=op_amp)
-    board.integrator("x", [("v", ohm - SWITCH_OHM)], farad, start=-8.0, stage="x")
-    board.integrator("v", [("xi", ohm - SWITCH_OHM)], farad, stage="v")
+    board.integrator("x", [("v", ohm)], farad, start=-8.0, stage="x")
+    board.integrator("v", [("xi", ohm)], farad, stage="v")
     board.summer("xi", [("x", 10e3)], 10e3, stage="xi")
     board.node("x", "x", -1, 8.0)
     board.node("v", "v", 1, 8.0)
@@ -90,7 +99,7 @@ def van_der_pol(mu: float = 1.0, *, duration: float = 20.0) -> Circuit:
     unit, farad = 1e-3, 10e-9
 
     def ohm(gain: float) -> float:
-        return unit / (gain * farad) - SWITCH_OHM
+        return unit / (gain * farad)
 
     board = Board(time_scale=unit, duration=duration * unit)
     x_volts, v_volts = 4.0, 2.5
