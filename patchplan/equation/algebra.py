@@ -10,7 +10,7 @@ from typing import NoReturn
 import numpy as np
 
 from patchplan.equation.constants import PI, constant_value
-from patchplan.equation.polynomial import HIGHEST_DEGREE, MOST_TERMS, Atom, Kind, Polynomial, TooLarge
+from patchplan.equation.polynomial import HIGHEST_DEGREE, MOST_TERMS, Atom, Kind, Polynomial, TooLargeError
 from patchplan.equation.tree import Binary, Call, Minus, Name, Node, Number, text_of
 from patchplan.equation.waveform import _line, numeric_tree
 from patchplan.errors import Fault, ProblemFaults
@@ -52,6 +52,8 @@ class Algebra:
         Tree of every atom of kind PARAMETER and TIME, all names but ``t`` and adjustable ones turned into numbers.
     written
         The same tree as the file writes it, for names of sources.
+    divisors
+        Functions of time that something is divided by.
     """
 
     fixed: Mapping[str, Fraction]
@@ -63,6 +65,7 @@ class Algebra:
     duration: Fraction
     functions: dict[Atom, Node] = field(default_factory=dict)
     written: dict[Atom, Node] = field(default_factory=dict)
+    divisors: list[Node] = field(default_factory=list)
 
     def polynomial(self, node: Node) -> Polynomial:
         """Polynomial of a tree.
@@ -74,7 +77,7 @@ class Algebra:
         """
         try:
             made = self._polynomial(node)
-        except TooLarge:
+        except TooLargeError:
             refuse(
                 node,
                 f"Multiplied out, this has over {MOST_TERMS} terms or a degree over {HIGHEST_DEGREE}.",
@@ -96,13 +99,22 @@ class Algebra:
         return {"*": self._product, "/": self._quotient, "^": self._power}[node.operator](node)
 
     def _summands(self, node: Binary) -> list[Polynomial]:
-        parts: list[Polynomial] = []
+        """Polynomials of all summands; faults of all of them are told at once."""
+        signed: list[tuple[Node, int]] = []
         rest: Node = node
         while isinstance(rest, Binary) and rest.operator in "+-":
-            right = self.polynomial(rest.right)
-            parts.append(right if rest.operator == "+" else right.scaled(Fraction(-1)))
+            signed.append((rest.right, 1 if rest.operator == "+" else -1))
             rest = rest.left
-        return [self.polynomial(rest), *reversed(parts)]
+        parts: list[Polynomial] = []
+        faults: list[Fault] = []
+        for part, sign in [(rest, 1), *reversed(signed)]:
+            try:
+                parts.append(self.polynomial(part).scaled(Fraction(sign)))
+            except ProblemFaults as error:
+                faults += error.faults
+        if faults:
+            raise ProblemFaults(faults)
+        return parts
 
     def _name(self, node: Name) -> Polynomial:
         name, primes = node.name, node.primes
@@ -146,6 +158,8 @@ class Algebra:
             refuse(node.right, "This divides by zero.", "Give the divisor another value.")
         if kinds & _SIGNALS:
             self._refuse_signals(node, bottom, "the quotient by")
+        if Kind.TIME in kinds:
+            self.divisors.append(self.folded(node.right))
         if len(bottom) == 1:
             return top * bottom.inverse()
         if Kind.TIME in kinds and Kind.PARAMETER in kinds:
@@ -163,8 +177,8 @@ class Algebra:
         if exponent is not None and exponent.denominator == 1 and abs(exponent) <= 10**6:
             return self._whole_power(node, base, int(exponent))
         if kinds & _SIGNALS:
-            what = "the root" if exponent is not None else "the power"
-            self._refuse_signals(node, base if exponent is not None else self.polynomial(node.right), what + " of")
+            what = "the root of" if exponent is not None else "a power that changes with"
+            self._refuse_signals(node, base + self.polynomial(node.right), what)
         if len(kinds) > 1:
             self._refuse_mixed(node)
         return self._function(kinds.pop(), node)
@@ -177,6 +191,10 @@ class Algebra:
             return base**exponent
         if kinds & _SIGNALS:
             self._refuse_signals(node, base, "the quotient by")
+        if not base.terms:
+            refuse(node.left, "This divides by zero.", "Give the divisor another value.")
+        if Kind.TIME in kinds:
+            self.divisors.append(self.folded(node.left))
         if len(base) > 1:
             if len(kinds) > 1:
                 self._refuse_mixed(node.left)
@@ -255,7 +273,7 @@ class Algebra:
         refuse(
             node,
             f"{_NOT_BUILT}: {what} a signal ({names}).",
-            "Right-hand sides are polynomials in the signals here; replace it by a polynomial that fits over its range.",
+            "Right-hand sides are polynomials in the signals; put a polynomial in its place that fits over the range.",
         )
 
     def _refuse_mixed(self, node: Node) -> NoReturn:

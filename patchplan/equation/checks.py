@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterable, Iterator, Mapping
 from difflib import get_close_matches
 from fractions import Fraction
 
@@ -11,8 +11,9 @@ import numpy as np
 from patchplan.equation.algebra import Algebra
 from patchplan.equation.knobs import divisors
 from patchplan.equation.outline import Outline, name_faults
+from patchplan.equation.polynomial import Kind
 from patchplan.equation.problem import Problem
-from patchplan.equation.tree import Call, Node, Number
+from patchplan.equation.tree import Call, Node, Number, text_of
 from patchplan.equation.waveform import SAMPLES, numeric_tree
 from patchplan.errors import Fault
 
@@ -91,38 +92,58 @@ def count_faults(outline: Outline, orders: Mapping[str, int], equations: int) ->
         )  # fmt: skip
 
 
-def regular_faults(trees: Mapping[str, tuple[Node, str]], duration: Fraction) -> Iterator[Fault]:
+def regular_faults(
+    trees: Mapping[str, tuple[Node, str]], divided: Iterable[Node], duration: Fraction
+) -> Iterator[Fault]:
     """Functions of time that have no finite value at the start or within the run.
 
     Parameters
     ----------
     trees
         Name shown -> (tree in t, key for the fault where the tree carries no place).
+    divided
+        Trees in t that something is divided by.
     """
     for name, (tree, key) in trees.items():
         found = _irregular(tree, float(duration))
         if found is not None:
-            when = "at the start" if found == 0.0 else f"at t = {found:.6g}"
-            place = tree.origin
-            yield Fault(
-                f"{name} has no finite value {when}.", "Change the function, or the duration.",
-                place.key if place else key, (place.start, place.end) if place else None,
-            )  # fmt: skip
+            yield _placed(tree, key, f"{name} has no finite value {_when(found)}.", "Change it, or the duration.")
+    for tree in divided:
+        found = _zero(tree, float(duration))
+        if found is not None:
+            yield _placed(tree, "equations", f"This divides by zero {_when(found)}.", "Change it, or the duration.")
+
+
+def _when(time: float) -> str:
+    return "at the start" if time == 0.0 else f"at t = {time:.6g}"
+
+
+def _placed(tree: Node, key: str, found: str, remedy: str) -> Fault:
+    place = tree.origin
+    return Fault(found, remedy, place.key, (place.start, place.end)) if place else Fault(found, remedy, key)
 
 
 def _irregular(tree: Node, duration: float) -> float | None:
     """First time found in the run at which the tree has no finite value."""
     t = np.linspace(0.0, duration, SAMPLES)
-    values = numeric_tree(tree, t)
-    places = [float(t[i]) for i in np.flatnonzero(~np.isfinite(values))[:1]]
-    for divisor in divisors(tree):
-        below = numeric_tree(divisor, t)
-        crossed = (below[:-1] * below[1:] < 0.0) | (below[:-1] == 0.0)
-        # A divisor that jumps across zero, such as a square wave, never is zero.
-        jumped = np.abs(np.diff(below)) > 0.5 * np.nanmax(np.abs(below), initial=0.0)
-        places += [float(t[i]) for i in np.flatnonzero(crossed & ~jumped)[:1]]
-        places += [float(t[i]) for i in np.flatnonzero(below == 0.0)[:1]]
-    return min(places) if places else None
+    places = [float(t[i]) for i in np.flatnonzero(~np.isfinite(numeric_tree(tree, t)))[:1]]
+    places += [x for x in (_zero(divisor, duration) for divisor in divisors(tree)) if x is not None]
+    return min(places, default=None)
+
+
+def _zero(divisor: Node, duration: float) -> float | None:
+    """First zero found of a divisor, between samples too where it crosses zero without a jump."""
+    t = np.linspace(0.0, duration, SAMPLES)
+    below = numeric_tree(divisor, t)
+    jumped = np.abs(np.diff(below)) > 0.5 * np.nanmax(np.abs(below), initial=0.0)
+    crossed = np.append((below[:-1] * below[1:] < 0.0) & ~jumped, False)
+    places = np.flatnonzero(crossed | (below == 0.0))
+    if not places.size:
+        return None
+    first = int(places[0])
+    if below[first] == 0.0:
+        return float(t[first])
+    return float(t[first] + (t[first + 1] - t[first]) * below[first] / (below[first] - below[first + 1]))
 
 
 def jump_faults(trees: Mapping[str, tuple[Node, str]], duration: Fraction) -> Iterator[Fault]:
@@ -134,11 +155,12 @@ def jump_faults(trees: Mapping[str, tuple[Node, str]], duration: Fraction) -> It
             ends = numeric_tree(call.arguments[0], np.array([0.0, float(duration)]))
             period = float(numeric_tree(call.arguments[1], np.zeros(1))[0])
             if not isinstance(call.arguments[1], Number) or period <= 0.0:
-                yield Fault(f"The period in {name} is no positive number.", "Write a positive constant.", key)
+                yield _placed(call, key, f"The period in {name} is no positive number.", "Write a positive constant.")
             elif not abs(ends[1] - ends[0]) / period < MOST_JUMPS / 2:
-                yield Fault(
-                    f"{name} has over {MOST_JUMPS} jumps in the run.", "Use a longer period, or a shorter run.", key
-                )
+                yield _placed(
+                    call, key, f"{name} has over {MOST_JUMPS} jumps in the run.",
+                    "Use a longer period, or a shorter run.",
+                )  # fmt: skip
 
 
 def _calls(tree: Node) -> Iterator[Call]:
@@ -154,9 +176,6 @@ def _calls(tree: Node) -> Iterator[Call]:
 
 def time_trees(algebra: Algebra) -> dict[str, tuple[Node, str]]:
     """Every function of time met, by the text shown for it."""
-    from patchplan.equation.polynomial import Kind
-    from patchplan.equation.tree import text_of
-
     found: dict[str, tuple[Node, str]] = {}
     for atom, tree in algebra.functions.items():
         if atom.kind is Kind.TIME:

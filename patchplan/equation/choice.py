@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field
 
-from patchplan.equation.polynomial import Atom, Kind, Polynomial, Powers, TooLarge, degree, part
+from patchplan.equation.polynomial import Atom, Kind, Polynomial, Powers, TooLargeError, degree, part
 
 
 @dataclass
@@ -32,9 +32,8 @@ class Choice:
                 self._note(user, value)
         for atom in reversed(list(self.signals)):
             uses = self._uses(atom)
-            if not uses and atom not in self.wanted:
-                self._drop(atom)
-            elif uses and self._put_in(atom, uses) and self._substituted(atom) and atom not in self.wanted:
+            gone = not uses or (self._put_in(atom, uses) and self._substituted(atom))
+            if gone and atom not in self.wanted:
                 self._drop(atom)
 
     def _note(self, user: Atom, value: Polynomial) -> None:
@@ -64,7 +63,7 @@ class Choice:
         if nonlinear:
             return len(uses) == 1 and atom not in self.wanted
         # One coefficient with a knob stays one stage.
-        return Kind.PARAMETER not in kinds or len(uses) == 1
+        return Kind.PARAMETER not in kinds or len(uses) + (atom in self.wanted) == 1
 
     def _substituted(self, atom: Atom) -> bool:
         """Put the signal into all its users; False where that outgrows the limits."""
@@ -72,7 +71,7 @@ class Choice:
         users = sorted(self._users.get(atom, ()))
         try:
             changed = {user: self._value(user).substitute(value) for user in users}
-        except TooLarge:
+        except TooLargeError:
             return False
         for user, made in changed.items():
             (self.rows if user in self.rows else self.signals)[user] = made

@@ -14,7 +14,7 @@ from patchplan.equation.tree import Binary, Call, Minus, Name, Node, Number
 Sparse = dict[int, Polynomial]
 
 
-class Singular(Exception):
+class SingularError(Exception):
     """The matrix has no inverse; ``column`` is an unknown that it leaves open."""
 
     def __init__(self, column: int) -> None:
@@ -37,7 +37,7 @@ def inverse(matrix: Sequence[Sparse], algebra: Algebra) -> list[Sparse]:
 
     Raises
     ------
-    Singular
+    SingularError
         Where a pivot is zero (identically, where parameters stand in it).
     """
     if all(entry.value is not None for row in matrix for entry in row.values()):
@@ -57,7 +57,7 @@ def _gauss_jordan(rows: Sequence[dict[int, Any]], one: Any) -> list[dict[int, An
     for column in range(len(rows)):
         having = [i for i in sorted(open_rows) if left[i].get(column)]
         if not having:
-            raise Singular(column)
+            raise SingularError(column)
         pivot = min(having, key=lambda i: len(left[i]))
         open_rows.remove(pivot)
         owner[column] = pivot

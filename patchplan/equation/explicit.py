@@ -20,10 +20,11 @@ from patchplan.equation.knobs import Knobs
 from patchplan.equation.meaning import Meaning, meaning_of, slope_of, start_of
 from patchplan.equation.model import Block, identity, orders_of, solve, too_large
 from patchplan.equation.outline import Outline, outline_of
-from patchplan.equation.polynomial import Atom, Kind, Polynomial, TooLarge
+from patchplan.equation.polynomial import Atom, Kind, Polynomial, TooLargeError
 from patchplan.equation.problem import Problem
 from patchplan.equation.rates import Change, remove_rates
 from patchplan.equation.system import Monomial, Row, State, System, Term, row_of
+from patchplan.equation.tree import Name
 from patchplan.errors import Fault, ProblemFaults
 
 
@@ -41,17 +42,8 @@ def build_system(problem: Problem) -> System:
     outline = outline_of(problem)
     _stop(faults_before(problem, outline))
     meaning = meaning_of(problem, outline)
-    trees = time_trees(meaning.algebra)
-    _stop([*jump_faults(trees, problem.duration), *regular_faults(trees, problem.duration)])
     orders = _opened(meaning)
-    _stop(
-        [
-            *count_faults(outline, orders, len(meaning.equations)),
-            *start_faults(problem, orders, meaning.at_rest, outline),
-            *_unknown_signals(problem, meaning, orders),
-        ]
-    )
-    blocks = solve(meaning.equations, orders, meaning.algebra)
+    blocks = _solved(problem, outline, meaning, orders)
     rates = {a: value for b in blocks for a, value in b.rates().items()}
     change = _change(problem, meaning, orders, blocks)
     change.wanted = _wanted(problem, meaning, orders, rates)
@@ -63,6 +55,26 @@ def _stop(faults: Iterable[Fault]) -> None:
     found = tuple(dict.fromkeys(faults))
     if found:
         raise ProblemFaults(found)
+
+
+def _solved(problem: Problem, outline: Outline, meaning: Meaning, orders: Mapping[str, int]) -> list[Block]:
+    """Blocks of the highest derivatives, or all faults found on the way."""
+    trees = time_trees(meaning.algebra)
+    wrong_count = list(count_faults(outline, orders, len(meaning.equations)))
+    faults = [
+        *jump_faults(trees, problem.duration),
+        *regular_faults(trees, meaning.algebra.divisors, problem.duration),
+        *wrong_count,
+        *start_faults(problem, orders, meaning.at_rest, outline),
+        *_unknown_signals(problem, meaning, orders),
+    ]
+    blocks = []
+    try:
+        blocks = [] if wrong_count else solve(meaning.equations, orders, meaning.algebra)
+    except ProblemFaults as error:
+        faults += error.faults
+    _stop(faults)
+    return blocks
 
 
 def _opened(meaning: Meaning) -> dict[str, int]:
@@ -86,7 +98,7 @@ def _opened(meaning: Meaning) -> dict[str, int]:
         for index, (value, equation) in meaning.equations.items():
             try:
                 meaning.equations[index] = definitions.opened(value, hot.__contains__), equation
-            except TooLarge:
+            except TooLargeError:
                 faults.append(too_large(equation))
     _stop(faults)
     return orders
@@ -147,18 +159,12 @@ def _change(problem: Problem, meaning: Meaning, orders: Mapping[str, int], block
         if atom.primes > 1:
             return Atom(Kind.RATE, atom.name, atom.primes - 1)
         if atom.name in algebra.named:
-            ((((plain, _),), _),) = algebra.polynomial(_named(atom.name)).terms.items()
+            ((((plain, _),), _),) = algebra.polynomial(Name(atom.name)).terms.items()
             return plain
         return Atom(Kind.SOURCE, atom.name)
 
     taken = {*problem.parameters, *inputs, *orders, *(a.name for a in meaning.definitions.polynomials)}
     return Change([*chains, *blocks], {}, start, at_start, lower, taken, {}, order)
-
-
-def _named(name: str):
-    from patchplan.equation.tree import Name
-
-    return Name(name)
 
 
 def _wanted(
@@ -190,7 +196,7 @@ def _wanted(
         elif atom.name in orders and atom.primes >= orders[atom.name]:
             found[atom] = lowered(Polynomial.of(atom))
         elif atom.name in problem.inputs and not _is_source(atom.name, meaning):
-            found[atom] = meaning.algebra.polynomial(_named(atom.name))
+            found[atom] = meaning.algebra.polynomial(Name(atom.name))
     return found
 
 

@@ -124,10 +124,11 @@ def _polished(tree: Node, parameters: Sequence[Parameter], values: Array, *, sig
     best = int(np.argmin(sign * values))
     start = [float(grid[p.name].ravel()[best]) for p in parameters]
     bounds = [(float(p.low or 0), float(p.high or 0)) for p in parameters]
-    found = minimize(
-        lambda x: sign * float(numeric_names(tree, {p.name: v for p, v in zip(parameters, x, strict=True)})),
-        start, bounds=bounds,
-    )  # fmt: skip
+
+    def height(x: Array) -> float:
+        return sign * float(numeric_names(tree, dict(zip((p.name for p in parameters), map(float, x), strict=True))))
+
+    found = minimize(height, start, bounds=bounds)
     return sign * float(min(found.fun, sign * values[best]))
 
 

@@ -12,6 +12,7 @@ from patchplan.equation.elimination import sum_tree
 from patchplan.equation.polynomial import Atom, Kind, Polynomial, part
 from patchplan.equation.problem import Equation
 from patchplan.equation.tree import Binary, Minus, Name, Node, Number
+from patchplan.errors import ProblemFaults
 
 _OPERATOR = Atom(Kind.SIGNAL, "s")
 
@@ -158,7 +159,11 @@ def _in_s(node: Node, algebra: Algebra) -> dict[int, Polynomial]:
         algebra.functions, algebra.written,
     )  # fmt: skip
     made: dict[int, Polynomial] = {}
-    for powers, value in inner.polynomial(node).terms.items():
+    try:
+        whole = inner.polynomial(node)
+    except ProblemFaults:
+        _nested(node)
+    for powers, value in whole.terms.items():
         power = dict(powers).get(_OPERATOR, 0)
         made[power] = made.get(power, Polynomial({})) + Polynomial({part(powers, Kind.PARAMETER): value})
     made = {k: v for k, v in made.items() if v.terms}

@@ -7,8 +7,8 @@ from dataclasses import dataclass, field
 
 from patchplan.equation.algebra import Algebra, fault_at
 from patchplan.equation.calculus import derivative
-from patchplan.equation.elimination import Singular, Sparse, inverse
-from patchplan.equation.polynomial import Atom, Kind, Polynomial, TooLarge, part
+from patchplan.equation.elimination import SingularError, Sparse, inverse
+from patchplan.equation.polynomial import Atom, Kind, Polynomial, TooLargeError, part
 from patchplan.equation.problem import Equation
 from patchplan.equation.tree import Origin
 from patchplan.errors import Fault, ProblemFaults
@@ -223,7 +223,7 @@ def _block(
         raise ProblemFaults([_count(group, [a.text for a in atoms], first)])
     try:
         inverted = inverse(mass, algebra)
-    except Singular as error:
+    except SingularError as error:
         raise ProblemFaults([_singular(atoms[error.column], [equations[i][1] for i in group])]) from None
     targets = tuple(Atom(a.kind, a.name, a.primes - 1) for a in atoms)
     places = tuple(_whole(equations[i][1]) for i in group)
@@ -254,4 +254,4 @@ def too_large(equation: Equation) -> Fault:
     )
 
 
-__all__ = ["Block", "Definitions", "TooLarge", "identity", "orders_of", "solve", "too_large"]
+__all__ = ["Block", "Definitions", "TooLargeError", "identity", "orders_of", "solve", "too_large"]

@@ -13,7 +13,6 @@ from patchplan.equation.problem import Equation, Problem
 from patchplan.equation.tree import FUNCTIONS, Name
 from patchplan.errors import Fault
 
-
 _VALUES = ("parameters.", "start.", "ranges.", "terminals.")
 
 

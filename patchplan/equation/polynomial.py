@@ -42,7 +42,7 @@ class Atom(NamedTuple):
 Powers: TypeAlias = tuple[tuple[Atom, int], ...]
 
 
-class TooLarge(Exception):
+class TooLargeError(Exception):
     """An expansion would exceed MOST_TERMS or HIGHEST_DEGREE."""
 
 
@@ -108,7 +108,7 @@ class Polynomial:
 
     def __mul__(self, other: Polynomial) -> Polynomial:
         if len(self) * len(other) > MOST_TERMS or self.degree + other.degree > HIGHEST_DEGREE:
-            raise TooLarge
+            raise TooLargeError
         terms: dict[Powers, Fraction] = {}
         places: dict[Powers, Origin] = {}
         for left, a in self.terms.items():
@@ -122,7 +122,7 @@ class Polynomial:
 
     def __pow__(self, exponent: int) -> Polynomial:
         if self.degree * exponent > HIGHEST_DEGREE or comb(len(self) + exponent - 1, exponent) > MOST_TERMS:
-            raise TooLarge
+            raise TooLargeError
         result = Polynomial.constant(1)
         for _ in range(exponent):
             result = result * self
