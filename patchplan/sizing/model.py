@@ -96,7 +96,7 @@ def node_limits(patch: Patch, target: Target) -> dict[str, float]:
         if stage.kind == "multiplier":
             for node in (stage.node, *(w.source for w in stage.wires)):
                 limit[node] = min(limit[node], target.multiplier.limit)
-        elif stage.kind in ("reference", "source"):
+        elif stage.kind == "source":
             limit[stage.node] = min(limit[stage.node], max(target.reference, target.multiplier.limit))
     return limit
 

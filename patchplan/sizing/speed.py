@@ -24,6 +24,9 @@ SLACK = 1e-4
 #: Resistance that the capacitors are chosen for [ohm]; between the 5k that loads outputs and the 1M that strays and
 #: bias currents disturb (common practice, no source).
 COMFORTABLE = 5e4
+#: The planner's own speed keeps capacitors at or above this, so that some 10 pF of wiring and input capacitance count for
+#: 0.1 % at most [F] (common practice, no source).
+ABOVE_STRAYS = 1e-8
 
 
 @dataclass(frozen=True)
@@ -101,9 +104,16 @@ def choose_speed(
         grid = np.geomspace(low, high, 81)
         bias = np.array([bias_error(patch, sensitivity, target, scales, gains, t) for t in grid])
         error = lag / grid + bias
-        chosen = float(grid[np.argmax(error <= 1.1 * error.min() + SLACK)])
+        good = (error <= 1.1 * error.min() + SLACK) & (grid >= min(high, _above_strays(gains)))
+        chosen = float(grid[np.argmax(good)] if good.any() else grid[np.argmin(error)])
     predicted = lag / chosen + bias_error(patch, sensitivity, target, scales, gains, chosen)
     return Speed((low, high), (low_text, high_text), chosen, predicted, late)
+
+
+def _above_strays(gains: Mapping[str, Array]) -> float:
+    """Time scale at which the fastest stage's capacitor is :data:`ABOVE_STRAYS` at comfortable resistors."""
+    middles = [float(np.sqrt(g.min() * g.max())) for g in gains.values() if g.size]
+    return max(middles, default=0.0) * COMFORTABLE * ABOVE_STRAYS
 
 
 def lag_errors(
