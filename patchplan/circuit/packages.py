@@ -70,7 +70,10 @@ def assign_places(patch: Patch, op_amp: PartData, multiplier: PartData, switch: 
         hold = _fill(integrators, ("",), _last(operate) + 1)
     count = max(count, _last(operate), _last(hold))
     left = op_amp.sections[len(amplified) % len(op_amp.sections) :] if len(amplified) % len(op_amp.sections) else ()
-    notes = [f"Tie section {s} of U{_last(active)} as a follower: minus to out, plus to ground." for s in left]
+    notes = []
+    if left:
+        sections = f"sections {', '.join(left[:-1])} and {left[-1]}" if len(left) > 1 else f"section {left[0]}"
+        notes.append(f"Not used: {sections} of U{_last(active)}. Tie minus to out and plus to ground.")
     return Places(active | multiplied, operate, hold, tuple(f"U{i}" for i in range(1, count + 1)), tuple(notes))
 
 
