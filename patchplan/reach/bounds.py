@@ -36,7 +36,7 @@ class Impulse:
     direct: Array
 
     def gain(self) -> Array:
-        """Integral of the magnitude from 0 to each time, ``(n_names, n_times)``, direct part and quadrature error included.
+        """Integral of the magnitude from 0 to each time, ``(n_names, n_times)``, with direct part and quadrature error.
 
         The peak gain is the L1 norm of the impulse response: Boyd & Barratt 1991, Linear Controller Design, chapter 5.
         """
@@ -100,7 +100,7 @@ def free_sources(system: System) -> list[tuple[str, float, float]]:
 
 
 def worst_case(middle: tuple[Array, Array, Array], impulses: list[Impulse], halves: list[float]) -> tuple[Array, Array]:
-    """Bounds of every name that hold for every waveform: the run with all inputs at their middle, plus half width * gain.
+    """Bounds of every name that hold for every waveform: the run with inputs at their middle, plus half width * gain.
 
     Parameters
     ----------

@@ -185,7 +185,7 @@ class Bound:
         return by_value[:, : self.field.n_states].tocsc()
 
     def linear_part(self, states: Array, sources: Array | None = None) -> Any:
-        """Derivative of the rates by (states, sources), signals eliminated: sparse, ``(n_states, n_states + n_sources)``."""
+        """Derivative of the rates by (states, sources), signals eliminated: ``(n_states, n_states + n_sources)``."""
         rates, signals = self.derivatives(states, sources)
         given = self.field.n_states + self.field.n_sources
         return (rates[:, :given] + rates[:, given:] @ signals).tocsc()

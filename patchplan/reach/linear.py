@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
+from itertools import pairwise
 from typing import Any
 
 import numpy as np
@@ -110,17 +111,20 @@ def solve_linear(
     FloatingPointError
         The solution left the range of floating point numbers; the argument is the time.
     """
-    stepper = _Stepper(matrix)
-    at_middle = np.array([0.5])
-    slope, middle = weights_at(at_middle, 1)[0], weights_at(at_middle)[0]
+    with np.errstate(over="ignore", invalid="ignore"):
+        return _solved(_Stepper(matrix), np.array(start, float), forcing, edges, tolerance)
+
+
+def _solved(stepper: _Stepper, x: Array, forcing: Forcing | None, edges: Array, tolerance: float) -> Pieces:
+    slope, middle = weights_at(np.array([0.5]), 1)[0], weights_at(np.array([0.5]))[0]
     places = np.append(step_points()[1:], 0.5)
-    x, peak = np.array(start, float), np.abs(start)
+    peak = np.abs(x)
     starts: list[float] = []
     lengths: list[float] = []
     points: list[Array] = []
     silent = np.zeros((STAGES + 1, x.size))
     wished = np.inf
-    for begin, stop in zip(edges[:-1].tolist(), edges[1:].tolist(), strict=True):
+    for begin, stop in pairwise(edges.tolist()):
         span, index = stop - begin, 0
         level = min(_HALVINGS, max(0, int(np.ceil(np.log2(span / wished) - 0.01)))) if wished < span else 0
         while index < 2**level:

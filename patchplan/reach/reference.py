@@ -34,7 +34,7 @@ _SEARCHED = (
 
 @dataclass(frozen=True)
 class _Ends:
-    """Lowest and highest value of every name so far, margins beyond them, how they are known, and the runs behind them."""
+    """Lowest and highest value of every name so far, margins beyond them, how known, and the runs behind them."""
 
     low: Array
     high: Array

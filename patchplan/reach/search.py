@@ -187,7 +187,7 @@ def spread_of_boards(
             ()
             if size == 1.0
             else (
-                f"With parts at the ends of their tolerance the solution may grow without bound near t = {time:.6g}.",
+                f"With parts at the ends of their tolerance the solution may grow without bound near t = {time:.4g}.",
             )
         )
         return Excursion(low.min(axis=1), high.max(axis=1), warnings=said)
@@ -195,5 +195,5 @@ def spread_of_boards(
     return Excursion(
         none + np.inf,
         none - np.inf,
-        warnings=(f"With parts slightly off the solution grows without bound near t = {time:.6g}.",),
+        warnings=(f"With parts slightly off the solution grows without bound near t = {time:.4g}.",),
     )

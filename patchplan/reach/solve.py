@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import warnings
+from collections.abc import Callable
 from itertools import pairwise
 from typing import Any
 
@@ -32,7 +33,7 @@ def grows_without_bound(time: float) -> ProblemFaults:
     return ProblemFaults(
         [
             Fault(
-                f"The solution grows without bound at t = {time:.6g}.",
+                f"The solution grows without bound at t = {time:.4g}.",
                 "Shorten the duration, or check signs, parameters and start values.",
             )
         ]
@@ -108,33 +109,45 @@ def _stretch(
     band = start.shape[0] - 1
     options: dict[str, Any] = {"ml": band, "mu": band} if start.ndim == 2 else {}
     floors = np.broadcast_to(floor, (start.shape[0],))
-    with warnings.catch_warnings(), np.errstate(over="ignore", invalid="ignore"):
-        # A failed run is reported below, with its time.
-        warnings.simplefilter("ignore")
-        rows, info = odeint(
-            single if start.ndim == 1 else many,
-            start.T.ravel(),
-            times,
-            rtol=tolerance,
-            atol=np.tile(floors, start.size // start.shape[0]),
-            tfirst=True,
-            full_output=True,
-            mxstep=_STEPS,
-            hmax=(ends[1] - ends[0]) / 20,
-            **options,
-        )
-    if info["message"] != "Integration successful." or not np.isfinite(rows).all():
-        raise GrowsWithoutBoundError(_end_of_run(times, info["tcur"], rows))
+
+    def run(x: Array, times: Array) -> tuple[Array, bool, Array]:
+        with warnings.catch_warnings(), np.errstate(over="ignore", invalid="ignore"):
+            # A failed run is reported with its time instead.
+            warnings.simplefilter("ignore")
+            rows, info = odeint(
+                single if start.ndim == 1 else many,
+                x,
+                times,
+                rtol=tolerance,
+                atol=np.tile(floors, start.size // start.shape[0]),
+                tfirst=True,
+                full_output=True,
+                mxstep=_STEPS,
+                hmax=(ends[1] - ends[0]) / 20,
+                **options,
+            )
+        return rows, info["message"] == "Integration successful." and bool(np.isfinite(rows).all()), info["tcur"]
+
+    rows, success, reached = run(start.T.ravel(), times)
+    if not success:
+        raise GrowsWithoutBoundError(_end_of_run(run, times, rows, reached))
     states: Array = rows.reshape(-1, *shape).transpose(2, 1, 0) if start.ndim == 2 else rows.T
     return states
 
 
-def _end_of_run(times: Array, reached: Array, rows: Array) -> float:
-    """The last time that the solver reached."""
-    for i, (wanted, got) in enumerate(zip(times[1:], reached, strict=True)):
-        if not (got >= wanted and np.isfinite(rows[i + 1]).all()):
-            return float(got) if times[i] <= got <= wanted else float(times[i])
-    return float(times[-1])
+def _end_of_run(
+    run: Callable[[Array, Array], tuple[Array, bool, Array]], times: Array, rows: Array, reached: Array
+) -> float:
+    """The time at which a run ends, by running its last interval again on finer and finer grids."""
+    last = 0
+    for _ in range(3):
+        passed = (reached >= times[1:]) & np.isfinite(rows[1:]).all(axis=1)
+        last = int(np.argmin(passed))
+        start, times = rows[last], np.linspace(times[last], times[last + 1], 17)
+        rows, success, reached = run(start, times)
+        if success:
+            return float(times[-1])
+    return float(times[0])
 
 
 def _sparse_stretch(
