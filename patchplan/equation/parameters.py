@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from fractions import Fraction
+from graphlib import CycleError, TopologicalSorter
 from typing import Any
 
 from patchplan.equation.constants import names_of
@@ -48,32 +49,33 @@ def _value_of(reading: Reading, key: str, given: Any) -> tuple[str, Any]:
 
 def _evaluate(reading: Reading, trees: Mapping[str, Node]) -> None:
     """Values of the formulas, each after what it needs."""
-    waiting = {name: {n.name for n in names_of(tree)} & trees.keys() for name, tree in trees.items()}
-    while waiting:
-        ready = [name for name, needs in waiting.items() if not needs & waiting.keys()]
-        if not ready:
-            _report_cycle(reading, trees, waiting)
-            return
+    needs = {name: [n.name for n in names_of(tree) if n.name in trees] for name, tree in trees.items()}
+    order = TopologicalSorter(needs)
+    try:
+        order.prepare()
+    except CycleError as error:
+        _report_circle(reading, trees, error.args[1][::-1])
+    # The sorter still gives every formula that hangs on no circle.
+    while ready := order.get_ready():
         for name in ready:
-            del waiting[name]
             value = reading.evaluated(trees[name])
             if value is None:
                 reading.broken.add(name)
             else:
                 reading.values[name] = value
+            order.done(name)
+    reading.broken.update(trees.keys() - reading.values.keys())
 
 
-def _report_cycle(reading: Reading, trees: Mapping[str, Node], waiting: Mapping[str, set[str]]) -> None:
-    path = [next(iter(waiting))]
-    while path[-1] not in path[:-1]:
-        path.append(min(waiting[path[-1]] & waiting.keys()))
-    circle = path[path.index(path[-1]) :]
-    origin = trees[circle[0]].origin
+def _report_circle(reading: Reading, trees: Mapping[str, Node], circle: list[str]) -> None:
+    first = next(name for name in trees if name in circle)
+    turned = circle[circle.index(first) : -1] + circle[: circle.index(first)] + [first]
+    shown_part = turned if len(turned) <= 10 else [*turned[:9], "...", first]
+    origin = trees[first].origin
     reading.fault(
-        origin.key if origin else "", f"Parameters need each other in a circle: {' needs '.join(circle)}.",
+        origin.key if origin else "", f"Parameters need each other in a circle: {' needs '.join(shown_part)}.",
         "Give one of them a number.",
     )  # fmt: skip
-    reading.broken.update(waiting)
 
 
 def _parameter(reading: Reading, name: str, given: Any, unit: str) -> Parameter | None:

@@ -188,9 +188,10 @@ def _equations(reading: Reading) -> list[Equation]:
         return []
     made = []
     for index, item in enumerate(given):
-        text = reading.string(f"equations[{index}]", item, "left side = right side")
-        if text is not None:
-            made.append(_equation(reading, text, index))
+        if isinstance(item, str):
+            made.append(_equation(reading, item, index))
+        else:
+            reading.fault(f"equations[{index}]", f"This is {kind_of(item)}.", "Write left side = right side in quotes.")
     return [equation for equation in made if equation is not None]
 
 
@@ -235,6 +236,11 @@ def _time_unit(reading: Reading) -> str | None:
 
 def _own_parts(reading: Reading) -> dict[str, dict[str, Any]]:
     parts = reading.table("part", reading.data.get("part", {}))
+    for name in parts:
+        if not re.fullmatch(r"[A-Za-z0-9][A-Za-z0-9_.+-]*", name):
+            reading.key_fault(
+                f"part.{name}", f"{shown(name)} is no part name.", "Use letters, digits and - _ + . alone."
+            )
     return {name: _floats(reading, f"part.{name}", reading.table(f"part.{name}", part)) for name, part in parts.items()}
 
 
@@ -244,6 +250,8 @@ def _floats(reading: Reading, key: str, value: Any) -> Any:
         return {name: _floats(reading, f"{key}.{name}", item) for name, item in value.items()}
     if isinstance(value, list):
         return [_floats(reading, f"{key}[{index}]", item) for index, item in enumerate(value)]
+    if isinstance(value, str):
+        return reading.string(key, value, "text")
     if isinstance(value, float):
         reading.plain(key, value, "a finite number")
     return float(value) if isinstance(value, Fraction) else value

@@ -152,6 +152,8 @@ class Reading:
             value, unit = parse_quantity(text)
         except ValueError:
             return None
+        if not unit.isprintable():
+            return None
         letter = re.search(r"([A-Za-z])\s*$", text)
         glued = letter is not None and not unit and letter[1] in self.names
         if unit in self.names:
@@ -211,8 +213,12 @@ class Reading:
         return low, high
 
     def string(self, key: str, value: Any, wanted: str) -> str | None:
-        """A string."""
+        """A string of one line."""
         if isinstance(value, str):
+            # A line break in a title or a name would write lines of its own into the netlist.
+            if not value.isprintable():
+                self.fault(key, "The text holds a line break or a control character.", "Write it on one line.")
+                return None
             return value
         self.fault(key, f"This is {kind_of(value)}.", f"Write {wanted} in quotes.")
         return None

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Collection
 from difflib import get_close_matches
 from fractions import Fraction
@@ -67,7 +68,7 @@ def parse_equation(text: str, index: int, *, names: Collection[str] = ()) -> Equ
     right = _Parser(tokens[signs[0] + 1 :], key).whole()
     if isinstance(left, Name) and left.name in {"t", "pi"}:
         _taken(left.name, key, left.origin)
-    return Equation(index, left, right, text)
+    return Equation(index, left, right, " ".join(re.split(r"[\t\r\n]", text)))
 
 
 def _taken(name: str, key: str, origin: Origin | None) -> None:

@@ -114,6 +114,11 @@ TABLE = [
     ("x = 0", "x = 0\n[build]\nresistor_limits = ['2k', '1k']", "['2k', '1k']", "not below", "[low, high]"),
     ("x = 0", "x = 0\n[build]\nresistor_limits = [-1, 5]", "-1", "not above zero", "positive"),
     ("x = 0", "x = 0\n[build]\ncapacitor_limits = ['1 nF', '1u']", "'1 nF'", 'unit "nF"', "glued"),
+    ("duration = 2", r'title = "a\n.control"' + "\nduration = 2", r'"a\n.control"', "a line break", "one line"),
+    ("x = 0", "x = 0\n[part.'q r']\nv = 1", "'q r'", "is no part name", "letters, digits"),
+    ("x = 0", "x = 0\n[part.q]\n" + r'v = "\u0007"', r'"\u0007"', "a control character", "one line"),
+    ("a = 1.5", 'a = "4.7k"\nk = 1', "4.7k", "the letter k may be a suffix or the name k", "4.7*k or 4.7e3"),
+    ("a = 1.5", 'a = "80 kg"\nkg = 1', '"80 kg"', '"kg" is a name of this file', "unit ="),
     ("x = 0", "x = 0\n[part.q]\nv = nan", "nan", "no finite number", "a finite number"),
     ("x = 0", "x = 0\n[part]\nq = 1", "1", "part.q is a number", "as a table"),
     ("a = 1.5", "a = 1.5.2", ".", "not TOML", "Correct this line"),
@@ -366,3 +371,12 @@ def test_offsets_inside_strings(inside, position):
 
 def test_render_without_a_place():
     assert render([Fault("A.", "B.")], text="x\ny", file="f", spans={}) == "f:1:1: A. B."
+
+
+def test_a_circle_leaves_the_other_formulas_checked():
+    text = GOOD.replace("a = 1.5", 'a = "b"\nb = "c + d"\nc = "b"\nd = "2*e"\ne = "ee"')
+    error = faults_of(text)
+    assert [(f.key, f.found) for f in error.faults] == [
+        ("parameters.b", "Parameters need each other in a circle: b needs c needs b."),
+        ("parameters.e", '"ee" is no parameter of this file.'),
+    ]
