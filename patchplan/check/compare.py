@@ -10,7 +10,6 @@ from numpy.typing import NDArray
 
 from patchplan.check.figures import Difference, difference, error_base, node_peaks, settled, signal_of
 from patchplan.check.horizon import horizon_of
-from patchplan.check.network import DENSE_LIMIT
 from patchplan.check.records import Cause, Curve, NodePeak, SignalError, Verdict
 from patchplan.check.simulate import Traces, simulate
 from patchplan.check.spread import spread_of
@@ -23,8 +22,10 @@ from patchplan.sizing.records import Sizing, Target
 
 Array = NDArray[np.float64]
 
-#: Tolerance of the runs of the error budget; their differences are shown with two digits.
-_BUDGET_TOLERANCE = 1e-6
+#: Below this share of the slew rate the limit makes 3e-5 of an op amp's own lag: nothing to run for.
+_SLEW_SHARE = 0.01
+#: Above this many parts each run takes seconds, and the limits are told apart no further than rounding and the rest.
+_MANY_PARTS = 450
 #: How far off a switch's resistance is in the budget (common practice, no source); its nominal value is counted in R.
 _SWITCH_OFF = 1.1
 #: Time constants of an op amp, 1/w_t each, that an output is given to follow a jump.
@@ -134,12 +135,15 @@ def _curves(circuit: Circuit, reference: Reference, traces: Traces) -> tuple[Cur
 
 
 def _budget(circuit: Circuit, reference: Reference, nominal: Traces, rows: int) -> tuple[Cause, ...]:
-    """Error of the board without any limit but its rounded values, and what each limit changes."""
+    """Error of the board without any limit but its rounded values, and what each limit changes.
+
+    The operate switches count in R, so that only what they may be off by can do harm: that row stands last.
+    """
     kinds = {p.kind for p in circuit.parts}
     times = nominal.times[:rows]
 
     def run(board: Circuit, **ideal: bool) -> Traces:
-        return simulate(board, times=times, waveforms=reference.waveforms, tolerance=_BUDGET_TOLERANCE, **ideal)
+        return simulate(board, times=times, waveforms=reference.waveforms, **ideal)
 
     limits = {"finite gain": "gain", "bandwidth": "bandwidth", "slew": "slew", "bias current": "bias"}
     if "multiplier" in kinds:
@@ -147,15 +151,32 @@ def _budget(circuit: Circuit, reference: Reference, nominal: Traces, rows: int) 
     perfect = run(circuit, **dict.fromkeys(limits.values(), False))
     rounding = max(_compare(circuit, reference, perfect, name, rows).largest for name in circuit.watched)
     causes = [Cause("rounding", rounding)]
-    if len(circuit.parts) <= 3 * DENSE_LIMIT:
-        alone = {cause: run(circuit, **{flag: False}) for cause, flag in limits.items()}
-        if "switch" in kinds:
-            parts = tuple(replace(p, value=p.value * _SWITCH_OFF) if p.kind == "switch" else p for p in circuit.parts)
-            alone["switch resistance 10 % off"] = run(replace(circuit, parts=parts))
-    else:
-        alone = {"op amps and multipliers together": perfect}
-    causes += [Cause(cause, _apart(circuit, reference, nominal, other)) for cause, other in alone.items()]
-    return tuple(sorted(causes, key=lambda c: -c.error_percent))
+    if len(circuit.parts) > _MANY_PARTS:
+        together = _apart(circuit, reference, nominal, perfect)
+        return tuple(sorted([*causes, Cause("op amps and multipliers together", together)], key=_by_size))
+    if _steepest(circuit, nominal) < _SLEW_SHARE * circuit.op_amp.slew:
+        causes.append(Cause("slew", 0.0))
+        del limits["slew"]
+    for cause, flag in limits.items():
+        causes.append(Cause(cause, _apart(circuit, reference, nominal, run(circuit, **{flag: False}))))
+    causes.sort(key=_by_size)
+    if "switch" in kinds:
+        parts = tuple(replace(p, value=p.value * _SWITCH_OFF) if p.kind == "switch" else p for p in circuit.parts)
+        off = _apart(circuit, reference, nominal, run(replace(circuit, parts=parts)))
+        causes.append(Cause("switch resistance, if 10 % off", off))
+    return tuple(causes)
+
+
+def _by_size(cause: Cause) -> float:
+    return -cause.error_percent
+
+
+def _steepest(circuit: Circuit, traces: Traces) -> float:
+    """Largest slope of an op amp's output [V/s]."""
+    outputs = [traces.nets.index(p.nets[2]) for p in circuit.parts if p.kind == "op amp"]
+    steps = np.diff(traces.times)
+    moves = np.abs(np.diff(traces.volts[outputs], axis=1))[:, steps > 0.0]
+    return float((moves / steps[steps > 0.0]).max(initial=0.0))
 
 
 def _apart(circuit: Circuit, reference: Reference, one: Traces, other: Traces) -> float:

@@ -30,55 +30,61 @@ class Model:
 
     def __init__(self, network: Network) -> None:
         self.network = network
-        self.n_c = network.n_capacitors
-        self.first_multiplier = network.n_op_amps
-        self.n_poles = network.n_op_amps + network.n_multipliers
-        self.x_rows = slice(self.n_c + self.n_poles, self.n_c + self.n_poles + network.n_multipliers)
+        self.n_c = n_c = network.n_capacitors
+        self.size = n_c + network.n_op_amps + network.n_multipliers
+        self.poles = slice(n_c, self.size)
+        self.products = slice(self.size - network.n_multipliers, self.size)
+        self.x_rows = slice(self.size, self.size + network.n_multipliers)
         self.y_rows = slice(self.x_rows.stop, self.x_rows.stop + network.n_multipliers)
         self.sparse = not isinstance(network.rate, np.ndarray)
 
-    def rates(self, state: Array, inputs: Array, *, slewing: bool = True) -> Array:
+    def push(self, inputs: Array) -> Array:
+        """What the inputs (sources' volts, then 1) add to the network's rows."""
+        pushed: Array = self.network.rate_input @ inputs
+        return pushed
+
+    def rates(self, state: Array, push: Array, *, slewing: bool = True) -> Array:
         """Time derivative of the states, shape ``(n_states,)`` [V/s].
 
         Parameters
         ----------
-        state, inputs
-            Capacitor voltages and poles [V]; sources' volts and 1.
+        state
+            Capacitor voltages and poles [V].
+        push
+            From :meth:`push`.
         slewing
             Whether slew limits hold.
         """
-        net, n_c = self.network, self.n_c
-        rows = net.rate @ state + net.rate_input @ inputs
-        drive = rows[n_c : n_c + self.n_poles]
+        net = self.network
+        rows: Array = net.rate @ state
+        rows += push
         if len(net.product):
-            drive[self.first_multiplier :] += net.product * rows[self.x_rows] * rows[self.y_rows]
+            rows[self.products] += net.product * rows[self.x_rows] * rows[self.y_rows]
+        drive, poles = rows[self.poles], state[self.poles]
         if slewing:
-            drive = net.slew * np.tanh(drive / net.slew)
-        poles = state[n_c:]
-        beyond = poles - np.minimum(np.maximum(poles, net.low), net.high)
-        rows[n_c : n_c + self.n_poles] = drive - net.leak * poles - net.clamp * beyond
-        return np.asarray(rows[: n_c + self.n_poles])
+            drive /= net.slew
+            np.tanh(drive, out=drive)
+            drive *= net.slew
+        drive -= net.leak * poles
+        drive -= net.clamp * (poles - np.minimum(np.maximum(poles, net.low), net.high))
+        return rows[: self.size]
 
-    def jacobian(self, state: Array, inputs: Array, *, slewing: bool = True) -> Matrix:
+    def jacobian(self, state: Array, push: Array, *, slewing: bool = True) -> Matrix:
         """Derivative of :meth:`rates` by the states, shape ``(n_states, n_states)``; CSC on large boards."""
-        net, n_c, size = self.network, self.n_c, self.n_c + self.n_poles
-        slope = np.ones(size)
-        own = np.zeros(size)
-        poles = state[n_c:]
-        own[n_c:] = net.leak + net.clamp * ((poles < net.low) | (poles > net.high))
-        rows = net.rate @ state + net.rate_input @ inputs
+        net, size = self.network, self.size
+        rows: Array = net.rate @ state
+        rows += push
         x, y = rows[self.x_rows] * net.product, rows[self.y_rows] * net.product
+        slope, own, poles = np.ones(size), np.zeros(size), state[self.poles]
+        own[self.poles] = net.leak + net.clamp * ((poles < net.low) | (poles > net.high))
         if slewing:
-            drive = rows[n_c:size]
-            drive[self.first_multiplier :] += x * rows[self.y_rows]
-            slope[n_c:] = 1.0 - np.tanh(drive / net.slew) ** 2
+            rows[self.products] += x * rows[self.y_rows]
+            slope[self.poles] = 1.0 - np.tanh(rows[self.poles] / net.slew) ** 2
         if self.sparse:
             return self._sparse_jacobian(slope, own, x, y)
         out = net.rate[:size].copy()
         if len(net.product):
-            out[n_c + self.first_multiplier :] += (
-                y[:, None] * net.rate[self.x_rows] + x[:, None] * net.rate[self.y_rows]
-            )
+            out[self.products] += y[:, None] * net.rate[self.x_rows] + x[:, None] * net.rate[self.y_rows]
         out *= slope[:, None]
         out.flat[:: size + 1] -= own
         return out
@@ -86,7 +92,7 @@ class Model:
     def _sparse_jacobian(self, slope: Array, own: Array, x: Array, y: Array) -> Matrix:
         from scipy.sparse import csr_array, diags_array, vstack
 
-        net, size = self.network, self.n_c + self.n_poles
+        net, size = self.network, self.size
         out = net.rate[:size]
         if len(net.product):
             products = diags_array(y) @ net.rate[self.x_rows] + diags_array(x) @ net.rate[self.y_rows]
@@ -110,13 +116,13 @@ class Model:
         Pseudo-transient continuation (Kelley and Keyes 1998): one implicit Euler step of each length, so that the point
         found is one that the board itself would settle to. Slew limits play no part in a point of rest.
         """
-        state = state.copy()
+        state, push = state.copy(), self.push(inputs)
         free = np.flatnonzero(~held)
         if not len(free):
             return state
         for step in (*_REST_STEPS, *[_REST_STEPS[-1]] * _REST_AGAIN):
-            rate = self.rates(state, inputs, slewing=False)[free]
-            slope = self.jacobian(state, inputs, slewing=False)
+            rate = self.rates(state, push, slewing=False)[free]
+            slope = self.jacobian(state, push, slewing=False)
             state[free] += self._implicit(slope, free, rate, float(step))
         return state
 

@@ -106,7 +106,8 @@ def simulate(
         if state is None:
             state = start_state(board, network, at(begin))
         inside = np.clip(wanted[_rows_within(wanted, begin, end, edges[-1])], begin, end)
-        states, failure = _integrate(model, at, state, np.concatenate([[begin], inside, [end]]), tolerance)
+        push = _push(model, at, drive.constant)
+        states, failure = _integrate(model, push, state, np.concatenate([[begin], inside, [end]]), tolerance)
         state, kept = states[-1], min(len(inside), len(states) - 1)
         inputs = np.array([at(float(t)).copy() for t in inside[:kept]]).reshape(kept, len(drive.scale) + 1)
         done.append(voltage @ states[1 : kept + 1].T + voltage_input @ inputs.T)
@@ -132,8 +133,15 @@ def _rows_shown(circuit: Circuit, nets: tuple[str, ...]) -> list[int]:
     return [i for i, net in enumerate(nets) if net in circuit.nodes or net in outputs]
 
 
+def _push(model: Model, at: Callable[[float], Array], constant: bool) -> Callable[[float], Array]:
+    if constant:
+        pushed = model.push(at(0.0))
+        return lambda time: pushed
+    return lambda time: model.push(at(time))
+
+
 def _integrate(
-    model: Model, at: Callable[[float], Array], state: Array, times: Array, tolerance: float
+    model: Model, push: Callable[[float], Array], state: Array, times: Array, tolerance: float
 ) -> tuple[Array, str]:
     """States at ``times``, shape ``(n_times, n_states)``, fewer rows and a sentence where the run fails."""
     left = _MOST_EVALUATIONS
@@ -145,17 +153,17 @@ def _integrate(
         reached = t
         if left < 0:
             raise _TooLong
-        return model.rates(x, at(t))
+        return model.rates(x, push(t))
 
     def jacobian(x: Array, t: float) -> Array:
-        return np.asarray(model.jacobian(x, at(t)))
+        return np.asarray(model.jacobian(x, push(t)))
 
     if not len(state):
         return np.zeros((len(times), 0)), ""
     unique, back = np.unique(times, return_inverse=True)
     try:
         if model.sparse:
-            states, failure = _integrate_sparse(model, at, rates, state, unique, tolerance)
+            states, failure = _integrate_sparse(model, push, rates, state, unique, tolerance)
         else:
             states, failure = _integrate_dense(rates, jacobian, state, unique, tolerance)
         return states[back[: np.searchsorted(back, len(states))]], failure
@@ -188,7 +196,7 @@ def _integrate_dense(
 
 def _integrate_sparse(
     model: Model,
-    at: Callable[[float], Array],
+    push: Callable[[float], Array],
     rates: Callable[[Array, float], Array],
     state: Array,
     times: Array,
@@ -198,7 +206,7 @@ def _integrate_sparse(
 
     result = solve_ivp(
         lambda t, x: rates(x, t), (times[0], times[-1]), state, method="BDF", t_eval=times, rtol=tolerance,
-        atol=tolerance * _VOLTS, jac=lambda t, x: model.jacobian(x, at(t)),
+        atol=tolerance * _VOLTS, jac=lambda t, x: model.jacobian(x, push(t)),
     )  # fmt: skip
     failure = "" if result.success else f"The integration stopped at {result.t[-1]:.4g} s."
     return result.y.T, failure

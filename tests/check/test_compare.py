@@ -63,7 +63,7 @@ def test_a_sound_board_follows_and_says_where_its_error_comes_from() -> None:
     assert found.budget[0].cause == "bandwidth"
     assert budget["bandwidth"] == pytest.approx(found.max_error_percent, rel=0.02)
     assert budget["rounding"] < 0.01
-    assert 0.01 < budget["switch resistance 10 % off"] < 2.0
+    assert 0.01 < budget["switch resistance, if 10 % off"] < 2.0
     assert "multiplier bandwidth" not in budget
 
 

@@ -19,7 +19,9 @@ def poles(circuit: Circuit) -> np.ndarray:
     """Eigenvalues of the board around zero volts [1/s]."""
     model = Model(build_network(circuit))
     network = model.network
-    return np.linalg.eigvals(model.jacobian(np.zeros(len(network.states)), np.ones(network.rate_input.shape[1])))
+    return np.linalg.eigvals(
+        model.jacobian(np.zeros(len(network.states)), model.push(np.ones(network.rate_input.shape[1])))
+    )
 
 
 def figures(**more: float):
@@ -149,7 +151,7 @@ def test_capacitors_in_a_loop_share_their_charge() -> None:
 def test_jacobian_is_the_derivative_of_the_rates(swing: float) -> None:
     model = Model(build_network(van_der_pol()))
     state = np.linspace(-swing, swing, len(model.network.states))
-    step, inputs = 1e-6, np.ones(1)
+    step, inputs = 1e-6, model.push(np.ones(1))
     numeric = np.array([
         (model.rates(state + step * e, inputs) - model.rates(state - step * e, inputs)) / (2 * step)
         for e in np.eye(len(state))
