@@ -14,15 +14,15 @@ _LONGEST = 160
 _AROUND = 60
 
 
-def place_of(fault: Fault, text: str, spans: Mapping[str, Span]) -> Span:
-    """Span of a fault in the whole text; the nearest enclosing key where its own is not in the file."""
+def place_of(fault: Fault, text: str, spans: Mapping[str, Span]) -> Span | None:
+    """Span of a fault in the whole text, of the nearest enclosing key where its own is not in the file, or None."""
     if not fault.key:
-        return fault.span or (0, 0)
+        return fault.span
     key = fault.key
     while key and key not in spans:
         key = key[: max(key.rfind("."), key.rfind("["), 0)]
     if not key:
-        return (0, 0)
+        return None
     start, end = spans[key]
     if fault.span is None or key != fault.key or text[start : start + 1] not in ('"', "'"):
         return (start, end)
@@ -45,13 +45,13 @@ def render(faults: Iterable[Fault], *, text: str, file: str, spans: Mapping[str,
     starts = [0, *(i + 1 for i, letter in enumerate(text) if letter == "\n")]
     blocks = []
     for fault in faults:
-        start, end = place_of(fault, text, spans)
+        place = place_of(fault, text, spans)
+        start, end = place or (0, 0)
         number = bisect_right(starts, min(start, len(text)))
         first = starts[number - 1]
         last = starts[number] - 1 if number < len(starts) else len(text)
         head = f"{file}:{number}:{start - first + 1}: {fault.found} {fault.remedy}".rstrip()
-        nowhere = not fault.key and fault.span is None
-        lines = [] if nowhere else _marked(text[first:last], start - first, end - first)
+        lines = _marked(text[first:last], start - first, end - first) if place else []
         blocks.append("\n".join([_printable(head), *lines]))
     return "\n".join(blocks)
 
@@ -69,7 +69,7 @@ def rendered(error: ProblemFaults, problem: Problem) -> ProblemFaults:
 
 def in_file_order(faults: Iterable[Fault], text: str, spans: Mapping[str, Span]) -> list[Fault]:
     """Faults sorted by place, equal ones once."""
-    return sorted(dict.fromkeys(faults), key=lambda fault: place_of(fault, text, spans))
+    return sorted(dict.fromkeys(faults), key=lambda fault: place_of(fault, text, spans) or (0, 0))
 
 
 def _marked(line: str, start: int, end: int) -> list[str]:

@@ -68,7 +68,8 @@ def _evaluate(reading: Reading, trees: Mapping[str, Node]) -> None:
 
 
 def _report_circle(reading: Reading, trees: Mapping[str, Node], circle: list[str]) -> None:
-    first = next(name for name in trees if name in circle)
+    members = set(circle)
+    first = next(name for name in trees if name in members)
     turned = circle[circle.index(first) : -1] + circle[: circle.index(first)] + [first]
     shown_part = turned if len(turned) <= 10 else [*turned[:9], "...", first]
     origin = trees[first].origin

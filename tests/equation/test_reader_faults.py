@@ -370,7 +370,8 @@ def test_offsets_inside_strings(inside, position):
 
 
 def test_render_without_a_place():
-    assert render([Fault("A.", "B.")], text="x\ny", file="f", spans={}) == "f:1:1: A. B."
+    for fault in (Fault("A.", "B."), Fault("A.", "B.", "start.x")):
+        assert render([fault], text="x\ny", file="f", spans={}) == "f:1:1: A. B."
 
 
 def test_a_circle_leaves_the_other_formulas_checked():
