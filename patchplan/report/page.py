@@ -100,7 +100,7 @@ def static_table(plan: Plan, start: Mapping[str, float]) -> Table:
     for node, meaning in plan.circuit.nodes.items():
         if node in start:
             allowed = _HOLD_TOLERANCE_VOLTS + _HOLD_TOLERANCE * abs(start[node])
-            rows.append((node, meaning.signal, f"{start[node]:+.3f} V", f"± {allowed:.2f} V"))
+            rows.append((node, meaning.signal, f"{start[node]:+z.3f} V", f"± {allowed:.2f} V"))
     return Table(
         "Static check", ("node", "signal", "expected", "allowed"), tuple(rows), frozenset({2, 3}), words.STATIC_NOTE
     )

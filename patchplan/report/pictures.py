@@ -15,7 +15,7 @@ from patchplan.circuit.records import NodeMap
 from patchplan.quantity import engineering
 from patchplan.report import style
 from patchplan.report.records import Plan
-from patchplan.report.tables import swing_volts
+from patchplan.report.tables import swing_volts, swinging
 from patchplan.report.words import percent, plain
 
 if TYPE_CHECKING:
@@ -63,8 +63,8 @@ def unused_name(stem: str, name: str, suffix: str, taken: Iterable[str]) -> str:
 def signal_picture(plan: Plan, curve: Curve, node: NodeMap) -> Figure:
     """The circuit over the equation's solution, and their difference below on the same time axis."""
     figure = _figure(style.SIGNAL_HEIGHT)
-    upper = figure.add_axes((0.13, 0.40, 0.75, 0.50))
-    lower = figure.add_axes((0.13, 0.12, 0.75, 0.21), sharex=upper)
+    upper = figure.add_axes((0.13, 0.40, 0.74, 0.50))
+    lower = figure.add_axes((0.13, 0.12, 0.74, 0.21), sharex=upper)
     _signal_panel(upper, plan, curve, node)
     _difference_panel(lower, plan, curve)
     return figure
@@ -77,7 +77,7 @@ def _signal_panel(axes: Axes, plan: Plan, curve: Curve, node: NodeMap) -> None:
     seen = np.concatenate([curve.reference, curve.circuit])
     axes.set_ylim(*_view(seen[np.isfinite(seen)], _limits_in_units(node)))
     axes.set_xlim(float(curve.times[0]), float(curve.times[-1]))
-    axes.set_ylabel(f"{curve.name} [problem units]")
+    _label(axes, f"{curve.name} [problem units]", -0.11)
     axes.tick_params(labelbottom=False)
     axes.legend(loc="lower right", bbox_to_anchor=(1.0, 1.0), ncols=2, borderaxespad=0.2)
     volts = _volts_axis(axes, node)
@@ -90,7 +90,7 @@ def _volts_axis(axes: Axes, node: NodeMap) -> Axes:
     """Right axis with the same curve in volts; it runs downwards where the node carries the negative."""
     volts = axes.twinx()
     volts.set_ylim(*(node.sign * node.volts_per_unit * end + node.offset_volts for end in axes.get_ylim()))
-    volts.set_ylabel(f"v({node.node}) [V]")
+    _label(volts, f"v({node.node}) [V]", 1.11)
     # The band belongs to the volts, the curves to the units, and the curves must lie on top.
     axes.set_zorder(volts.get_zorder() + 1)
     axes.patch.set_visible(False)
@@ -106,11 +106,12 @@ def _band(volts: Axes, limit: float) -> None:
     for edge in (-limit, limit):
         if low <= edge <= high:
             volts.axhline(edge, **style.EDGE_LINE)
-            on_top = (edge > 0) != down
-            label, shift = f"limit {edge:+.3g} V", -2 if on_top else 2
+            # The label stands outside the band, where no curve should be.
+            above = (edge > 0) != down
             volts.annotate(
-                label, (0.01, edge), (0, shift), va="top" if on_top else "bottom", fontsize=style.SMALL, **place
-            )
+                f"limit {edge:+.3g} V", (0.01, edge), (0, 1.5 if above else -1.5), fontsize=style.SMALL,
+                va="bottom" if above else "top", **place,
+            )  # fmt: skip
 
 
 def _difference_panel(axes: Axes, plan: Plan, curve: Curve) -> None:
@@ -119,15 +120,28 @@ def _difference_panel(axes: Axes, plan: Plan, curve: Curve) -> None:
     axes.plot(*thinned(curve.times, difference), **style.DIFFERENCE_LINE)
     reach = 1.15 * float(np.max(np.abs(difference), initial=0.0, where=np.isfinite(difference))) or 1.0
     axes.set_ylim(-reach, reach)
-    axes.set_ylabel("difference\n[problem units]", fontsize=style.SMALL)
+    _label(axes, "difference\n[problem units]", -0.11)
     axes.set_xlabel(f"problem time [{plan.system.time_unit}]; 1 {plan.system.time_unit} takes "
                     f"{engineering(plan.sizing.time_scale, 's')} on the board")  # fmt: skip
     base = error_base(plan, curve)
     right = axes.twinx()
     right.set_ylim(-100 * reach / base, 100 * reach / base)
-    right.set_ylabel("[% of peak]")
+    _label(right, "[% of peak]", 1.11)
     if plan.verdict.horizon is not None:
         _horizon(axes, plan.verdict.horizon)
+
+
+def _label(axes: Axes, text: str, place: float) -> None:
+    """Name of a y axis at a fixed place, so that the panels of a picture agree, and few ticks."""
+    axes.set_ylabel(text, fontsize=style.LABEL)
+    axes.yaxis.set_label_coords(place, 0.5)
+    axes.yaxis.set_major_locator(_few_ticks())
+
+
+def _few_ticks() -> Any:
+    from matplotlib.ticker import MaxNLocator
+
+    return MaxNLocator(4, steps=[1, 2, 2.5, 5, 10])
 
 
 def error_base(plan: Plan, curve: Curve) -> float:
@@ -153,17 +167,18 @@ def _horizon(axes: Axes, time: float) -> None:
 
 def swing_picture(plan: Plan) -> Figure:
     """Swing of every node against its limits, those closest to their limit first."""
-    assert plan.circuit is not None
-    rows = [(*swing_volts(plan, node), node.limit_volts, node) for node in plan.circuit.nodes.values()]
+    rows = [(*swing_volts(plan, node), node.limit_volts, node) for node in swinging(plan)]
     rows = sorted(rows, key=lambda row: -max(-row[0], row[1]) / row[2])[:MOST_ROWS]
     low, high, limit = (np.array(column) for column in tuple(zip(*rows, strict=True))[:3])
     share = np.maximum(-low, high) / limit
+    failed = {peak.node for peak in plan.verdict.nodes if not peak.ok}
+    over = [node.node in failed for *_, node in rows]
     places = range(len(rows))
     figure, axes = _chart(len(rows), "Node swings against their limits")
     axes.barh(places, 2 * limit, 0.84, -limit, color=style.LIGHT["sand"], alpha=style.BAND_OPACITY)
-    axes.barh(places, high - low, 0.42, low, color=[style.LIGHT["over" if s > 1 else "inside"] for s in share])
-    for place, (edge, used) in enumerate(zip(limit, share, strict=True)):
-        text = f" {100 * used:.0f} % of {plain(edge)} V" + (", over" if used > 1 else "")
+    axes.barh(places, high - low, 0.42, low, color=[style.LIGHT["over" if bad else "inside"] for bad in over])
+    for place, (edge, used, bad) in enumerate(zip(limit, share, over, strict=True)):
+        text = f" {100 * used:.0f} % of {plain(edge)} V" + (", over" if bad else "")
         axes.text(edge * max(used, 1.0), place, text, va="center", fontsize=style.SMALL)
     widest = float(np.max(limit * np.maximum(share, 1.0)))
     axes.set_xlim(-1.08 * widest, 1.45 * widest)
@@ -210,7 +225,7 @@ def _view(seen: Array, limits: tuple[float, float]) -> tuple[float, float]:
     low, high = (float(seen.min()), float(seen.max())) if seen.size else (-1.0, 1.0)
     if high - low > 0.25 * (limits[1] - limits[0]):
         low, high = min(low, limits[0]), max(high, limits[1])
-    pad = 0.06 * (high - low) or 0.1 * abs(high) or 1.0
+    pad = 0.09 * (high - low) or 0.1 * abs(high) or 1.0
     return low - pad, high + pad
 
 

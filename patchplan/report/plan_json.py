@@ -18,6 +18,8 @@ from patchplan.sizing.records import Sizing, StageSizing
 from patchplan.version import __version__
 
 CONTRACT = 1
+#: What a node carries, by the kind of the stage that drives it.
+ROLES = {"integrator": "state", "summer": "signal", "inverter": "signal", "multiplier": "product"}
 
 
 def plan_data(plan: Plan, files: Sequence[str] = ()) -> dict[str, Any]:
@@ -43,7 +45,7 @@ def plan_data(plan: Plan, files: Sequence[str] = ()) -> dict[str, Any]:
         "time_scale_window": [rounded(end) for end in sizing.window],
         "time_scale_limits": list(sizing.limits),
         "check": _check(plan.verdict),
-        "signals": [_signal(plan, meaning) for meaning in plan.circuit.nodes.values()] if plan.circuit else [],
+        "signals": _signals(plan, plan.circuit) if plan.circuit else [],
         "stages": [_stage(plan, stage) for stage in plan.patch.stages] if plan.circuit else [],
         "counts": dict(sorted(plan.patch.counts().items())),
         "sign_stages_lower_bound": plan.patch.sign_stages_lower_bound,
@@ -170,13 +172,18 @@ def _stage(plan: Plan, stage: Stage) -> dict[str, Any]:
     }
 
 
-def _signal(plan: Plan, meaning: NodeMap) -> dict[str, Any]:
+def _signals(plan: Plan, circuit: Circuit) -> list[dict[str, Any]]:
+    return [_signal(plan, circuit, meaning) for meaning in circuit.nodes.values()]
+
+
+def _signal(plan: Plan, circuit: Circuit, meaning: NodeMap) -> dict[str, Any]:
     low, high = units_range(plan, meaning)
     peak = max(abs(meaning.volts_per_unit * end * meaning.sign + meaning.offset_volts) for end in (low, high))
     return {
         "name": meaning.signal,
         "node": meaning.node,
-        "role": meaning.role,
+        "role": ROLES.get(meaning.role, meaning.role),
+        "watched": meaning.node in circuit.watched.values(),
         "volts_per_unit": rounded(meaning.volts_per_unit),
         "sign": meaning.sign,
         "offset_volts": rounded(meaning.offset_volts),

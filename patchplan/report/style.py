@@ -33,6 +33,7 @@ ROW_HEIGHT = 0.27
 CHART_MARGIN = 1.0
 #: Points.
 SMALL = 7.5
+LABEL = 8.5
 
 #: Comes with matplotlib, so that text is laid out alike everywhere.
 SANS = ("DejaVu Sans",)

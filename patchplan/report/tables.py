@@ -10,7 +10,7 @@ from typing import Any
 
 import numpy as np
 
-from patchplan.circuit.records import Circuit, NodeMap, Part
+from patchplan.circuit.records import KINDS, Circuit, NodeMap, Part
 from patchplan.quantity import engineering
 from patchplan.report.plan_json import transfer_gains, units_range
 from patchplan.report.records import Plan
@@ -37,10 +37,15 @@ class Table:
 
 def node_table(plan: Plan) -> Table:
     """What each node carries: signal, volts per unit, swing and share of its limit."""
-    circuit = plan.circuit
-    rows = [] if circuit is None else [_node_row(plan, meaning) for meaning in circuit.nodes.values()]
+    rows = [_node_row(plan, meaning) for meaning in swinging(plan)]
     headers = ("node", "signal", "one unit is", "swings", "of limit")
     return Table("Nodes", headers, tuple(rows), frozenset({2, 3, 4}))
+
+
+def swinging(plan: Plan) -> list[NodeMap]:
+    """The signal nodes of the board but for its constants."""
+    nodes = plan.circuit.nodes.values() if plan.circuit else ()
+    return [meaning for meaning in nodes if meaning.role != "reference"]
 
 
 def _node_row(plan: Plan, meaning: NodeMap) -> tuple[str, ...]:
@@ -48,7 +53,7 @@ def _node_row(plan: Plan, meaning: NodeMap) -> tuple[str, ...]:
     share = max(abs(low), abs(high)) / meaning.limit_volts if meaning.limit_volts else 0.0
     unit = engineering(meaning.sign * meaning.volts_per_unit, "V")
     offset = f" + {plain(meaning.offset_volts)} V" if meaning.offset_volts else ""
-    return meaning.node, meaning.signal, unit + offset, f"{low:.1f} … {high:.1f} V", f"{100 * share:.0f} %"
+    return meaning.node, meaning.signal, unit + offset, f"{low:z.1f} … {high:z.1f} V", f"{100 * share:.0f} %"
 
 
 def swing_volts(plan: Plan, meaning: NodeMap) -> tuple[float, float]:
@@ -88,16 +93,19 @@ def _stage_row(plan: Plan, index: int) -> tuple[str, ...]:
         inputs = ", ".join(f"{wire.source} × {plain(gain, 4)}{unit}" for wire, gain in gains)
     if stage.kind == "integrator" and values and values.feedback:
         inputs += f", DC limit {engineering(values.feedback, 'Ω')}"
-    start = f"{values.start_volts:.3f} V" if values and stage.kind == "integrator" else ""
+    start = f"{values.start_volts:z.3f} V" if values and stage.kind == "integrator" else ""
     return stage.name, stage.kind, stage.node, inputs, start
 
 
 def parts_table(circuit: Circuit) -> Table:
-    """Parts gathered by kind and value."""
-    groups: dict[tuple[str, str, str], list[str]] = {}
+    """What to buy: parts gathered by kind and value, sections by package."""
+    groups: dict[tuple[int, float, str, str, str], dict[str, None]] = {}
     for part in circuit.parts:
-        groups.setdefault((part.kind, value_text(part), part.model), []).append(part.ref)
-    rows = tuple((str(len(refs)), *key, _shortened(refs)) for key, refs in groups.items())
+        if part.kind != "source":
+            order = (list(KINDS).index(part.kind), part.total or part.value)
+            bought = groups.setdefault((*order, part.kind, value_text(part), part.model), {})
+            bought[part.package or part.ref] = None
+    rows = tuple((str(len(refs)), *key[2:], _shortened(list(refs))) for key, refs in sorted(groups.items()))
     return Table("Parts", ("count", "kind", "value", "type", "references"), rows, frozenset({0}))
 
 

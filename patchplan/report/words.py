@@ -42,18 +42,14 @@ def headline(plan: Plan) -> str:
         return f"Does not work: {_list([n.node for n in verdict.nodes if not n.ok])} would leave the linear range."
     if verdict.verdict == "inaccurate":
         return f"Does not follow the equation closely enough: the error reaches {largest} of peak."
-    limit = min((n.limit_volts for n in verdict.nodes), default=math.inf)
     within = f"Follows the equation within {largest} of peak"
     if verdict.horizon is not None:
         unit = plan.system.time_unit
         within += f" up to {plain(verdict.horizon)} {unit}, as far as a chaotic system can be followed"
     spread = percent(verdict.spread_percent)
-    inside = (
-        f"; every node stays inside {plain(limit)} V"
-        if len({n.limit_volts for n in verdict.nodes}) == 1
-        else ("; every node stays inside its limit")
-    )
-    return f"{within} (boards spread {spread}){inside}."
+    driven = {node.limit_volts for node in plan.circuit.nodes.values() if node.role not in ("source", "reference")}
+    inside = f"inside {driven.pop():.1f} V" if len(driven) == 1 else "inside its limit"
+    return f"{within} (boards spread {spread}); every node stays {inside}."
 
 
 def reasons(plan: Plan) -> tuple[str, ...]:
@@ -104,12 +100,14 @@ def made_of(plan: Plan) -> str:
     counts, patch = plan.patch.counts(), plan.patch
     pieces = [counted(counts.get(kind, 0), kind) for kind in ("integrator", "summer", "inverter", "multiplier")]
     if patch.sign_stages and patch.sign_stages <= patch.sign_stages_lower_bound:
-        pieces[2] += f" ({counted(patch.sign_stages, 'sign stage')}, the fewest possible)"
-    sentence = _list([p for p in pieces if not p.startswith("no ") or p.endswith("multiplier")])
+        pieces[2] += " (fewest possible)"
+    sentence = ", ".join(p for p in pieces if not p.startswith("no ") or p.endswith("multiplier"))
     if plan.circuit is None:
         return sentence + "."
-    packages = {p.package for p in plan.circuit.parts if p.package}
-    return f"{sentence}; {counted(len(packages), 'package')}, {counted(len(plan.circuit.parts), 'part')}."
+    parts = [p for p in plan.circuit.parts if p.kind != "source"]
+    packages = {p.package for p in parts if p.package}
+    to_fit = len(packages) + sum(not p.package for p in parts)
+    return f"{sentence}; {counted(len(packages), 'package')}, {counted(to_fit, 'part')}."
 
 
 def largest_error(plan: Plan) -> str:
@@ -163,9 +161,11 @@ def _factor(factor: float) -> str:
 
 
 def _times(factor: float) -> str:
-    """Factors from 1000 up with blanks between groups."""
+    """Factors from 1000 up with blanks between groups, small ones as fractions."""
     if not math.isfinite(factor):
         return "any number of"
+    if factor < 0.1:
+        return f"1/{_times(1 / factor)}"
     return f"{float(f'{factor:.3g}'):,.0f}".replace(",", " ") if factor >= 1000 else plain(factor)
 
 

@@ -86,9 +86,9 @@ def circuit(sources: dict[str, Source]) -> Circuit:
     )
     nodes = {
         "drive": NodeMap("drive", "drive", 1, 20.0, 0.0, 12.0, "source"),
-        "x": NodeMap("x", "x", 1, 20.0, 0.0, 12.0, "watched"),
-        "x_d": NodeMap("x_d", "x'", -1, 41.2345678912345 / 4, 2.5, 12.0, "watched"),
-        "x_n": NodeMap("x_n", "x", -1, 20.0, 0.0, 12.0, "signal"),
+        "x": NodeMap("x", "x", 1, 20.0, 0.0, 12.0, "integrator"),
+        "x_d": NodeMap("x_d", "x'", -1, 41.2345678912345 / 4, 2.5, 12.0, "integrator"),
+        "x_n": NodeMap("x_n", "x", -1, 20.0, 0.0, 12.0, "inverter"),
     }
     watched = {"x": "x", "x'": "x_d"}
     return Circuit(parts, nodes, watched, OP_AMP, MULTIPLIER, (-15.0, 15.0), SCALE, 0.06, "once", sources)

@@ -18,7 +18,7 @@ from tests.report.test_plan_json import unbuildable
 def test_summary_answers_in_order(plan):
     text = summary(plan, Path("outputs/plain"))
     wanted = [
-        "Plain oscillator", "Follows the equation within 0.31 % of peak (boards spread 0.9 %)", "stays inside 12 V",
+        "Plain oscillator", "Follows the equation within 0.31 % of peak (boards spread 0.9 %)", "stays inside 12.0 V",
         "Runs 100 times faster than real time", "2 integrators, 1 inverter", "node signal", "-9.0 … 9.0 V", "75 %",
         "Largest error: gain-bandwidth of INT2, 0.22 %.", "Written to outputs/plain (start with report.html)",
     ]  # fmt: skip
