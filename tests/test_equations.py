@@ -21,6 +21,8 @@ from tests.plans import EQUATIONS, Plans
 NAMES = sorted(path.stem for path in EQUATIONS.glob("*.toml"))
 #: Lorenz is run far beyond what can be followed; no other problem has exponential sensitivity.
 CHAOTIC = ("lorenz",)
+#: Scales are found in logs; their last digits are not to decide.
+ROUNDED = 1e-9
 
 
 def test_there_are_enough_problems() -> None:
@@ -35,7 +37,7 @@ def test_follows(plans: Plans, name: str) -> None:
     verdict = plan.verdict
     assert verdict.verdict == "follows", (verdict.max_error_percent, [n for n in verdict.nodes if not n.ok])
     assert verdict.max_error_percent < 5
-    assert all(node.ok and node.peak_volts <= node.limit_volts for node in verdict.nodes)
+    assert all(node.ok for node in verdict.nodes)
     assert (verdict.horizon is not None) == (name in CHAOTIC)
     assert {s.name for s in verdict.signals} == {signal for signal, _ in plan.system.watch}
 
@@ -54,12 +56,13 @@ def free_nodes(plan: Plan) -> dict[str, str]:
     """Nodes whose scale the planner may choose, with their kind.
 
     Not free: the reference; products (their volts follow from both factors and the multiplier's scale); what a terminal
-    dictates; steps and pulses, which the board switches from its own reference.
+    dictates; steps and pulses, which the board switches from its own reference; inverters, which repeat the volts of
+    their source.
     """
     switched = {name for name, source in plan.patch.sources.items() if not source.external}
     kinds = {s.node: s.kind for s in plan.patch.stages}
     fixed = {s.node for s in plan.patch.stages if s.signal in plan.form.scales or s.signal in switched}
-    return {n: k for n, k in kinds.items() if k not in ("reference", "multiplier") and n not in fixed}
+    return {n: k for n, k in kinds.items() if k not in ("reference", "multiplier", "inverter") and n not in fixed}
 
 
 @pytest.mark.parametrize("name", NAMES)
@@ -68,8 +71,8 @@ def test_nodes_use_their_swing(plans: Plans, name: str) -> None:
     plan = plans.of(name)
     scales = plan.sizing.scales
     use = {node: scales[node].peak_volts / scales[node].limit_volts for node in free_nodes(plan)}
-    assert {node: share for node, share in use.items() if not 0.5 <= share <= 0.95} == {}
-    assert all(scale.peak_volts <= scale.limit_volts for scale in scales.values())
+    assert {node: share for node, share in use.items() if not 0.5 - ROUNDED <= share <= 0.95 + ROUNDED} == {}
+    assert {n: s for n, s in scales.items() if s.peak_volts > s.limit_volts * (1 + ROUNDED)} == {}
 
 
 @pytest.mark.parametrize("name", NAMES)
@@ -79,9 +82,15 @@ def test_coefficients_are_realised(plans: Plans, name: str) -> None:
     assert plan.sizing.coefficients
     # 5 %: half the widest gap of E24 (IEC 60063); what a single nearest value would leave.
     assert max(abs(c.error_percent) for c in plan.sizing.coefficients) < 5
-    low, high = plan.sizing.window
-    assert low <= plan.sizing.time_scale <= high
-    assert all(plan.sizing.limits)
+
+
+@pytest.mark.parametrize("name", NAMES)
+def test_speed_is_inside_its_window(plans: Plans, name: str) -> None:
+    """The window's ends say what sets them; no plan runs outside."""
+    sizing = plans.of(name).sizing
+    low, high = sizing.window
+    assert low <= sizing.time_scale <= high, sizing.limits
+    assert all(sizing.limits)
 
 
 @pytest.mark.parametrize("name", ["motor_speed_loop", "pickup_filter"])
@@ -91,11 +100,9 @@ def test_real_time_is_real_time(plans: Plans, name: str) -> None:
     assert plan.circuit is not None
     assert plan.sizing.time_scale == 1.0
     for signal, terminal in plan.problem.terminals.items():
-        nodes = [node for node in plan.circuit.nodes.values() if node.signal == signal]
-        assert nodes
-        for node in nodes:
-            # 1 %: the last coefficients are rounded, the terminal's scale is one of the fitted factors.
-            assert node.volts_per_unit == pytest.approx(float(terminal.volts_per_unit), rel=0.01)
+        node = plan.circuit.nodes[plan.circuit.watched.get(signal, signal)]
+        assert node.signal in (signal, f"{signal}.out")
+        assert node.sign * node.volts_per_unit == pytest.approx(float(terminal.volts_per_unit), rel=1e-6)
 
 
 def test_integrator_has_a_dc_limit(plans: Plans) -> None:

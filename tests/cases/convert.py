@@ -8,9 +8,9 @@ from typing import Any
 
 Case = dict[str, Any]
 
-#: Cases with functions or quotients of states, with the text that the refusal must name.
+#: Cases with functions of states, with the function that the refusal must name.
 FUNCTIONS_OF_STATES = {
-    "detest_D1_two_body_ecc_0p1": "x^2",
+    "detest_D1_two_body_ecc_0p1": "root",
     "pendulum_1rad_one_period": "sin",
     "gompertz_growth_log": "log",
     "diode_rc_forced": "exp",
