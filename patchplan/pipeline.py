@@ -11,7 +11,9 @@ from patchplan.circuit.build import build_circuit
 from patchplan.circuit.catalogue import load_catalogue
 from patchplan.circuit.target import target_of
 from patchplan.equation.explicit import build_system
+from patchplan.equation.faults import rendered
 from patchplan.equation.problem import Problem
+from patchplan.errors import ProblemFaults
 from patchplan.form.offsets import find_form
 from patchplan.patch.build import build_patch
 from patchplan.ranges import find_ranges
@@ -61,7 +63,10 @@ def plan(
     """
     best: Plan | None = None
     for choices in _short_list(think):
-        found = plan_with(problem, choices, accept=accept, progress=progress)
+        try:
+            found = plan_with(problem, choices, accept=accept, progress=progress)
+        except ProblemFaults as error:
+            raise rendered(error, problem) from None
         if best is None or _merit(found) < _merit(best):
             best = found
         if best.verdict.verdict == "follows" and best.verdict.max_error_percent < accept / 5:

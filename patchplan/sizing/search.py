@@ -12,6 +12,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 Array = NDArray[np.float64]
+#: Weight of the largest coefficient error against the largest predicted error when the rest is shared out.
+ROW_SHARE = 0.3
 
 
 @dataclass(frozen=True)
@@ -43,11 +45,19 @@ class Loops:
         Square root of the error measure, shape ``(n_rows, n_rows)``.
     base
         Shape ``(n_rows,)``.
+    fit
+        Least-squares theta of residuals, shape ``(n_theta, n_rows)``.
     """
 
     basis: Array
     shape: Array
     base: Array
+    fit: Array
+
+    def outside(self, residual: Array, low: Array, high: Array) -> float:
+        """How far the best theta lies outside its bounds, in logs: about what staying inside costs in error."""
+        theta = self.fit @ (self.shape @ residual + self.base)
+        return float(np.max(np.maximum(low - theta, theta - high), initial=0.0))
 
     def errors(self, residual: Array) -> Array:
         """Loop errors of residuals r - b, shape ``(n_loops,)``."""
@@ -69,7 +79,7 @@ def find_loops(matrix: Array, effect: Effect) -> Loops:
     q, shape = qr(stacked, mode="economic")
     base = q[:points].T @ (effect.base / np.sqrt(max(points, 1)))
     basis = null_space((shape @ matrix).T) if matrix.shape[1] else np.eye(rows)
-    return Loops(basis, shape, base)
+    return Loops(basis, shape, base, np.linalg.pinv(shape @ matrix))
 
 
 def loop_errors(matrix: Array, residual: Array) -> Array:
@@ -140,7 +150,8 @@ def descend(loops: Loops, incidence: Array, offset: Array, menu: Menu, start: Ar
 def split_rest(matrix: Array, residual: Array, effect: Effect, low: Array, high: Array) -> tuple[Array, float]:
     """Theta inside its bounds that shares the rest out, and the largest predicted error of a watched signal.
 
-    A linear program (HiGHS through scipy): least largest predicted error plus a twentieth of the largest row error.
+    A linear program (HiGHS through scipy): least sum of the largest predicted error and :data:`ROW_SHARE` times the
+    largest row error, so that coefficients which the watched signals hardly show stay near, too.
 
     Returns
     -------
@@ -158,7 +169,7 @@ def split_rest(matrix: Array, residual: Array, effect: Effect, low: Array, high:
     upper = np.block([[-seen, -point, none_p], [seen, -point, none_p], [-matrix, none_r, -one], [matrix, none_r, -one]])
     limits = np.concatenate([-share, share, -residual, residual])
     bounds = [*zip(low, high, strict=True), (0, None), (0, None)]
-    worst = linprog(np.r_[np.zeros(columns), 1.0, 0.05], A_ub=upper, b_ub=limits, bounds=bounds)
+    worst = linprog(np.r_[np.zeros(columns), 1.0, ROW_SHARE], A_ub=upper, b_ub=limits, bounds=bounds)
     if worst.x is None:
         return (low + high) / 2, float("inf")
     theta = np.asarray(worst.x, dtype=float)[:columns]

@@ -119,8 +119,10 @@ def _attempt(board: _Board, number: int, random: np.random.Generator) -> tuple[f
     menu = _menu(board, choices, centre)
     for _ in range(2):
         y = descend(board.loops, board.unknowns.incidence, board.constant - _shift(board, y), menu, y)
-    left = board.loops.errors(board.unknowns.incidence @ y - board.constant + _shift(board, y))
-    return float(np.sqrt(left @ left)), y, choices
+    residual = board.unknowns.incidence @ y - board.constant + _shift(board, y)
+    left = board.loops.errors(residual)
+    outside = board.loops.outside(residual, model.low, model.high)
+    return float(np.sqrt(left @ left)) + outside, y, choices
 
 
 def _choices(board: _Board, wanted: Array, picked: dict[tuple[str, int | str], float]) -> tuple[list[Choice], Array]:
