@@ -127,9 +127,7 @@ def _t_legs(resistors: tuple[float, ...], wanted: float) -> Choice:
 def start_ratios(resistors: tuple[float, ...]) -> Choice:
     """All ratios R2/R1 of two purchasable resistors, each with R2 nearest to :data:`START_FEEDBACK`."""
     values = np.array(resistors)
-    seconds = values[(values >= START_FEEDBACK / 4) & (values <= START_FEEDBACK * 5)]
-    if seconds.size == 0:
-        seconds = values
+    seconds = values[values <= START_FEEDBACK * 5] if values[0] <= START_FEEDBACK * 5 else values
     ratio = np.round(np.log(seconds[:, None] / values[None, :]), 9)
     order = np.argsort(np.abs(np.log(seconds / START_FEEDBACK)), kind="stable")
     best: dict[float, tuple[float, float]] = {}
