@@ -8,11 +8,11 @@ import time
 from pathlib import Path
 
 import numpy as np
-from patchplan.equation.explicit import build_system
 
 from patchplan.circuit.build import build_circuit
 from patchplan.circuit.catalogue import load_catalogue
 from patchplan.circuit.target import target_of
+from patchplan.equation.explicit import build_system
 from patchplan.equation.reader import read_problem
 from patchplan.form.offsets import find_form
 from patchplan.patch.build import build_patch
