@@ -77,41 +77,44 @@ def _signal_panel(axes: Axes, plan: Plan, curve: Curve, node: NodeMap) -> None:
     seen = np.concatenate([curve.reference, curve.circuit])
     axes.set_ylim(*_view(seen[np.isfinite(seen)], _limits_in_units(node)))
     axes.set_xlim(float(curve.times[0]), float(curve.times[-1]))
-    _label(axes, f"{curve.name} [problem units]", -0.11)
+    _label(axes, f"{curve.name} [problem units]")
     axes.tick_params(labelbottom=False)
     axes.legend(loc="lower right", bbox_to_anchor=(1.0, 1.0), ncols=2, borderaxespad=0.2)
-    volts = _volts_axis(axes, node)
-    _band(volts, node.limit_volts)
+    _band(axes, node)
+    _right_scale(axes, node.sign * node.volts_per_unit, node.offset_volts, f"v({node.node}) [V]")
     if plan.verdict.horizon is not None:
         _horizon(axes, plan.verdict.horizon)
 
 
-def _volts_axis(axes: Axes, node: NodeMap) -> Axes:
-    """Right axis with the same curve in volts; it runs downwards where the node carries the negative."""
-    volts = axes.twinx()
-    volts.set_ylim(*(node.sign * node.volts_per_unit * end + node.offset_volts for end in axes.get_ylim()))
-    _label(volts, f"v({node.node}) [V]", 1.11)
-    # The band belongs to the volts, the curves to the units, and the curves must lie on top.
-    axes.set_zorder(volts.get_zorder() + 1)
-    axes.patch.set_visible(False)
-    return volts
-
-
-def _band(volts: Axes, limit: float) -> None:
-    """Sand where the node may go, with its edges marked, as far as they lie in view."""
-    volts.axhspan(-limit, limit, color=style.LIGHT["sand"], alpha=style.BAND_OPACITY, linewidth=0)
-    low, high = sorted(volts.get_ylim())
-    down = volts.yaxis_inverted()
-    place: dict[str, Any] = {"xycoords": volts.get_yaxis_transform(), "textcoords": "offset points"}
-    for edge in (-limit, limit):
-        if low <= edge <= high:
-            volts.axhline(edge, **style.EDGE_LINE)
+def _band(axes: Axes, node: NodeMap) -> None:
+    """Sand where the node may go, with its edges marked in volts, as far as they lie in view."""
+    low, high = _limits_in_units(node)
+    axes.axhspan(low, high, color=style.LIGHT["sand"], alpha=style.BAND_OPACITY, linewidth=0)
+    bottom, top = axes.get_ylim()
+    place: dict[str, Any] = {"xycoords": axes.get_yaxis_transform(), "textcoords": "offset points"}
+    for edge, shift, side in ((low, -1.5, "top"), (high, 1.5, "bottom")):
+        if bottom <= edge <= top:
+            volts = node.sign * node.volts_per_unit * edge + node.offset_volts
+            axes.axhline(edge, **style.EDGE_LINE)
             # The label stands outside the band, where no curve should be.
-            above = (edge > 0) != down
-            volts.annotate(
-                f"limit {edge:+.3g} V", (0.01, edge), (0, 1.5 if above else -1.5), fontsize=style.SMALL,
-                va="bottom" if above else "top", **place,
-            )  # fmt: skip
+            axes.annotate(f"limit {volts:+.3g} V", (0.01, edge), (0, shift), va=side, fontsize=style.SMALL, **place)
+
+
+def _right_scale(axes: Axes, factor: float, offset: float, name: str) -> None:
+    """Scale at the right edge that reads ``factor * left + offset``.
+
+    Drawn by hand: a second set of axes on top of the first takes twice the time of everything else in the picture.
+    """
+    from matplotlib.markers import TICKRIGHT
+
+    ends = sorted(factor * end + offset for end in axes.get_ylim())
+    ticks = np.array([tick for tick in _few_ticks().tick_values(*ends) if ends[0] <= tick <= ends[1]])
+    edge: dict[str, Any] = {"transform": axes.get_yaxis_transform(), "clip_on": False}
+    heights = (ticks - offset) / factor
+    axes.plot(np.ones(ticks.size), heights, marker=TICKRIGHT, linestyle="", color=style.LIGHT["ink"], ms=3.5, **edge)
+    for tick, height in zip(ticks, heights, strict=True):
+        axes.text(1.015, height, f"{tick:z.4g}".replace("-", "\N{MINUS SIGN}"), va="center", **edge)
+    axes.text(1.11, 0.5, name, transform=axes.transAxes, rotation=90, ha="center", va="center", size=style.LABEL)
 
 
 def _difference_panel(axes: Axes, plan: Plan, curve: Curve) -> None:
@@ -120,21 +123,18 @@ def _difference_panel(axes: Axes, plan: Plan, curve: Curve) -> None:
     axes.plot(*thinned(curve.times, difference), **style.DIFFERENCE_LINE)
     reach = 1.15 * float(np.max(np.abs(difference), initial=0.0, where=np.isfinite(difference))) or 1.0
     axes.set_ylim(-reach, reach)
-    _label(axes, "difference\n[problem units]", -0.11)
+    _label(axes, "difference\n[problem units]")
     axes.set_xlabel(f"problem time [{plan.system.time_unit}]; 1 {plan.system.time_unit} takes "
                     f"{engineering(plan.sizing.time_scale, 's')} on the board")  # fmt: skip
-    base = error_base(plan, curve)
-    right = axes.twinx()
-    right.set_ylim(-100 * reach / base, 100 * reach / base)
-    _label(right, "[% of peak]", 1.11)
+    _right_scale(axes, 100 / error_base(plan, curve), 0.0, "[% of peak]")
     if plan.verdict.horizon is not None:
         _horizon(axes, plan.verdict.horizon)
 
 
-def _label(axes: Axes, text: str, place: float) -> None:
-    """Name of a y axis at a fixed place, so that the panels of a picture agree, and few ticks."""
+def _label(axes: Axes, text: str) -> None:
+    """Name of a left axis at a fixed place, so that the panels of a picture agree, and few ticks."""
     axes.set_ylabel(text, fontsize=style.LABEL)
-    axes.yaxis.set_label_coords(place, 0.5)
+    axes.yaxis.set_label_coords(-0.11, 0.5)
     axes.yaxis.set_major_locator(_few_ticks())
 
 
@@ -221,10 +221,13 @@ def thinned(times: Array, values: Array) -> tuple[Array, Array]:
 
 
 def _view(seen: Array, limits: tuple[float, float]) -> tuple[float, float]:
-    """Ends of the left axis: the curves, and the limits too where the curves use a fair part of them."""
+    """Ends of the left axis: the curves, and each limit that they use a fair part of."""
     low, high = (float(seen.min()), float(seen.max())) if seen.size else (-1.0, 1.0)
-    if high - low > 0.25 * (limits[1] - limits[0]):
-        low, high = min(low, limits[0]), max(high, limits[1])
+    middle, half = (limits[0] + limits[1]) / 2, (limits[1] - limits[0]) / 2
+    if low < middle - style.FAIR_PART * half:
+        low = min(low, limits[0])
+    if high > middle + style.FAIR_PART * half:
+        high = max(high, limits[1])
     pad = 0.09 * (high - low) or 0.1 * abs(high) or 1.0
     return low - pad, high + pad
 

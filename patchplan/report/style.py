@@ -26,6 +26,9 @@ ZERO_LINE: Mapping[str, Any] = {"color": LIGHT["quiet"], "linewidth": 0.6, "line
 #: Opacity of the sand band behind the curves.
 BAND_OPACITY = 0.35
 
+#: Part of a limit that a curve must use for the limit to be drawn.
+FAIR_PART = 0.35
+
 #: Inches.
 PICTURE_WIDTH = 7.4
 SIGNAL_HEIGHT = 4.2

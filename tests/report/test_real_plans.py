@@ -1,0 +1,75 @@
+"""plan.json and the folder of plans that the planner made."""
+
+from __future__ import annotations
+
+import json
+
+import jsonschema
+import numpy as np
+import pytest
+
+from patchplan.check.start import hold_state
+from patchplan.report.plan_json import plan_data, plan_text, rebuild
+from patchplan.report.write import plan_folder
+from tests.report.test_plan_json import SCHEMA
+
+NAMES = ("oscillator", "lorenz", "motor_speed_loop", "tank_level", "integrator")
+
+
+@pytest.fixture(params=NAMES)
+def plan(request, plans):
+    return plans.of(request.param)
+
+
+@pytest.fixture
+def data(plan):
+    return json.loads(plan_text(plan_data(plan, ["plan.json"])))
+
+
+def test_plan_holds_to_the_schema(data):
+    jsonschema.validate(data, SCHEMA)
+    assert data["signals"]
+    assert data["parts"]
+
+
+def test_circuit_that_came_back_starts_where_the_plan_starts(plan, data):
+    patch, _, circuit = rebuild(data["records"])
+    assert str(patch) == str(plan.patch)
+    assert str(circuit) == str(plan.circuit)
+    waveforms = plan.reach.reference.waveforms
+    again, first = hold_state(circuit, waveforms), hold_state(plan.circuit, waveforms)
+    assert again == pytest.approx(first, abs=1e-5)
+
+
+def test_gains_and_scales_are_the_coefficients_of_the_form(plan, data):
+    """Every wire of plan.json, turned back into problem units, is the coefficient that the Patch wants."""
+    scale = {row["node"]: row["sign"] * row["volts_per_unit"] for row in data["signals"]}
+    stages = {stage.name: stage for stage in plan.patch.stages}
+    seen = 0
+    for row in data["stages"]:
+        stage = stages[row["name"]]
+        if row["kind"] not in ("integrator", "summer", "inverter") or stage.bipolar:
+            continue
+        knob = float(plan.patch.knobs[stage.knob].value) if stage.knob else 1.0
+        speed = data["time_scale"] if row["kind"] == "integrator" else 1.0
+        for wire, entry in zip(stage.wires, row["inputs"], strict=False):
+            realised = -entry["gain"] * scale[entry["node"]] / scale[row["output"]] * speed / knob
+            # Fitting spreads a few percent over scale factors and speed; a wrong sign or scale is far off.
+            assert realised == pytest.approx(float(wire.coefficient), rel=0.12), (row["name"], entry)
+            seen += 1
+    assert seen
+
+
+def test_waveforms_give_the_watched_signal_back_from_volts(plan):
+    content = plan_folder(plan, pictures=False)["waveforms.csv"].decode().splitlines()
+    header = content[0].split(",")
+    table = dict(zip(header, np.loadtxt(content[1:], delimiter=",").T, strict=True))
+    for signal, node in plan.circuit.watched.items():
+        meaning = plan.circuit.nodes[node]
+        units = (table[f"v({node})"] - meaning.offset_volts) / (meaning.sign * meaning.volts_per_unit)
+        peak = np.abs(units).max()
+        np.testing.assert_allclose(table[f"{signal} circuit"], units, atol=0.005 * peak)
+
+
+def test_same_plan_gives_the_same_folder(plan):
+    assert plan_folder(plan) == plan_folder(plan)
