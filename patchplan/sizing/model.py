@@ -36,7 +36,7 @@ class Affine:
         slope = dict(self.slope)
         for column, value in other.slope.items():
             slope[column] = slope.get(column, 0.0) + sign * value
-        return Affine(self.constant + sign * other.constant, slope)
+        return Affine(self.constant + sign * other.constant, {c: v for c, v in slope.items() if v})
 
 
 @dataclass(frozen=True, slots=True)

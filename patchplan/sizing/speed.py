@@ -214,6 +214,6 @@ def _slow_ends(
     slow = bias_error(patch, sensitivity, target, scales, gains, 1e6)
     if slow > 0:
         # At a very slow speed every capacitor sits at its largest, so the error is proportional to the time scale.
-        text = f"bias current of {target.op_amp.name} and leakage cost {100 * END_ERROR:g} % of peak"
+        text = f"bias current of {target.op_amp.name} into the largest capacitor costs {100 * END_ERROR:g} % of peak"
         ends.append((1e6 * END_ERROR / slow, text))
     return ends or [(1.0, "no integrator limits it")]

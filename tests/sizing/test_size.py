@@ -1,0 +1,168 @@
+"""Values, scale factors and loops of whole sizings."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+from fractions import Fraction
+from math import isclose
+
+import numpy as np
+import pytest
+
+from patchplan.circuit.catalogue import load_catalogue
+from patchplan.circuit.target import target_of
+from patchplan.equation.problem import Build
+from patchplan.equation.system import System
+from patchplan.form.records import Form
+from patchplan.patch.build import build_patch
+from patchplan.ranges import find_ranges
+from patchplan.reach.reference import find_reach
+from patchplan.sensitivity import find_sensitivity
+from patchplan.sizing.size import size
+from tests.systems import knob, lorenz, system, term, van_der_pol
+
+
+def sized(made: System, *, build: Build | None = None, **options):
+    build = build or Build()
+    target = target_of(build, load_catalogue({}))
+    reach = find_reach(made, {}, build)
+    form = Form(made)
+    patch = build_patch(form, hold=build.run != "free")
+    ranges = find_ranges(patch, form, reach)
+    sensitivity = find_sensitivity(form, patch, ranges)
+    return patch, target, size(form, patch, ranges, sensitivity, target, run=build.run, **options)
+
+
+def gain(stage, index, sizing, target):
+    """Realised gain of a wire, from the values alone: 1/(R*C) slowed by the shared switch, or Rf/R."""
+    values = sizing.stages[stage.name]
+    leg = values.legs[index].transfer
+    if stage.kind == "integrator":
+        conductance = sum(1 / x.transfer for x in values.legs)
+        return 1 / (leg * values.capacitor * (1 + target.switch_on * conductance))
+    return values.feedback / leg
+
+
+@pytest.mark.parametrize("made", [van_der_pol(), replace(lorenz(), duration=Fraction(5))])
+def test_values_make_the_coefficients(made):
+    """Magnitude and time scaling (Korn and Korn 1956): gain = |a| * S / S_source / T, recomputed from the parts."""
+    patch, target, sizing = sized(made)
+    listed = {c.at: c for c in sizing.coefficients}
+    for stage in patch.stages:
+        if stage.kind != "integrator":
+            continue
+        for index, wire in enumerate(stage.wires):
+            ratio = sizing.scales[stage.node].volts_per_unit / sizing.scales[wire.source].volts_per_unit
+            realised = gain(stage, index, sizing, target) * sizing.time_scale / ratio
+            row = listed[f"{stage.node}<-{wire.source}"]
+            # Finite bandwidth slows the stage by up to sum(gains)/w_t, which the listed number includes.
+            assert isclose(realised, abs(row.realised), rel_tol=1e-4)
+            assert abs(row.error_percent) < 0.5
+
+
+def test_values_are_purchasable_and_inside_limits():
+    patch, target, sizing = sized(van_der_pol())
+    for stage in patch.stages:
+        values = sizing.stages[stage.name]
+        for leg in values.legs:
+            assert set(leg.resistors) <= set(target.resistors)
+        if stage.kind == "integrator":
+            assert values.capacitor in target.capacitors
+            assert values.start is not None
+
+
+@pytest.mark.parametrize("made", [van_der_pol(), replace(lorenz(), duration=Fraction(5))])
+def test_swings_use_half_to_most_of_the_limit(made):
+    patch, _, sizing = sized(made)
+    for stage in patch.stages:
+        if stage.kind == "integrator":
+            scale = sizing.scales[stage.node]
+            assert 0.5 - 1e-9 <= scale.peak_volts / scale.limit_volts <= 0.95 + 1e-9
+
+
+def test_start_volts_follow_from_the_start_resistors():
+    patch, target, sizing = sized(van_der_pol())
+    stage = next(s for s in patch.stages if s.signal == "y")
+    first, second = sizing.stages[stage.name].start
+    assert isclose(abs(sizing.stages[stage.name].start_volts), target.reference * second / first)
+    wanted = 2 * sizing.scales[stage.node].volts_per_unit
+    assert isclose(abs(sizing.stages[stage.name].start_volts), wanted, rel_tol=5e-3)
+
+
+def test_thinking_longer_is_never_worse_on_lorenz():
+    """The figure of merit is the coefficient error; nearest values make 3 % here."""
+    made = replace(lorenz(), duration=Fraction(5))
+    errors = []
+    for think in ("low", "high"):
+        _, _, sizing = sized(made, think=think)
+        errors.append(max(abs(e) for e in sizing.loop_errors))
+    assert errors[1] < 0.003
+    assert errors[1] <= errors[0] * 1.5
+
+
+def test_slow_real_time_gains_get_t_legs():
+    """Time constants of 100 s need 1e8 ohm at 1 uF: no single resistor of the series reaches that."""
+    made = system({"x": 1}, {"x": [term("-1/100", "x")]}, duration=200)
+    _, target, sizing = sized(made, speed="real time")
+    leg = sizing.stages["I1"].legs[0]
+    assert len(leg.resistors) == 3
+    assert leg.transfer > target.resistors[-1]
+    assert not sizing.faults
+
+
+def test_out_of_reach_is_a_sentence():
+    made = system({"x": 1}, {"x": [term("-1/1000000", "x")]}, duration=2_000_000)
+    _, _, sizing = sized(made, speed="real time")
+    assert "No purchasable value reaches the input x of I1" in sizing.faults[0]
+
+
+def test_dc_limit_only_in_a_free_run_with_a_slow_mode():
+    integrator = system({"x": 0}, {"x": [term(-1, "x"), term(1)]}, duration=20)
+    free = Build(run="free")
+    assert sized(integrator, build=free)[2].stages["I1"].feedback == 0
+    pure = system({"x": 0}, {"x": [term(1, "u")]}, sources=[sine()], duration=20)
+    assert sized(pure, build=free)[2].stages["I1"].feedback > 0
+    _, _, once = sized(pure)
+    assert once.stages["I1"].feedback == 0
+    assert any("holds what offsets push into it" in note for note in once.notes)
+
+
+def test_an_oscillator_gets_no_dc_limit():
+    made = system({"x": 1, "y": 0}, {"x": [term(1, "y")], "y": [term(-1, "x")]})
+    _, _, sizing = sized(made, build=Build(run="free"))
+    assert [sizing.stages[n].feedback for n in ("I1", "I2")] == [0, 0]
+
+
+def sine():
+    from patchplan.equation.syntax import parse_expression
+    from patchplan.equation.system import Source
+    from patchplan.equation.waveform import Waveform
+
+    return Source("u", Waveform(parse_expression("sin(2*t)")))
+
+
+def test_knob_feedback_is_the_nominal_gain():
+    made = system({"x": 1}, {"x": [term(-1, "x", knobs=["g"])]}, knobs=[knob("g", 1, 2, 4)])
+    patch, _, sizing = sized(made)
+    stage = next(s for s in patch.stages if s.knob)
+    values = sizing.stages[stage.name]
+    into, out = sizing.scales[stage.wires[0].source], sizing.scales[stage.node]
+    assert isclose(values.feedback / values.legs[0].transfer, 2 * out.volts_per_unit / into.volts_per_unit)
+
+
+def test_same_input_gives_the_same_values():
+    assert sized(van_der_pol())[2] == sized(van_der_pol())[2]
+
+
+def test_large_boards_take_the_linear_search():
+    """A ladder of 60 states: T_i' = T_(i-1) - 2 T_i + T_(i+1)."""
+    names = [f"T{i}" for i in range(60)]
+    rows = {n: [term(-2, n)] for n in names}
+    for low, high in zip(names[:-1], names[1:], strict=True):
+        rows[low].append(term(1, high))
+        rows[high].append(term(1, low))
+    rows["T0"].append(term(1))
+    made = system(dict.fromkeys(names, 0), rows, watch=["T59"], duration=100)
+    _, _, sizing = sized(made)
+    assert not sizing.faults
+    assert np.median([abs(c.error_percent) for c in sizing.coefficients]) < 1.0

@@ -1,0 +1,107 @@
+"""The window of the time scale: each end moves when the figure it names changes, and with no other."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+import pytest
+
+from patchplan.circuit.catalogue import load_catalogue
+from patchplan.circuit.target import target_of
+from patchplan.equation.problem import Build
+from patchplan.form.records import Form
+from patchplan.patch.build import build_patch
+from patchplan.ranges import find_ranges
+from patchplan.reach.reference import find_reach
+from patchplan.sensitivity import find_sensitivity
+from patchplan.sizing.records import Target
+from patchplan.sizing.speed import Speed, choose_speed
+from tests.systems import system, term, van_der_pol
+
+
+@pytest.fixture(scope="module")
+def target() -> Target:
+    return target_of(Build(), load_catalogue({}))
+
+
+@pytest.fixture(scope="module")
+def stages():
+    """A decay: lag hardly matters, so that other figures set the ends."""
+    made = system({"x": 1}, {"x": [term(-1, "x")]}, duration=5)
+    return parts_of(made)
+
+
+def parts_of(made):
+    reach = find_reach(made, {}, Build())
+    form = Form(made)
+    patch = build_patch(form)
+    ranges = find_ranges(patch, form, reach)
+    return form, patch, ranges, find_sensitivity(form, patch, ranges)
+
+
+#: One figure each, made worse by a factor.
+CHANGES = {
+    "op amp bandwidth": lambda t, f: replace(t, op_amp=replace(t.op_amp, gain_bandwidth=t.op_amp.gain_bandwidth / f)),
+    "op amp slew": lambda t, f: replace(t, op_amp=replace(t.op_amp, slew=t.op_amp.slew / f)),
+    "bias": lambda t, f: replace(t, op_amp=replace(t.op_amp, bias=t.op_amp.bias * f), switch_leakage=0.0),
+    "multiplier bandwidth": lambda t, f: replace(
+        t, multiplier=replace(t.multiplier, bandwidth=t.multiplier.bandwidth / f)
+    ),
+    "smallest R": lambda t, f: replace(t, resistors=tuple(r for r in t.resistors if r >= t.resistors[0] * f)),
+    "largest R": lambda t, f: replace(t, resistors=tuple(r for r in t.resistors if r <= t.resistors[-1] / f)),
+    "smallest C": lambda t, f: replace(t, capacitors=tuple(c for c in t.capacitors if c >= t.capacitors[0] * f)),
+    "largest C": lambda t, f: replace(t, capacitors=tuple(c for c in t.capacitors if c <= t.capacitors[-1] / f)),
+}
+
+
+def moved(stages, target: Target, factor: float) -> tuple[Speed, dict[str, tuple[bool, bool]]]:
+    """The window, and for each figure whether its fast and its slow end move when that figure gets a little worse."""
+    before = choose_speed(*stages, target)
+    moves = {}
+    for figure, change in CHANGES.items():
+        after = choose_speed(*stages, change(target, factor))
+        moves[figure] = tuple(abs(a / b - 1) > 1e-9 for a, b in zip(after.window, before.window, strict=True))
+    return before, moves
+
+
+def test_values_set_both_ends_of_a_decay(stages, target):
+    quick = replace(target, op_amp=replace(target.op_amp, gain_bandwidth=100 * target.op_amp.gain_bandwidth))
+    speed, moves = moved(stages, quick, 1.1)
+    assert "smallest resistor times smallest capacitor" in speed.limits[0]
+    assert "largest resistor times largest capacitor" in speed.limits[1]
+    assert {f for f, (fast, _) in moves.items() if fast} == {"smallest R", "smallest C"}
+    assert {f for f, (_, slow) in moves.items() if slow} == {"largest R", "largest C"}
+
+
+def test_bandwidth_sets_the_fast_end_of_an_oscillator(target):
+    made = system({"x": 1, "y": 0}, {"x": [term(1, "y")], "y": [term(-1, "x")]}, duration=60)
+    speed, moves = moved(parts_of(made), target, 1.6)
+    assert speed.limits[0].startswith("bandwidth of TL07x")
+    assert {f for f, (fast, _) in moves.items() if fast} == {"op amp bandwidth"}
+
+
+def test_multiplier_bandwidth_sets_the_fast_end_of_a_slow_multiplier(target):
+    slow = replace(target, multiplier=replace(target.multiplier, bandwidth=target.multiplier.bandwidth / 100))
+    speed, moves = moved(parts_of(van_der_pol()), slow, 1.6)
+    assert speed.limits[0].startswith("bandwidth of AD633")
+    assert {f for f, (fast, _) in moves.items() if fast} == {"multiplier bandwidth"}
+
+
+def test_slew_sets_the_fast_end_of_a_slow_op_amp(stages, target):
+    lame = replace(target, op_amp=replace(target.op_amp, slew=target.op_amp.slew / 1e4))
+    speed, moves = moved(stages, lame, 1.6)
+    assert speed.limits[0].startswith("slew rate of TL07x")
+    assert {f for f, (fast, _) in moves.items() if fast} == {"op amp slew"}
+
+
+def test_bias_sets_the_slow_end_where_it_is_large(target):
+    made = system({"x": 1, "y": 0}, {"x": [term(1, "y")], "y": [term(-1, "x")]}, duration=60)
+    leaky = replace(target, op_amp=replace(target.op_amp, bias=1e-6), switch_leakage=0.0)
+    speed, moves = moved(parts_of(made), leaky, 1.6)
+    assert speed.limits[1].startswith("bias current of TL07x")
+    # The error is bias over the largest capacitor: the sentence names the current, the capacitor is its partner.
+    assert {f for f, (_, slow) in moves.items() if slow} == {"bias", "largest C"}
+
+
+def test_a_given_speed_is_taken_even_outside_the_window(stages, target):
+    assert choose_speed(*stages, target, given=3600.0).chosen == 3600.0
