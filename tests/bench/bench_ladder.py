@@ -35,7 +35,8 @@ def to_circuit(path: Path) -> None:
     ranges = find_ranges(patch, form, reach)
     sensitivity = find_sensitivity(form, patch, ranges)
     sizing = size(form, patch, ranges, sensitivity, target, speed="free", run="once", think="normal")
-    assert not sizing.faults, sizing.faults
+    if sizing.faults:
+        raise SystemExit(f"{path.stem} cannot be built: {sizing.faults[0]} ({len(sizing.faults)} faults)")
     build_circuit(form, patch, sizing, target, problem.build, catalogue)
 
 
