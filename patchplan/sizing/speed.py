@@ -24,8 +24,8 @@ SLACK = 1e-4
 #: Resistance that the capacitors are chosen for [ohm]; between the 5k that loads outputs and the 1M that strays and
 #: bias currents disturb (common practice, no source).
 COMFORTABLE = 5e4
-#: The planner's own speed keeps capacitors at or above this, so that some 10 pF of wiring and input capacitance count for
-#: 0.1 % at most [F] (common practice, no source).
+#: The planner's own speed keeps capacitors at or above this, so that some 10 pF of wiring and input capacitance count
+#: for 0.1 % at most [F] (common practice, no source).
 ABOVE_STRAYS = 1e-8
 
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from dataclasses import replace
 from fractions import Fraction
+from itertools import pairwise
 from math import isclose
 
 import numpy as np
@@ -158,7 +159,7 @@ def test_large_boards_take_the_linear_search():
     """A ladder of 60 states: T_i' = T_(i-1) - 2 T_i + T_(i+1)."""
     names = [f"T{i}" for i in range(60)]
     rows = {n: [term(-2, n)] for n in names}
-    for low, high in zip(names[:-1], names[1:], strict=True):
+    for low, high in pairwise(names):
         rows[low].append(term(1, high))
         rows[high].append(term(1, low))
     rows["T0"].append(term(1))
