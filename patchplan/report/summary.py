@@ -69,8 +69,9 @@ def _columns(table: Table) -> list[str]:
     """Lines of a table, cut to the width of the page."""
     cells = [table.headers, *table.rows]
     widths = [max(len(row[i]) for row in cells) for i in range(len(table.headers))]
-    spare = WIDTH - 2 - 2 * (len(widths) - 1) - sum(widths)
-    widths[1] = max(8, widths[1] + min(spare, 0))
+    for column, least in ((1, 14), (0, 14), (1, 6)):
+        spare = WIDTH - 2 - 2 * (len(widths) - 1) - sum(widths)
+        widths[column] = max(min(least, widths[column]), widths[column] + min(spare, 0))
     lines = []
     for row in cells:
         fitted = [_cut(cell, width) for cell, width in zip(row, widths, strict=True)]

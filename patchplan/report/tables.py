@@ -52,7 +52,8 @@ def _node_row(plan: Plan, meaning: NodeMap) -> tuple[str, ...]:
     low, high = swing_volts(plan, meaning)
     share = max(abs(low), abs(high)) / meaning.limit_volts if meaning.limit_volts else 0.0
     unit = engineering(meaning.sign * meaning.volts_per_unit, "V")
-    offset = f" + {plain(meaning.offset_volts)} V" if meaning.offset_volts else ""
+    side = "+" if meaning.offset_volts > 0 else "-"
+    offset = f" {side} {plain(abs(meaning.offset_volts))} V" if meaning.offset_volts else ""
     return meaning.node, meaning.signal, unit + offset, f"{low:z.1f} … {high:z.1f} V", f"{100 * share:.0f} %"
 
 

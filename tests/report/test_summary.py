@@ -29,7 +29,13 @@ def test_summary_answers_in_order(plan):
 
 
 def test_summary_keeps_to_the_width_and_to_plain_text(plan):
-    long = replace(plan.circuit.nodes["x"], signal="alpha*x*y + beta*x*z - gamma*z*z*z*z + delta*x*x*y*y*z")
+    name = "p_1_length_speed_t_th_d_squared_and_more"
+    long = replace(
+        plan.circuit.nodes["x"],
+        node=name,
+        offset_volts=-650.0,
+        signal="alpha*x*y + beta*x*z - gamma*z*z*z*z + delta*x*x*y*y*z",
+    )
     wide = replace(plan, circuit=replace(plan.circuit, nodes={**plan.circuit.nodes, "x": long}))
     for shown in (plan, wide, unbuildable(plan)):
         text = summary(shown, Path("outputs/plain"))
