@@ -39,8 +39,8 @@ class Sensitivity:
     stages
         Names of integrators, summers, inverters and multipliers.
     rate
-        Shape ``(n_watched, n_stages, n_times)``: integrators: per constant added to signal' [problem units/problem time];
-        other stages: per constant added to the signal at their output [problem units].
+        Shape ``(n_watched, n_stages, n_times)``: integrators: per constant added to signal'
+        [problem units/problem time]; other stages: per constant added to the signal at their output [problem units].
     lag
         Shape ``(n_watched, n_stages, n_times)``: per unit of problem time by which the stage's output comes late
         (integrators: by which their input sum comes late).

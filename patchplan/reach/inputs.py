@@ -2,12 +2,13 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 
 import numpy as np
 from numpy.typing import NDArray
 
-from patchplan.equation.system import System
+from patchplan.equation.system import Source, System
+from patchplan.reach.scalar import Scalar, scalar_function
 
 Array = NDArray[np.float64]
 Stored = tuple[Array, Array]
@@ -33,6 +34,8 @@ class Inputs:
         self.sources = system.sources
         self.stand_ins = dict(stand_ins or {})
         self.count = len(system.sources)
+        self._curves = [self._curve(s) for s in system.sources]
+        self._scalars = [_scalar(s, c) for s, c in zip(system.sources, self._curves, strict=True)]
         self.edges = self._edges()
         self.edge_depth = _INSIDE * self.duration
 
@@ -54,25 +57,32 @@ class Inputs:
     def values(self, times: Array) -> Array:
         """Every source at the times, shape ``(n_sources, n_times)``."""
         out: Array = np.empty((self.count, times.size))
-        for i, source in enumerate(self.sources):
-            if source.waveform is not None:
-                out[i] = source.waveform.values(times)
-            elif source.name in self.stand_ins:
-                out[i] = np.interp(times, *self.stand_ins[source.name])
-            else:
-                low, high = source.within or (0, 0)
-                out[i] = (float(low) + float(high)) / 2
+        for row, curve in zip(out, self._curves, strict=True):
+            row[:] = curve(times)
         return out
+
+    def _curve(self, source: Source) -> Callable[[Array], Array]:
+        stored = self.stand_ins.get(source.name)
+        if source.waveform is not None and source.waveform.recording is None:
+            return source.waveform.values
+        if source.waveform is not None and source.waveform.recording is not None:
+            recording = source.waveform.recording
+            stored = np.asarray(recording.times), np.asarray(recording.values)
+        if stored is None:
+            low, high = source.within or (0, 0)
+            middle = (float(low) + float(high)) / 2
+            return lambda t: np.full(t.shape, middle)
+        return lambda t: np.interp(t, *stored)
 
     def at(self, time: float) -> Array:
         """Every source at one time, shape ``(n_sources,)``."""
-        return self.values(np.array([time]))[:, 0]
+        return np.array([scalar(time) for scalar in self._scalars])
 
     def column(self, run: int) -> Inputs:
         """The inputs of one of several runs: here all runs have the same."""
         return self
 
-    def inside(self, times: Array, start: float, stop: float) -> Array:
+    def inside(self, times: Array, start: Array | float, stop: Array | float) -> Array:
         """Values at times of one stretch, its ends seen from inside."""
         return self.values(np.clip(times, start + self.edge_depth, stop - self.edge_depth))
 
@@ -98,3 +108,19 @@ class Inputs:
         first = np.append(np.diff(times) == 0, False)
         index = np.clip(index - first, 0, len(self.edges) - 2)
         return self.edges[index], self.edges[index + 1]
+
+
+def _scalar(source: Source, curve: Callable[[Array], Array]) -> Scalar:
+    """One source as a function of a single time."""
+    tree = source.waveform.tree if source.waveform is not None else None
+    plain = None if tree is None else scalar_function(tree)
+    if plain is None:
+        return lambda t: float(curve(np.array([t]))[0])
+
+    def value(t: float) -> float:
+        try:
+            return plain(t)
+        except (ValueError, ArithmeticError):
+            return float("nan")
+
+    return value

@@ -115,6 +115,30 @@ def solve_linear(
         return _solved(_Stepper(matrix), np.array(start, float), forcing, edges, tolerance)
 
 
+class _Ahead:
+    """The forcing at a step's nodes and middle, computed for several steps of one length at a time."""
+
+    def __init__(self, forcing: Forcing | None, places: Array, size: int) -> None:
+        self.forcing, self.places = forcing, places
+        self.block: Array = np.zeros((1, places.size, size))
+        self.key: tuple[float, int] = (0.0, -1)
+        self.first = 0
+
+    def at(self, begin: float, stop: float, level: int, index: int) -> Array:
+        """Shape ``(s + 1, n)``, of step ``index`` among the halvings of the stretch (begin, stop)."""
+        if self.forcing is None:
+            return np.asarray(self.block[0])
+        known = self.key == (begin, level) and self.first <= index
+        if not known or index >= self.first + len(self.block):
+            # As long as the length stays, twice as many steps are computed each time.
+            count = min(2 * len(self.block) if known else 1, 64, 2**level - index)
+            h = (stop - begin) / 2**level
+            times = begin + h * (index + np.arange(count)[:, None] + self.places)
+            self.block = self.forcing(times.ravel(), begin, stop).T.reshape(count, self.places.size, -1)
+            self.key, self.first = (begin, level), index
+        return np.asarray(self.block[index - self.first])
+
+
 def _solved(stepper: _Stepper, x: Array, forcing: Forcing | None, edges: Array, tolerance: float) -> Pieces:
     slope, middle = weights_at(np.array([0.5]), 1)[0], weights_at(np.array([0.5]))[0]
     places = np.append(step_points()[1:], 0.5)
@@ -122,7 +146,7 @@ def _solved(stepper: _Stepper, x: Array, forcing: Forcing | None, edges: Array, 
     starts: list[float] = []
     lengths: list[float] = []
     points: list[Array] = []
-    silent = np.zeros((STAGES + 1, x.size))
+    ahead = _Ahead(forcing, places, x.size)
     wished = np.inf
     for begin, stop in pairwise(edges.tolist()):
         span, index = stop - begin, 0
@@ -130,7 +154,7 @@ def _solved(stepper: _Stepper, x: Array, forcing: Forcing | None, edges: Array, 
         while index < 2**level:
             h = span / 2**level
             t = begin + index * h
-            f = silent if forcing is None else forcing(t + h * places, begin, stop).T
+            f = ahead.at(begin, stop, level, index)
             inner = stepper.step(h, x, f[:-1])
             piece = np.concatenate((x[None], inner))
             defect = slope @ piece - h * (stepper.matrix @ (middle @ piece) + f[-1])
