@@ -5,14 +5,19 @@ from __future__ import annotations
 import math
 from collections.abc import Iterator, Mapping
 
+import numpy as np
+from numpy.typing import NDArray
+
 from patchplan.circuit.records import Circuit, NodeMap, Part
 from patchplan.circuit.spice_models import multiplier_model, num, op_amp_model
 from patchplan.circuit.spice_sources import SourceText
 
+Array = NDArray[np.float64]
+
 #: An open switch, and the least resistance of an end of a potentiometer [ohm].
 _OPEN, _LEAST_OHM = 1e12, 1e-3
 #: The trapezoidal rule takes nothing away from a lossless loop; the tolerances hold the summing nodes to microvolts.
-_OPTIONS = ".options method=trap reltol=1e-5 vntol=1e-8 abstol=1e-12 chgtol=1e-16"
+_OPTIONS = ".options method=trap reltol=1e-6 vntol=1e-8 abstol=1e-12 chgtol=1e-16"
 
 
 def largest_step(duration: float, rate: float) -> float:
@@ -29,6 +34,24 @@ def largest_step(duration: float, rate: float) -> float:
     """
     most = duration / 200
     return min(most, math.sqrt(12e-3 / (rate * duration)) / rate) if rate > 0 else most
+
+
+def lasting_rate(times: Array, rates: Array) -> float:
+    """The constant rate that makes the trapezoidal rule as late over a run as the changing rates of its signals do.
+
+    A fast transient that dies out is left to the simulator's own step control; the lag of a loop that goes on adds up.
+
+    Parameters
+    ----------
+    times
+        Shape ``(n_times,)``, rising.
+    rates
+        Shape ``(n_signals, n_times)``: magnitude of x' over the peak of x, in 1 over the unit of ``times``.
+    """
+    from scipy.integrate import trapezoid
+
+    fastest = np.abs(rates).max(axis=0, initial=0.0)
+    return float((trapezoid(fastest**3, times) / (times[-1] - times[0])) ** (1 / 3))
 
 
 def spice_text(circuit: Circuit, start: Mapping[str, float], *, max_step: float, title: str = "patchplan board") -> str:

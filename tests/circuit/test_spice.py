@@ -8,7 +8,7 @@ import pytest
 from scipy.integrate import solve_ivp
 
 from patchplan.circuit.records import Circuit
-from patchplan.circuit.spice import largest_step, spice_text
+from patchplan.circuit.spice import largest_step, lasting_rate, spice_text
 from patchplan.equation.problem import Build
 from tests.circuit.boards import oscillator, resting, van_der_pol
 from tests.circuit.spice import run_ngspice
@@ -94,3 +94,12 @@ def test_the_netlist_has_nine_digits_and_is_the_same_each_time():
     assert text == netlist(van_der_pol())
     digits = [len(n.replace(".", "").lstrip("0")) for n in re.findall(r"(?<![\w.])\d+\.?\d*", text)]
     assert max(digits) <= 9
+
+
+def test_lasting_rate_of_a_sine_and_of_a_transient():
+    times = np.linspace(0.0, 20 * np.pi, 20001)
+    both = np.abs([np.sin(3 * times), np.cos(3 * times)]) * 3
+    # Mean of max(|sin|, |cos|)^3 over a quarter: (4/pi) * integral of cos^3 from 0 to pi/4 = 5*sqrt(2)/(3*pi).
+    assert lasting_rate(times, both) == pytest.approx(3 * (5 * np.sqrt(2) / (3 * np.pi)) ** (1 / 3), rel=1e-4)
+    fast = 1000 * np.exp(-1000 * times[None, :] / 10)
+    assert lasting_rate(times, fast) < 0.2 * 1000
