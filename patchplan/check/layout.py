@@ -7,9 +7,11 @@ from dataclasses import dataclass, replace
 from typing import Any, TypeAlias
 
 import numpy as np
+from numpy.typing import NDArray
 
 from patchplan.circuit.records import GROUND, Circuit, Part
 
+Array = NDArray[np.float64]
 #: A dense array of a small board, a sparse matrix of a large one.
 Matrix: TypeAlias = Any
 
@@ -26,7 +28,7 @@ class Layout:
     free: dict[str, int]
     nets: tuple[str, ...]
     driven: dict[str, int]
-    driven_rows: Matrix
+    driven_rows: Array
     resistors: tuple[tuple[str, str, float], ...]
     capacitors: tuple[Part, ...]
     op_amps: tuple[Part, ...]
@@ -157,11 +159,9 @@ def _floating(
 
 def _driven_rows(
     circuit: Circuit, driven: dict[str, int], drivers: list[Part], n_capacitors: int, n_states: int, n_columns: int
-) -> Matrix:
+) -> Array:
     """Voltages of the driven nets over states and inputs, shape ``(n_driven, n_columns)``."""
-    from scipy.sparse import lil_array
-
-    rows = lil_array((len(driven), n_columns))
+    rows = np.zeros((len(driven), n_columns))
     taken = {GROUND}
     state, source = n_capacitors, n_states
     for part in drivers:
@@ -177,4 +177,4 @@ def _driven_rows(
         rows[driven[net], column] = part.value if part.kind == "reference" else 1.0
         if part.kind == "source" and net in circuit.nodes:
             rows[driven[net], n_columns - 1] = circuit.nodes[net].offset_volts
-    return rows.tocsr()
+    return rows

@@ -125,15 +125,19 @@ def build_network(circuit: Circuit, mode: str = "operate") -> Network:
     layout = layout_of(circuit, mode)
     solution = _solve(layout)
     n_free = len(layout.free)
-    voltage = _stack([solution[:n_free], layout.driven_rows])
+    voltage = np.concatenate([solution[:n_free], layout.driven_rows])
     rows = {net: i for i, net in enumerate(layout.nets)}
     current = solution[n_free:]
     rate = _rate_rows(circuit, layout, rows, voltage, current)
-    n_x, dense = layout.n_states, layout.n_states <= DENSE_LIMIT
+    n_x = layout.n_states
 
-    def split(matrix: Matrix) -> tuple[Matrix, Matrix]:
-        left, right = matrix[:, :n_x], matrix[:, n_x:]
-        return (left.toarray(), right.toarray()) if dense else (left.tocsr(), right.tocsr())
+    def split(matrix: Array) -> tuple[Matrix, Matrix]:
+        left, right = np.ascontiguousarray(matrix[:, :n_x]), np.ascontiguousarray(matrix[:, n_x:])
+        if n_x <= DENSE_LIMIT:
+            return left, right
+        from scipy.sparse import csr_array
+
+        return csr_array(left), csr_array(right)
 
     op_amp, times = circuit.op_amp, circuit.multiplier
     n_a, n_m = len(layout.op_amps), len(layout.multipliers)
@@ -164,15 +168,15 @@ def build_network(circuit: Circuit, mode: str = "operate") -> Network:
     )
 
 
-def _solve(layout: Layout) -> Matrix:
+def _solve(layout: Layout) -> Array:
     """Free nets' voltages, then capacitors' currents, over states and inputs."""
-    from scipy.sparse import coo_array, csr_array
+    from scipy.sparse import coo_array
     from scipy.sparse.linalg import splu
 
     free, driven, n_free, n_c = layout.free, layout.driven, len(layout.free), len(layout.capacitors)
     size = n_free + n_c
     if size == 0:
-        return csr_array((0, layout.n_columns))
+        return np.zeros((0, layout.n_columns))
     entries: list[tuple[int, int, float]] = []
     outside: list[tuple[int, int, float]] = []
 
@@ -199,30 +203,21 @@ def _solve(layout: Layout) -> Matrix:
         i, j, value = zip(*items, strict=True) if items else ((), (), ())
         return coo_array((np.array(value, float), (np.array(i, int), np.array(j, int))), shape=(size, columns)).tocsc()
 
-    right = matrix(own, layout.n_columns) - matrix(outside, len(driven)) @ layout.driven_rows
-    return csr_array(splu(matrix(entries, size)).solve(right.toarray()))
+    right = matrix(own, layout.n_columns).toarray() - matrix(outside, len(driven)) @ layout.driven_rows
+    return np.asarray(splu(matrix(entries, size)).solve(right))
 
 
-def _stack(blocks: list[Matrix]) -> Matrix:
-    from scipy.sparse import vstack
-
-    return vstack(blocks, format="csr")
-
-
-def _rate_rows(circuit: Circuit, layout: Layout, rows: dict[str, int], voltage: Matrix, current: Matrix) -> Matrix:
-    from scipy.sparse import csr_array, diags_array, eye_array
-
-    def volts(parts: tuple[Part, ...], pin: int) -> Matrix:
+def _rate_rows(circuit: Circuit, layout: Layout, rows: dict[str, int], voltage: Array, current: Array) -> Array:
+    def volts(parts: tuple[Part, ...], pin: int) -> Array:
         return voltage[[rows[p.nets[pin]] for p in parts]]
 
-    blocks: list[Matrix] = [csr_array((0, layout.n_columns))]
-    if layout.capacitors:
-        blocks.append(diags_array([1.0 / p.value for p in layout.capacitors]) @ current)
-    if layout.op_amps:
-        blocks.append(circuit.op_amp.gain_bandwidth * (volts(layout.op_amps, 0) - volts(layout.op_amps, 1)))
-    if times := layout.multipliers:
-        pole = eye_array(len(times), layout.n_columns, k=layout.n_states - len(times))
-        blocks.append(circuit.multiplier.bandwidth * (volts(times, 4) - pole))
-        blocks.append(volts(times, 0) - volts(times, 1))
-        blocks.append(volts(times, 2) - volts(times, 3))
-    return _stack(blocks)
+    amps, times = layout.op_amps, layout.multipliers
+    farads = np.array([p.value for p in layout.capacitors])
+    pole = np.eye(len(times), layout.n_columns, layout.n_states - len(times))
+    return np.concatenate([
+        current / farads[:, None],
+        circuit.op_amp.gain_bandwidth * (volts(amps, 0) - volts(amps, 1)),
+        circuit.multiplier.bandwidth * (volts(times, 4) - pole),
+        volts(times, 0) - volts(times, 1),
+        volts(times, 2) - volts(times, 3),
+    ])  # fmt: skip

@@ -65,7 +65,7 @@ def test_spread_is_that_of_boards_drawn_at_random(plan: Plan, offsets: bool) -> 
     names = ("offsets",) if offsets else ("resistors", "capacitors", "reference")
     predicted = np.sqrt(sum(parts[name] ** 2 for name in names))
     rows = [plan.sensitivity.watched.index(name) for name in circuit.watched]
-    # A standard deviation drawn from 80 boards is itself good to 1/sqrt(2*80), 8 %; three of those, and the second order.
+    # A standard deviation of 80 boards is itself good to 1/sqrt(2*80), 8 %; three of those, and the second order.
     assert predicted[rows].max(axis=1) == pytest.approx(found.max(axis=1), rel=0.27)
 
 
