@@ -1,8 +1,9 @@
 """Nearest values one by one against values, scale factors and speed searched together, over the reference cases.
 
-For every case the planner's own scale factors, speed and capacitors are taken, and each resistor is set to the nearest
-value of the series. What is left after the best fit of all free scale factors and of the speed (minimax, in logs) is
-what no scaling can take away: the same measure as the plan's coefficient errors.
+The hand's way: every node scaled to 80 % of its limit, each integrator one capacitor that puts its resistors near the
+middle of their range, each resistor the nearest value, at the planner's speed. What is left after the
+best fit of all free scale factors and of the speed (minimax, in logs) is what no scaling can take away: the same
+measure as the plan's coefficient errors.
 """
 
 from __future__ import annotations
@@ -28,8 +29,25 @@ def nearest(value: float, values: tuple[float, ...]) -> float:
     return values[int(np.argmin(logs))]
 
 
+def hand_scales(plan: Plan) -> dict[str, float]:
+    """Volts per unit of every node where each uses 80 % of its limit; products follow from their factors."""
+    sized, scales = plan.sizing.scales, {}
+    for stage in sorted(plan.patch.stages, key=lambda s: s.kind in ("inverter", "multiplier")):
+        node = stage.node
+        if stage.kind == "inverter":
+            scales[node] = scales.get(stage.wires[0].source, sized[node].volts_per_unit)
+        elif stage.kind == "multiplier":
+            first, second = (scales[w.source] for w in stage.wires)
+            scales[node] = first * second / plan.target.multiplier.scale
+        elif stage.kind in ("reference", "source") or stage.signal in plan.form.scales:
+            scales[node] = sized[node].volts_per_unit
+        else:
+            scales[node] = 0.8 * sized[node].limit_volts / plan.ranges.nodes[node].peak
+    return scales
+
+
 def gains(plan: Plan) -> tuple[Array, Array]:
-    """Log of the gain that each wire realises with nearest resistors over the gain it wants, and the rows of A.
+    """Log of the gain that each wire realises with nearest values over the gain it wants, and the rows of A.
 
     Returns
     -------
@@ -39,31 +57,29 @@ def gains(plan: Plan) -> tuple[Array, Array]:
     """
     nodes = [s.node for s in plan.patch.stages]
     held = {s.node for s in plan.patch.stages if s.kind == "reference" or s.signal in plan.form.scales}
+    scales, target = hand_scales(plan), plan.target
+    middle = float(np.sqrt(target.resistors[0] * target.resistors[-1]))
     errors, rows = [], []
     for stage in plan.patch.stages:
-        sized = plan.sizing.stages.get(stage.name)
-        if stage.kind not in ("integrator", "summer", "inverter") or sized is None:
+        if stage.kind not in ("integrator", "summer", "inverter"):
             continue
-        for wire, leg in zip(stage.wires, sized.legs, strict=True):
-            lead = sized.feedback if stage.kind != "integrator" else 1 / sized.capacitor
-            wanted = wanted_gain(plan, stage.node, wire.source, abs(float(wire.coefficient)), stage.knob)
-            wanted *= 1 / plan.sizing.time_scale if stage.kind == "integrator" else 1.0
-            resistor = nearest(lead / wanted, plan.target.resistors) if len(leg.resistors) == 1 else lead / wanted
+        dial = abs(float(plan.patch.knobs[stage.knob].value)) if stage.knob else 1.0
+        rate = dial / (plan.sizing.time_scale if stage.kind == "integrator" else 1.0)
+        wanted = (
+            np.array([abs(float(w.coefficient)) * scales[stage.node] / scales[w.source] for w in stage.wires]) * rate
+        )
+        lead = 1 / nearest(1 / (middle * float(np.exp(np.log(wanted).mean()))), target.capacitors)
+        if stage.kind != "integrator":
+            lead = nearest(20e3, target.resistors)
+        for wire, gain in zip(stage.wires, wanted, strict=True):
             row = np.zeros(len(nodes) + 1)
             row[nodes.index(stage.node)] += 1
             row[nodes.index(wire.source)] -= 1
             row[-1] = stage.kind == "integrator"
             row[[nodes.index(n) for n in held]] = 0
-            errors.append(np.log(lead / resistor / wanted))
+            errors.append(np.log(lead / nearest(lead / gain, target.resistors) / gain))
             rows.append(row)
     return np.array(errors), np.array(rows)
-
-
-def wanted_gain(plan: Plan, node: str, source: str, coefficient: float, knob: str | None) -> float:
-    """Volts at a node per volt at its source, speed apart."""
-    scale = plan.sizing.scales
-    dial = abs(float(plan.patch.knobs[knob].value)) if knob else 1.0
-    return coefficient * dial * scale[node].volts_per_unit / scale[source].volts_per_unit
 
 
 def best_fit(plan: Plan, errors: Array, rows: Array) -> float:
@@ -88,7 +104,7 @@ def best_fit(plan: Plan, errors: Array, rows: Array) -> float:
         b_ub=np.concatenate([-errors, errors]),
         A_eq=products if len(products) else None,
         b_eq=np.zeros(len(products)) if len(products) else None,
-        bounds=[(-0.3, 0.3)] * (len(nodes) + 1) + [(0, None)],
+        bounds=[(-0.5, 0.5)] * (len(nodes) + 1) + [(0, None)],
     )
     return float(found.fun)
 
