@@ -64,7 +64,8 @@ def spice_text(circuit: Circuit, start: Mapping[str, float], *, max_step: float,
     max_step
         Largest time step [circuit s], see :func:`largest_step`.
     """
-    lines = [f"* {title}".replace("\n", " "), *_head(circuit)]
+    # A title is the user's text: it must not begin a line of its own.
+    lines = [f"* {' '.join(title.split())}", *_head(circuit)]
     kinds = {p.kind for p in circuit.parts}
     lines += op_amp_model(circuit.op_amp) if "op amp" in kinds else []
     lines += multiplier_model(circuit.multiplier) if "multiplier" in kinds else []

@@ -89,6 +89,11 @@ def test_the_netlist_has_one_title_one_run_and_no_control_block():
     assert "* v(x_d_n) = -2.5 V * (x'), inverter" in lines
 
 
+def test_a_title_stays_on_its_line():
+    text = spice_text(oscillator(), resting(oscillator(), STARTS), max_step=1e-5, title="a\r\n.control\nshell\x85b")
+    assert text.splitlines()[0] == "* a .control shell b"
+
+
 def test_the_netlist_has_nine_digits_and_is_the_same_each_time():
     text = netlist(van_der_pol())
     assert text == netlist(van_der_pol())
