@@ -104,7 +104,7 @@ def plan_with(
     )  # fmt: skip
     if sizing.faults:
         return found
-    circuit = build_circuit(form, patch, sizing, target, build, catalogue)
+    circuit = build_circuit(form, patch, sizing, target, build, catalogue, stand_ins=reach.reference.waveforms)
     say("Checking the board")
     verdict = check_circuit(
         circuit, reach.reference, sensitivity, patch, sizing, target, accept=accept, system=form.system

@@ -94,7 +94,7 @@ def _with_free_offsets(form: Form, reach: Reach) -> tuple[Form, list[str]]:
         if known is None or state.name in products or state.name in form.scales:
             continue
         half = (known.high - known.low) / 2
-        if half <= 0 or known.peak < LEAST_GAIN * half:
+        if half <= 0 or known.peak < (LEAST_GAIN + 1e-6) * half:
             continue
         offset = _round_offset(known)
         trial = shifted(form.system, {state.name: offset})

@@ -46,17 +46,27 @@ class _Rows:
 
 def choose_large(model: Model, target: Target, *, comfortable: Mapping[str, float]) -> Values:
     """Values, scale factors and speed of a board with hundreds of wires; as ``choose_values``, from one start."""
-    theta = model.centre.copy()
-    picked = pick_stage_values(model, target, wanted_products(model, theta), comfortable, lambda: 0)
+    picked = pick_stage_values(model, target, wanted_products(model, model.centre), comfortable, lambda: 0)
     rows = _rows(model, target, picked)
-    x = rows.constant.copy()
+    theta, x = _settle(rows, model, model.centre)
+    return _name_parts(model, target, theta, x, picked, rows.weights)
+
+
+def settled_start(model: Model, target: Target, theta: Array, picked: Mapping[tuple[str, int | str], float]) -> Array:
+    """Theta near a given one at which many rows hit purchasable values, shape ``(n_theta,)``."""
+    return _settle(_rows(model, target, picked), model, theta)[0]
+
+
+def _settle(rows: _Rows, model: Model, start: Array) -> tuple[Array, Array]:
+    """Theta after :data:`SWEEPS` sweeps from ``start``, and the logs x of all rows there."""
+    theta, x = start.copy(), rows.constant.copy()
     for column, (touched, slopes) in enumerate(rows.touching):
         x[touched] += slopes * theta[column]
     # The speed touches most rows and comes last in theta: it moves first, scale factors settle around it.
     for _ in range(SWEEPS):
         for column in reversed(range(len(theta))):
             _move(rows, model, theta, x, column)
-    return _name_parts(model, target, theta, x, picked, rows.weights)
+    return theta, x
 
 
 def _rows(model: Model, target: Target, picked: Mapping[tuple[str, int | str], float]) -> _Rows:

@@ -14,6 +14,8 @@ from numpy.typing import NDArray
 Array = NDArray[np.float64]
 #: Weight of the largest coefficient error against the largest predicted error when the rest is shared out.
 ROW_SHARE = 0.3
+#: Pairs are tried among this many of the best single moves.
+MOST_PAIRED = 300
 
 
 @dataclass(frozen=True)
@@ -135,12 +137,13 @@ def descend(loops: Loops, incidence: Array, offset: Array, menu: Menu, start: Ar
         errors = loops.errors(incidence @ y - offset)
         change = target - effect @ (menu.touched * y[:, None])
         single = 2.0 * (errors @ change) + np.einsum("lk,lk->k", change, change)
-        paired = single[:, None] + single[None, :] + 2.0 * (change.T @ change)
-        paired[clash] = np.inf
-        first, second = divmod(int(np.argmin(paired)), len(single))
-        alone = int(np.argmin(single))
-        moves = [alone] if single[alone] <= paired[first, second] else [first, second]
-        if min(single[alone], paired[first, second]) > -1e-14:
+        likely = np.argsort(single, kind="stable")[:MOST_PAIRED]
+        paired = single[likely][:, None] + single[likely][None, :] + 2.0 * (change[:, likely].T @ change[:, likely])
+        paired[clash[np.ix_(likely, likely)]] = np.inf
+        first, second = divmod(int(np.argmin(paired)), len(likely))
+        alone, together = single[likely[0]], paired[first, second]
+        moves = [likely[0]] if alone <= together else [likely[first], likely[second]]
+        if min(alone, together) > -1e-14:
             break
         for move in moves:
             y = np.where(menu.touched[:, move] > 0, menu.value[:, move], y)

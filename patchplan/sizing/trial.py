@@ -9,7 +9,7 @@ from math import log
 import numpy as np
 from numpy.typing import NDArray
 
-from patchplan.sizing.large import choose_large
+from patchplan.sizing.large import choose_large, settled_start
 from patchplan.sizing.model import Model
 from patchplan.sizing.records import Target
 from patchplan.sizing.search import Effect, Loops, Menu, descend, find_loops, loop_errors, split_rest
@@ -36,6 +36,8 @@ CAPACITOR_WIDTH = 0.9
 MOST_NEAR = 16
 #: Boards with more ratios than this take the search that grows no faster than the board.
 LARGE = 150
+#: Attempts on boards with more ratios than this begin where coordinate descent has settled.
+SETTLED = 12
 
 
 @dataclass(frozen=True)
@@ -102,7 +104,7 @@ def choose_values(
 
 def _count(unknowns: int, think: str) -> int:
     """Fewer attempts for boards whose pairs of moves are many."""
-    return max(3, round(ATTEMPTS[think][0] * min(1.0, 20 / max(unknowns, 1))))
+    return max(3, round(ATTEMPTS[think][0] * min(1.0, 20 / max(unknowns, 1)) ** 1.5))
 
 
 def _attempt(board: _Board, number: int, random: np.random.Generator) -> tuple[float, Array, list[Choice]]:
@@ -111,9 +113,11 @@ def _attempt(board: _Board, number: int, random: np.random.Generator) -> tuple[f
     theta = model.centre
     if number:
         theta = theta + random.uniform(-0.35, 0.35, len(theta)) * (model.high - model.low)
-    wanted = wanted_products(model, theta)
     rank = (lambda: int(random.integers(0, 3))) if number else (lambda: 0)
-    picked = pick_stage_values(model, board.target, wanted, board.comfortable, rank)
+    picked = pick_stage_values(model, board.target, wanted_products(model, theta), board.comfortable, rank)
+    if len(model.ratios) > SETTLED:
+        theta = settled_start(model, board.target, theta, picked)
+    wanted = wanted_products(model, theta)
     choices, centre = _choices(board, wanted, picked)
     y = np.array([c.logs[np.argmin(np.abs(c.logs - w))] for c, w in zip(choices, centre, strict=True)])
     menu = _menu(board, choices, centre)
