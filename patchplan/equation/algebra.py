@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Mapping
 from dataclasses import dataclass, field
 from fractions import Fraction
 from typing import NoReturn
@@ -10,6 +10,7 @@ from typing import NoReturn
 import numpy as np
 
 from patchplan.equation.constants import PI, constant_value
+from patchplan.equation.formula import factors_of, product_of, refuse, tree_derivative
 from patchplan.equation.polynomial import HIGHEST_DEGREE, MOST_TERMS, Atom, Kind, Polynomial, TooLargeError
 from patchplan.equation.tree import Binary, Call, Minus, Name, Node, Number, text_of
 from patchplan.equation.waveform import _line, numeric_tree
@@ -17,17 +18,6 @@ from patchplan.errors import Fault, ProblemFaults
 
 _NOT_BUILT = "not built in this version"
 _SIGNALS = {Kind.SIGNAL, Kind.RATE, Kind.SOURCE}
-
-
-def refuse(node: Node | None, found: str, remedy: str) -> NoReturn:
-    """Stop with one fault at a node."""
-    raise ProblemFaults([fault_at(node, found, remedy)])
-
-
-def fault_at(node: Node | None, found: str, remedy: str) -> Fault:
-    """A fault at the place a node comes from."""
-    origin = node.origin if node is not None else None
-    return Fault(found, remedy, origin.key, (origin.start, origin.end)) if origin else Fault(found, remedy)
 
 
 @dataclass
@@ -128,7 +118,7 @@ class Algebra:
             return Polynomial.of(self._register(Kind.TIME, node, node))
         if name in self.signals:
             return Polynomial.of(Atom(Kind.SIGNAL, name, primes), 1, node.origin)
-        if primes:
+        if primes and (name in self.sources or name in self.named):
             return Polynomial.of(Atom(Kind.RATE, name, primes), 1, node.origin)
         if name in self.sources:
             return Polynomial.of(Atom(Kind.SOURCE, name), 1, node.origin)
@@ -136,7 +126,10 @@ class Algebra:
             atom = Atom(Kind.TIME, name)
             self.functions[atom], self.written[atom] = self.folded(self.formulas[name]), Name(name)
             return Polynomial.of(atom, 1, node.origin)
-        return self.polynomial(self.formulas[name])
+        tree = self.folded(self.formulas[name]) if primes else self.formulas[name]
+        for _ in range(primes):
+            tree = tree_derivative(tree)
+        return self.polynomial(tree)
 
     def _product(self, node: Binary) -> Polynomial:
         factors = factors_of(node)
@@ -158,8 +151,7 @@ class Algebra:
             refuse(node.right, "This divides by zero.", "Give the divisor another value.")
         if kinds & _SIGNALS:
             self._refuse_signals(node, bottom, "the quotient by")
-        if Kind.TIME in kinds:
-            self.divisors.append(self.folded(node.right))
+        self._note_divisor(node.right, bottom)
         if len(bottom) == 1:
             return top * bottom.inverse()
         if Kind.TIME in kinds and Kind.PARAMETER in kinds:
@@ -193,13 +185,19 @@ class Algebra:
             self._refuse_signals(node, base, "the quotient by")
         if not base.terms:
             refuse(node.left, "This divides by zero.", "Give the divisor another value.")
-        if Kind.TIME in kinds:
-            self.divisors.append(self.folded(node.left))
+        self._note_divisor(node.left, base)
         if len(base) > 1:
             if len(kinds) > 1:
                 self._refuse_mixed(node.left)
             base = self._function(kinds.pop(), node.left)
         return base.inverse() ** -exponent
+
+    def _note_divisor(self, node: Node, value: Polynomial) -> None:
+        timed = sorted(a for a in value.atoms() if a.kind is Kind.TIME)
+        if len(value) == 1:
+            self.divisors += [self.functions[a] for a in timed]
+        elif timed:
+            self.divisors.append(self.folded(node))
 
     def _call(self, node: Call) -> Polynomial:
         arguments = [self.polynomial(a) for a in node.arguments]
@@ -297,20 +295,3 @@ def _foldable(node: Node) -> bool:
         return isinstance(node.left, Number) and isinstance(node.right, Number)
     timed = ("step", "ramp", "pulse", "square", "triangle", "sawtooth")
     return isinstance(node, Call) and node.function not in timed and all(isinstance(a, Number) for a in node.arguments)
-
-
-def factors_of(node: Node) -> list[Node]:
-    """Factors of a chain of products."""
-    found: list[Node] = []
-    while isinstance(node, Binary) and node.operator == "*":
-        found.append(node.right)
-        node = node.left
-    return [node, *reversed(found)]
-
-
-def product_of(factors: Sequence[Node]) -> Node:
-    """Chain of products."""
-    result = factors[0]
-    for factor in factors[1:]:
-        result = Binary("*", result, factor, result.origin)
-    return result

@@ -14,7 +14,7 @@ from patchplan.equation.outline import Outline, name_faults
 from patchplan.equation.polynomial import Kind
 from patchplan.equation.problem import Problem
 from patchplan.equation.tree import Call, Node, Number, text_of
-from patchplan.equation.waveform import SAMPLES, numeric_tree
+from patchplan.equation.waveform import SAMPLES, Array, numeric_tree
 from patchplan.errors import Fault
 
 #: More jumps in one run than any board is asked to follow.
@@ -139,11 +139,25 @@ def _zero(divisor: Node, duration: float) -> float | None:
     crossed = np.append((below[:-1] * below[1:] < 0.0) & ~jumped, False)
     places = np.flatnonzero(crossed | (below == 0.0))
     if not places.size:
-        return None
+        return _touched(divisor, t, below)
     first = int(places[0])
     if below[first] == 0.0:
         return float(t[first])
     return float(t[first] + (t[first + 1] - t[first]) * below[first] / (below[first] - below[first + 1]))
+
+
+def _touched(divisor: Node, t: Array, values: Array) -> float | None:
+    """Place where a divisor comes to zero without crossing it."""
+    from scipy.optimize import minimize_scalar
+
+    middle = int(np.nanargmin(np.abs(values)))
+    ends = float(t[max(middle - 1, 0)]), float(t[min(middle + 1, t.size - 1)])
+    found = minimize_scalar(
+        lambda x: abs(float(numeric_tree(divisor, np.array(x)))), bounds=ends, method="bounded",
+        options={"xatol": 1e-12 * float(t[-1])},
+    )  # fmt: skip
+    # A double zero is met to the square root of rounding.
+    return float(found.x) if found.fun <= 1e-14 * np.nanmax(np.abs(values)) else None
 
 
 def jump_faults(trees: Mapping[str, tuple[Node, str]], duration: Fraction) -> Iterator[Fault]:

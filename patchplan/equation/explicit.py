@@ -145,13 +145,8 @@ def _change(problem: Problem, meaning: Meaning, orders: Mapping[str, int], block
             if k + 1 < count:
                 chains.append(identity(state, Polynomial.of(Atom(Kind.SIGNAL, name, k + 1))))
     algebra, inputs = meaning.algebra, problem.inputs
-    adjustable = {n: p.value for n, p in problem.parameters.items() if p.adjustable}
 
     def at_start(atom: Atom) -> Fraction:
-        if atom.kind is Kind.PARAMETER:
-            from patchplan.equation.constants import constant_value
-
-            return constant_value(algebra.functions[atom], adjustable)
         given = inputs[atom.name]
         return slope_of(given, algebra, atom.primes) if atom.kind is Kind.RATE else start_of(given, algebra)
 

@@ -6,9 +6,10 @@ from dataclasses import dataclass
 from fractions import Fraction
 from typing import NoReturn
 
-from patchplan.equation.algebra import Algebra, product_of, refuse
+from patchplan.equation.algebra import Algebra
 from patchplan.equation.constants import names_of
 from patchplan.equation.elimination import sum_tree
+from patchplan.equation.formula import product_of, refuse
 from patchplan.equation.polynomial import Atom, Kind, Polynomial, part
 from patchplan.equation.problem import Equation
 from patchplan.equation.tree import Binary, Minus, Name, Node, Number

@@ -5,9 +5,10 @@ from __future__ import annotations
 from dataclasses import dataclass
 from fractions import Fraction
 
-from patchplan.equation.algebra import Algebra, fault_at
+from patchplan.equation.algebra import Algebra
 from patchplan.equation.choice import sorted_signals
 from patchplan.equation.constants import names_of
+from patchplan.equation.formula import fault_at
 from patchplan.equation.laplace import realise
 from patchplan.equation.model import Definitions
 from patchplan.equation.outline import Outline
@@ -195,7 +196,7 @@ def slope_of(given: Input, algebra: Algebra, primes: int) -> Fraction:
     """Derivative of an input just after t = 0: of its formula, of the first leg of its recording, 0 within bounds."""
     import numpy as np
 
-    from patchplan.equation.calculus import tree_derivative
+    from patchplan.equation.formula import tree_derivative
     from patchplan.equation.waveform import numeric_tree
 
     if given.recording is not None:

@@ -5,9 +5,10 @@ from __future__ import annotations
 from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass, field
 
-from patchplan.equation.algebra import Algebra, fault_at
+from patchplan.equation.algebra import Algebra
 from patchplan.equation.calculus import derivative
 from patchplan.equation.elimination import SingularError, Sparse, inverse
+from patchplan.equation.formula import fault_at
 from patchplan.equation.polynomial import Atom, Kind, Polynomial, TooLargeError, part
 from patchplan.equation.problem import Equation
 from patchplan.equation.tree import Origin

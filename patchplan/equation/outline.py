@@ -7,8 +7,8 @@ from collections.abc import Iterable, Iterator
 from dataclasses import dataclass
 from difflib import get_close_matches
 
-from patchplan.equation.algebra import fault_at
 from patchplan.equation.constants import names_of
+from patchplan.equation.formula import fault_at
 from patchplan.equation.problem import Equation, Problem
 from patchplan.equation.tree import FUNCTIONS, Name
 from patchplan.errors import Fault
@@ -84,14 +84,15 @@ def _bare_lefts(problem: Problem) -> set[str]:
 def name_faults(problem: Problem, outline: Outline) -> Iterator[Fault]:
     """Undefined, shadowed and doubly defined names, primes where none may stand, parameters without use."""
     known = {*problem.parameters, *problem.inputs, *outline.definitions, *outline.unknowns, *outline.outputs}
+    known |= {n.name for e in outline.blocks for n in names_of(e.left)} - {"s"}
     yield from _shadowed(problem, outline)
     yield from _twice(problem, outline)
     told: set[str] = set()
     for equation in problem.equations:
-        laplace = {"s"} if equation in outline.blocks else set()
+        in_s = equation in outline.blocks
         for name in names_in(equation):
-            if name.name in known | {"t", "pi"} | laplace:
-                if name.primes and name.name in {*problem.parameters, "t", "pi"}:
+            if name.name in known or name.name in ("t", "pi") or (in_s and name.name == "s"):
+                if name.primes and (name.name in problem.parameters or name.name in ("t", "pi")):
                     yield fault_at(name, f'"{name.name}" is no signal and has no derivative.', "Remove the prime.")
             elif name.name not in told:
                 told.add(name.name)

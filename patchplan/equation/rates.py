@@ -73,18 +73,18 @@ def _absorb(change: Change, block: Block) -> None:
     states = {a for b in change.blocks if b is not block for a in b.targets}
     lifted = [_lifted(change, right, states, place) for right, place in zip(block.right, block.origins, strict=True)]
     fresh = [_fresh(change, target) for target in block.targets]
-    inner = tuple(
-        Polynomial.of(q, 1, place) + whole for q, (whole, _), place in zip(fresh, lifted, block.origins, strict=True)
-    )
+    inner = []
     for i, q in enumerate(fresh):
-        start = sum(
-            (m.at(_nominal(change, m)) * change.start[block.targets[j]] for j, m in block.mass[i].items()), Fraction(0)
-        )
-        change.start[q] = start - lifted[i][0].at(_nominal(change, lifted[i][0]))
-    solved = dict(zip(block.targets, block.solved(inner), strict=True))
+        start = _start(change, block, i, lifted[i][0])
+        change.start[q] = start.terms.get((), Fraction(0))
+        # What an adjustable parameter changes of the start value goes into the signal, so that q starts the same at
+        # every setting of the knob.
+        knobs = start - Polynomial.constant(change.start[q])
+        inner.append(Polynomial.sum([Polynomial.of(q, 1, block.origins[i]), lifted[i][0], knobs]))
+    solved = dict(zip(block.targets, block.solved(tuple(inner)), strict=True))
     _refuse_rates_left(solved, block)
     change.blocks.remove(block)
-    _lower_level(change, block, inner)
+    _lower_level(change, block, tuple(inner))
     for b, ones in [(q, rest) for q, (_, rest) in zip(fresh, lifted, strict=True)]:
         change.blocks.append(_single(b, ones, block))
     for target, q in zip(block.targets, fresh, strict=True):
@@ -131,7 +131,9 @@ def _integral(change: Change, atom: Atom) -> Atom:
 
 
 def _lower_level(change: Change, block: Block, inner: tuple[Polynomial, ...]) -> None:
-    """Chains z' = target become ``mass @ z' = q + L``, so that the same mass serves the next level."""
+    """Where input derivatives are left, chains z' = target become ``mass @ z' = q + L`` for the next level."""
+    if not any(Kind.RATE in x.kinds() for x in inner):
+        return
     chains: dict[Atom, Block] = {}
     for b in change.blocks:
         if len(b.targets) == 1 and b.right[0] in [Polynomial.of(t) for t in block.targets]:
@@ -158,8 +160,18 @@ def _put_in(change: Change, solved: dict[Atom, Polynomial]) -> None:
                 table[atom] = value.substitute(held)
 
 
-def _nominal(change: Change, value: Polynomial) -> dict[Atom, Fraction]:
-    return {a: change.start[a] if a.kind is Kind.SIGNAL else change.at_start(a) for a in value.atoms()}
+def _start(change: Change, block: Block, row: int, lifted: Polynomial) -> Polynomial:
+    """Start value of M x - L, in adjustable parameters."""
+    physical = [m.scaled(change.start[block.targets[j]]) for j, m in block.mass[row].items()]
+    values = {
+        a: change.start[a] if a.kind is Kind.SIGNAL else change.at_start(a) for a in lifted.atoms() - _knobs(lifted)
+    }
+    at_start = lifted.substitute({a: Polynomial.constant(value) for a, value in values.items()})
+    return Polynomial.sum(physical) - at_start
+
+
+def _knobs(value: Polynomial) -> set[Atom]:
+    return {a for a in value.atoms() if a.kind is Kind.PARAMETER}
 
 
 def _fresh(change: Change, target: Atom) -> Atom:
