@@ -75,19 +75,15 @@ def find_ranges(patch: Patch, form: Form, reach: Reach) -> Ranges:
     seen = _Seen(patch, reach, tables)
     bounded = any(s.within is not None and s.waveform is None for s in patch.sources.values())
     nodes: dict[str, NodeRange] = {}
-    later = []
     for stage in patch.stages:
-        known = _known(stage, form, reach)
-        if known is not None:
-            nodes[stage.node] = NodeRange(stage.node, known.low, known.high, seen.rate[stage.node], known.known_by)
-        elif stage.kind == "reference":
-            nodes[stage.node] = NodeRange(stage.node, 1.0, 1.0, 0.0, "proved")
-        else:
-            nodes[stage.node] = (_combined if bounded else _widened)(stage, patch, nodes, seen)
+        nodes[stage.node] = _node(stage, patch, form, reach, nodes, seen, bounded)
+    # A state's rate needs the ranges of all its inputs; rates of sums and products then need the states' rates.
     for stage in patch.stages:
         if stage.kind in ("integrator", "source"):
-            later.append(_with_rate(stage, patch, nodes, seen, bounded))
-    nodes |= {n.node: n for n in later}
+            nodes[stage.node] = _with_rate(stage, patch, nodes, seen, bounded)
+    for stage in patch.stages:
+        if stage.kind not in ("integrator", "source"):
+            nodes[stage.node] = _node(stage, patch, form, reach, nodes, seen, bounded)
     values = {node: pair[0] for node, pair in tables[0].items()}
     rates = {node: pair[1] for node, pair in tables[0].items()}
     return Ranges(nodes, reach.reference.times, values, rates)
@@ -174,6 +170,20 @@ def _known(stage: Stage, form: Form, reach: Reach) -> Range | None:
         return None
     offset = float(form.offsets.get(stage.signal, 0))
     return Range(found.name, found.low - offset, found.high - offset, found.known_by)
+
+
+def _node(
+    stage: Stage, patch: Patch, form: Form, reach: Reach, nodes: Mapping[str, NodeRange], seen: _Seen, bounded: bool
+) -> NodeRange:
+    if stage.kind == "reference":
+        return NodeRange(stage.node, 1.0, 1.0, 0.0, "proved")
+    known = _known(stage, form, reach)
+    if known is None or stage.kind not in ("integrator", "source"):
+        derived = (_combined if bounded else _widened)(stage, patch, nodes, seen)
+        if known is None:
+            return derived
+        return NodeRange(stage.node, known.low, known.high, derived.rate, known.known_by)
+    return NodeRange(stage.node, known.low, known.high, seen.rate[stage.node], known.known_by)
 
 
 def _weakest(kinds: list[str]) -> str:
