@@ -163,15 +163,10 @@ def _put_in(change: Change, solved: dict[Atom, Polynomial]) -> None:
 def _start(change: Change, block: Block, row: int, lifted: Polynomial) -> Polynomial:
     """Start value of M x - L, in adjustable parameters."""
     physical = [m.scaled(change.start[block.targets[j]]) for j, m in block.mass[row].items()]
-    values = {
-        a: change.start[a] if a.kind is Kind.SIGNAL else change.at_start(a) for a in lifted.atoms() - _knobs(lifted)
-    }
+    signals = [a for a in lifted.atoms() if a.kind is not Kind.PARAMETER]
+    values = {a: change.start[a] if a.kind is Kind.SIGNAL else change.at_start(a) for a in signals}
     at_start = lifted.substitute({a: Polynomial.constant(value) for a, value in values.items()})
     return Polynomial.sum(physical) - at_start
-
-
-def _knobs(value: Polynomial) -> set[Atom]:
-    return {a for a in value.atoms() if a.kind is Kind.PARAMETER}
 
 
 def _fresh(change: Change, target: Atom) -> Atom:

@@ -31,7 +31,7 @@ def test_rates_at_the_start_are_those_of_the_equations(name):
     case = CASES[name]
     system = build_system(read_problem(problem_text(case)))
     parameters = {sympy.Symbol(k): v for k, v in case["parameters_numeric"].items()}
-    start = {k: v for k, v in case["initial_numeric"].items()}
+    start = case["initial_numeric"]
     values = {s.name: float(s.start) for s in system.states}
     assert values == pytest.approx(start, rel=1e-12)
     known = values | {s.name: s.waveform.values(np.zeros(1))[0] for s in system.sources}
