@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from patchplan.form.records import Form
+from patchplan.horizon import within_horizon
 from patchplan.patch.records import Patch, Stage
 from patchplan.quantity import engineering
 from patchplan.ranges import Ranges
@@ -60,6 +61,7 @@ def size(
     think
         How many starting points the search takes: low, normal or high.
     """
+    sensitivity = within_horizon(sensitivity, linear=form.system.is_linear)
     unit = float(form.system.time_unit_seconds)
     given = None if speed == "free" else unit if speed == "real time" else unit / float(speed)
     pace = choose_speed(form, patch, ranges, sensitivity, target, given=given)

@@ -104,7 +104,8 @@ def choose_values(
 
 def _count(unknowns: int, think: str) -> int:
     """Fewer attempts for boards whose pairs of moves are many."""
-    return max(3, round(ATTEMPTS[think][0] * min(1.0, 20 / max(unknowns, 1)) ** 1.5))
+    share: float = min(1.0, 20 / max(unknowns, 1))
+    return max(3, round(ATTEMPTS[think][0] * float(share**1.5)))
 
 
 def _attempt(board: _Board, number: int, random: np.random.Generator) -> tuple[float, Array, list[Choice]]:
