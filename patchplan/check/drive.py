@@ -49,15 +49,40 @@ class Drive:
         """Whether there is no source at all."""
         return not self.scale
 
-    def stretch(self, start: float, end: float) -> Callable[[float], Array]:
-        """Inputs (sources' volts, then 1) as a function of circuit time, between two jumps.
+    def stretch(self, start: float, end: float) -> Stretch:
+        """Inputs between two jumps [circuit s]."""
+        return Stretch(self, start, end)
 
-        Parameters
-        ----------
-        start, end
-            The stretch [circuit s].
-        """
-        readers = [self._reader(i, start, end) for i in range(len(self.scale))]
+
+@dataclass(frozen=True)
+class Stretch:
+    """Inputs (sources' volts, then 1) over a stretch of circuit time without jumps."""
+
+    drive: Drive
+    start: float
+    end: float
+
+    @property
+    def constant(self) -> bool:
+        """Whether there is no source at all."""
+        return self.drive.constant
+
+    @property
+    def knots(self) -> Array:
+        """Rows of the tables, where slopes jump [circuit s]."""
+        rows = [table[0] * self.drive.time_scale for table in self.drive.tables if table is not None]
+        return np.unique(np.concatenate([np.zeros(0), *rows]))
+
+    def over(self, times: Array) -> Array:
+        """Inputs at many times, shape ``(n_sources + 1, n_times)``."""
+        inside = _INSIDE * (self.end - self.start)
+        clipped = np.clip(times, self.start + inside, self.end - inside)
+        rows = [self._values(i, clipped) for i in range(len(self.drive.scale))]
+        return np.array([*rows, np.ones(len(times))])
+
+    def reader(self) -> Callable[[float], Array]:
+        """Inputs as a function of one time; the array it gives is used again at the next call."""
+        readers = [self._reader(i) for i in range(len(self.drive.scale))]
         values = np.ones(len(readers) + 1)
 
         def at(time: float) -> Array:
@@ -67,23 +92,23 @@ class Drive:
 
         return at
 
-    def over(self, times: Array, start: float, end: float) -> Array:
-        """Inputs at many times of one stretch, shape ``(n_sources + 1, n_times)``."""
-        at = self.stretch(start, end)
-        return np.array([at(float(t)).copy() for t in times]).reshape(len(times), len(self.scale) + 1).T
-
-    def _reader(self, index: int, start: float, end: float) -> Callable[[float], float]:
-        table, scale = self.tables[index], self.scale[index]
+    def _values(self, index: int, times: Array) -> Array:
+        table, signal, scale = self.drive.tables[index], self.drive.signals[index], self.drive.scale[index]
         if table is not None:
-            return _linear(table[0] * self.time_scale, table[1] * scale, end)
-        signal = self.signals[index]
+            return np.asarray(scale * np.interp(times / self.drive.time_scale, *table))
         assert signal is not None
-        inside = _INSIDE * (end - start)
+        return np.asarray(scale * signal.values(times / self.drive.time_scale))
+
+    def _reader(self, index: int) -> Callable[[float], float]:
+        table = self.drive.tables[index]
+        if table is not None:
+            return _linear(table[0] * self.drive.time_scale, table[1] * self.drive.scale[index], self.end)
+        inside = _INSIDE * (self.end - self.start)
 
         def sample(times: Array) -> Array:
-            return np.asarray(scale * signal.values(np.clip(times, start + inside, end - inside) / self.time_scale))
+            return self._values(index, np.clip(times, self.start + inside, self.end - inside))
 
-        return _cubic(sample, start, end)
+        return _cubic(sample, self.start, self.end)
 
 
 def drive_of(circuit: Circuit, sources: tuple[Part, ...], waveforms: Mapping[str, tuple[Array, Array]]) -> Drive:

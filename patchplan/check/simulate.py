@@ -10,7 +10,8 @@ from itertools import pairwise
 import numpy as np
 from numpy.typing import NDArray
 
-from patchplan.check.drive import drive_of
+from patchplan.check.drive import Stretch, drive_of
+from patchplan.check.linear import Modes, modes_of
 from patchplan.check.model import Model
 from patchplan.check.network import build_network, idealised
 from patchplan.check.start import start_state
@@ -54,7 +55,7 @@ class Traces:
         return np.asarray(self.volts[self.nets.index(net)])
 
 
-class _TooLong(Exception):  # noqa: N818
+class _TooLong(Exception):
     """The run needs more evaluations than it may have; holds the time reached [circuit s]."""
 
 
@@ -88,8 +89,9 @@ def simulate(
 
     Notes
     -----
-    LSODA (Petzold 1983) with the exact Jacobian on boards of up to 150 states, the variable-order BDF of Shampine and
-    Reichelt (1997) with a sparse Jacobian on larger ones.
+    Boards without multipliers that stay clear of their limits are run by modes, exact in time. All others by LSODA
+    (Petzold 1983) with the exact Jacobian up to 150 states, by the variable-order BDF of Shampine and Reichelt (1997)
+    with a sparse Jacobian above.
     """
     board = idealised(circuit, gain=gain, bandwidth=bandwidth, slew=slew, bias=bias, switches=switches,
                       multiplier=multiplier)  # fmt: skip
@@ -100,17 +102,16 @@ def simulate(
     rows = _rows_shown(circuit, network.nets)
     voltage, voltage_input = network.voltage[rows], network.voltage_input[rows]
     edges = [0.0, *drive.jumps, float(max(wanted[-1], circuit.duration))]
+    modes = modes_of(model)
     done, failure, state = [], "", None
     for begin, end in pairwise(edges):
-        at = drive.stretch(begin, end)
+        stretch = drive.stretch(begin, end)
         if state is None:
-            state = start_state(board, network, at(begin))
+            state = start_state(board, network, stretch.over(np.zeros(1))[:, 0])
         inside = np.clip(wanted[_rows_within(wanted, begin, end, edges[-1])], begin, end)
-        push = _push(model, at, drive.constant)
-        states, failure = _integrate(model, push, state, np.concatenate([[begin], inside, [end]]), tolerance)
+        states, failure = _run(model, modes, stretch, state, np.concatenate([[begin], inside, [end]]), tolerance)
         state, kept = states[-1], min(len(inside), len(states) - 1)
-        inputs = np.array([at(float(t)).copy() for t in inside[:kept]]).reshape(kept, len(drive.scale) + 1)
-        done.append(voltage @ states[1 : kept + 1].T + voltage_input @ inputs.T)
+        done.append(voltage @ states[1 : kept + 1].T + voltage_input @ stretch.over(inside[:kept]))
         if failure:
             break
     volts = np.concatenate(done, axis=1)
@@ -133,17 +134,30 @@ def _rows_shown(circuit: Circuit, nets: tuple[str, ...]) -> list[int]:
     return [i for i, net in enumerate(nets) if net in circuit.nodes or net in outputs]
 
 
-def _push(model: Model, at: Callable[[float], Array], constant: bool) -> Callable[[float], Array]:
-    if constant:
+def _run(
+    model: Model, modes: Modes | None, stretch: Stretch, state: Array, times: Array, tolerance: float
+) -> tuple[Array, str]:
+    """States at ``times``, shape ``(n_times, n_states)``, fewer rows and a sentence where the run fails."""
+    if not len(state):
+        return np.zeros((len(times), 0)), ""
+    unique, back = np.unique(times, return_inverse=True)
+    states, failure = modes.run(state, unique, stretch) if modes is not None else None, ""
+    if states is None:
+        states, failure = _integrate(model, stretch, state, unique, tolerance)
+    return states[back[: np.searchsorted(back, len(states))]], failure
+
+
+def _push(model: Model, stretch: Stretch) -> Callable[[float], Array]:
+    at = stretch.reader()
+    if stretch.constant:
         pushed = model.push(at(0.0))
         return lambda time: pushed
     return lambda time: model.push(at(time))
 
 
-def _integrate(
-    model: Model, push: Callable[[float], Array], state: Array, times: Array, tolerance: float
-) -> tuple[Array, str]:
-    """States at ``times``, shape ``(n_times, n_states)``, fewer rows and a sentence where the run fails."""
+def _integrate(model: Model, stretch: Stretch, state: Array, times: Array, tolerance: float) -> tuple[Array, str]:
+    """The full model, step by step; fewer rows and a sentence where it fails."""
+    push = _push(model, stretch)
     left = _MOST_EVALUATIONS
     reached = 0.0
 
@@ -158,17 +172,12 @@ def _integrate(
     def jacobian(x: Array, t: float) -> Array:
         return np.asarray(model.jacobian(x, push(t)))
 
-    if not len(state):
-        return np.zeros((len(times), 0)), ""
-    unique, back = np.unique(times, return_inverse=True)
     try:
         if model.sparse:
-            states, failure = _integrate_sparse(model, push, rates, state, unique, tolerance)
-        else:
-            states, failure = _integrate_dense(rates, jacobian, state, unique, tolerance)
-        return states[back[: np.searchsorted(back, len(states))]], failure
+            return _integrate_sparse(model, push, rates, state, times, tolerance)
+        return _integrate_dense(rates, jacobian, state, times, tolerance)
     except _TooLong:
-        return np.tile(state, (int(np.sum(times == times[0])), 1)), (
+        return state[None, :], (
             f"The run was given up at {reached:.4g} s: the board moves far faster there than its signals do. "
             "Look for positive feedback around an op amp."
         )

@@ -32,7 +32,8 @@ def hold_state(circuit: Circuit, waveforms: Mapping[str, tuple[Array, Array]] | 
     """
     network = build_network(circuit, "operate")
     drive = drive_of(circuit, network.sources, waveforms or {})
-    inputs = drive.stretch(0.0, drive.jumps[0] if drive.jumps else circuit.duration)(0.0).copy()
+    stretch = drive.stretch(0.0, drive.jumps[0] if drive.jumps else circuit.duration)
+    inputs = stretch.over(np.zeros(1))[:, 0]
     state = start_state(circuit, network, inputs)
     volts = network.voltage @ state + network.voltage_input @ inputs
     return dict(zip(network.nets, volts.tolist(), strict=True))
