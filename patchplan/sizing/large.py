@@ -7,7 +7,7 @@ so that a sweep grows with the number of wires and no dense matrix is made.
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from math import log
 
@@ -22,6 +22,8 @@ Array = NDArray[np.float64]
 SWEEPS = 3
 #: How many exact hits on either side of each row's place are tried in one move.
 REACH = 3
+#: Speeds that the search begins from: at most this many, and about this many rows settled in all.
+MOST_SPEEDS, WORK = 24, 2400
 
 
 @dataclass(frozen=True)
@@ -45,11 +47,27 @@ class _Rows:
 
 
 def choose_large(model: Model, target: Target, *, comfortable: Mapping[str, float]) -> Values:
-    """Values, scale factors and speed of a board with hundreds of wires; as ``choose_values``, from one start."""
-    picked = pick_stage_values(model, target, wanted_products(model, model.centre), comfortable, lambda: 0)
-    rows = _rows(model, target, picked)
-    theta, x = _settle(rows, model, model.centre)
-    return _name_parts(model, target, theta, x, picked, rows.weights)
+    """Values, scale factors and speed of a board with many wires; as ``choose_values``, from several speeds."""
+    best: Values | None = None
+    for start in _starts(model):
+        picked = pick_stage_values(model, target, wanted_products(model, start), comfortable, lambda: 0)
+        rows = _rows(model, target, picked)
+        theta, x = _settle(rows, model, start)
+        found = _name_parts(model, target, theta, x, picked, rows.weights)
+        if best is None or found.worst < best.worst:
+            best = found
+    assert best is not None
+    return best
+
+
+def _starts(model: Model) -> Iterator[Array]:
+    """The middle of all bounds, then other speeds; fewer of them for larger boards, one where the speed is given."""
+    yield model.centre
+    for column in model.speed.slope:
+        for share in np.linspace(0.05, 0.95, min(MOST_SPEEDS, WORK // max(len(model.ratios), 1))):
+            start = model.centre
+            start[column] = model.low[column] + share * (model.high[column] - model.low[column])
+            yield start
 
 
 def settled_start(model: Model, target: Target, theta: Array, picked: Mapping[tuple[str, int | str], float]) -> Array:

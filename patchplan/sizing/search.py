@@ -179,5 +179,10 @@ def split_rest(matrix: Array, residual: Array, effect: Effect, low: Array, high:
     return theta, _predicted(effect, residual - matrix @ theta)
 
 
+def merit(effect: Effect, residual: Array) -> float:
+    """What :func:`split_rest` makes small: the largest predicted error plus a share of the largest row error."""
+    return _predicted(effect, residual) + ROW_SHARE * float(np.max(np.abs(residual), initial=0.0))
+
+
 def _predicted(effect: Effect, residual: Array) -> float:
     return float(np.max(np.abs(effect.response @ residual + effect.base), initial=0.0))

@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 from patchplan.sizing.large import choose_large, settled_start
 from patchplan.sizing.model import Model
 from patchplan.sizing.records import Target
-from patchplan.sizing.search import Effect, Loops, Menu, descend, find_loops, loop_errors, split_rest
+from patchplan.sizing.search import Effect, Loops, Menu, descend, find_loops, loop_errors, merit, split_rest
 from patchplan.sizing.values import (
     Choice,
     Unknowns,
@@ -34,9 +34,9 @@ WIDTH = 0.3
 #: The same for capacitors: two steps of E6, and the most values of one start ratio that a menu holds.
 CAPACITOR_WIDTH = 0.9
 MOST_NEAR = 16
-#: Boards with more ratios than this take the search that grows no faster than the board.
-LARGE = 150
-#: Attempts on boards with more ratios than this begin where coordinate descent has settled.
+#: Boards with more ratios than this take only the search that grows no faster than the board.
+LARGE = 40
+#: Attempts on boards with more ratios than this begin where coordinate descent has settled, and compete with it.
 SETTLED = 12
 
 
@@ -99,7 +99,9 @@ def choose_values(
             break
     attempts.sort(key=lambda found: found[0])
     best = [_finish(board, y, choices) for _, y, choices in attempts[:3]]
-    return min(best, key=lambda values: values.worst)
+    if len(model.ratios) > SETTLED:
+        best.append(choose_large(model, target, comfortable=comfortable or {}))
+    return min(best, key=lambda values: merit(effect, -np.log1p(values.errors)))
 
 
 def _count(unknowns: int, think: str) -> int:
