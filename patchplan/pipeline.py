@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator
+from collections.abc import Callable
 from dataclasses import asdict, dataclass, replace
 
 from patchplan.check.compare import check_circuit
@@ -21,6 +21,9 @@ from patchplan.reach.reference import find_reach
 from patchplan.report.records import Plan
 from patchplan.sensitivity import find_sensitivity
 from patchplan.sizing.size import size
+
+#: A plan with offsets has more wires and must better the plan without by this factor in error and spread together.
+OFFSET_COST = 1.25
 
 
 @dataclass(frozen=True, slots=True)
@@ -61,20 +64,14 @@ def plan(
     CannotBuild
         Where no part of the catalogue serves the wishes (supply, reference).
     """
-    best: Plan | None = None
-    for choices in _short_list(think):
-        try:
-            found = plan_with(problem, choices, accept=accept, progress=progress)
-        except ProblemFaults as error:
-            raise rendered(error, problem) from None
-        if best is None or _merit(found) < _merit(best):
-            best = found
-        if best.verdict.verdict == "follows" and best.verdict.max_error_percent < accept / 5:
-            break
-        if not best.form.offsets and len(best.form.notes) == len(best.form.scales):
-            break
-    assert best is not None
-    return best
+    try:
+        found = plan_with(problem, Choices(think=think), accept=accept, progress=progress)
+        if not set(found.form.offsets) - set(found.form.scales):
+            return found
+        plain = plan_with(problem, Choices(offsets=False, think=think), accept=accept, progress=progress)
+    except ProblemFaults as error:
+        raise rendered(error, problem) from None
+    return found if _merit(found, OFFSET_COST) < _merit(plain) else plain
 
 
 def plan_with(
@@ -117,12 +114,17 @@ def not_buildable(faults: tuple[str, ...]) -> Verdict:
     return Verdict("not_buildable", 0.0, 0.0, 0.0, None, (), (), (), warnings=faults)
 
 
-def _short_list(think: str) -> Iterator[Choices]:
-    yield Choices(think=think)
-    yield Choices(offsets=False, think=think)
+def _merit(found: Plan, handicap: float = 1.0) -> tuple[int, float]:
+    """Smaller is better: verdict first, then nominal error plus spread of the worst watched signal.
 
-
-def _merit(found: Plan) -> tuple[int, float]:
-    """Smaller is better: verdict first, then nominal error."""
+    Both are taken as shares of the signal's whole peak, whatever its error base, so that plans with and without offsets
+    compare.
+    """
     order = ("follows", "inaccurate", "overload", "not_buildable")
-    return order.index(found.verdict.verdict), found.verdict.max_error_percent
+    reference, sensitivity = found.reach.reference, found.sensitivity
+    base = dict(zip(sensitivity.watched, sensitivity.base, strict=True))
+    worst = 0.0
+    for signal in found.verdict.signals:
+        peak = abs(reference.of(signal.name)).max() or 1.0
+        worst = max(worst, (signal.max_error_percent + signal.spread_percent) * float(base[signal.name]) / float(peak))
+    return order.index(found.verdict.verdict), worst * handicap
