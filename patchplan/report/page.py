@@ -7,6 +7,7 @@ from pathlib import Path
 
 from patchplan.quantity import engineering
 from patchplan.report import style, words
+from patchplan.report.pictures import MOST_SIGNALS
 from patchplan.report.plan_json import notes_of, warnings_of
 from patchplan.report.records import Plan
 from patchplan.report.tables import (
@@ -59,6 +60,7 @@ def page(
         notes=notes_of(plan),
         # The pictures come from our own drawing; it escapes every name in them.
         drawings=[(name, Markup(embedded(svg, name))) for name, svg in drawings.items()],
+        pictures_left_out=len(plan.verdict.curves) - MOST_SIGNALS if drawings else 0,
         tables=[
             signal_table(plan), node_table(plan), source_table(plan, sources), stage_table(plan),
             coefficient_table(plan), budget_table(plan), parts_table(plan.circuit),

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import textwrap
 from pathlib import Path
+from typing import Any
 
 from patchplan.report import words
 from patchplan.report.plan_json import warnings_of
@@ -28,10 +29,12 @@ def summary(plan: Plan, folder: Path | None = None, *, colour: bool = False) -> 
     """
     works = plan.verdict.verdict == "follows"
     told = words.story(plan)
-    blocks = [_painted(plan.problem.title, "title", colour)]
+    blocks = [_painted(words.printable(plan.problem.title), "title", colour)]
     blocks.append(_painted(_wrapped(told[0]), "good" if works else "bad", colour))
     blocks += [_wrapped(reason) for reason in words.reasons(plan)]
-    blocks += [_wrapped(f"To mend it: {remedy}") for remedy in words.remedies(plan)]
+    remedies = words.remedies(plan)
+    if remedies:
+        blocks.append(_wrapped(f"To mend it: {' '.join(remedies)}"))
     if plan.circuit is not None:
         blocks += map(_wrapped, (*words.speed(plan), words.made_of(plan)))
         blocks += ["", *_columns(_first_rows(node_table(plan))), ""]
@@ -45,14 +48,14 @@ def summary(plan: Plan, folder: Path | None = None, *, colour: bool = False) -> 
 
 def refusal(title: str, reason: str, folder: Path, *, colour: bool = False) -> str:
     """The same for a problem that the parts rule out before anything is planned."""
-    blocks = [_painted(title, "title", colour), _painted(_wrapped(words.NOT_BUILDABLE), "bad", colour)]
+    blocks = [_painted(words.printable(title), "title", colour), _painted(_wrapped(words.NOT_BUILDABLE), "bad", colour)]
     blocks += [_wrapped(reason), _wrapped(f"Written to {folder} (start with plan.json)")]
     return "\n".join(blocks) + "\n"
 
 
 def _wrapped(text: str) -> str:
-    return textwrap.fill(text, WIDTH, initial_indent="  ", subsequent_indent="  ", break_on_hyphens=False,
-                         break_long_words=False)  # fmt: skip
+    options: dict[str, Any] = {"break_on_hyphens": False, "break_long_words": False}
+    return textwrap.fill(words.printable(text), WIDTH, initial_indent="  ", subsequent_indent="  ", **options)
 
 
 def _first_rows(table: Table) -> Table:

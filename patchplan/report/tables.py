@@ -151,7 +151,7 @@ def source_table(plan: Plan, files: dict[str, str]) -> Table:
     """
     rows = [_source_row(plan, stage.signal, stage.node, stage.sign, files) for stage in plan.patch.stages
             if stage.kind == "source" and stage.signal in files] if plan.circuit else []  # fmt: skip
-    note = "A source impedance above this adds more than 0.1 % of error in the lightest input."
+    note = "A source impedance above this takes more than 0.1 % of the signal."
     return Table(
         "Sources", ("source", "node", "one unit is", "impedance up to", "file"), tuple(rows), frozenset({2, 3}), note
     )

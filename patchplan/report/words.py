@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 
+from patchplan.check.records import Cause, NodePeak, Verdict
 from patchplan.quantity import engineering
 from patchplan.report.records import Plan
 
@@ -57,28 +58,36 @@ def reasons(plan: Plan) -> tuple[str, ...]:
     verdict = plan.verdict
     faults = plan.sizing.faults
     if verdict.verdict == "overload":
-        return tuple(
-            f"{n.node} reaches {plain(n.peak_volts)} V where {plain(n.limit_volts)} V is the limit, "
-            f"{engineering(n.time, 's')} after the start of the run. {n.cause}".rstrip()
-            for n in verdict.nodes
-            if not n.ok
-        )
+        return tuple(n.cause or _overload(n) for n in verdict.nodes if not n.ok)
     if verdict.verdict == "inaccurate":
         return tuple(f"{c.cause}: {percent(c.error_percent)}." for c in verdict.budget[:3])
     return faults if verdict.verdict == "not_buildable" or plan.circuit is None else ()
 
 
+#: What lowers an error, by the cause that the check names.
+_REMEDIES = (
+    ("rounding", "Take a finer resistor series, or wider limits of values, under [build]."),
+    ("bandwidth", "Take faster op amps or multipliers, or a slower speed, under [build]."),
+    ("slew", "Take op amps of a higher slew rate, or a slower speed, under [build]."),
+    ("gain", "Take op amps of a higher open-loop gain under [build]."),
+    ("bias", "Take op amps of a lower bias current, or a faster speed, under [build]."),
+    ("switch", "Take larger resistors (resistor_limits) under [build], or a switch of lower resistance."),
+    ("op amps", "Take better op amps and multipliers, or another speed, under [build]."),
+)
+
+
 def remedies(plan: Plan) -> tuple[str, ...]:
     """What would mend a plan that does not work."""
-    build, verdict = plan.problem.build, plan.verdict.verdict
-    if verdict == "overload":
+    build, verdict = plan.problem.build, plan.verdict
+    if verdict.verdict == "overload":
         return ("State the range of the signal under [ranges], so that its scale factor leaves more room.",)
-    if verdict != "inaccurate":
+    if verdict.verdict != "inaccurate":
         return ()
-    ways = [] if build.speed == "free" else ['Let the planner choose the speed: speed = "free" under [build].']
-    ways.append("Take a faster or more precise op amp, or a finer resistor series, under [build].")
-    ways.append("Or accept more with --accept, if the rig can live with it.")
-    return tuple(ways)
+    largest = _largest(verdict).cause if verdict.budget else ""
+    ways = [way for cause, way in _REMEDIES if cause in largest][:1]
+    if build.speed != "free":
+        ways.append('Let the planner choose the speed: speed = "free" under [build].')
+    return (*ways, "Or accept more with --accept, if the rig can live with it.")
 
 
 def speed(plan: Plan) -> tuple[str, ...]:
@@ -114,7 +123,7 @@ def largest_error(plan: Plan) -> str:
     """The top of the error budget, "" where there is none."""
     if not plan.verdict.budget:
         return ""
-    top = max(plan.verdict.budget, key=lambda cause: cause.error_percent)
+    top = _largest(plan.verdict)
     return f"Largest error: {top.cause}, {percent(top.error_percent)}."
 
 
@@ -148,6 +157,20 @@ STATIC_NOTE = (
     "Integrators stand at their start values; summers, inverters and multipliers follow from them. The allowance "
     "covers 1 % parts and usual offsets; common practice, no source. A node far off points at the stage that drives it."
 )
+
+
+def printable(text: str) -> str:
+    """Text without control characters: a problem file may come from anybody, and a terminal obeys them."""
+    return "".join(letter if letter.isprintable() else "?" for letter in text)
+
+
+def _overload(node: NodePeak) -> str:
+    limit, time = f"{plain(node.limit_volts)} V", engineering(node.time, "s")
+    return f"Node {node.node} reaches {plain(node.peak_volts)} V at {time} of circuit time; its limit is {limit}."
+
+
+def _largest(verdict: Verdict) -> Cause:
+    return max(verdict.budget, key=lambda cause: cause.error_percent)
 
 
 def _factor(factor: float) -> str:

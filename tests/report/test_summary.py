@@ -8,7 +8,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 
-from patchplan.check.records import NodePeak
+from patchplan.check.records import Cause, NodePeak
 from patchplan.report import words
 from patchplan.report.pictures import MOST_POINTS, thinned, unused_name
 from patchplan.report.summary import WIDTH, summary
@@ -44,6 +44,21 @@ def test_summary_keeps_to_the_width_and_to_plain_text(plan):
         assert "!" not in text
 
 
+def test_control_characters_of_a_title_do_not_reach_the_terminal(plan):
+    problem = replace(plan.problem, title="calm\x1b[2J\x07")
+    assert summary(replace(plan, problem=problem)).splitlines()[0] == "calm?[2J?"
+
+
+@pytest.mark.parametrize(
+    ("cause", "remedy"),
+    [("rounding", "finer resistor series"), ("slew", "higher slew rate"), ("bias current", "faster speed")],
+)
+def test_remedy_goes_by_the_largest_cause(plan, cause, remedy):
+    budget = (Cause(cause, 7.0), Cause("finite gain", 1.0))
+    verdict = replace(plan.verdict, verdict="inaccurate", max_error_percent=8.4, budget=budget)
+    assert remedy in words.remedies(replace(plan, verdict=verdict))[0]
+
+
 def test_colour_is_added_to_the_same_words(plan):
     import re
 
@@ -73,11 +88,17 @@ def test_failure_says_what_then_why_then_what_mends_it(plan):
     assert -1 not in [flat.find(phrase) for phrase in order]
 
 
-def test_overload_names_node_time_and_cause(plan):
-    peak = NodePeak("x_d", 14.26, 12.0, False, 3.2e-3, "Its range was stated too small.")
-    text = summary(replace(plan, verdict=replace(plan.verdict, verdict="overload", nodes=(peak,))))
-    flat = " ".join(text.split())
-    assert "x_d reaches 14.3 V where 12 V is the limit, 3.2 ms after the start of the run. Its range was" in flat
+@pytest.mark.parametrize(
+    ("cause", "told"),
+    [
+        ("", "Node x_d reaches 14.3 V at 3.2 ms of circuit time; its limit is 12 V."),
+        ("Its range was stated too small.", "Its range was stated too small."),
+    ],
+)
+def test_overload_names_node_time_and_cause(plan, cause, told):
+    peaks = (NodePeak("x_d", 14.26, 12.0, False, 3.2e-3, cause), NodePeak("x", 7.0, 12.0, True))
+    flat = " ".join(summary(replace(plan, verdict=replace(plan.verdict, verdict="overload", nodes=peaks))).split())
+    assert f"Does not work: x_d would leave the linear range. {told} To mend it: State the range" in flat
 
 
 def test_what_cannot_be_built_says_so_first(plan):
