@@ -91,6 +91,17 @@ def _key(factors: Monomial) -> str:
     return "*".join(n if p == 1 else f"{n}^{p}" for n, p in factors) or REFERENCE
 
 
+def _sum_text(terms: Iterable[Term]) -> str:
+    """Readable and exact: ``y - 3/2*z``."""
+    text = ""
+    for term in terms:
+        size = abs(term.coefficient)
+        parts = ([] if size == 1 and term.factors else [str(size)]) + ([_key(term.factors)] if term.factors else [])
+        joint = " - " if term.coefficient < 0 else " + "
+        text += (joint if text else joint.strip(" +")) + "*".join(parts)
+    return text
+
+
 def _take_out_knobs(rows: Iterable[Row]) -> tuple[list[Row], list[tuple[Row, str]]]:
     """Replace each group of terms under one knob by that knob's stage.
 
@@ -99,7 +110,7 @@ def _take_out_knobs(rows: Iterable[Row]) -> tuple[list[Row], list[tuple[Row, str
     Returns
     -------
     tuple of list
-        Rows without knobs, and (row, knob) of the knob stages, named ``knob * (sum)``, inner ones first.
+        Rows without knobs, and (row, knob) of the knob stages, named ``knob*(sum)``, inner ones first.
     """
     stages: dict[str, tuple[Row, str]] = {}
 
@@ -114,8 +125,7 @@ def _take_out_knobs(rows: Iterable[Row]) -> tuple[list[Row], list[tuple[Row, str
             lead = terms[0].coefficient
             scaled = tuple(replace(t, coefficient=t.coefficient / lead) for t in terms)
             body = strip(Row("", scaled))
-            text = " + ".join(f"{t.coefficient}*{_key(t.factors)}" for t in body.terms)
-            key = f"{name} * ({text})"
+            key = f"{name}*({_sum_text(body.terms)})"
             stages.setdefault(key, (Row(key, body.terms, terms[0].origin), name))
             plain.append(Term(lead, ((key, 1),), (), terms[0].origin))
         return Row(row.name, tuple(plain), row.origin)
