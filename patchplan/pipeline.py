@@ -86,7 +86,9 @@ def plan_with(
     target = target_of(build, catalogue)
     say("Solving the problem")
     reach = find_reach(system, problem.ranges, build)
-    form = find_form(system, reach, problem.terminals, offsets=choices.offsets)
+    form = find_form(
+        system, reach, problem.terminals, offsets=choices.offsets, swing=min(-target.op_amp.low, target.op_amp.high)
+    )
     say("Drawing the patch")
     patch = build_patch(form, hold=build.run != "free")
     ranges = find_ranges(patch, form, reach)

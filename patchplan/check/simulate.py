@@ -83,7 +83,8 @@ def simulate(
     tolerance
         Relative error of one step; as many volts are the absolute error.
     times
-        Times wanted, rising [circuit s]; 1001 over the run where None. Equal times (a jump) are allowed.
+        Times wanted, rising [circuit s], the last one ends the run; 1001 over the whole run where None. Equal times (a
+        jump) are allowed.
     waveforms
         Stand-ins for inputs known only by their bounds: name -> (times, values) in problem time and units.
 
@@ -101,7 +102,8 @@ def simulate(
     wanted = np.linspace(0.0, circuit.duration, _DEFAULT_POINTS) if times is None else times
     rows = _rows_shown(circuit, network.nets)
     voltage, voltage_input = network.voltage[rows], network.voltage_input[rows]
-    edges = [0.0, *drive.jumps, float(max(wanted[-1], circuit.duration))]
+    last = float(wanted[-1]) or circuit.duration
+    edges = [0.0, *(t for t in drive.jumps if t < last), last]
     modes = modes_of(model)
     done, failure, state = [], "", None
     for begin, end in pairwise(edges):

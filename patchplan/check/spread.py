@@ -53,7 +53,8 @@ def spread_of(sensitivity: Sensitivity, patch: Patch, sizing: Sizing, target: Ta
             columns["capacitors"].append(capacitor * shared)
         else:
             columns["resistors"].append(resistor * shared)
-        columns["offsets"].append(target.op_amp.offset * _offset_gain(stage, sized, sizing.time_scale) / volts * rate)
+        drift = target.op_amp.offset * _offset_gain(stage, sized, sizing.time_scale) / volts
+        columns["offsets"].append(drift * _leaked(sensitivity.times, stage, sized, sizing.time_scale) * rate)
         if sized.start is not None and sized.start[0]:
             start = sensitivity.start[stage.name] * sized.start_volts / volts
             columns["resistors"].append(sqrt(2) * resistor * start)
@@ -93,6 +94,17 @@ def _offset_gain(stage: Stage, sized: StageSizing, time_scale: float) -> float:
         feedback = 1.0 / sized.feedback if sized.feedback else 0.0
         return (conductance + feedback) / sized.capacitor * time_scale
     return 1.0 + sized.feedback * conductance
+
+
+def _leaked(times: Array, stage: Stage, sized: StageSizing, time_scale: float) -> Array:
+    """Share of a drift that a DC-limit resistor lets stand, shape ``(n_times,)``.
+
+    The sensitivities know of no such resistor; a ramp t becomes tau*(1 - exp(-t/tau)), exact for a lone integrator.
+    """
+    if stage.kind != "integrator" or not sized.feedback:
+        return np.ones(len(times))
+    x = np.maximum(times * time_scale / (sized.feedback * sized.capacitor), 1e-12)
+    return np.asarray(-np.expm1(-x) / x)
 
 
 def _into(leg: Leg) -> float:

@@ -9,8 +9,8 @@ from typing import NoReturn
 
 import numpy as np
 
-from patchplan.equation.constants import PI, constant_value
-from patchplan.equation.formula import factors_of, product_of, refuse, tree_derivative
+from patchplan.equation.constants import PI, constant_value, names_of
+from patchplan.equation.formula import factors_of, product_of, refuse, sum_tree, tree_derivative
 from patchplan.equation.polynomial import HIGHEST_DEGREE, MOST_TERMS, Atom, Kind, Polynomial, TooLargeError
 from patchplan.equation.tree import Binary, Call, Minus, Name, Node, Number, text_of
 from patchplan.equation.waveform import _line, numeric_tree
@@ -56,6 +56,7 @@ class Algebra:
     functions: dict[Atom, Node] = field(default_factory=dict)
     written: dict[Atom, Node] = field(default_factory=dict)
     divisors: list[Node] = field(default_factory=list)
+    _known: dict[int, tuple[Node, Polynomial]] = field(default_factory=dict)
 
     def polynomial(self, node: Node) -> Polynomial:
         """Polynomial of a tree.
@@ -65,6 +66,10 @@ class Algebra:
         ProblemFaults
             With one fault: a quotient, root or function of signals, an expansion that is too large.
         """
+        # Deep powers and calls look at their parts more than once; without a memory that doubles at every level.
+        known = self._known.get(id(node))
+        if known is not None:
+            return known[1]
         try:
             made = self._polynomial(node)
         except TooLargeError:
@@ -73,7 +78,16 @@ class Algebra:
                 f"Multiplied out, this has over {MOST_TERMS} terms or a degree over {HIGHEST_DEGREE}.",
                 "Use a lower power, or name parts of it in definitions.",
             )
-        return made.placed(node.origin) if not _is_sum(node) else made
+        made = made if _is_sum(node) else made.placed(node.origin)
+        self._known[id(node)] = node, made
+        return made
+
+    def forget(self) -> None:
+        """Drop all that was worked out, after a change of what names stand for."""
+        self.functions.clear()
+        self.written.clear()
+        self.divisors.clear()
+        self._known.clear()
 
     def _polynomial(self, node: Node) -> Polynomial:
         if isinstance(node, Number):
@@ -231,10 +245,27 @@ class Algebra:
         start, end = line[0], line[0] + line[1] * self.duration
         if min(start, end) >= 0:
             return Fraction(1)
-        return Fraction(0) if max(start, end) < 0 else None
+        return Fraction(0) if max(start, end) <= 0 else None
 
     def _function(self, kind: Kind, node: Node) -> Polynomial:
-        return Polynomial.of(self._register(kind, self.folded(node), node), 1, node.origin)
+        tree = self.folded(node)
+        allowed = {"t"} if kind is Kind.TIME else self.adjustable
+        if all(n.name in allowed for n in names_of(tree)):
+            return Polynomial.of(self._register(kind, tree, node), 1, node.origin)
+        tree = self._without_cancelled(node)
+        return Polynomial.of(self._register(kind, tree, tree), 1, node.origin)
+
+    def _without_cancelled(self, node: Node) -> Node:
+        """Tree of a function in which names cancel, as x in sin(t + x - x)."""
+
+        def clean(inner: Node) -> Node:
+            return sum_tree(self.polynomial(inner), self.functions)
+
+        if isinstance(node, Binary) and not _is_sum(node):
+            return Binary(node.operator, clean(node.left), clean(node.right), node.origin)
+        if isinstance(node, Call):
+            return Call(node.function, tuple(map(clean, node.arguments)), node.origin)
+        return clean(node)
 
     def _register(self, kind: Kind, folded: Node, written: Node) -> Atom:
         atom = Atom(kind, text_of(folded))
@@ -252,12 +283,17 @@ class Algebra:
             value = PI if node.name == "pi" else self.fixed.get(node.name)
             return node if value is None else Number(value, node.origin)
         if isinstance(node, Minus):
-            made: Node = Minus(self.folded(node.operand), node.origin)
+            made: Node = Minus(self._part(node.operand), node.origin)
         elif isinstance(node, Binary):
-            made = Binary(node.operator, self.folded(node.left), self.folded(node.right), node.origin)
+            made = Binary(node.operator, self._part(node.left), self._part(node.right), node.origin)
         else:
-            made = Call(node.function, tuple(self.folded(a) for a in node.arguments), node.origin)
+            made = Call(node.function, tuple(self._part(a) for a in node.arguments), node.origin)
         return Number(constant_value(made, {}), node.origin) if _foldable(made) else made
+
+    def _part(self, node: Node) -> Node:
+        """Part of a folded tree; a number where its names cancel, as in c - c."""
+        value = self.polynomial(node).value
+        return self.folded(node) if value is None else Number(value, node.origin)
 
     def _refuse_signals(self, node: Node, inner: Polynomial, what: str) -> NoReturn:
         atoms = sorted(a for a in inner.atoms() if a.kind in _SIGNALS)

@@ -7,7 +7,7 @@ from dataclasses import dataclass, field
 from fractions import Fraction
 
 from patchplan.equation.algebra import Algebra
-from patchplan.equation.elimination import sum_tree
+from patchplan.equation.formula import sum_tree
 from patchplan.equation.knobs import Knobs
 from patchplan.equation.polynomial import Kind, Polynomial, Powers, part
 from patchplan.equation.problem import Input
@@ -105,10 +105,10 @@ class Assembly:
         powers = next(iter(value.terms))
         if len(value) == 1 and len(powers) == 1 and powers[0][1] == 1 and powers[0][0].name in self.algebra.named:
             return self.input(powers[0][0].name)
-        tree = sum_tree(value, self.algebra)
+        tree = sum_tree(value, self.algebra.functions)
         key = text_of(tree)
         if key not in self._names:
-            name = text_of(sum_tree(value, self.algebra, written=True))
+            name = text_of(sum_tree(value, self.algebra.written, rounded=True))
             # The same text may stand for two functions where an input and a formula share it.
             while name in self.sources:
                 name += " "

@@ -7,6 +7,7 @@ from fractions import Fraction
 from typing import Any
 
 from patchplan.equation.algebra import Algebra
+from patchplan.equation.formula import sum_tree
 from patchplan.equation.polynomial import Atom, Kind, Polynomial
 from patchplan.equation.tree import Binary, Call, Minus, Name, Node, Number
 
@@ -167,7 +168,7 @@ def _back(value: Any, letters: Sequence[str], trees: dict[str, Node], algebra: A
     if rest.value is not None:
         return result.scaled(1 / rest.value)
     first = next(iter(rest.terms.values()))
-    over = algebra.polynomial(Binary("/", Number(Fraction(1)), sum_tree(rest.scaled(1 / first), algebra)))
+    over = algebra.polynomial(Binary("/", Number(Fraction(1)), sum_tree(rest.scaled(1 / first), algebra.functions)))
     return result.scaled(1 / first) * over
 
 
@@ -179,32 +180,3 @@ def _terms(poly: Any, letters: Sequence[str]) -> Polynomial:
         for powers, value in poly.terms()
     }
     return Polynomial(terms)
-
-
-def sum_tree(value: Polynomial, algebra: Algebra, *, written: bool = False) -> Node:
-    """Tree of a polynomial of parameters or of functions of time."""
-    trees = algebra.written if written else algebra.functions
-    result: Node | None = None
-    for powers, coefficient in value.terms.items():
-        part = _product_tree(abs(coefficient), powers, trees)
-        if result is None:
-            result = Minus(part) if coefficient < 0 else part
-        else:
-            result = Binary("-" if coefficient < 0 else "+", result, part)
-    return result or Number(Fraction(0))
-
-
-def _product_tree(coefficient: Fraction, powers: tuple[tuple[Atom, int], ...], trees: dict[Atom, Node]) -> Node:
-    def power(atom: Atom, n: int) -> Node:
-        return trees[atom] if n == 1 else Binary("^", trees[atom], Number(Fraction(n)))
-
-    top = [power(a, n) for a, n in powers if n > 0]
-    if coefficient != 1 or not top:
-        top.insert(0, Number(coefficient))
-    result = top[0]
-    for factor in top[1:]:
-        result = Binary("*", result, factor)
-    for atom, n in powers:
-        if n < 0:
-            result = Binary("/", result, power(atom, -n))
-    return result

@@ -2,10 +2,11 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from fractions import Fraction
 from typing import NoReturn
 
+from patchplan.equation.polynomial import Atom, Polynomial
 from patchplan.equation.tree import Binary, Call, Minus, Name, Node, Number
 from patchplan.errors import Fault, ProblemFaults
 
@@ -37,6 +38,35 @@ def product_of(factors: Sequence[Node]) -> Node:
     result = factors[0]
     for factor in factors[1:]:
         result = Binary("*", result, factor, result.origin)
+    return result
+
+
+def sum_tree(value: Polynomial, trees: Mapping[Atom, Node], *, rounded: bool = False) -> Node:
+    """Tree of a polynomial, given a tree for each atom; ``rounded`` numbers are for names alone."""
+    result: Node | None = None
+    for powers, coefficient in value.terms.items():
+        size = Fraction(f"{float(abs(coefficient)):.6g}") if rounded else abs(coefficient)
+        part = _product_tree(size, powers, trees)
+        if result is None:
+            result = Minus(part) if coefficient < 0 else part
+        else:
+            result = Binary("-" if coefficient < 0 else "+", result, part)
+    return result or Number(Fraction(0))
+
+
+def _product_tree(coefficient: Fraction, powers: tuple[tuple[Atom, int], ...], trees: Mapping[Atom, Node]) -> Node:
+    def power(atom: Atom, n: int) -> Node:
+        return trees[atom] if n == 1 else Binary("^", trees[atom], Number(Fraction(n)))
+
+    top = [power(a, n) for a, n in powers if n > 0]
+    if coefficient != 1 or not top:
+        top.insert(0, Number(coefficient))
+    result = top[0]
+    for factor in top[1:]:
+        result = Binary("*", result, factor)
+    for atom, n in powers:
+        if n < 0:
+            result = Binary("/", result, power(atom, -n))
     return result
 
 

@@ -11,7 +11,7 @@ import numpy as np
 
 from patchplan.equation.algebra import Algebra
 from patchplan.equation.constants import constant_value, names_of
-from patchplan.equation.elimination import sum_tree
+from patchplan.equation.formula import sum_tree
 from patchplan.equation.polynomial import Atom, Polynomial, Powers
 from patchplan.equation.problem import Parameter
 from patchplan.equation.system import Knob
@@ -80,8 +80,8 @@ class Knobs:
         return groups
 
     def _knob(self, value: Polynomial) -> str:
-        tree = sum_tree(value, self.algebra)
-        name = text_of(sum_tree(value, self.algebra, written=True))
+        tree = sum_tree(value, self.algebra.functions)
+        name = text_of(sum_tree(value, self.algebra.written, rounded=True))
         if name not in self.made:
             names = tuple(sorted({n.name for n in names_of(tree)} & self.algebra.adjustable))
             self.made[name] = _ranged(name, tree, [self.parameters[n] for n in names])

@@ -8,8 +8,7 @@ from typing import NoReturn
 
 from patchplan.equation.algebra import Algebra
 from patchplan.equation.constants import names_of
-from patchplan.equation.elimination import sum_tree
-from patchplan.equation.formula import product_of, refuse
+from patchplan.equation.formula import product_of, refuse, sum_tree
 from patchplan.equation.polynomial import Atom, Kind, Polynomial, part
 from patchplan.equation.problem import Equation
 from patchplan.equation.tree import Binary, Minus, Name, Node, Number
@@ -176,4 +175,4 @@ def _in_s(node: Node, algebra: Algebra) -> dict[int, Polynomial]:
 def _inverse(value: Polynomial, algebra: Algebra) -> Polynomial:
     if len(value) == 1:
         return value.inverse()
-    return algebra.polynomial(Binary("/", Number(Fraction(1)), sum_tree(value, algebra)))
+    return algebra.polynomial(Binary("/", Number(Fraction(1)), sum_tree(value, algebra.functions)))

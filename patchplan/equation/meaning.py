@@ -43,8 +43,7 @@ def algebra_of(problem: Problem, outline: Outline) -> tuple[Algebra, list[Fault]
             named.add(name)
     algebra.formulas.update(timed)
     algebra.named = frozenset(named)
-    algebra.functions.clear()
-    algebra.written.clear()
+    algebra.forget()
     return algebra, faults
 
 

@@ -19,7 +19,12 @@ LEAST_GAIN = 2.0
 
 
 def find_form(
-    system: System, reach: Reach, terminals: Mapping[str, Terminal] | None = None, *, offsets: bool = True
+    system: System,
+    reach: Reach,
+    terminals: Mapping[str, Terminal] | None = None,
+    *,
+    offsets: bool = True,
+    swing: float = 10.0,
 ) -> Form:
     """Choose the variables that the board carries.
 
@@ -31,9 +36,12 @@ def find_form(
         What the outside dictates, by signal.
     offsets
         Whether signals far from zero may be carried as a difference from a constant.
+    swing
+        Volts that an output may reach; a state whose terminal asks for a fair share of it needs no output stage.
     """
     terminals = terminals or {}
-    system, renamed = _with_terminal_stages(system, terminals)
+    apart = {n: t for n, t in terminals.items() if not _fits_state(n, t, reach, swing)}
+    system, renamed = _with_terminal_stages(system, apart)
     shifts = {renamed.get(n, n): -t.offset / t.volts_per_unit for n, t in terminals.items() if t.offset}
     scales = {renamed.get(n, n): t.volts_per_unit for n, t in terminals.items()}
     notes = [f"{n} keeps {float(t.volts_per_unit):.4g} V per unit from its terminal." for n, t in terminals.items()]
@@ -72,6 +80,14 @@ def _shift_term(term: Term, shifts: Mapping[str, Fraction]) -> Iterable[Term]:
         choices = [(comb(power, k) * shift ** (power - k), k) for k in range(power + 1) if shift or k == power]
         expanded = [(c * factor, f + (((name, k),) if k else ())) for c, f in expanded for factor, k in choices]
     return (replace(term, coefficient=c, factors=f) for c, f in expanded if c)
+
+
+def _fits_state(name: str, terminal: Terminal, reach: Reach, swing: float) -> bool:
+    """Whether a state can carry the terminal's own scale: no offset, and a swing between half and most of the limit."""
+    known = reach.ranges.get(name)
+    if known is None or terminal.offset:
+        return False
+    return 0.5 <= known.peak * abs(float(terminal.volts_per_unit)) / swing <= 0.95
 
 
 def _with_terminal_stages(system: System, terminals: Mapping[str, Terminal]) -> tuple[System, dict[str, str]]:

@@ -36,7 +36,7 @@ class ManyInputs(Inputs):
         cells = np.linspace(0.0, self.duration, levels.shape[1] + 1)
         known = self.edges
         near = np.abs(cells[:, None] - known).min(axis=1) < 1e-9 * self.duration
-        self.edges = np.sort(np.concatenate((known, cells[~near])))
+        self.edges = self.restarts = np.sort(np.concatenate((known, cells[~near])))
 
     def at(self, time: float) -> Array:
         """Every source in every run at one time, shape ``(n_sources, m)``."""

@@ -15,6 +15,8 @@ Stored = tuple[Array, Array]
 
 #: A stretch is entered by this part of the duration at its ends, so that a jump there is seen from inside.
 _INSIDE = 1e-12
+#: With more edges than this a solver steps over those where only a slope jumps (rows of a recording).
+_MANY_EDGES = 100
 
 
 class Inputs:
@@ -38,6 +40,7 @@ class Inputs:
         self._scalars = [_scalar(s, c) for s, c in zip(system.sources, self._curves, strict=True)]
         self.edges = self._edges()
         self.edge_depth = _INSIDE * self.duration
+        self.restarts = self._restarts()
 
     def _edges(self) -> Array:
         """Ends of the stretches without a jump, from 0 to the duration."""
@@ -53,6 +56,16 @@ class Inputs:
         kept: Array = edges[apart]
         kept[-1] = self.duration
         return kept
+
+    def _restarts(self) -> Array:
+        """Edges at which a solver starts anew: all, or where there are very many, those where a value jumps."""
+        inner = self.edges[1:-1]
+        if inner.size <= _MANY_EDGES:
+            return self.edges
+        before, after = self.values(inner - self.edge_depth), self.values(inner + self.edge_depth)
+        size = np.ptp(self.values(self.edges), axis=1)[:, None]
+        jumping = (np.abs(after - before) > 1e-6 * size).any(axis=0)
+        return np.concatenate((self.edges[:1], inner[jumping], self.edges[-1:]))
 
     def values(self, times: Array) -> Array:
         """Every source at the times, shape ``(n_sources, n_times)``."""

@@ -120,15 +120,21 @@ def knobs_at(system: System, points: Array) -> dict[str, Array]:
 
 
 def box_points(count: int) -> Array:
-    """Corners (or, with many parameters, ends of each axis) and a low-discrepancy sample of the unit box."""
-    from scipy.stats import qmc
+    """Corners (or, with many parameters, ends of each axis) and a low-discrepancy sample of the unit box.
 
+    The sample is the additive sequence of the generalised golden ratio (Roberts 2018, The unreasonable effectiveness of
+    quasirandom sequences); scipy's samplers would bring in all of scipy.stats, which takes longer than the runs.
+    """
     if count <= CORNERS_UP_TO:
         corners = np.array(list(product((0.0, 1.0), repeat=count)))
     else:
         corners = np.full((2 * count, count), 0.5)
         corners[np.arange(2 * count), np.repeat(np.arange(count), 2)] = np.tile((0.0, 1.0), count)
-    sample = qmc.Sobol(count, rng=np.random.default_rng(SEED)).random(SAMPLE)
+    ratio = 2.0
+    for _ in range(40):
+        ratio = (1 + ratio) ** (1 / (count + 1))
+    steps = ratio ** -np.arange(1.0, count + 1)
+    sample = (0.5 + np.arange(1, SAMPLE + 1)[:, None] * steps) % 1.0
     return np.concatenate((corners, sample))
 
 

@@ -69,17 +69,15 @@ def solve(field: Bound, start: Array, inputs: Inputs, times: Array, *, tolerance
     GrowsWithoutBoundError
         With the time at which the run could not be carried on.
     """
-    edges = inputs.edges
     x = start
     parts = []
-    first = 0
-    for begin, stop in pairwise(edges.tolist()):
-        # The stretch ends with the first of the two equal times at its stop.
-        last = int(np.searchsorted(times, stop, side="left"))
-        rows = _stretch(field, x, inputs, times[first : last + 1], (begin, stop), tolerance, floor)
-        parts.append(rows)
+    for begin, stop in pairwise(inputs.restarts.tolist()):
+        # From the second of the two equal times at its begin to the first of those at its stop.
+        first, last = np.searchsorted(times, begin, side="right") - 1, np.searchsorted(times, stop, side="left")
+        here, copies = np.unique(times[first : last + 1], return_counts=True)
+        rows = _stretch(field, x, inputs, here, (begin, stop), tolerance, floor)
+        parts.append(np.repeat(rows, copies, axis=-1))
         x = rows[..., -1]
-        first = last + 1
     return np.concatenate(parts, axis=-1)
 
 

@@ -40,8 +40,9 @@ def step_maps(ends: Array, jacobians: Array, forcing: Array) -> tuple[Array, Arr
     scheme, h, n = radau(STEP_STAGES)[1], np.diff(ends), jacobians.shape[1]
     system = -np.einsum("k,jl,kjab->kjalb", h, scheme, jacobians.reshape(h.size, STEP_STAGES, n, n))
     system = system.reshape(h.size, STEP_STAGES * n, STEP_STAGES * n) + np.eye(STEP_STAGES * n)
-    right = np.concatenate((jacobians, forcing), axis=2).reshape(h.size, STEP_STAGES * n, -1)
-    slopes = np.linalg.solve(system, right).reshape(h.size, STEP_STAGES, n, -1)
+    width = n + forcing.shape[2]
+    right = np.concatenate((jacobians, forcing), axis=2).reshape(h.size, STEP_STAGES * n, width)
+    slopes = np.linalg.solve(system, right).reshape(h.size, STEP_STAGES, n, width)
     step = np.einsum("k,l,klac->kac", h, scheme[-1], slopes)
     return step[..., :n] + np.eye(n), step[..., n:]
 
