@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import replace
+from fractions import Fraction
 from pathlib import Path
 
 import numpy as np
@@ -14,7 +15,11 @@ from patchplan.check.figures import error_base, signal_of
 from patchplan.check.simulate import simulate
 from patchplan.check.spread import spread_of
 from patchplan.circuit.records import Circuit, Part
+from patchplan.patch.records import Patch, Stage, Wire
 from patchplan.report.records import Plan
+from patchplan.sensitivity import Sensitivity
+from patchplan.sizing.records import Leg, NodeScale, Sizing, StageSizing, Target
+from tests.check.boards import MULTIPLIER, OP_AMP
 
 PROBLEM = """
 title = "Damped swing with a push and a constant pull"
@@ -84,3 +89,18 @@ def test_half_the_tolerance_halves_the_part_of_its_cause(plan: Plan) -> None:
     after = spread_of(plan.sensitivity, plan.patch, plan.sizing, finer)
     assert after["capacitors"] == pytest.approx(before["capacitors"] / 2)
     assert after["resistors"] == pytest.approx(before["resistors"])
+
+
+def test_a_dc_limit_resistor_stops_the_drift() -> None:
+    # Conant, Analog Dialogue; cases/formulas.json integrator_drift: settles to (1 + Rf/R)*Vos.
+    ohm, leak, farad = 10e3, 100e3, 100e-9
+    time_scale, times = 1e-3, np.linspace(0.0, 100.0, 201)
+    stage = Stage("y", "integrator", "y", "y", 1, (Wire("u", Fraction(-1)),))
+    one = np.ones((1, 1, len(times)))
+    sensitivity = Sensitivity(("y",), np.ones(1), times, (("y", 0),), 0 * one, ("y",), times * one, 0 * one, {})
+    sized = StageSizing("y", (Leg((ohm,)),), farad, leak)
+    sizing = Sizing(time_scale, (0.0, 1.0), ("", ""), {"y": NodeScale("y", 2.0, 1.0, 12.0)}, {"y": sized}, ())
+    target = Target((), (), 0.01, 0.02, 10.0, 0.001, OP_AMP, MULTIPLIER, 0.0, 0.0)
+    offsets = spread_of(sensitivity, Patch((stage,), {"y": "y"}, {}, {}), sizing, target)["offsets"]
+    settled = (1 + leak / ohm) * OP_AMP.offset / 2.0
+    assert offsets[0] == pytest.approx(settled * (1 - np.exp(-times * time_scale / (leak * farad))), rel=1e-9)
