@@ -7,8 +7,9 @@ from fractions import Fraction
 import numpy as np
 import pytest
 
-from patchplan.check.horizon import growth_exponent, horizon_of
+from patchplan.check.horizon import horizon_of
 from patchplan.equation.system import Row, System, Term
+from patchplan.horizon import growth_exponent
 from patchplan.patch.records import Patch, Stage, Wire
 from patchplan.sensitivity import Sensitivity
 from patchplan.sizing.records import Coefficient, Sizing
@@ -46,8 +47,8 @@ def test_exponent_of_exponential_growth_is_found() -> None:
     [TIMES, TIMES**2, TIMES**3, 1.5 + np.sin(TIMES), TIMES * (1.5 + np.sin(TIMES)), 100.0 - 99.9 * np.exp(-TIMES)],
     ids=["phase", "square", "cube", "bounded", "phase of an oscillation", "saturating"],
 )
-def test_growth_of_other_kinds_has_no_exponent(start: np.ndarray) -> None:
-    assert growth_exponent(growing(start, start)) == 0.0
+def test_growth_of_other_kinds_has_no_horizon(start: np.ndarray) -> None:
+    assert horizon_of(system(2), growing(start, start), PATCH, sizing(0.1)) is None
 
 
 def test_horizon_is_where_a_tenth_of_a_percent_has_become_one_percent() -> None:
