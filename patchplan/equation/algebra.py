@@ -17,6 +17,7 @@ from patchplan.equation.waveform import _line, numeric_tree
 from patchplan.errors import Fault, ProblemFaults
 
 _NOT_BUILT = "not built in this version"
+_TIMED = frozenset({"step", "ramp", "pulse", "square", "triangle", "sawtooth"})
 _SIGNALS = {Kind.SIGNAL, Kind.RATE, Kind.SOURCE}
 
 
@@ -223,6 +224,10 @@ class Algebra:
         if not kinds:
             return Polynomial.constant(self._constant_call(node))
         kind = kinds.pop()
+        if kind is Kind.PARAMETER and node.function in _TIMED:
+            refuse(
+                node, f"{_NOT_BUILT}: {node.function} of an adjustable parameter.", "Fix the parameter, or use t in it."
+            )
         settled = self._settled(node) if kind is Kind.TIME else None
         return Polynomial.constant(settled) if settled is not None else self._function(kind, node)
 
@@ -329,5 +334,4 @@ def _foldable(node: Node) -> bool:
         return isinstance(node.operand, Number)
     if isinstance(node, Binary):
         return isinstance(node.left, Number) and isinstance(node.right, Number)
-    timed = ("step", "ramp", "pulse", "square", "triangle", "sawtooth")
-    return isinstance(node, Call) and node.function not in timed and all(isinstance(a, Number) for a in node.arguments)
+    return isinstance(node, Call) and node.function not in _TIMED and all(isinstance(a, Number) for a in node.arguments)

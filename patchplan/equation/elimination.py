@@ -8,11 +8,15 @@ from typing import Any
 
 from patchplan.equation.algebra import Algebra
 from patchplan.equation.formula import sum_tree
-from patchplan.equation.polynomial import Atom, Kind, Polynomial
-from patchplan.equation.tree import Binary, Call, Minus, Name, Node, Number
+from patchplan.equation.polynomial import Atom, Kind, Polynomial, TooLargeError
+from patchplan.equation.tree import Binary, Call, Minus, Name, Node, Number, text_of
 
 #: Row of a sparse matrix: column -> entry.
 Sparse = dict[int, Polynomial]
+
+
+#: Equations times parameters of a mass matrix; beyond, its rational functions grow past all use.
+_MOST_SYMBOLIC = 30
 
 
 class SingularError(Exception):
@@ -40,6 +44,8 @@ def inverse(matrix: Sequence[Sparse], algebra: Algebra) -> list[Sparse]:
     ------
     SingularError
         Where a pivot is zero (identically, where parameters stand in it).
+    TooLargeError
+        Where too many coupled equations hold adjustable parameters.
     """
     if all(entry.value is not None for row in matrix for entry in row.values()):
         numbers = [{j: entry.value for j, entry in row.items()} for row in matrix]
@@ -88,6 +94,8 @@ def _with_parameters(matrix: Sequence[Sparse], algebra: Algebra) -> list[Sparse]
 
     atoms = sorted({a for row in matrix for entry in row.values() for a in entry.atoms()})
     letters = sorted({x for a in atoms for x in _letters(algebra.functions[a])})
+    if len(matrix) * len(letters) > _MOST_SYMBOLIC:
+        raise TooLargeError
     texts = {x: f"p{i}" for i, x in enumerate(letters)}
     made = field(list(texts.values()), QQ)
     known = dict(zip(letters, made[1:], strict=True))
@@ -109,8 +117,6 @@ def _with_parameters(matrix: Sequence[Sparse], algebra: Algebra) -> list[Sparse]
 
 def _letters(node: Node) -> set[str]:
     """Parameters and functions of them that stand in a rational function."""
-    from patchplan.equation.tree import text_of
-
     if isinstance(node, Number):
         return set()
     if isinstance(node, Minus):
@@ -128,8 +134,6 @@ def _whole(node: Node) -> int | None:
 
 
 def _element(node: Node, known: dict[str, Any], one: Any) -> Any:
-    from patchplan.equation.tree import text_of
-
     if isinstance(node, Number):
         return one * node.value.numerator / node.value.denominator
     if isinstance(node, Minus):

@@ -20,7 +20,7 @@ from patchplan.equation.knobs import Knobs
 from patchplan.equation.meaning import Meaning, meaning_of, slope_of, start_of
 from patchplan.equation.model import Block, identity, orders_of, solve, too_large
 from patchplan.equation.outline import Outline, outline_of
-from patchplan.equation.polynomial import Atom, Kind, Polynomial, TooLargeError
+from patchplan.equation.polynomial import MOST_TERMS, Atom, Kind, Polynomial, TooLargeError
 from patchplan.equation.problem import Problem
 from patchplan.equation.rates import Change, remove_rates
 from patchplan.equation.system import Monomial, Row, State, System, Term, row_of
@@ -256,7 +256,13 @@ def _held_rates(signals: Mapping[Atom, Polynomial], asked: Mapping[str, str]) ->
 
 
 def expanded(system: System) -> tuple[Row, ...]:
-    """Rows of states, then of signals, with kept signals put in: only states and sources stand in factors."""
+    """Rows of states, then of signals, with kept signals put in: only states and sources stand in factors.
+
+    Raises
+    ------
+    TooLargeError
+        Where a row would have more than ``MOST_TERMS`` terms.
+    """
     values: dict[str, tuple[Term, ...]] = {}
     signals = []
     for row in system.signals:
@@ -273,6 +279,8 @@ def _substituted(row: Row, values: Mapping[str, tuple[Term, ...]]) -> list[Term]
         parts = [Term(term.coefficient, tuple(f for f in term.factors if f[0] not in values), term.knobs, term.origin)]
         for name, power in term.factors:
             for _ in range(power if name in values else 0):
+                if len(parts) * len(values[name]) > MOST_TERMS:
+                    raise TooLargeError
                 parts = list(row_of("", [_multiplied(p, q) for p in parts for q in values[name]]).terms)
         found += parts
     return found

@@ -224,6 +224,8 @@ def _block(
         raise ProblemFaults([_count(group, [a.text for a in atoms], first)])
     try:
         inverted = inverse(mass, algebra)
+    except TooLargeError:
+        raise ProblemFaults([_too_coupled(len(group), first)]) from None
     except SingularError as error:
         raise ProblemFaults([_singular(atoms[error.column], [equations[i][1] for i in group])]) from None
     targets = tuple(Atom(a.kind, a.name, a.primes - 1) for a in atoms)
@@ -235,6 +237,13 @@ def _count(group: list[int], names: list[str], first: Equation) -> Fault:
     return Fault(
         f"{len(group)} equations share the {len(names)} highest derivatives {', '.join(names)}.",
         "Give as many equations as unknowns.", first.key, (0, len(first.text)),
+    )  # fmt: skip
+
+
+def _too_coupled(count: int, first: Equation) -> Fault:
+    return Fault(
+        f"{count} equations are coupled by coefficients with adjustable parameters; their solution grows past all use.",
+        "Fix parameters of the mass matrix, or couple fewer equations.", first.key, (0, len(first.text)),
     )  # fmt: skip
 
 
@@ -253,6 +262,3 @@ def too_large(equation: Equation) -> Fault:
     return fault_at(
         equation.right, "With its definitions put in, this equation has too many terms.", "Use lower powers."
     )
-
-
-__all__ = ["Block", "Definitions", "TooLargeError", "identity", "orders_of", "solve", "too_large"]

@@ -180,3 +180,8 @@ def test_a_long_ladder_builds_row_by_row():
     assert system.rows[99].terms == (
         Term(-2 * sixth, (("T100", 1),)), Term(sixth, (("T101", 1),)), Term(sixth, (("T99", 1),)),
     )  # fmt: skip
+
+
+def test_names_that_cancel_inside_a_function_of_time_are_gone():
+    system = built(["x' = -x*exp((3 - x) + (x - t)) + (x^0)*sin(t)"], start="x = 1")
+    assert rows(system)["x"] == {(("exp(3 - t)", 1), ("x", 1)): -1, (("sin(t)", 1),): 1}
