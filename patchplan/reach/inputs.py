@@ -16,7 +16,7 @@ Stored = tuple[Array, Array]
 #: A stretch is entered by this part of the duration at its ends, so that a jump there is seen from inside.
 _INSIDE = 1e-12
 #: With more edges than this a solver steps over those where only a slope jumps (rows of a recording).
-_MANY_EDGES = 100
+MANY_EDGES = 100
 
 
 class Inputs:
@@ -60,7 +60,7 @@ class Inputs:
     def _restarts(self) -> Array:
         """Edges at which a solver starts anew: all, or where there are very many, those where a value jumps."""
         inner = self.edges[1:-1]
-        if inner.size <= _MANY_EDGES:
+        if inner.size <= MANY_EDGES:
             return self.edges
         before, after = self.values(inner - self.edge_depth), self.values(inner + self.edge_depth)
         size = np.ptp(self.values(self.edges), axis=1)[:, None]
@@ -126,9 +126,9 @@ class Inputs:
 def _scalar(source: Source, curve: Callable[[Array], Array]) -> Scalar:
     """One source as a function of a single time."""
     tree = source.waveform.tree if source.waveform is not None else None
-    plain = None if tree is None else scalar_function(tree)
-    if plain is None:
+    if tree is None:
         return lambda t: float(curve(np.array([t]))[0])
+    plain = scalar_function(tree)
 
     def value(t: float) -> float:
         try:

@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 from patchplan.equation.system import System
 from patchplan.reach.curves import LINEAR_ERROR, linear_error, refined, resample
 from patchplan.reach.field import Bound, Field
-from patchplan.reach.inputs import Inputs
+from patchplan.reach.inputs import MANY_EDGES, Inputs
 from patchplan.reach.linear import Forcing, solve_linear
 from patchplan.reach.solve import GrowsWithoutBoundError, floors, solve
 
@@ -23,6 +23,8 @@ LEAST_POINTS, MOST_POINTS, MOST_NUMBERS = 600, 20000, 4_000_000
 
 #: Tolerances of the final pass (relative to each state's peak) and of the pass that finds the peaks.
 _TIGHT, _LOOSE = 1e-12, 1e-6
+#: Of the final pass where inputs have very many edges, as a recording's rows: a solver is slow across those.
+_ROUGH_INPUT = 1e-9
 
 
 def start_of(system: System) -> Array:
@@ -72,11 +74,12 @@ def solve_nominal(system: System, field: Bound, inputs: Inputs) -> tuple[Array, 
         times = refined(times, error, most=most)
         if error.max() < 1e-2 or len(times) > most / 2:
             break
-    floor = floors(np.abs(rough).max(axis=1), _TIGHT)
+    tight = _ROUGH_INPUT if len(inputs.edges) > MANY_EDGES else _TIGHT
+    floor = floors(np.abs(rough).max(axis=1), tight)
 
     def states(times: Array) -> Array:
         return (
-            solve(field, start, inputs, times, tolerance=_TIGHT, floor=floor)
+            solve(field, start, inputs, times, tolerance=tight, floor=floor)
             if start.size
             else np.zeros((0, times.size))
         )

@@ -33,10 +33,10 @@ def test_samples_and_ranges(name, tmp_path):
         np.testing.assert_allclose(straight, given["samples"][signal], atol=1e-4 * peak, rtol=0)
         low, high = given["range"][signal]
         found = reach.ranges[signal]
-        # The ends given are those of samples, with 7 digits; the peak is that of the curve.
+        # The ends given are those of samples, about 1e-4 short at worst; the peak is that of the curve.
         assert found.low < low + 1e-6 * peak
         assert found.high > high - 1e-6 * peak
         if found.known_by == "proved":
             assert found.peak == pytest.approx(peak, rel=2e-7)
-            assert found.low == pytest.approx(low, abs=3e-5 * peak)
-            assert found.high == pytest.approx(high, abs=3e-5 * peak)
+            assert found.low == pytest.approx(low, abs=1e-4 * peak)
+            assert found.high == pytest.approx(high, abs=1e-4 * peak)
