@@ -65,7 +65,11 @@ def replace_folder(folder: Path, files: Mapping[str, bytes], *, patience: float 
             mend(folder)
             may_write(folder)
             _refuse_clashes(folder, files)
-            _build(folder, files)
+            try:
+                _build(folder, files)
+            except Exception:
+                shutil.rmtree(_beside(folder, "new"), ignore_errors=True)
+                raise
             _swap(folder)
             _sweep(folder)
     except Timeout:

@@ -14,7 +14,7 @@ from patchplan.equation.problem import Problem
 from patchplan.patch.records import Patch, Stage
 from patchplan.report.codec import decode, encode, rounded
 from patchplan.report.records import Plan
-from patchplan.sizing.records import Sizing, StageSizing
+from patchplan.sizing.records import Leg, Sizing, StageSizing
 from patchplan.version import __version__
 
 CONTRACT = 1
@@ -48,6 +48,7 @@ def plan_data(plan: Plan, files: Sequence[str] = ()) -> dict[str, Any]:
         "signals": _signals(plan, plan.circuit) if plan.circuit else [],
         "stages": [_stage(plan, stage) for stage in plan.patch.stages] if plan.circuit else [],
         "counts": dict(sorted(plan.patch.counts().items())),
+        "sign_stages": plan.patch.sign_stages,
         "sign_stages_lower_bound": plan.patch.sign_stages_lower_bound,
         "coefficients": _coefficients(sizing),
         "parts": _parts(plan.circuit) if plan.circuit else [],
@@ -74,6 +75,7 @@ def refusal_data(problem: Problem, reason: str, files: Sequence[str] = ()) -> di
         "check": _check(verdict),
         **{table: [] for table in ("signals", "stages", "coefficients", "parts")},
         "counts": {},
+        "sign_stages": 0,
         "sign_stages_lower_bound": 0,
         "choices": {},
         "problem": problem.text,
@@ -131,20 +133,32 @@ def notes_of(plan: Plan) -> tuple[str, ...]:
 
 
 def transfer_gains(plan: Plan, stage: Stage) -> tuple[float, ...]:
-    """Gain of each input of a stage, as built and positive.
+    """Gain of each input of a stage, as built.
 
-    Integrators: [1/s of circuit time] with the operate switch in series; summers and inverters: [V/V]; multipliers:
-    one gain [1/V] for the product, repeated.
+    Integrators: [1/s of circuit time], the operate switch in series with all inputs counted; summers and inverters:
+    [V/V]; multipliers: the gain [1/V] of the product, once for each input and signed, since differential inputs give
+    either polarity.
     """
     values = plan.sizing.stages.get(stage.name, StageSizing(stage.name))
     if stage.kind == "multiplier":
-        return (1.0 / plan.target.multiplier.scale,) * len(stage.wires)
+        signs = {s.node: s.sign for s in plan.patch.stages}
+        sign = stage.sign * math.prod(signs[wire.source] for wire in stage.wires)
+        return (sign / plan.target.multiplier.scale,) * len(stage.wires)
     if stage.kind == "integrator":
-        series = plan.target.switch_on if values.start is not None else 0.0
-        return tuple(1.0 / ((leg.transfer + series) * values.capacitor) for leg in values.legs)
+        switch = plan.target.switch_on if values.start is not None else 0.0
+        loss = 1.0 + switch * sum(1.0 / _seen_resistance(leg) for leg in values.legs)
+        return tuple(1.0 / (leg.transfer * values.capacitor * loss) for leg in values.legs)
     if stage.bipolar:
         return _bipolar_gains(plan, stage)
     return tuple(values.feedback / leg.transfer for leg in values.legs)
+
+
+def _seen_resistance(leg: Leg) -> float:
+    """Resistance to ground that the summing net sees in a leg whose source is stiff [ohm]."""
+    if len(leg.resistors) == 1:
+        return leg.resistors[0]
+    first, shunt, last = leg.resistors
+    return last + first * shunt / (first + shunt)
 
 
 def _bipolar_gains(plan: Plan, stage: Stage) -> tuple[float, ...]:

@@ -85,13 +85,12 @@ def _stage_row(plan: Plan, index: int) -> tuple[str, ...]:
     stage = plan.patch.stages[index]
     values = plan.sizing.stages.get(stage.name)
     unit = {"integrator": "/s", "multiplier": "/V"}.get(stage.kind, "")
-    gains = zip(stage.wires, transfer_gains(plan, stage), strict=True)
+    gains = transfer_gains(plan, stage)
     if stage.kind == "multiplier":
-        inputs = (
-            f"{' × '.join(w.source for w in stage.wires)} × {engineering(1 / plan.target.multiplier.scale, '')}{unit}"
-        )
+        inputs = f"{' × '.join(w.source for w in stage.wires)} × {plain(gains[0])}{unit}"
     else:
-        inputs = ", ".join(f"{wire.source} × {plain(gain, 4)}{unit}" for wire, gain in gains)
+        pairs = zip(stage.wires, gains, strict=True)
+        inputs = ", ".join(f"{wire.source} × {plain(gain, 4)}{unit}" for wire, gain in pairs)
     if stage.kind == "integrator" and values and values.feedback:
         inputs += f", DC limit {engineering(values.feedback, 'Ω')}"
     start = f"{values.start_volts:z.3f} V" if values and stage.kind == "integrator" else ""

@@ -24,6 +24,9 @@ SLACK = 1e-4
 #: Resistance that the capacitors are chosen for [ohm]; between the 5k that loads outputs and the 1M that strays and
 #: bias currents disturb (common practice, no source).
 COMFORTABLE = 5e4
+#: A T of three resistors stands for at most this many times the largest resistor: it multiplies the share of offsets as
+#: much (common practice, no source). The planner's own speed does without.
+T_REACH = 100.0
 #: The planner's own speed keeps capacitors at or above this, so that some 10 pF of wiring and input capacitance count
 #: for 0.1 % at most [F] (common practice, no source).
 ABOVE_STRAYS = 1e-8
@@ -96,18 +99,25 @@ def choose_speed(
     lag = float(np.max(np.abs(late), initial=0.0))
     low, low_text = max(_fast_ends(patch, ranges, target, scales, gains, parts))
     high, high_text = min(_slow_ends(patch, sensitivity, target, scales, gains))
+    plain = min(high, _plain_end(target, gains))
     if given is not None:
         chosen = given
     elif low >= high:
         chosen = float(np.sqrt(low * high))
     else:
-        grid = np.geomspace(low, high, 81)
+        grid = np.geomspace(low, plain if low < plain else high, 81)
         bias = np.array([bias_error(patch, sensitivity, target, scales, gains, t) for t in grid])
         error = lag / grid + bias
-        good = (error <= 1.1 * error.min() + SLACK) & (grid >= min(high, _above_strays(gains)))
+        good = (error <= 1.1 * error.min() + SLACK) & (grid >= min(grid[-1], _above_strays(gains)))
         chosen = float(grid[np.argmax(good)] if good.any() else grid[np.argmin(error)])
     predicted = lag / chosen + bias_error(patch, sensitivity, target, scales, gains, chosen)
     return Speed((low, high), (low_text, high_text), chosen, predicted, late)
+
+
+def _plain_end(target: Target, gains: Mapping[str, Array]) -> float:
+    """Highest time scale at which every leg is a single resistor."""
+    largest = target.resistors[-1] * target.capacitors[-1]
+    return min((float(g.min()) * largest for g in gains.values() if g.size), default=np.inf)
 
 
 def _above_strays(gains: Mapping[str, Array]) -> float:
@@ -205,11 +215,11 @@ def _slow_ends(
     gains: Mapping[str, Array],
 ) -> list[tuple[float, str]]:
     """Highest time scale by each cause, with its sentence."""
-    largest = target.resistors[-1] * target.capacitors[-1]
+    largest = T_REACH * target.resistors[-1] * target.capacitors[-1]
     ends = []
     for name, values in gains.items():
         if values.size:
-            text = f"largest resistor times largest capacitor, {engineering(largest, 's')}, at {name}"
+            text = f"largest T of resistors times largest capacitor, {engineering(largest, 's')}, at {name}"
             ends.append((float(values.min()) * largest, text))
     slow = bias_error(patch, sensitivity, target, scales, gains, 1e6)
     if slow > 0:

@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 
 from patchplan.sizing.model import Model, Ratio
 from patchplan.sizing.records import Leg, Target
-from patchplan.sizing.speed import COMFORTABLE
+from patchplan.sizing.speed import COMFORTABLE, T_REACH
 
 Array = NDArray[np.float64]
 #: Feedback resistors of summers sit between these, for the pole with the input capacitance [ohm].
@@ -119,7 +119,7 @@ def _t_legs(resistors: tuple[float, ...], wanted: float) -> Choice:
     reach = 2 * values + values**2 / (2 * values[0])
     arm = float(values[min(int(np.searchsorted(reach, wanted)), len(values) - 1)])
     shunts = values[values <= arm]
-    parts = [(arm, float(s), arm) for s in shunts[::-1]]
+    parts = [(arm, float(s), arm) for s in shunts[::-1] if 2 * arm + arm**2 / s <= T_REACH * values[-1]]
     return Choice(np.log(np.array([Leg(p).transfer for p in parts])), tuple(parts))
 
 

@@ -68,7 +68,7 @@ def test_values_set_both_ends_of_a_decay(stages, target):
     quick = replace(target, op_amp=replace(target.op_amp, gain_bandwidth=100 * target.op_amp.gain_bandwidth))
     speed, moves = moved(stages, quick, 1.1)
     assert "smallest resistor times smallest capacitor" in speed.limits[0]
-    assert "largest resistor times largest capacitor" in speed.limits[1]
+    assert "largest T of resistors times largest capacitor" in speed.limits[1]
     assert {f for f, (fast, _) in moves.items() if fast} == {"smallest R", "smallest C"}
     assert {f for f, (_, slow) in moves.items() if slow} == {"largest R", "largest C"}
 
