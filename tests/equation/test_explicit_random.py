@@ -24,7 +24,9 @@ def formula(rng, names, depth=0):
     if pick < 0.86:
         return f"({formula(rng, names, depth + 1)})^{rng.choice('0123')}"
     if pick < 0.92:
-        return f"({formula(rng, names, depth + 1)})/({rng.choice(['c', 'u', 't', '2*c'])} + 7)"
+        # Inside a function of time no adjustable parameter may stand.
+        divisor = rng.choice(["c", "u", "2*c"] if names else ["t"])
+        return f"({formula(rng, names, depth + 1)})/({divisor} + 7)"
     if pick < 0.95:
         return f"-({formula(rng, names, depth + 1)})"
     return f"{rng.choice(sorted(FUNCTIONS))}({formula(rng, [], 2)})"
