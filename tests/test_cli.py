@@ -137,6 +137,21 @@ def test_a_folder_that_cannot_be_made_is_said_plainly(run, problem, tmp_path):
     assert "Traceback" not in done.output
 
 
+def test_interrupt_is_said_plainly_and_leaves_the_plan(run, problem, tmp_path, monkeypatch):
+    import patchplan.pipeline
+
+    def interrupted(*arguments, **options):
+        raise KeyboardInterrupt
+
+    assert run("plan", problem, "--no-pictures").exit_code == 0
+    before = (tmp_path / "outputs" / "plain" / "plan.json").read_bytes()
+    monkeypatch.setattr(patchplan.pipeline, "plan", interrupted)
+    done = run("plan", problem)
+    assert done.exit_code == 130
+    assert "Interrupted" in done.stderr
+    assert (tmp_path / "outputs" / "plain" / "plan.json").read_bytes() == before
+
+
 @pytest.mark.parametrize("option", [["--accept", "-1"], ["--think", "hard"], ["--colour"]])
 def test_unknown_options_are_exit_code_2(run, problem, option):
     assert run("plan", problem, *option).exit_code == 2

@@ -149,6 +149,20 @@ def test_killed_at_any_step_leaves_a_whole_plan_and_the_next_run_mends(tmp_path,
         assert sorted(p.name for p in place.parent.iterdir() if p.name != ".plan.lock") == ["plan"], survived
 
 
+def test_a_full_disk_leaves_everything_as_it_was(place, monkeypatch):
+    replace_folder(place, files("one"))
+
+    def full(descriptor):
+        raise OSError(28, "No space left on device")
+
+    with monkeypatch.context() as patch:
+        patch.setattr(os, "fsync", full)
+        with pytest.raises(OSError, match="No space"):
+            replace_folder(place, files("two"))
+    assert content(place) == files("one")
+    assert sorted(p.name for p in place.parent.iterdir() if p.name != ".plan.lock") == ["plan"]
+
+
 def test_killed_between_the_renames_is_finished_by_mend(place, monkeypatch):
     replace_folder(place, files("one"))
     with monkeypatch.context() as patch:

@@ -114,12 +114,30 @@ def test_signal_rows_give_the_volts_back(plan):
             assert units.max() <= row["high_units"] + slack
 
 
+def currents(legs, switch):
+    """Current into the virtual ground per volt at each leg, by nodal analysis of the legs and the switch they share."""
+    size = 1 + len(legs)
+    conductance = np.zeros((size, size))
+    source = np.zeros((size, len(legs)))
+    conductance[0, 0] += 1 / switch
+    for k, resistors in enumerate(legs):
+        if len(resistors) == 1:
+            conductance[0, 0] += 1 / resistors[0]
+            conductance[k + 1, k + 1] = 1.0
+            source[0, k] = 1 / resistors[0]
+            continue
+        first, shunt, last = resistors
+        conductance[k + 1, k + 1] = 1 / first + 1 / shunt + 1 / last
+        conductance[0, 0] += 1 / last
+        conductance[0, k + 1] = conductance[k + 1, 0] = -1 / last
+        source[k + 1, k] = 1 / first
+    return np.linalg.solve(conductance, source)[0] / switch
+
+
 def test_gains_are_those_of_the_parts(plan):
     gains = {s.name: transfer_gains(plan, s) for s in plan.patch.stages}
-    # v' = -v1 / ((R + switch) * C) of an integrator whose inputs pass an operate switch of 100 ohm.
-    assert gains["INT1"] == pytest.approx([1 / ((47e3 + 100) * 1e-7)])
-    # A T of 10k, 1k to ground, 12k passes the current of 10k + 12k + 10k*12k/1k = 142k.
-    assert gains["INT2"][1] == pytest.approx(1 / ((142e3 + 100) * 1e-7))
+    assert gains["INT1"] == pytest.approx(currents([(47e3,)], 100.0) / 1e-7, rel=1e-9)
+    assert gains["INT2"] == pytest.approx(currents([(47e3,), (10e3, 1e3, 12e3)], 100.0) / 1e-7, rel=1e-9)
     assert gains["INV1"] == pytest.approx([1.0])
 
 

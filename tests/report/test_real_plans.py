@@ -48,6 +48,10 @@ def test_gains_and_scales_are_the_coefficients_of_the_form(plan, data):
     seen = 0
     for row in data["stages"]:
         stage = stages[row["name"]]
+        if row["kind"] == "multiplier":
+            one, two = row["inputs"]
+            product = one["gain"] * scale[one["node"]] * scale[two["node"]] / scale[row["output"]]
+            assert product == pytest.approx(1.0, rel=1e-6)
         if row["kind"] not in ("integrator", "summer", "inverter") or stage.bipolar:
             continue
         knob = float(plan.patch.knobs[stage.knob].value) if stage.knob else 1.0
