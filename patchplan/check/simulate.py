@@ -56,7 +56,7 @@ class Traces:
 
 
 class _TooLong(Exception):
-    """The run needs more evaluations than it may have; holds the time reached [circuit s]."""
+    """The run needs more evaluations than it may have."""
 
 
 def simulate(

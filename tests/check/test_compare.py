@@ -10,6 +10,7 @@ import numpy as np
 import pytest
 from scipy.integrate import solve_ivp
 
+from patchplan.check import simulate as simulate_module
 from patchplan.check.compare import check_circuit
 from patchplan.check.records import Verdict
 from patchplan.circuit.records import Circuit, Part
@@ -118,3 +119,12 @@ def test_a_clipped_board_is_an_overload_with_node_and_time() -> None:
     assert peak.cause in found.warnings
     # The sine of 16 V passes 12 V after asin(12/16).
     assert peak.time >= math.asin(0.75) * 1e-4
+
+
+def test_a_run_that_is_given_up_is_a_result_with_a_sentence(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(simulate_module, "_MOST_EVALUATIONS", 200)
+    found = verdict_on(van_der_pol(), limit_cycle(20.0), budget=True)
+    assert found.verdict == "overload"
+    assert any("given up at" in w for w in found.warnings)
+    assert math.isfinite(found.max_error_percent)
+    assert found.budget == ()

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 
@@ -46,8 +48,6 @@ def test_rows_right_after_a_jump_do_not_count() -> None:
 
 
 def test_the_base_is_the_peak_or_half_the_swing_of_an_offset_node() -> None:
-    from dataclasses import replace
-
     circuit = oscillator()
     values = np.array([[1.0, 3.0], [-2.0, 1.0]])
     reference = Reference(("x", "v"), np.array([0.0, 1.0]), values, np.zeros((2, 2)))
