@@ -154,41 +154,36 @@ class _Plan:
         first = dict(zip(self.nodes, self.curves.rates[:, 0], strict=True))
         return np.array([first[s.node] if s.kind == "integrator" else 0.0 for s in self.stages])
 
-    def forcings(self, values: Mapping[str, Array], rates: Mapping[str, Array], second: Mapping[str, Array]) -> Array:
+    def forcings(self, values: Mapping[str, Array], rates: Mapping[str, Array]) -> Array:
         """What each column but the start values adds at its own stage: slope of an integrator, output of others.
 
         Parameters
         ----------
         values, rates
-            Node -> shape ``(n_times,)``; ``second`` is the second derivative at integrators.
+            Node -> shape ``(n_times,)``.
 
         Returns
         -------
         Array
             Shape ``(n_wires + 2 n_stages, n_times)``.
         """
-        rows = []
+        one = np.ones_like(next(iter(values.values())))
+        rows, late = [], []
         for stage in self.stages:
             if stage.kind in ("multiplier", "inverter"):
                 rows.append(values[stage.node])
             else:
-                rows += [g * values[w.source] for g, w in zip(self.gains(stage), stage.wires, strict=False)]
-        rows += [np.ones_like(next(iter(values.values())))] * len(self.stages)
-        rows += [-(second if s.kind == "integrator" else rates)[s.node] for s in self.stages]
-        return np.array(rows)
+                pairs = list(zip(self.gains(stage), stage.wires, strict=False))
+                rows += [g * values[w.source] for g, w in pairs]
+            if stage.kind == "integrator":
+                late.append(sum((-g * rates[w.source] for g, w in pairs), 0 * one))
+            else:
+                late.append(-rates[stage.node])
+        return np.array([*rows, *[one] * len(self.stages), *late])
 
 
 def _counted(stage: Stage) -> int:
     return 1 if stage.kind == "multiplier" or stage.bipolar else len(stage.wires)
-
-
-def _second(plan: _Plan, rates: Mapping[str, Array]) -> dict[str, Array]:
-    """Second derivative of every integrator's signal: the rate of its input sum."""
-    found = {}
-    for stage in plan.integrators:
-        pairs = zip(plan.gains(stage), stage.wires, strict=True)
-        found[stage.node] = sum((g * rates[w.source] for g, w in pairs), 0.0 * rates[stage.node])
-    return found
 
 
 def _influence(plan: _Plan, values: Mapping[str, Array], count: int) -> Array:
@@ -262,7 +257,7 @@ def _maps(plan: _Plan, ends: Array) -> tuple[Array, Array]:
     times = stage_times(ends)
     values, rates = plan.at(times)
     slopes = _slopes(plan, _influence(plan, values, times.size))
-    forcing = plan.forcings(values, rates, _second(plan, rates))
+    forcing = plan.forcings(values, rates)
     added = _additions(slopes)[..., plan.column_stage] * forcing.T[:, None]
     return step_maps(ends, slopes[..., : len(plan.integrators)], added)
 
@@ -286,7 +281,7 @@ def _seen_at(plan: _Plan, times: Array, states: Array) -> Array:
     values, rates = plan.at(np.maximum(times - 1e-12 * plan.curves.times[-1], 0.0))
     n, places = len(plan.integrators), plan.column_stage
     influence = _influence(plan, values, times.size)
-    forcing = plan.forcings(values, rates, _second(plan, rates))
+    forcing = plan.forcings(values, rates)
     out = np.zeros((len(plan.watched), states.shape[2], times.size))
     for i, place in plan.seen():
         row = influence[place]
@@ -301,7 +296,7 @@ def _by_adjoints(plan: _Plan) -> tuple[Array, Array]:
     influence, slopes = _sparse_maps(plan)
     times = np.linspace(0.0, duration, TIMES)
     values, rates = plan.at(times)
-    steady = plan.forcings(values, rates, _second(plan, rates))
+    steady = plan.forcings(values, rates)
     driving = _cell_means(plan, times, values, rates)
     out = np.zeros((len(plan.watched), places.size + n, TIMES))
     for i, place in plan.seen():
@@ -319,8 +314,8 @@ def _by_adjoints(plan: _Plan) -> tuple[Array, Array]:
 def _cell_means(plan: _Plan, times: Array, values: Mapping[str, Array], rates: Mapping[str, Array]) -> Array:
     """Means of `forcings` over the cells between times; those of lags are differences, so that jumps count."""
     middle, middle_rates = plan.at((times[1:] + times[:-1]) / 2)
-    ends = plan.forcings(values, rates, rates)
-    means = (ends[:, 1:] + ends[:, :-1] + 4 * plan.forcings(middle, middle_rates, middle_rates)) / 6
+    ends = plan.forcings(values, rates)
+    means = (ends[:, 1:] + ends[:, :-1] + 4 * plan.forcings(middle, middle_rates)) / 6
     late = [(rates if s.kind == "integrator" else values)[s.node] for s in plan.stages]
     means[plan.lags] = -np.diff(np.array(late), axis=1) / np.diff(times)
     return means

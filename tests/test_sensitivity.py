@@ -32,79 +32,71 @@ def sensitivity_of(made, shifts=None):
     return patch, find_sensitivity(form, patch, find_ranges(patch, form, reach))
 
 
-def simulate(patch, made, times, *, coefficient=None, rate=None, lag=None, start=None):
-    """Watched nodes of the patch over times, with one coefficient, added rate, lag or start value changed.
+class Changed:
+    """The patch with one coefficient, added rate, lag or start value changed; each change is (where, how much).
 
     A lag is put in as a first-order one, which has the same effect to first order in the lag once it has settled.
     """
-    inputs = Inputs(made)
-    integrators = [s for s in patch.stages if s.kind == "integrator"]
-    place = {s.node: i for i, s in enumerate(integrators)}
-    changed = {coefficient[0]: coefficient[1]} if coefficient else {}
-    late = lag[0] if lag else None
 
-    def nodes(t, x):
-        values = {}
-        for s in patch.stages:
-            if s.kind == "reference":
-                values[s.node] = 1.0
-            elif s.kind == "source":
-                values[s.node] = inputs.at(t)[[u.name for u in made.sources].index(s.signal)]
-            elif s.kind == "integrator":
-                values[s.node] = x[place[s.node]]
-            else:
-                values[s.node] = output(s, values, x)
+    def __init__(self, patch, made, coefficient=None, rate=None, lag=None, start=None):
+        self.patch, self.inputs = patch, Inputs(made)
+        self.sources = [s.name for s in made.sources]
+        self.integrators = [s for s in patch.stages if s.kind == "integrator"]
+        self.coefficient, self.rate, self.start = coefficient, rate, start
+        self.late = next((s for s in patch.stages if lag and s.name == lag[0]), None)
+        self.lag = lag[1] if lag else 0.0
+
+    def total(self, stage, values):
+        """Input sum, or product, with what is added to it."""
+        added = self.rate[1] if self.rate and self.rate[0] == stage.name else 0.0
+        gains = [
+            float(w.coefficient)
+            * (1 + (self.coefficient[1] if self.coefficient and self.coefficient[0] == (stage.name, i) else 0))
+            for i, w in enumerate(stage.wires)
+        ]
+        signals = [values[w.source] for w in stage.wires]
+        if stage.kind == "multiplier":
+            return gains[0] * signals[0] * signals[1] + added
+        return sum(g * x for g, x in zip(gains, signals, strict=True)) + added
+
+    def nodes(self, t, x):
+        values = {s.node: x[i] for i, s in enumerate(self.integrators)}
+        for stage in self.patch.stages:
+            if stage.kind == "reference":
+                values[stage.node] = 1.0
+            elif stage.kind == "source":
+                values[stage.node] = self.inputs.at(t)[self.sources.index(stage.signal)]
+            elif stage.kind != "integrator":
+                values[stage.node] = x[-1] if stage is self.late else self.total(stage, values)
         return values
 
-    def total(s, values):
-        return sum(
-            float(w.coefficient) * (1 + changed.get((s.name, i), 0.0)) * values[w.source] for i, w in enumerate(s.wires)
-        )
+    def slopes(self, t, x):
+        values = self.nodes(t, x)
+        out = [x[-1] if s is self.late else self.total(s, values) for s in self.integrators]
+        return [*out, (self.total(self.late, values) - x[-1]) / self.lag] if self.late else out
 
-    def output(s, values, x):
-        if s.name == late:
-            return x[-1]
-        if s.kind == "multiplier":
-            product = values[s.wires[0].source] * values[s.wires[1].source] * (1 + changed.get((s.name, 0), 0.0))
-        else:
-            product = total(s, values)
-        return product + (rate[1] if rate and rate[0] == s.name else 0.0)
+    def first(self):
+        x = [float(s.start) for s in self.integrators]
+        if self.start:
+            x[[s.name for s in self.integrators].index(self.start[0])] += self.start[1]
+        if self.late is None:
+            return x
+        # An integrator's input is off in hold; other stages have settled.
+        settled = 0.0 if self.late.kind == "integrator" else self.total(self.late, self.nodes(0.0, [*x, 0.0]))
+        return [*x, settled]
 
-    def slopes(t, x):
-        values = nodes(t, x)
-        out = []
-        for s in integrators:
-            slope = total(s, values) + (rate[1] if rate and rate[0] == s.name else 0.0)
-            out.append(x[-1] if s.name == late else slope)
-        if late:
-            stage = next(s for s in patch.stages if s.name == late)
-            wanted = (
-                total(stage, values)
-                if stage.kind != "multiplier"
-                else values[stage.wires[0].source] * values[stage.wires[1].source]
-            )
-            out.append((wanted - x[-1]) / lag[1])
-        return out
 
-    x0 = [float(s.start) + (start[1] if start and start[0] == s.name else 0.0) for s in integrators]
-    if late:
-        stage = next(s for s in patch.stages if s.name == late)
-        values = nodes(0.0, [*x0, 0.0])
-        first = 0.0
-        if stage.kind == "multiplier":
-            first = values[stage.wires[0].source] * values[stage.wires[1].source]
-        elif stage.kind != "integrator":
-            first = total(stage, values)
-        x0.append(first)
-    edges = inputs.edges
-    found, x = [], x0
+def simulate(patch, made, times, **change):
+    """Watched nodes of the changed patch over times."""
+    changed = Changed(patch, made, **change)
+    edges, x, found = changed.inputs.edges, changed.first(), []
+    tolerance = 1e-9 if changed.late else 1e-11
     for a, b in pairwise(edges.tolist()):
         here = times[(times >= a) & ((times < b) | (b == edges[-1]))]
-        run = solve_ivp(
-            slopes, (a + 1e-9, b - 1e-9), x, "LSODA", rtol=1e-9 if late else 1e-11, atol=1e-12, dense_output=True
-        )
-        states = run.sol(np.clip(here, a + 1e-9, b - 1e-9))
-        found += [[nodes(t, s)[n] for n in patch.watched.values()] for t, s in zip(here, states.T, strict=True)]
+        inside = a + 1e-9, b - 1e-9
+        run = solve_ivp(changed.slopes, inside, x, "LSODA", rtol=tolerance, atol=1e-12, dense_output=True)
+        states = run.sol(np.clip(here, *inside))
+        found += [[changed.nodes(t, s)[n] for n in patch.watched.values()] for t, s in zip(here, states.T, strict=True)]
         x = run.y[:, -1]
     return np.array(found).T
 
