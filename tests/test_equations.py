@@ -86,11 +86,18 @@ def test_coefficients_are_realised(plans: Plans, name: str) -> None:
 
 @pytest.mark.parametrize("name", NAMES)
 def test_speed_is_inside_its_window(plans: Plans, name: str) -> None:
-    """The window's ends say what sets them; no plan runs outside."""
-    sizing = plans.of(name).sizing
+    """The window's ends say what sets them.
+
+    A speed that the file asks for may be slower than single resistors allow: then T-networks stand in for them.
+    """
+    plan = plans.of(name)
+    sizing = plan.sizing
     low, high = sizing.window
-    assert low <= sizing.time_scale <= high, sizing.limits
     assert all(sizing.limits)
+    assert low <= sizing.time_scale
+    if sizing.time_scale > high:
+        assert plan.problem.build.speed != "free"
+        assert any(len(leg.resistors) == 3 for stage in sizing.stages.values() for leg in stage.legs)
 
 
 @pytest.mark.parametrize("name", ["motor_speed_loop", "pickup_filter"])
@@ -130,6 +137,13 @@ def test_oven_carries_an_offset(plans: Plans) -> None:
     assert float(plan.form.offsets["T"]) == pytest.approx(80, abs=5)
     node = plan.circuit.nodes[plan.circuit.watched["T"]]
     assert abs(node.volts_per_unit) > 1.0
+
+
+def test_lorenz_has_a_late_horizon(plans: Plans) -> None:
+    """Lorenz 1963, section 7: from (0, 1, 0) regular up to about t = 16; the start's own swing is no horizon."""
+    horizon = plans.of("lorenz").verdict.horizon
+    assert horizon is not None
+    assert 5 < horizon < 30
 
 
 def test_damper_is_one_knob(plans: Plans) -> None:
