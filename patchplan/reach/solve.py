@@ -12,7 +12,8 @@ from numpy.typing import NDArray
 
 from patchplan.errors import Fault, ProblemFaults
 from patchplan.reach.field import DENSE_LIMIT, Bound
-from patchplan.reach.inputs import Inputs
+from patchplan.reach.inputs import MANY_EDGES, Inputs
+from patchplan.reach.rows import solve_rows
 
 Array = NDArray[np.float64]
 
@@ -69,6 +70,10 @@ def solve(field: Bound, start: Array, inputs: Inputs, times: Array, *, tolerance
     GrowsWithoutBoundError
         With the time at which the run could not be carried on.
     """
+    if len(inputs.edges) > MANY_EDGES and start.shape[0] <= DENSE_LIMIT:
+        states = solve_rows(field, start, inputs, times, tolerance=tolerance, floor=floor)
+        if states is not None:
+            return states
     x = start
     parts = []
     for begin, stop in pairwise(inputs.restarts.tolist()):
