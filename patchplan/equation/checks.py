@@ -161,9 +161,11 @@ def _touched(divisor: Node, t: Array, values: Array) -> float | None:
 
 
 def jump_faults(trees: Mapping[str, tuple[Node, str]], duration: Fraction) -> Iterator[Fault]:
-    """Periodic functions with a period that is no positive number, or with jumps beyond count."""
+    """Pulses and periodic functions whose times change or are not positive, or with jumps beyond count."""
     for name, (tree, key) in trees.items():
         for call in _calls(tree):
+            if call.function == "pulse" and not all(isinstance(a, Number) for a in call.arguments[1:]):
+                yield _placed(call, key, f"Start and width in {name} are no constants.", "Write constants.")
             if call.function not in _PERIODIC:
                 continue
             ends = numeric_tree(call.arguments[0], np.array([0.0, float(duration)]))

@@ -46,8 +46,19 @@ def build_system(problem: Problem) -> System:
     blocks = _solved(problem, outline, meaning, orders)
     rates = {a: value for b in blocks for a, value in b.rates().items()}
     change = _change(problem, meaning, orders, blocks)
-    change.wanted = _wanted(problem, meaning, orders, rates)
-    remove_rates(change)
+    try:
+        change.wanted = _wanted(problem, meaning, orders, rates)
+        remove_rates(change)
+    except TooLargeError:
+        _stop(
+            [
+                Fault(
+                    f"Put into each other, the equations have over {MOST_TERMS} terms.",
+                    "Use lower powers.",
+                    "equations",
+                )
+            ]
+        )
     return _assembled(problem, outline, meaning, change)
 
 

@@ -150,7 +150,7 @@ def _put_in(change: Change, solved: dict[Atom, Polynomial]) -> None:
     """Replace former states where their polynomials hold input derivatives; else leave them as signals."""
     held = {a: p for a, p in solved.items() if Kind.RATE in p.kinds()}
     change.replaced.update(solved)
-    if held:
+    while held:
         change.blocks = [
             Block(b.targets, b.mass, b.inverse, tuple(r.substitute(held) for r in b.right), b.origins)
             for b in change.blocks
@@ -158,6 +158,10 @@ def _put_in(change: Change, solved: dict[Atom, Polynomial]) -> None:
         for table in (change.replaced, change.wanted):
             for atom, value in table.items():
                 table[atom] = value.substitute(held)
+        # A definition that holds input derivatives now must give way too, where it is used.
+        used = {a for b in change.blocks for r in b.right for a in r.atoms()}
+        used |= {a for value in change.wanted.values() for a in value.atoms()}
+        held = {a: p for a, p in change.wanted.items() if a in used and Kind.RATE in p.kinds()}
 
 
 def _start(change: Change, block: Block, row: int, lifted: Polynomial) -> Polynomial:

@@ -40,6 +40,8 @@ def faults(equations, **tables):
         (["x' = x/(t - 3.0001)^2"], {"start": "x = 0"}, "equations[0]", "divides by zero at t = 3.0001"),
         (["x' = log(t - 1)"], {"start": "x = 0"}, "equations[0]", "no finite value at the start"),
         (["x' = u"], {"start": "x = 0", "inputs": 'u = "tan(t)"'}, "inputs.u", "no finite value at t = 1.57"),
+        (["x' = pulse(t, 1, t)"], {"start": "x = 0"}, "equations[0]", "no constants"),
+        (["x' = sawtooth(t, 0)"], {"start": "x = 0"}, "equations[0]", "no positive number"),
         (["x' = square(t, 1e-9)"], {"start": "x = 0"}, "equations[0]", "jumps in the run"),
         (["x' = u"], {"start": "x = 0", "inputs": 'u = "t"', "top": 'watch = ["u\'"]'}, "watch[0]", "derivative of"),
     ],

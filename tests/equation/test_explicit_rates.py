@@ -1,9 +1,14 @@
 """Input derivatives removed by a change of states, against formulations that know the derivative."""
 
+from fractions import Fraction
+
 import numpy as np
 import pytest
 from scipy.integrate import solve_ivp
 
+from patchplan.equation.explicit import build_system
+from patchplan.equation.problem import Input, Problem, Recording
+from patchplan.equation.syntax import parse_equation
 from patchplan.errors import ProblemFaults
 from tests.equation.simulated import built, simulate
 
@@ -124,3 +129,27 @@ def test_a_watched_signal_that_needs_the_derivative_is_refused():
     with pytest.raises(ProblemFaults, match="derivative of an input") as caught:
         built(["x' = -x + u", "e = x + u'"], start="x = 0", inputs="u = { within = [-1, 1] }", top='watch = ["e"]')
     assert caught.value.faults[0].key == "watch[0]"
+
+
+def test_a_definition_of_a_replaced_rate_gives_way_too():
+    system = built(["x'' = -x' - x + u''", "y' = e - y", "e = 2*x'"], duration="6",
+                   start="x = 0\n\"x'\" = 0\ny = 0", inputs='u = "sin(t)"', top='watch = ["x", "y"]')  # fmt: skip
+    expected = solve_ivp(
+        lambda t, s: [s[1], -s[1] - s[0] - np.sin(t), 2 * s[1] - s[2]], (0, 6), [0, 0, 0], t_eval=T,
+        rtol=1e-11, atol=1e-13,
+    ).y  # fmt: skip
+    found = simulate(system, T)
+    assert np.allclose(found["x"], expected[0], atol=1e-7)
+    assert np.allclose(found["y"], expected[2], atol=1e-7)
+
+
+def test_a_recording_is_never_differentiated():
+    recording = Recording("road.csv", (0.0, 2.0, 6.0), (0.5, 1.0, 0.0))
+    problem = Problem(
+        "t", (parse_equation("x' = -2*x + 3*u'", 0),), duration=Fraction(6), start={"x": Fraction(5)},
+        inputs={"u": Input("u", recording=recording)},
+    )  # fmt: skip
+    system = build_system(problem)
+    first = solve_ivp(lambda t, s: -2 * s + 0.75, (0, 2), [5], t_eval=T[T <= 2], rtol=1e-11, atol=1e-13).y[0]
+    then = solve_ivp(lambda t, s: -2 * s - 0.75, (2, 6), first[-1:], t_eval=T[T > 2], rtol=1e-11, atol=1e-13).y[0]
+    assert np.allclose(simulate(system, T)["x"], np.concatenate([first, then]), atol=1e-7)
