@@ -32,7 +32,14 @@ def growth_exponent(sensitivity: Sensitivity) -> float:
         return 0.0
     mean = float(np.polyfit(times[early], np.log(size[early]), 1)[0])
     second = float(np.polyfit(times[late], np.log(size[late]), 1)[0])
-    return mean if mean * duration > _LEAST_GROWTH and second > _STEADY_SHARE * mean else 0.0
+    grows = mean * duration > _LEAST_GROWTH and second > _STEADY_SHARE * mean
+    return mean if grows and not _is_power(times[early], size[early]) else 0.0
+
+
+def _is_power(times: Array, size: Array) -> bool:
+    """Whether a power of time fits a growth at least as well as an exponential does."""
+    off = [np.polyfit(x, np.log(size), 1, full=True)[1].sum() for x in (times, np.log(times))]
+    return bool(off[1] <= off[0])
 
 
 def first_beyond(sensitivity: Sensitivity, off: Array, moved: float) -> float | None:

@@ -13,7 +13,7 @@ from patchplan.check.horizon import horizon_of
 from patchplan.check.records import Cause, Curve, NodePeak, SignalError, Verdict
 from patchplan.check.simulate import Traces, simulate
 from patchplan.check.spread import spread_of
-from patchplan.circuit.records import Circuit
+from patchplan.circuit.records import DC_LIMIT, Circuit
 from patchplan.equation.system import System
 from patchplan.patch.records import Patch
 from patchplan.reach.records import Reference
@@ -148,7 +148,8 @@ def _budget(circuit: Circuit, reference: Reference, nominal: Traces, rows: int) 
     limits = {"finite gain": "gain", "bandwidth": "bandwidth", "slew": "slew", "bias current": "bias"}
     if "multiplier" in kinds:
         limits["multiplier bandwidth"] = "multiplier"
-    perfect = run(circuit, **dict.fromkeys(limits.values(), False))
+    unlimited = replace(circuit, parts=tuple(p for p in circuit.parts if p.model != DC_LIMIT))
+    perfect = run(unlimited, **dict.fromkeys(limits.values(), False))
     rounding = max(_compare(circuit, reference, perfect, name, rows).largest for name in circuit.watched)
     causes = [Cause("rounding", rounding)]
     if len(circuit.parts) > _MANY_PARTS:
@@ -159,6 +160,8 @@ def _budget(circuit: Circuit, reference: Reference, nominal: Traces, rows: int) 
         del limits["slew"]
     for cause, flag in limits.items():
         causes.append(Cause(cause, _apart(circuit, reference, nominal, run(circuit, **{flag: False}))))
+    if len(unlimited.parts) < len(circuit.parts):
+        causes.append(Cause("DC-limit resistor", _apart(circuit, reference, nominal, run(unlimited))))
     causes.sort(key=_by_size)
     if "switch" in kinds:
         parts = tuple(replace(p, value=p.value * _SWITCH_OFF) if p.kind == "switch" else p for p in circuit.parts)

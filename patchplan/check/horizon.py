@@ -27,7 +27,7 @@ def horizon_of(system: System, sensitivity: Sensitivity, patch: Patch, sizing: S
     sensitivity, patch, sizing
         The plan; the coefficients' realised errors are read from ``sizing``, at least 0.1 % each.
     """
-    if system.is_linear or growth_exponent(sensitivity) == 0.0 or _is_power(sensitivity):
+    if system.is_linear or growth_exponent(sensitivity) == 0.0:
         return None
     errors = {c.at: abs(c.error_percent) / 100.0 for c in sizing.coefficients if c.wanted}
     stages = {s.name: s for s in patch.stages}
@@ -36,13 +36,3 @@ def horizon_of(system: System, sensitivity: Sensitivity, patch: Patch, sizing: S
         at = f"{stages[name].node}<-{stages[name].wires[wire].source}"
         off[i] = max(off[i], errors.get(at, 0.0))
     return first_beyond(sensitivity, off, _MOVED)
-
-
-def _is_power(sensitivity: Sensitivity) -> bool:
-    """Whether a power of time fits the growth of the start responses at least as well as an exponential does."""
-    times = sensitivity.times
-    size = np.sqrt(sum(np.sum(response**2, axis=0) for response in sensitivity.start.values()))
-    counts = (size > 0.0) & (times >= 0.1 * times[-1])
-    growth = np.log(size[counts])
-    off = [np.polyfit(x, growth, 1, full=True)[1].sum() for x in (times[counts], np.log(times[counts]))]
-    return bool(off[1] <= off[0])

@@ -21,6 +21,8 @@ KINDS = {
     "decoupling": ("rail", "ground"),
 }
 GROUND = "0"
+#: ``model`` of a resistor that bounds an integrator's drift; it is no term of the equation.
+DC_LIMIT = "DC limit"
 
 
 @dataclass(frozen=True, slots=True)
@@ -37,7 +39,8 @@ class Part:
     total
         Track resistance of a potentiometer [ohm].
     model
-        Catalogue name of an active part, dielectric of a capacitor, name of the Source of a source.
+        Catalogue name of an active part, dielectric of a capacitor, name of the Source of a source, or
+        :data:`DC_LIMIT`.
     closed
         Of a switch: "operate" or "hold".
     stage

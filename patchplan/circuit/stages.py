@@ -9,7 +9,7 @@ from functools import cached_property
 
 from patchplan.circuit.knobs import TRACK_TOLERANCE, Dial, crossing, rheostat
 from patchplan.circuit.packages import Place, Places
-from patchplan.circuit.records import GROUND, Part
+from patchplan.circuit.records import DC_LIMIT, GROUND, Part
 from patchplan.patch.records import Patch, Stage
 from patchplan.sizing.records import Leg, Sizing, StageSizing, Target
 
@@ -53,9 +53,9 @@ class Board:
             part = replace(part, ref=f"{letter}{self.numbers[letter]}")
         self.parts.append(part)
 
-    def resistor(self, stage: Stage, a: str, b: str, value: float) -> None:
+    def resistor(self, stage: Stage, a: str, b: str, value: float, model: str = "") -> None:
         """Lay down a resistor."""
-        self.put(Part("", "resistor", (a, b), value, self.target.resistor_tolerance, stage.name))
+        self.put(Part("", "resistor", (a, b), value, self.target.resistor_tolerance, stage.name, model=model))
 
     def volts(self, node: str) -> float:
         """Signed volts per unit of the signal at a node."""
@@ -122,7 +122,7 @@ def _integrator(board: Board, stage: Stage) -> None:
     nets = (inverting, stage.node)
     board.put(Part("", "capacitor", nets, sized.capacitor, tolerance, stage.name, model=DIELECTRIC))
     if sized.feedback:
-        board.resistor(stage, inverting, stage.node, sized.feedback)
+        board.resistor(stage, inverting, stage.node, sized.feedback, DC_LIMIT)
     if held:
         _start_network(board, stage, sized)
 

@@ -13,7 +13,7 @@ from patchplan.equation.constants import PI, constant_value, names_of
 from patchplan.equation.formula import factors_of, product_of, refuse, sum_tree, tree_derivative
 from patchplan.equation.polynomial import HIGHEST_DEGREE, MOST_TERMS, Atom, Kind, Polynomial, TooLargeError
 from patchplan.equation.tree import Binary, Call, Minus, Name, Node, Number, text_of
-from patchplan.equation.waveform import _line, numeric_tree
+from patchplan.equation.waveform import line_of, numeric_tree
 from patchplan.errors import Fault, ProblemFaults
 
 _NOT_BUILT = "not built in this version"
@@ -244,7 +244,7 @@ class Algebra:
         """Value of a step that is on from the start, or that never comes within the run."""
         if node.function != "step":
             return None
-        line = _line(self.folded(node.arguments[0]))
+        line = line_of(self.folded(node.arguments[0]))
         if line is None:
             return None
         start, end = line[0], line[0] + line[1] * self.duration

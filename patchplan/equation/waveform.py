@@ -156,7 +156,7 @@ def _call_jumps(call: Call, duration: float) -> list[float]:
     rest = [float(numeric_tree(a, np.zeros(1))[0]) for a in call.arguments[1:]]
     times = np.linspace(0.0, duration, SAMPLES)
     x = numeric_tree(call.arguments[0], times)
-    line = _line(call.arguments[0])
+    line = line_of(call.arguments[0])
     found: list[float] = []
     for edge in _edges(call.function, rest, float(np.nanmin(x)), float(np.nanmax(x))):
         if line is None:
@@ -176,18 +176,18 @@ def _edges(function: str, rest: list[float], low: float, high: float) -> list[fl
     return [0.0]
 
 
-def _line(node: Node) -> tuple[Fraction, Fraction] | None:
+def line_of(node: Node) -> tuple[Fraction, Fraction] | None:
     """(a, b) where the tree is a + b*t, exactly, else None."""
     if isinstance(node, Number):
         return node.value, Fraction(0)
     if isinstance(node, Name):
         return (Fraction(0), Fraction(1)) if node.name == "t" else None
     if isinstance(node, Minus):
-        inner = _line(node.operand)
+        inner = line_of(node.operand)
         return None if inner is None else (-inner[0], -inner[1])
     if not isinstance(node, Binary):
         return None
-    left, right = _line(node.left), _line(node.right)
+    left, right = line_of(node.left), line_of(node.right)
     if left is None or right is None:
         return None
     if node.operator in "+-":

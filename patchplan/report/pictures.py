@@ -27,7 +27,7 @@ Array = NDArray[np.float64]
 #: Signals and rows drawn at most; the tables hold all.
 MOST_SIGNALS = 12
 MOST_ROWS = 40
-#: Points drawn of a curve at most, as pairs of least and largest value.
+#: Points drawn of a curve, as pairs of least and largest value.
 MOST_POINTS = 3000
 
 
@@ -63,8 +63,8 @@ def unused_name(stem: str, name: str, suffix: str, taken: Iterable[str]) -> str:
 def signal_picture(plan: Plan, curve: Curve, node: NodeMap) -> Figure:
     """The circuit over the equation's solution, and their difference below on the same time axis."""
     figure = _figure(style.SIGNAL_HEIGHT)
-    upper = figure.add_axes((0.13, 0.40, 0.74, 0.50))
-    lower = figure.add_axes((0.13, 0.12, 0.74, 0.21), sharex=upper)
+    upper = figure.add_axes(style.UPPER_PANEL)
+    lower = figure.add_axes(style.LOWER_PANEL, sharex=upper)
     _signal_panel(upper, plan, curve, node)
     _difference_panel(lower, plan, curve)
     return figure
@@ -111,17 +111,23 @@ def _right_scale(axes: Axes, factor: float, offset: float, name: str) -> None:
     ticks = np.array([tick for tick in _few_ticks().tick_values(*ends) if ends[0] <= tick <= ends[1]])
     edge: dict[str, Any] = {"transform": axes.get_yaxis_transform(), "clip_on": False}
     heights = (ticks - offset) / factor
-    axes.plot(np.ones(ticks.size), heights, marker=TICKRIGHT, linestyle="", color=style.LIGHT["ink"], ms=3.5, **edge)
+    axes.plot(
+        np.ones(ticks.size), heights, marker=TICKRIGHT, linestyle="", color=style.LIGHT["ink"], ms=style.TICK, **edge
+    )
     for tick, height in zip(ticks, heights, strict=True):
-        axes.text(1.015, height, f"{tick:z.4g}".replace("-", "\N{MINUS SIGN}"), va="center", **edge)
-    axes.text(1.11, 0.5, name, transform=axes.transAxes, rotation=90, ha="center", va="center", size=style.LABEL)
+        axes.text(style.RIGHT_NUMBERS, height, f"{tick:z.4g}".replace("-", "\N{MINUS SIGN}"), va="center", **edge)
+    axes.text(
+        style.RIGHT_NAME, 0.5, name, transform=axes.transAxes, rotation=90, ha="center", va="center", size=style.LABEL
+    )
 
 
 def _difference_panel(axes: Axes, plan: Plan, curve: Curve) -> None:
     difference = curve.circuit - curve.reference
     axes.axhline(0.0, **style.ZERO_LINE)
     axes.plot(*thinned(curve.times, difference), **style.DIFFERENCE_LINE)
-    reach = 1.15 * float(np.max(np.abs(difference), initial=0.0, where=np.isfinite(difference))) or 1.0
+    # Beyond the horizon of a chaotic system the difference says nothing and would dwarf what comes before.
+    counted = np.isfinite(difference) & (curve.times <= (plan.verdict.horizon or np.inf))
+    reach = 1.15 * float(np.max(np.abs(difference), initial=0.0, where=counted)) or 1.0
     axes.set_ylim(-reach, reach)
     _label(axes, "difference\n[problem units]")
     axes.set_xlabel(f"problem time [{plan.system.time_unit}]; 1 {plan.system.time_unit} takes "
@@ -134,7 +140,7 @@ def _difference_panel(axes: Axes, plan: Plan, curve: Curve) -> None:
 def _label(axes: Axes, text: str) -> None:
     """Name of a left axis at a fixed place, so that the panels of a picture agree, and few ticks."""
     axes.set_ylabel(text, fontsize=style.LABEL)
-    axes.yaxis.set_label_coords(-0.11, 0.5)
+    axes.yaxis.set_label_coords(style.LEFT_NAME, 0.5)
     axes.yaxis.set_major_locator(_few_ticks())
 
 
@@ -152,7 +158,7 @@ def error_base(plan: Plan, curve: Curve) -> float:
 
 
 def _horizon(axes: Axes, time: float) -> None:
-    axes.axvline(time, color=style.LIGHT["over"], linewidth=0.9, linestyle=(0, (1, 2)))
+    axes.axvline(time, **style.HORIZON_LINE)
     place: dict[str, Any] = {"xycoords": axes.get_xaxis_transform(), "textcoords": "offset points"}
     axes.annotate(
         "compared up to here",
@@ -168,21 +174,26 @@ def _horizon(axes: Axes, time: float) -> None:
 def swing_picture(plan: Plan) -> Figure:
     """Swing of every node against its limits, those closest to their limit first."""
     rows = [(*swing_volts(plan, node), node.limit_volts, node) for node in swinging(plan)]
+    left_out = len(rows) - MOST_ROWS
     rows = sorted(rows, key=lambda row: -max(-row[0], row[1]) / row[2])[:MOST_ROWS]
     low, high, limit = (np.array(column) for column in tuple(zip(*rows, strict=True))[:3])
     share = np.maximum(-low, high) / limit
     failed = {peak.node for peak in plan.verdict.nodes if not peak.ok}
     over = [node.node in failed for *_, node in rows]
     places = range(len(rows))
-    figure, axes = _chart(len(rows), "Node swings against their limits")
-    axes.barh(places, 2 * limit, 0.84, -limit, color=style.LIGHT["sand"], alpha=style.BAND_OPACITY)
-    axes.barh(places, high - low, 0.42, low, color=[style.LIGHT["over" if bad else "inside"] for bad in over])
+    figure, axes = _chart(
+        len(rows), "Node swings against their limits" + (f", {left_out} smaller ones left out" if left_out > 0 else "")
+    )
+    axes.barh(places, 2 * limit, style.BAND_BAR, -limit, color=style.LIGHT["sand"], alpha=style.BAND_OPACITY)
+    axes.barh(places, high - low, style.BAR, low, color=[style.LIGHT["over" if bad else "inside"] for bad in over])
     for place, (edge, used, bad) in enumerate(zip(limit, share, over, strict=True)):
         text = f" {100 * used:.0f} % of {plain(edge)} V" + (", over" if bad else "")
         axes.text(edge * max(used, 1.0), place, text, va="center", fontsize=style.SMALL)
     widest = float(np.max(limit * np.maximum(share, 1.0)))
-    axes.set_xlim(-1.08 * widest, 1.45 * widest)
-    axes.set_yticks(places, [f"{node.node} ({'-' if node.sign < 0 else '+'}{node.signal})" for *_, node in rows])
+    axes.set_xlim(-1.08 * widest, 1.65 * widest)
+    axes.set_yticks(
+        places, [_clipped(f"{node.node} ({'-' if node.sign < 0 else '+'}{node.signal})") for *_, node in rows]
+    )
     axes.set_xlabel("node voltage [V]")
     return figure
 
@@ -192,7 +203,7 @@ def budget_picture(plan: Plan) -> Figure:
     rows = sorted(plan.verdict.budget, key=lambda cause: -cause.error_percent)[:15]
     figure, axes = _chart(len(rows), "Where the error comes from")
     values = [row.error_percent for row in rows]
-    axes.barh(range(len(rows)), values, 0.5, color=style.LIGHT["circuit"])
+    axes.barh(range(len(rows)), values, style.BAR, color=style.LIGHT["circuit"])
     for place, value in enumerate(values):
         axes.text(value, place, " " + percent(value), va="center", fontsize=style.SMALL)
     axes.set_xlim(0.0, 1.18 * max(values) or 1.0)
@@ -207,7 +218,7 @@ def thinned(times: Array, values: Array) -> tuple[Array, Array]:
     Returns
     -------
     tuple
-        Times and values, shape ``(n,)`` with n at most :data:`MOST_POINTS` and two ends.
+        Times and values, shape ``(n,)`` with n about :data:`MOST_POINTS` at most.
     """
     if times.size <= MOST_POINTS:
         return times, values
@@ -215,7 +226,7 @@ def thinned(times: Array, values: Array) -> tuple[Array, Array]:
     whole = times.size // length * length
     blocks = values[:whole].reshape(-1, length)
     starts = np.arange(0, whole, length)
-    picks = [starts + blocks.argmin(axis=1), starts + blocks.argmax(axis=1), [0, times.size - 1]]
+    picks = [[0], starts + blocks.argmin(axis=1), starts + blocks.argmax(axis=1), np.arange(whole, times.size)]
     chosen = np.unique(np.concatenate(picks))
     return times[chosen], values[chosen]
 
@@ -228,7 +239,7 @@ def _view(seen: Array, limits: tuple[float, float]) -> tuple[float, float]:
         low = min(low, limits[0])
     if high > middle + style.FAIR_PART * half:
         high = max(high, limits[1])
-    pad = 0.09 * (high - low) or 0.1 * abs(high) or 1.0
+    pad = style.PAD * (high - low) or 0.1 * abs(high) or 1.0
     return low - pad, high + pad
 
 
@@ -242,7 +253,8 @@ def _chart(rows: int, title: str) -> tuple[Figure, Axes]:
     """Figure with one row an entry, the first on top."""
     height = style.CHART_MARGIN + style.ROW_HEIGHT * max(rows, 2)
     figure = _figure(height)
-    axes = figure.add_axes((0.30, 0.55 / height, 0.66, (height - style.CHART_MARGIN) / height))
+    left, bottom, width = style.CHART_PANEL
+    axes = figure.add_axes((left, bottom / height, width, (height - style.CHART_MARGIN) / height))
     axes.set_title(title)
     axes.set_ylim(max(rows, 2) - 0.5, -0.5)
     axes.tick_params(axis="y", length=0)
@@ -261,5 +273,5 @@ def _svg(figure: Figure) -> str:
     return buffer.getvalue()
 
 
-def _clipped(text: str, most: int = 38) -> str:
+def _clipped(text: str, most: int = 34) -> str:
     return text if len(text) <= most else text[: most - 1] + "…"

@@ -23,6 +23,7 @@ CIRCUIT_LINE: Mapping[str, Any] = {"color": LIGHT["circuit"], "linewidth": 1.6, 
 DIFFERENCE_LINE: Mapping[str, Any] = {"color": LIGHT["circuit"], "linewidth": 1.0}
 EDGE_LINE: Mapping[str, Any] = {"color": LIGHT["quiet"], "linewidth": 0.8, "linestyle": "-"}
 ZERO_LINE: Mapping[str, Any] = {"color": LIGHT["quiet"], "linewidth": 0.6, "linestyle": ":"}
+HORIZON_LINE: Mapping[str, Any] = {"color": LIGHT["over"], "linewidth": 0.9, "linestyle": (0, (1, 2))}
 #: Opacity of the sand band behind the curves.
 BAND_OPACITY = 0.35
 
@@ -34,7 +35,19 @@ PICTURE_WIDTH = 7.4
 SIGNAL_HEIGHT = 4.2
 ROW_HEIGHT = 0.27
 CHART_MARGIN = 1.0
+#: Left and bottom edge, width and height of the panels of a signal's picture, parts of the picture.
+UPPER_PANEL = (0.13, 0.40, 0.74, 0.50)
+LOWER_PANEL = (0.13, 0.12, 0.74, 0.21)
+#: Left edge and width of a chart, parts of the picture; between them its bottom edge in inches.
+CHART_PANEL = (0.34, 0.55, 0.62)
+#: Places of the names and numbers of the vertical axes, parts of the panel's width.
+LEFT_NAME, RIGHT_NAME, RIGHT_NUMBERS = -0.11, 1.11, 1.015
+#: Room above and below the curves, part of their swing.
+PAD = 0.09
+#: Bars, parts of a row.
+BAR, BAND_BAR = 0.45, 0.84
 #: Points.
+TICK = 3.5
 SMALL = 7.5
 LABEL = 8.5
 
@@ -49,6 +62,7 @@ PICTURE_SETTINGS: Mapping[str, Any] = {
     "font.family": list(SANS), "font.size": 9.0, "axes.titlesize": 10.0,
     "axes.titlelocation": "left", "axes.titley": 1.0,
     "axes.linewidth": 0.8, "axes.grid": False, "legend.frameon": False, "legend.fontsize": 8.5,
+    "ytick.labelsize": 8.5, "xtick.labelsize": 8.5,
     "svg.fonttype": "none", "svg.hashsalt": "patchplan", "path.simplify_threshold": 0.4,
     "axes.formatter.useoffset": False, "axes.formatter.limits": (-4, 5), "mathtext.default": "regular",
 }  # fmt: skip
