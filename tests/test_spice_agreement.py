@@ -25,6 +25,7 @@ PLANS = {
     "hoist_swing": "time-varying coefficients from an outside source",
     "airy_oscillatory": "time-varying, a ramp as factor",
     "stiff_detest_C2_nonlinear_coupling": "stiff, 100:1",
+    "stiff_detest_E2_van_der_pol_mu5": "stiff and nonlinear",
     "seat_suspension": "a recorded input, a knob",
     "oven": "an offset, a square wave",
     "thermal_rc_chain_10": "ten states",
