@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from patchplan.equation.system import System
+from patchplan.reach.collocation import Pieces
 from patchplan.reach.curves import LINEAR_ERROR, linear_error, refined, resample
 from patchplan.reach.field import Bound, Field
 from patchplan.reach.inputs import MANY_EDGES, Inputs
@@ -124,11 +125,22 @@ def forcing_of(by_source: Any, constant: Array, inputs: Inputs) -> Forcing:
     return lambda times, begin, stop: np.asarray(dense @ inputs.inside(times, begin, stop) + column)
 
 
-def _linear(system: System, field: Bound, inputs: Inputs, most: int) -> tuple[Array, Array, Array]:
+def linear_pieces(system: System, field: Bound, inputs: Inputs) -> Pieces:
+    """The solution of a linear System as polynomials.
+
+    Raises
+    ------
+    GrowsWithoutBoundError
+        With the time.
+    """
     matrix, by_source, constant = linear_parts(field)
     try:
-        pieces = solve_linear(matrix, start_of(system), forcing_of(by_source, constant, inputs), inputs.edges)
+        return solve_linear(matrix, start_of(system), forcing_of(by_source, constant, inputs), inputs.edges)
     except FloatingPointError as error:
         raise GrowsWithoutBoundError(float(error.args[0])) from None
+
+
+def _linear(system: System, field: Bound, inputs: Inputs, most: int) -> tuple[Array, Array, Array]:
+    pieces = linear_pieces(system, field, inputs)
     times, _ = pieces.grid(pieces.parts(LINEAR_ERROR, most, LEAST_POINTS), inputs.edges)
     return _settled(field, inputs, times, pieces.at, most, resampled=False)

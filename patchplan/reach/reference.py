@@ -127,7 +127,7 @@ def _searched_worst(
 
 def _simulated(system: System, numeric: Field, build: Build, inputs: Inputs, nominal: Run, ends: _Ends) -> _Ends:
     """Widen by the adjustable box and by boards within tolerance."""
-    grid = coarse_grid(inputs, nominal.times)
+    grid = coarse_grid(system, numeric, inputs, nominal.times)
     peaks = np.abs(nominal.values[: numeric.n_states]).max(axis=1)
     boards = spread_of_boards(system, numeric, build, inputs, grid, peaks)
     alone = extremes(nominal.times, nominal.values, nominal.rates)
@@ -155,7 +155,7 @@ def _linear_box(system: System, numeric: Field, inputs: Inputs, nominal: Run, en
         here = worst_case(middle, responses, [half for _, _, half in free])
         low, high = np.minimum(low, here[0]), np.maximum(high, here[1])
     peaks = np.abs(nominal.values[: numeric.n_states]).max(axis=1)
-    box = search_box(system, numeric, inputs, coarse_grid(inputs, nominal.times), peaks)
+    box = search_box(system, numeric, inputs, coarse_grid(system, numeric, inputs, nominal.times), peaks)
     return _Ends(low, high, "simulated", f"{_BOX}; at each, {_GAIN}", runs=box.runs)
 
 

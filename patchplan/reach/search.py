@@ -17,7 +17,7 @@ from patchplan.reach.batch import march
 from patchplan.reach.curves import extremes
 from patchplan.reach.field import DENSE_LIMIT, Bound, Field
 from patchplan.reach.inputs import Inputs
-from patchplan.reach.nominal import start_of, tabulate, uniform_grid
+from patchplan.reach.nominal import LEAST_POINTS, linear_pieces, start_of, tabulate, uniform_grid
 from patchplan.reach.records import Run
 from patchplan.reach.solve import GrowsWithoutBoundError, floors, solve
 
@@ -25,6 +25,8 @@ Array = NDArray[np.float64]
 
 #: Boards of the ensemble, points of the sample of the box, rounds of climbing and points of each round.
 BOARDS, SAMPLE, ROUNDS, CLIMBERS = 16, 16, 2, 16
+#: Runs over the box that are kept for the nodes of the patch: those that are worst for most names.
+KEPT = 12
 #: All corners of the box up to this many adjustable parameters.
 CORNERS_UP_TO = 4
 #: Tolerance of these runs: far below the margins they serve.
@@ -84,8 +86,16 @@ def _tabulated(bound: Bound, inputs: Inputs, times: Array, states: Array) -> Bat
     return Batch(times, np.stack([t[0] for t in tables], axis=1), np.stack([t[1] for t in tables], axis=1))
 
 
-def coarse_grid(inputs: Inputs, times: Array) -> Array:
-    """Times for further runs: an eighth of the nominal run's, at least 300, and 300 evenly spread; edges twice."""
+def coarse_grid(system: System, field: Field, inputs: Inputs, times: Array) -> Array:
+    """Times for further runs, some hundred at least; edges twice.
+
+    Of the nominal run's times an eighth or more, and 300 evenly spread; for linear equations the nominal steps in equal
+    parts, as these have few lengths.
+    """
+    if system.is_linear and field.n_states:
+        pieces = linear_pieces(system, field.bind(field.weights(system.knob_values())), inputs)
+        parts = np.full(len(pieces.starts), 1 + LEAST_POINTS // (2 * len(pieces.starts)))
+        return pieces.grid(parts, inputs.edges)[0]
     inner = np.unique(
         np.concatenate((times[:: int(np.clip(len(times) // 300, 1, 8))], uniform_grid(inputs.edges, 300)))
     )
@@ -179,8 +189,9 @@ def search_box(system: System, field: Field, inputs: Inputs, times: Array, peaks
             points = climb_points(seen, np.hstack(lows), np.hstack(highs), 0.15 / 3**i, random)
             seen = np.concatenate((seen, points))
     low, high = np.hstack(lows), np.hstack(highs)
-    worst = sorted({int(j) for j in (*low.argmin(axis=1), *high.argmax(axis=1))})
-    return Excursion(low.min(axis=1), high.max(axis=1), tuple(runs[j] for j in worst if j in runs))
+    places, uses = np.unique(np.concatenate((low.argmin(axis=1), high.argmax(axis=1))), return_counts=True)
+    worst = sorted(places[np.argsort(-uses, kind="stable")[:KEPT]].tolist())
+    return Excursion(low.min(axis=1), high.max(axis=1), tuple(runs[j] for j in worst))
 
 
 def spread_of_boards(
