@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Mapping
+from collections.abc import Set as AbstractSet
 from dataclasses import dataclass, field
 
 from patchplan.equation.algebra import Algebra
@@ -116,32 +117,71 @@ def solve(
     ProblemFaults
         Nonlinear or state-dependent highest derivatives, equations without any, a singular mass matrix.
     """
-    highest = {Atom(Kind.SIGNAL, name, order): name for name, order in orders.items()}
+    highest = {Atom(Kind.SIGNAL, name, order) for name, order in orders.items()}
+    left = dict(equations)
+    blocks: list[Block] = []
+    while True:
+        split, faults = _split(left, highest)
+        groups = _groups({i: set(coefficients) for i, (coefficients, _) in split.items()})
+        if faults:
+            # Equations that multiply a highest derivative wait until others have given it.
+            groups = [g for g in groups if len(g) == len({a for i in g for a in split[i][0]})]
+        made, wrong = _blocks(groups, split, left, algebra)
+        if wrong or (faults and not made):
+            raise ProblemFaults([*faults, *wrong])
+        blocks += made
+        if not faults:
+            return blocks
+        solved = {Atom(a.kind, a.name, a.primes + 1): x for b in made for a, x in b.rates().items()}
+        highest -= solved.keys()
+        done = {i for g in groups for i in g}
+        left = {i: (_put_in(value, solved, e), e) for i, (value, e) in left.items() if i not in done}
+
+
+Split = dict[int, tuple[dict[Atom, Polynomial], Polynomial]]
+
+
+def _split(
+    equations: Mapping[int, tuple[Polynomial, Equation]], highest: AbstractSet[Atom]
+) -> tuple[Split, list[Fault]]:
+    """Coefficients and right side of every equation that is linear in the highest derivatives; faults of the others."""
+    split: Split = {}
     faults: list[Fault] = []
-    split: dict[int, tuple[dict[Atom, Polynomial], Polynomial]] = {}
     for index, (value, equation) in equations.items():
         try:
-            split[index] = _collected(value, highest.keys(), equation)
+            split[index] = _collected(value, highest, equation)
         except ProblemFaults as error:
             faults += error.faults
-    if not faults:
-        faults += [_free_of_highest(equations[i][1], highest) for i, (left, _) in split.items() if not left]
+    bare = [_free_of_highest(equations[i][1], sorted(highest)) for i, (left, _) in split.items() if not left]
+    if bare:
+        raise ProblemFaults([*faults, *bare])
+    return split, faults
+
+
+def _blocks(
+    groups: list[list[int]], split: Split, equations: Mapping[int, tuple[Polynomial, Equation]], algebra: Algebra
+) -> tuple[list[Block], list[Fault]]:
     blocks = []
-    for group in [] if faults else _groups({i: set(left) for i, (left, _) in split.items()}):
+    faults: list[Fault] = []
+    for group in groups:
         try:
             blocks.append(_block(group, split, equations, algebra))
         except ProblemFaults as error:
             faults += error.faults
-    if faults:
-        raise ProblemFaults(faults)
-    return blocks
+    return blocks, faults
+
+
+def _put_in(value: Polynomial, solved: Mapping[Atom, Polynomial], equation: Equation) -> Polynomial:
+    try:
+        return value.substitute(solved)
+    except TooLargeError:
+        raise ProblemFaults([too_large(equation)]) from None
 
 
 def _collected(
-    value: Polynomial, highest: Iterable[Atom], equation: Equation
+    value: Polynomial, wanted: AbstractSet[Atom], equation: Equation
 ) -> tuple[dict[Atom, Polynomial], Polynomial]:
     """Coefficients of the highest derivatives, and the right side of what is left."""
-    wanted = set(highest)
     left: dict[Atom, dict[tuple[tuple[Atom, int], ...], object]] = {}
     rest = {}
     for powers, coefficient in value.terms.items():
@@ -181,7 +221,7 @@ def _moving_mass(equation: Equation, atom: Atom, others: tuple[tuple[Atom, int],
     )  # fmt: skip
 
 
-def _free_of_highest(equation: Equation, highest: Mapping[Atom, str]) -> Fault:
+def _free_of_highest(equation: Equation, highest: Iterable[Atom]) -> Fault:
     names = ", ".join(a.text for a in highest)
     return Fault(
         "This equation holds no highest derivative, so it ties signals to each other without integrating.",
@@ -212,7 +252,7 @@ def _groups(shared: Mapping[int, set[Atom]]) -> list[list[int]]:
 
 def _block(
     group: list[int],
-    split: Mapping[int, tuple[dict[Atom, Polynomial], Polynomial]],
+    split: Split,
     equations: Mapping[int, tuple[Polynomial, Equation]],
     algebra: Algebra,
 ) -> Block:

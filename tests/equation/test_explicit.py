@@ -185,3 +185,12 @@ def test_a_long_ladder_builds_row_by_row():
 def test_names_that_cancel_inside_a_function_of_time_are_gone():
     system = built(["x' = -x*exp((3 - x) + (x - t)) + (x^0)*sin(t)"], start="x = 1")
     assert rows(system)["x"] == {(("exp(3 - t)", 1), ("x", 1)): -1, (("sin(t)", 1),): 1}
+
+
+def test_a_highest_derivative_in_a_product_is_put_in_where_other_equations_give_it():
+    system = built(["w' = x'*w + a^2", "x' + y' = -x", "x' - y' = y", "a = z''", "z'' = -z"],
+                   start="w = 1\nx = 1\ny = 1\nz = 1\n\"z'\" = 0")  # fmt: skip
+    half = Fraction(1, 2)
+    assert {r.name: {t.factors: t.coefficient for t in r.terms} for r in expanded(system)}["w"] == {
+        (("x", 1), ("w", 1))[::-1]: -half, (("w", 1), ("y", 1)): half, (("z", 2),): 1,
+    }  # fmt: skip
