@@ -67,4 +67,5 @@ def within_horizon(sensitivity: Sensitivity, *, linear: bool) -> Sensitivity:
         rate=sensitivity.rate[..., :rows],
         lag=sensitivity.lag[..., :rows],
         start={name: response[..., :rows] for name, response in sensitivity.start.items()},
+        leak={name: response[..., :rows] for name, response in sensitivity.leak.items()},
     )

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
@@ -46,6 +46,8 @@ class Sensitivity:
         (integrators: by which their input sum comes late).
     start
         Integrator -> shape ``(n_watched, n_times)``: per unit added to the start value [problem units].
+    leak
+        Integrator -> the same shape: per unit of a rate at which it forgets its own value [1/problem time].
     """
 
     watched: tuple[str, ...]
@@ -57,6 +59,7 @@ class Sensitivity:
     rate: Array
     lag: Array
     start: Mapping[str, Array]
+    leak: Mapping[str, Array] = field(default_factory=dict)
 
 
 #: Times given to the caller, steps of the forward method, and rows of the Reference that one step spans at least.
@@ -79,7 +82,7 @@ def find_sensitivity(form: Form, patch: Patch, ranges: Ranges) -> Sensitivity:
     times, responses = _by_adjoints(plan) if adjoint else _forward(plan)
     scaled = responses / plan.base[:, None, None]
     wires, stages = len(plan.wires), len(plan.stages)
-    starts = scaled[:, wires + 2 * stages :]
+    leaks, starts = np.split(scaled[:, wires + 2 * stages :], 2, axis=1)
     return Sensitivity(
         watched=tuple(patch.watched),
         base=plan.base,
@@ -90,13 +93,15 @@ def find_sensitivity(form: Form, patch: Patch, ranges: Ranges) -> Sensitivity:
         rate=scaled[:, wires : wires + stages],
         lag=scaled[:, wires + stages : wires + 2 * stages],
         start={s.name: starts[:, i] for i, s in enumerate(plan.integrators)},
+        leak={s.name: leaks[:, i] for i, s in enumerate(plan.integrators)},
     )
 
 
 class _Plan:
     """The patch as arrays: places of stages, parameters (columns), error bases.
 
-    A column is one parameter: every wire, then a rate and a lag for every stage, then every start value.
+    A column is one parameter: every wire, then a rate and a lag for every stage, a leak and a start value for every
+    integrator.
     """
 
     def __init__(self, form: Form, patch: Patch, ranges: Ranges) -> None:
@@ -111,7 +116,8 @@ class _Plan:
         self.wires = tuple((s.name, i) for s in self.stages for i in range(_counted(s)))
         every = np.arange(len(self.stages))
         #: Stage of every column, start values left out.
-        self.column_stage = np.concatenate((np.repeat(every, [_counted(s) for s in self.stages]), every, every))
+        counts = [_counted(s) for s in self.stages]
+        self.column_stage = np.concatenate((np.repeat(every, counts), every, every, every[: len(self.integrators)]))
         self.lags = slice(len(self.wires) + len(self.stages), len(self.wires) + 2 * len(self.stages))
         self.nominal = {k.name: float(k.value) for k in patch.knobs.values()}
         self.base = np.array([self._base(form, ranges, name) for name in patch.watched])
@@ -165,7 +171,7 @@ class _Plan:
         Returns
         -------
         Array
-            Shape ``(n_wires + 2 n_stages, n_times)``.
+            Shape ``(n_wires + 2 n_stages + n_integrators, n_times)``.
         """
         one = np.ones_like(next(iter(values.values())))
         rows, late = [], []
@@ -179,7 +185,8 @@ class _Plan:
                 late.append(sum((-g * rates[w.source] for g, w in pairs), 0 * one))
             else:
                 late.append(-rates[stage.node])
-        return np.array([*rows, *[one] * len(self.stages), *late])
+        leaks = [-values[s.node] for s in self.integrators]
+        return np.array([*rows, *[one] * len(self.stages), *late, *leaks])
 
 
 def _counted(stage: Stage) -> int:

@@ -35,6 +35,8 @@ Array = NDArray[np.float64]
 SPEED_PLAY = 1.5
 #: Most points in time, over all watched signals, at which errors are predicted during the search.
 MOST_POINTS = 400
+#: Inverters and start networks load an output by at most one over this of its rated load.
+LIGHT = 4.0
 #: A coefficient further off than this was not in reach of the parts.
 OUT_OF_REACH = 0.1
 
@@ -114,7 +116,7 @@ def _weights(patch: Patch, sensitivity: Sensitivity) -> dict[tuple[str, int], fl
 
 
 def _effect(model: Model, patch: Patch, sensitivity: Sensitivity, pace: Speed) -> Effect:
-    """Watched signals' response to the model's rows, thinned to :data:`MOST_POINTS`, with the lag that speed costs.
+    """Watched signals' response to the model's rows, and what bandwidth and finite gain cost at the chosen speed.
 
     A residual above zero makes an integrator's or summer's coefficient smaller, but a start value larger.
     """
@@ -128,7 +130,7 @@ def _effect(model: Model, patch: Patch, sensitivity: Sensitivity, pace: Speed) -
         else:
             moved = -sensitivity.coefficient[:, at[ratio.stage, ratio.wire]]
         columns.append(moved[:, ::stride].ravel())
-    base = pace.lag[:, ::stride].ravel() / pace.chosen
+    base = (pace.lag / pace.chosen + pace.leak)[:, ::stride].ravel()
     return Effect(np.array(columns).reshape(len(columns), -1).T, base)
 
 
@@ -146,7 +148,7 @@ def _stage(stage: Stage, patch: Patch, target: Target, values: Values, scales: M
     if stage.kind not in ("integrator", "summer", "inverter"):
         return StageSizing(stage.name)
     if stage.kind == "inverter":
-        both = _nearest(target.resistors, 1e4)
+        both = _nearest(target.resistors, max(1e4, LIGHT * target.op_amp.load))
         return StageSizing(stage.name, (Leg((both,)),), feedback=both)
     if stage.bipolar:
         return _bipolar(stage, patch, target, scales)
@@ -166,7 +168,7 @@ def _start(stage: Stage, target: Target, values: Values) -> tuple[tuple[float, f
     if not target.switch_on:
         return None, 0.0
     if not stage.start:
-        return (0.0, _nearest(target.resistors, 2e4)), 0.0
+        return (0.0, _nearest(target.resistors, max(2e4, LIGHT * target.op_amp.load))), 0.0
     first, second = values.parts[stage.name, -1]
     volts = target.reference * second / first
     return (first, second), volts * stage.sign * (1 if stage.start > 0 else -1)

@@ -37,7 +37,8 @@ class Speed:
     """The window of the time scale [circuit s per unit of problem time] and the choice in it.
 
     ``predicted`` is the error expected from bandwidth and bias current at the chosen speed, as a fraction of peak;
-    ``lag`` the error by bandwidth alone, times the time scale, shape ``(n_watched, n_times)``.
+    ``lag`` the error by bandwidth alone, times the time scale, and ``leak`` the one by finite gain, both of shape
+    ``(n_watched, n_times)``.
     """
 
     window: tuple[float, float]
@@ -45,6 +46,7 @@ class Speed:
     chosen: float
     predicted: float
     lag: Array
+    leak: Array
 
 
 def middle_scales(form: Form, patch: Patch, ranges: Ranges, target: Target) -> dict[str, float]:
@@ -111,7 +113,8 @@ def choose_speed(
         good = (error <= 1.1 * error.min() + SLACK) & (grid >= min(grid[-1], _above_strays(gains)))
         chosen = float(grid[np.argmax(good)] if good.any() else grid[np.argmin(error)])
     predicted = lag / chosen + bias_error(patch, sensitivity, target, scales, gains, chosen)
-    return Speed((low, high), (low_text, high_text), chosen, predicted, late)
+    leak = leak_error(patch, sensitivity, target, scales, gains)
+    return Speed((low, high), (low_text, high_text), chosen, predicted, late, leak)
 
 
 def _plain_end(target: Target, gains: Mapping[str, Array]) -> float:
@@ -146,6 +149,29 @@ def lag_errors(
     late = np.where(multiplies, 1.0 / target.multiplier.bandwidth, np.array(noise_gain) / target.op_amp.gain_bandwidth)
     by_op_amp = np.einsum("wst,s->wt", sensitivity.lag, np.where(multiplies, 0.0, late))
     return by_op_amp, np.einsum("wst,s->wt", sensitivity.lag, np.where(multiplies, late, 0.0))
+
+
+def leak_error(
+    patch: Patch,
+    sensitivity: Sensitivity,
+    target: Target,
+    scales: Mapping[str, float],
+    gains: Mapping[str, Array],
+) -> Array:
+    """Error by finite DC gain, the same at every speed, shape ``(n_watched, n_times)`` [fraction of peak].
+
+    An integrator of gains g forgets its value at the rate sum(g)/A0, a summer of noise gain NG comes out NG/A0 low.
+    """
+    at = {key: i for i, key in enumerate(sensitivity.wires)}
+    total = np.zeros((len(sensitivity.watched), len(sensitivity.times)))
+    for stage in patch.stages:
+        if stage.name in sensitivity.leak:
+            total += sensitivity.leak[stage.name] * float(gains[stage.name].sum()) / target.op_amp.gain
+        elif stage.kind in ("summer", "inverter"):
+            low = (1.0 + summer_gains(stage, patch, scales)) / target.op_amp.gain
+            own = [at[stage.name, i] for i in range(len(stage.wires)) if (stage.name, i) in at]
+            total -= low * sensitivity.coefficient[:, own].sum(axis=1)
+    return total
 
 
 def bias_error(
