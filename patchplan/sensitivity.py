@@ -196,10 +196,7 @@ def _counted(stage: Stage) -> int:
 def _influence(plan: _Plan, values: Mapping[str, Array], count: int) -> Array:
     """How every stage's signal follows integrator states and additions at algebraic outputs.
 
-    Returns
-    -------
-    Array
-        Shape ``(n_stages, n_times, n_stages)``: rows of integrators are unit rows.
+    Shape ``(n_stages, n_times, n_stages)``; rows of integrators are unit rows.
     """
     size = len(plan.stages)
     table = np.zeros((size, count, size))
@@ -228,13 +225,7 @@ def _additions(slopes: Array) -> Array:
 
 
 def _forward(plan: _Plan) -> tuple[Array, Array]:
-    """All columns at once along the run.
-
-    Returns
-    -------
-    times, responses
-        Shape ``(n_times,)`` and ``(n_watched, n_columns, n_times)``.
-    """
+    """All columns at once along the run: times, and responses of shape ``(n_watched, n_columns, n_times)``."""
     curves = plan.curves
     ends = curves.coarse_ends(int(max(ROWS_PER_STEP, np.ceil(len(curves.times) / MOST_STEPS))))
     jumps = set(curves.jumps.tolist())

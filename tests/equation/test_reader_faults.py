@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import os
-import tomllib
 from pathlib import Path
 
 import pytest
@@ -13,7 +12,6 @@ from hypothesis import strategies as st
 from patchplan.equation.faults import render, rendered
 from patchplan.equation.reader import read_problem
 from patchplan.equation.reading import MAX_FAULTS
-from patchplan.equation.spans import raw_offset, scan
 from patchplan.errors import Fault, ProblemFaults
 
 GOOD = """equations = ["x' = -a*x + u"]
@@ -325,48 +323,6 @@ def test_any_value_at_any_key_gives_faults_or_a_problem(place, value):
         if key != place
     )
     assert_sound(outcome(text))
-
-
-def leaves(value, key=""):
-    if isinstance(value, dict):
-        for name, item in value.items():
-            yield from leaves(item, f"{key}.{name}" if key else name)
-    elif isinstance(value, list):
-        for index, item in enumerate(value):
-            yield from leaves(item, f"{key}[{index}]")
-    else:
-        yield key, value
-
-
-# The standard library's TOML reader is the judge: the text inside each span must stand for the value it reads.
-@pytest.mark.parametrize(
-    "text",
-    [
-        GOOD,
-        "a.b.c = 1 # x\n[d . 'e f']\n\"g\\u0041\" = [1, [2, 3,], # [\n {h = 'i', j.k = \"\"}]\n",
-        "[[p]]\nq = 1\n[[p]]\nq = 2\n[p.r]\ns = 3\n",
-        'm = """\na "quoted"" \\"""\nb""""\nn = \'\'\'x\'\'\'\'\no = 1979-05-27 07:32:00 # c\np = [\n  "#", # ]\n]\n',
-        "e = []\nf = {}\ng = -inf\nh = 0xff\n",
-    ],
-)
-def test_spans_agree_with_tomllib(text):
-    layout = scan(text)
-    for key, value in leaves(tomllib.loads(text)):
-        start, end = layout.values[key]
-        assert tomllib.loads(f"v = {text[start:end]}")["v"] == value
-
-
-@given(st.text(alphabet='ab\\"\n\té', max_size=12), st.integers(0, 12))
-def test_offsets_inside_strings(inside, position):
-    raw = (
-        '"'
-        + "".join({"\n": "\\n", "\t": "\\t", "é": "\\u00e9"}.get(c, f"\\{c}" if c in '\\"' else c) for c in inside)
-        + '"'
-    )
-    assert tomllib.loads(f"v = {raw}")["v"] == inside
-    position = min(position, len(inside))
-    at = raw_offset(raw, position)
-    assert tomllib.loads(f'v = {raw[:at]}"')["v"] == inside[:position]
 
 
 def test_render_without_a_place():
