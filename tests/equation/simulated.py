@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from itertools import pairwise
+
 import numpy as np
 from scipy.integrate import solve_ivp
 
@@ -11,7 +13,7 @@ from patchplan.equation.system import System
 
 
 def built(equations, *, duration="10", **tables):
-    """System of equations with TOML tables given as text: ``start="x = 0"``, ``inputs=...``, ``top='watch = ["x"]'``."""
+    """System of equations; TOML tables as text: ``start="x = 0"``, ``inputs=...``, ``top='watch = ["x"]'``."""
     return build_system(problem(equations, duration=duration, **tables))
 
 
@@ -58,7 +60,7 @@ def simulate(system: System, times, knobs=None):
     edges = [0.0, *jumps, duration]
     x = np.array([float(s.start) for s in system.states])
     found = np.full((len(x), len(times)), np.nan)
-    for left, right in zip(edges[:-1], edges[1:], strict=True):
+    for left, right in pairwise(edges):
         inside = (times >= left) & (times <= right)
         at = np.unique(np.concatenate([times[inside], [right]]))
         run = solve_ivp(rate, (left, right), x, t_eval=at, method="DOP853", rtol=1e-10, atol=1e-12)
