@@ -16,8 +16,8 @@ SOURCES = sorted((ROOT / "patchplan").rglob("*.py"))
 TESTS = sorted((ROOT / "tests").rglob("*.py"))
 #: Rows of the house, top first; a module imports from its own room and from rows above.
 ROWS = (
-    ("errors", "quantity", "version"), ("equation",), ("reach",), ("form",), ("patch",), ("ranges",), ("sensitivity",), ("horizon",),
-    ("sizing",), ("circuit",), ("check",), ("report",), ("pipeline",), ("cli",),
+    ("errors", "quantity", "version"), ("equation",), ("reach",), ("form",), ("patch",), ("ranges",), ("sensitivity",),
+    ("horizon",), ("sizing",), ("circuit",), ("check",), ("report",), ("pipeline",), ("cli",),
 )  # fmt: skip
 ROW_OF = {room: row for row, rooms in enumerate(ROWS) for room in rooms}
 SYMPY_ROOMS = ("equation", "form", "patch")
