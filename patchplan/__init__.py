@@ -12,6 +12,8 @@ from __future__ import annotations
 from importlib import import_module
 from typing import TYPE_CHECKING, Any
 
+from patchplan.version import __version__
+
 if TYPE_CHECKING:
     from patchplan.check.records import Verdict as Verdict
     from patchplan.circuit.records import Circuit as Circuit
@@ -30,8 +32,6 @@ if TYPE_CHECKING:
     from patchplan.report.records import Plan as Plan
     from patchplan.report.write import write_plan as write_plan
     from patchplan.sizing.records import Sizing as Sizing
-
-__version__ = "0.1.0"
 
 #: Public name -> module that holds it; loaded on first use, so that the command line starts without numpy.
 _HOME = {
