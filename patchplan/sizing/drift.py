@@ -104,7 +104,7 @@ def limit_resistor(sizing: StageSizing, target: Target, limit: float) -> float:
 def content_below(values: Array, times: Array, corner: float) -> float:
     """Share of a signal's content, by amplitude of its spectrum, at frequencies below ``corner`` [1/problem time]."""
     even = np.linspace(times[0], times[-1], 2048)
-    spectrum = np.abs(np.fft.rfft(np.interp(even, times, values)))
+    # A Hann window keeps periods that do not fit the run from leaking down to where the corner is.
+    spectrum = np.abs(np.fft.rfft(np.hanning(even.size) * np.interp(even, times, values)))
     frequency = np.fft.rfftfreq(even.size, even[1] - even[0])
-    spectrum[0] /= 2.0
     return float(spectrum[frequency < corner].sum() / (spectrum.sum() or 1.0))
