@@ -34,6 +34,13 @@ class Effect:
     response: Array
     base: Array
 
+    @property
+    def row_weight(self) -> float:
+        """Weight of row errors beside predicted ones; it grows with the largest response, so that both count on
+        sensitive and on docile problems, and a linear prediction is not trusted with large errors.
+        """
+        return max(1.0, 0.1 * float(np.abs(self.response).max(initial=0.0)))
+
 
 @dataclass(frozen=True)
 class Loops:
@@ -68,16 +75,14 @@ class Loops:
 
 
 def find_loops(matrix: Array, effect: Effect) -> Loops:
-    """Loops under the measure (mean square of the predicted error) + (share * row errors)^2.
+    """Loops under the measure (mean square of the predicted error) + (row weight * row errors)^2.
 
-    The second part keeps single coefficients near even where the watched signals hardly show them; its share grows with
-    the largest response, so that both count on chaotic and on docile problems.
+    The second part keeps single coefficients near even where the watched signals hardly show them.
     """
     from scipy.linalg import null_space, qr
 
     points, rows = effect.response.shape
-    share = max(1.0, 0.1 * float(np.abs(effect.response).max(initial=0.0)))
-    stacked = np.vstack([effect.response / np.sqrt(max(points, 1)), share * np.eye(rows)])
+    stacked = np.vstack([effect.response / np.sqrt(max(points, 1)), effect.row_weight * np.eye(rows)])
     q, shape = qr(stacked, mode="economic")
     base = q[:points].T @ (effect.base / np.sqrt(max(points, 1)))
     basis = null_space((shape @ matrix).T) if matrix.shape[1] else np.eye(rows)
@@ -153,8 +158,8 @@ def descend(loops: Loops, incidence: Array, offset: Array, menu: Menu, start: Ar
 def split_rest(matrix: Array, residual: Array, effect: Effect, low: Array, high: Array) -> tuple[Array, float]:
     """Theta inside its bounds that shares the rest out, and the largest predicted error of a watched signal.
 
-    A linear program (HiGHS through scipy): least sum of the largest predicted error and :data:`ROW_SHARE` times the
-    largest row error, so that coefficients which the watched signals hardly show stay near, too.
+    A linear program (HiGHS through scipy): least sum of the largest predicted error and a share of the largest
+    row error, so that coefficients which the watched signals hardly show stay near, too.
 
     Returns
     -------
@@ -172,7 +177,9 @@ def split_rest(matrix: Array, residual: Array, effect: Effect, low: Array, high:
     upper = np.block([[-seen, -point, none_p], [seen, -point, none_p], [-matrix, none_r, -one], [matrix, none_r, -one]])
     limits = np.concatenate([-share, share, -residual, residual])
     bounds = [*zip(low, high, strict=True), (0, None), (0, None)]
-    worst = linprog(np.r_[np.zeros(columns), 1.0, ROW_SHARE], A_ub=upper, b_ub=limits, bounds=bounds)
+    worst = linprog(
+        np.r_[np.zeros(columns), 1.0, ROW_SHARE * effect.row_weight], A_ub=upper, b_ub=limits, bounds=bounds
+    )
     if worst.x is None:
         return (low + high) / 2, float("inf")
     theta = np.asarray(worst.x, dtype=float)[:columns]
@@ -181,7 +188,8 @@ def split_rest(matrix: Array, residual: Array, effect: Effect, low: Array, high:
 
 def merit(effect: Effect, residual: Array) -> float:
     """What :func:`split_rest` makes small: the largest predicted error plus a share of the largest row error."""
-    return _predicted(effect, residual) + ROW_SHARE * float(np.max(np.abs(residual), initial=0.0))
+    rows = float(np.max(np.abs(residual), initial=0.0))
+    return _predicted(effect, residual) + ROW_SHARE * effect.row_weight * rows
 
 
 def _predicted(effect: Effect, residual: Array) -> float:
