@@ -101,6 +101,7 @@ def choose_speed(
     lag = float(np.max(np.abs(late), initial=0.0))
     low, low_text = max(_fast_ends(patch, ranges, target, scales, gains, parts))
     high, high_text = min(_slow_ends(patch, sensitivity, target, scales, gains))
+    low = low or 1e-6 * high  # nothing moves, so that nothing limits the speed either
     plain = min(high, _plain_end(target, gains))
     if given is not None:
         chosen = given

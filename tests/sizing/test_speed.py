@@ -105,3 +105,8 @@ def test_bias_sets_the_slow_end_where_it_is_large(target):
 
 def test_a_given_speed_is_taken_even_outside_the_window(stages, target):
     assert choose_speed(*stages, target, given=3600.0).chosen == 3600.0
+
+
+def test_a_state_that_never_moves_still_gets_a_speed(target):
+    speed = choose_speed(*parts_of(system({"x": 1}, {"x": []})), target)
+    assert 0 < speed.window[0] <= speed.chosen <= speed.window[1]
