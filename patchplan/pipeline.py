@@ -9,6 +9,7 @@ from patchplan.check.compare import check_circuit
 from patchplan.check.records import Verdict
 from patchplan.circuit.build import build_circuit
 from patchplan.circuit.catalogue import load_catalogue
+from patchplan.circuit.switched import with_references
 from patchplan.circuit.target import target_of
 from patchplan.equation.explicit import build_system
 from patchplan.equation.faults import rendered
@@ -103,11 +104,13 @@ def plan_with(
     )  # fmt: skip
     if sizing.faults:
         return found
+    patch, sizing = with_references(patch, sizing, target, float(form.system.duration))
     circuit = build_circuit(form, patch, sizing, target, build, catalogue, stand_ins=reach.reference.waveforms)
     say("Checking the board")
     verdict = check_circuit(
         circuit, reach.reference, sensitivity, patch, sizing, target, accept=accept, system=form.system
     )
+    found = replace(found, patch=patch, sizing=sizing)
     return replace(found, circuit=circuit, verdict=verdict, warnings=(*warnings, *circuit.notes, *verdict.warnings))
 
 

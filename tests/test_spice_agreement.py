@@ -98,6 +98,8 @@ def test_spice_equals_the_check(plans: Plans, spice: Spice, name: str) -> None:
 def jumps_settled(volts: Array, times: Array) -> NDArray[np.bool_]:
     """Rows that are no jump of a node, nor shortly after one."""
     counts = np.ones(len(times), bool)
-    for row in np.flatnonzero(np.abs(np.diff(volts)) > 0.02 * np.ptp(volts)) + 1:
+    # A constant moves by rounding alone.
+    least = max(0.02 * np.ptp(volts), 1e-6 * np.abs(volts).max())
+    for row in np.flatnonzero(np.abs(np.diff(volts)) > least) + 1:
         counts[row - 1 : np.searchsorted(times, times[row] + 1e-3 * times[-1], side="right")] = False
     return counts

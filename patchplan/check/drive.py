@@ -35,7 +35,8 @@ class Drive:
     time_scale
         Circuit seconds per unit of problem time.
     jumps
-        Times at which a source or its slope jumps, without those inside a table [circuit s].
+        Times at which a source or its slope jumps or a control line is switched, without those inside a table
+        [circuit s].
     """
 
     signals: tuple[Waveform | None, ...]
@@ -66,6 +67,11 @@ class Stretch:
     def constant(self) -> bool:
         """Whether there is no source at all."""
         return self.drive.constant
+
+    @property
+    def middle(self) -> float:
+        """A time well clear of the jumps [circuit s]."""
+        return (self.start + self.end) / 2
 
     @property
     def knots(self) -> Array:
@@ -142,8 +148,20 @@ def drive_of(circuit: Circuit, sources: tuple[Part, ...], waveforms: Mapping[str
             jumps.update((table[0][1:][np.diff(table[0]) == 0.0] * circuit.time_scale).tolist())
         signals.append(wave if table is None else None)
         tables.append(table)
+    for name in {p.control for p in circuit.parts if p.control}:
+        line = circuit.sources[name].waveform
+        if line is not None:
+            jumps.update(float(t) * circuit.time_scale for t in line.jumps(circuit.duration / circuit.time_scale))
     inner = sorted(t for t in jumps if 0.0 < t < circuit.duration)
     return Drive(tuple(signals), tuple(tables), tuple(p.value for p in sources), circuit.time_scale, tuple(inner))
+
+
+def high_lines(circuit: Circuit, time: float) -> frozenset[str]:
+    """Sources whose control lines are high: those that are not zero at a time [circuit s]."""
+    at = np.array([time / circuit.time_scale])
+    names = {p.control for p in circuit.parts if p.control}
+    waves = {name: circuit.sources[name].waveform for name in names}
+    return frozenset(name for name, wave in waves.items() if wave is not None and wave.values(at)[0] != 0.0)
 
 
 def _linear(times: Array, values: Array, end: float) -> Callable[[float], float]:

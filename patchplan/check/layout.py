@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Iterator
+from collections.abc import Container, Iterable, Iterator
 from dataclasses import dataclass, replace
 from typing import Any, TypeAlias
 
@@ -40,13 +40,15 @@ class Layout:
     warnings: tuple[str, ...]
 
 
-def layout_of(circuit: Circuit, mode: str) -> Layout:
+def layout_of(circuit: Circuit, mode: str, high: Container[str] = ()) -> Layout:
     """Sort the parts, number the nets, hold what floats.
 
     Parameters
     ----------
     mode
         ``operate`` or ``hold``.
+    high
+        Sources whose control lines are high.
     """
     of_kind = {
         k: tuple(p for p in circuit.parts if p.kind == k) for k in ("op amp", "multiplier", "source", "reference")
@@ -60,7 +62,7 @@ def layout_of(circuit: Circuit, mode: str) -> Layout:
         if net in driven:
             warnings.append(f"{part.ref} drives net {net}, which is driven already; its output is left out.")
         driven.setdefault(net, len(driven))
-    resistors = list(_resistors(circuit.parts, mode))
+    resistors = list(_resistors(circuit.parts, mode, high))
     capacitors, loops = _tree_capacitors(circuit.parts, driven)
     for part in loops:
         inner = f"{part.ref} inside"
@@ -97,9 +99,10 @@ def layout_of(circuit: Circuit, mode: str) -> Layout:
     )
 
 
-def _resistors(parts: Iterable[Part], mode: str) -> Iterator[tuple[str, str, float]]:
+def _resistors(parts: Iterable[Part], mode: str, high: Container[str]) -> Iterator[tuple[str, str, float]]:
     for part in parts:
-        if part.kind == "resistor" or (part.kind == "switch" and part.closed == mode):
+        line = ("high" if part.control in high else "low") if part.control else mode
+        if part.kind == "resistor" or (part.kind == "switch" and part.closed == line):
             yield part.nets[0], part.nets[1], max(part.value, _LEAST_OHM)
         elif part.kind == "potentiometer":
             end_a, wiper, end_b = part.nets

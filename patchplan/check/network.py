@@ -6,6 +6,7 @@ the multipliers; inputs are the sources' volts and the constant 1 (references, s
 
 from __future__ import annotations
 
+from collections.abc import Container
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -107,7 +108,7 @@ def idealised(
     return replace(circuit, parts=parts, op_amp=amp, multiplier=times)
 
 
-def build_network(circuit: Circuit, mode: str = "operate") -> Network:
+def build_network(circuit: Circuit, mode: str = "operate", high: Container[str] = ()) -> Network:
     """Nodal model of the board.
 
     Parameters
@@ -116,13 +117,15 @@ def build_network(circuit: Circuit, mode: str = "operate") -> Network:
         The board; only its parts, the op amp's and multiplier's figures and the offsets of source nodes are used.
     mode
         ``operate`` or ``hold``: which switches are closed.
+    high
+        Sources whose control lines are high.
 
     Notes
     -----
     Modified nodal analysis (Ho, Ruehli and Brennan 1975) with capacitors as voltage sources of known voltage. A
     positive bias current flows from the net into the input. Decoupling capacitors are left out, rails being stiff.
     """
-    layout = layout_of(circuit, mode)
+    layout = layout_of(circuit, mode, high)
     solution = _solve(layout)
     n_free = len(layout.free)
     voltage = np.concatenate([solution[:n_free], layout.driven_rows])

@@ -5,12 +5,14 @@ from __future__ import annotations
 import warnings
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
+from functools import cache
 from itertools import pairwise
 
 import numpy as np
 from numpy.typing import NDArray
 
-from patchplan.check.drive import Stretch, drive_of
+from patchplan.check.drive import Stretch, drive_of, high_lines
+from patchplan.check.layout import Matrix
 from patchplan.check.linear import Modes, modes_of
 from patchplan.check.model import Model
 from patchplan.check.network import build_network, idealised
@@ -96,28 +98,48 @@ def simulate(
     """
     board = idealised(circuit, gain=gain, bandwidth=bandwidth, slew=slew, bias=bias, switches=switches,
                       multiplier=multiplier)  # fmt: skip
-    network = build_network(board)
-    model = Model(network)
-    drive = drive_of(board, network.sources, waveforms or {})
+    drive = drive_of(board, tuple(p for p in board.parts if p.kind == "source"), waveforms or {})
     wanted = np.linspace(0.0, circuit.duration, _DEFAULT_POINTS) if times is None else times
-    rows = _rows_shown(circuit, network.nets)
-    voltage, voltage_input = network.voltage[rows], network.voltage_input[rows]
     last = float(wanted[-1]) or circuit.duration
     edges = [0.0, *(t for t in drive.jumps if t < last), last]
-    modes = modes_of(model)
+
+    @cache
+    def running(high: frozenset[str]) -> _Running:
+        return _running(board, high)
+
     done, failure, state = [], "", None
     for begin, end in pairwise(edges):
         stretch = drive.stretch(begin, end)
+        now = running(high_lines(board, stretch.middle))
         if state is None:
-            state = start_state(board, network, stretch.over(np.zeros(1))[:, 0])
+            state = start_state(board, now.model.network, stretch.over(np.zeros(1))[:, 0])
         inside = np.clip(wanted[_rows_within(wanted, begin, end, edges[-1])], begin, end)
-        states, failure = _run(model, modes, stretch, state, np.concatenate([[begin], inside, [end]]), tolerance)
+        states, failure = _run(now, stretch, state, np.concatenate([[begin], inside, [end]]), tolerance)
         state, kept = states[-1], min(len(inside), len(states) - 1)
-        done.append(voltage @ states[1 : kept + 1].T + voltage_input @ stretch.over(inside[:kept]))
+        done.append(now.voltage @ states[1 : kept + 1].T + now.voltage_input @ stretch.over(inside[:kept]))
         if failure:
             break
     volts = np.concatenate(done, axis=1)
-    return Traces(wanted[: volts.shape[1]], tuple(network.nets[i] for i in rows), volts, failure, network.warnings)
+    return Traces(wanted[: volts.shape[1]], now.nets, volts, failure, now.model.network.warnings)
+
+
+@dataclass(frozen=True)
+class _Running:
+    """The board while its control lines stand; the maps give the voltages of ``nets``."""
+
+    model: Model
+    modes: Modes | None
+    nets: tuple[str, ...]
+    voltage: Matrix
+    voltage_input: Matrix
+
+
+def _running(board: Circuit, high: frozenset[str]) -> _Running:
+    network = build_network(board, high=high)
+    model = Model(network)
+    rows = _rows_shown(board, network.nets)
+    nets = tuple(network.nets[i] for i in rows)
+    return _Running(model, modes_of(model), nets, network.voltage[rows], network.voltage_input[rows])
 
 
 def _rows_within(wanted: Array, begin: float, end: float, last: float) -> slice:
@@ -136,16 +158,14 @@ def _rows_shown(circuit: Circuit, nets: tuple[str, ...]) -> list[int]:
     return [i for i, net in enumerate(nets) if net in circuit.nodes or net in outputs]
 
 
-def _run(
-    model: Model, modes: Modes | None, stretch: Stretch, state: Array, times: Array, tolerance: float
-) -> tuple[Array, str]:
+def _run(now: _Running, stretch: Stretch, state: Array, times: Array, tolerance: float) -> tuple[Array, str]:
     """States at ``times``, shape ``(n_times, n_states)``, fewer rows and a sentence where the run fails."""
     if not len(state):
         return np.zeros((len(times), 0)), ""
     unique, back = np.unique(times, return_inverse=True)
-    states, failure = modes.run(state, unique, stretch) if modes is not None else None, ""
+    states, failure = now.modes.run(state, unique, stretch) if now.modes is not None else None, ""
     if states is None:
-        states, failure = _integrate(model, stretch, state, unique, tolerance)
+        states, failure = _integrate(now.model, stretch, state, unique, tolerance)
     return states[back[: np.searchsorted(back, len(states))]], failure
 
 

@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+from collections.abc import Container
 from math import sqrt
 
 import numpy as np
 from numpy.typing import NDArray
 
+from patchplan.circuit.switched import switched_volts
 from patchplan.patch.records import Patch, Stage
 from patchplan.sensitivity import Sensitivity
 from patchplan.sizing.records import Leg, Sizing, StageSizing, Target
@@ -34,7 +36,7 @@ def spread_of(sensitivity: Sensitivity, patch: Patch, sizing: Sizing, target: Ta
     wires = {key: i for i, key in enumerate(sensitivity.wires)}
     stages = {name: i for i, name in enumerate(sensitivity.stages)}
     for stage in patch.stages:
-        if stage.kind in ("reference", "source"):
+        if stage.kind in ("reference", "source") or stage.name not in stages:
             continue
         own = [
             sensitivity.coefficient[:, wires[key]] for i in range(len(stage.wires)) if (key := (stage.name, i)) in wires
@@ -58,7 +60,13 @@ def spread_of(sensitivity: Sensitivity, patch: Patch, sizing: Sizing, target: Ta
         if sized.start is not None and sized.start[0]:
             start = sensitivity.start[stage.name] * sized.start_volts / volts
             columns["resistors"].append(sqrt(2) * resistor * start)
-    columns["reference"].append(target.reference_tolerance / sqrt(3) * _reference(sensitivity, patch, sizing, wires))
+    steps = _steps(sensitivity, patch, sizing, target)
+    low = _through(sensitivity, patch, wires, {node for node, volts in steps.items() if volts < 0.0})
+    high = _through(sensitivity, patch, wires, {node for node, volts in steps.items() if volts > 0.0})
+    # The resistors of the inverter on the reference move every step to its other polarity.
+    columns["resistors"].append(sqrt(2) * resistor * low)
+    reference = _reference(sensitivity, patch, sizing, wires) + low + high
+    columns["reference"].append(target.reference_tolerance / sqrt(3) * reference)
     shape = sensitivity.coefficient.shape[::2]
     return {cause: np.sqrt(sum((x**2 for x in list_), np.zeros(shape))) for cause, list_ in columns.items()}
 
@@ -67,14 +75,28 @@ def _reference(sensitivity: Sensitivity, patch: Patch, sizing: Sizing, wires: di
     """Response to a relative change of the reference, shape ``(n_watched, n_times)``."""
     total = np.zeros(sensitivity.coefficient.shape[::2])
     references = {s.node for s in patch.stages if s.kind == "reference"}
+    total += _through(sensitivity, patch, wires, references)
     for stage in patch.stages:
-        for i, wire in enumerate(stage.wires):
-            if wire.source in references and (stage.name, i) in wires:
-                total += sensitivity.coefficient[:, wires[stage.name, i]]
         sized = sizing.stages.get(stage.name)
         if stage.kind == "integrator" and sized is not None and sized.start is not None and sized.start[0]:
             volts = stage.sign * sizing.scales[stage.node].volts_per_unit
             total += sensitivity.start[stage.name] * sized.start_volts / volts
+    return total
+
+
+def _steps(sensitivity: Sensitivity, patch: Patch, sizing: Sizing, target: Target) -> dict[str, float]:
+    """Volts while on, by node, of the steps that are made from the reference."""
+    volts = switched_volts(patch, sizing, target, float(sensitivity.times[-1]))
+    return {stage.node: volts[stage.name] for stage in patch.stages if stage.name in volts}
+
+
+def _through(sensitivity: Sensitivity, patch: Patch, wires: dict[tuple[str, int], int], nodes: Container[str]) -> Array:
+    """Response to a relative change of all wires from some nodes together, shape ``(n_watched, n_times)``."""
+    total = np.zeros(sensitivity.coefficient.shape[::2])
+    for stage in patch.stages:
+        for i, wire in enumerate(stage.wires):
+            if wire.source in nodes and (stage.name, i) in wires:
+                total += sensitivity.coefficient[:, wires[stage.name, i]]
     return total
 
 

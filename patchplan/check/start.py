@@ -7,7 +7,7 @@ from collections.abc import Mapping
 import numpy as np
 from numpy.typing import NDArray
 
-from patchplan.check.drive import drive_of
+from patchplan.check.drive import drive_of, high_lines
 from patchplan.check.model import Model
 from patchplan.check.network import Network, build_network
 from patchplan.circuit.records import Circuit
@@ -30,9 +30,10 @@ def hold_state(circuit: Circuit, waveforms: Mapping[str, tuple[Array, Array]] | 
     dict
         Net -> volts.
     """
-    network = build_network(circuit, "operate")
-    drive = drive_of(circuit, network.sources, waveforms or {})
+    sources = tuple(p for p in circuit.parts if p.kind == "source")
+    drive = drive_of(circuit, sources, waveforms or {})
     stretch = drive.stretch(0.0, drive.jumps[0] if drive.jumps else circuit.duration)
+    network = build_network(circuit, high=high_lines(circuit, stretch.middle))
     inputs = stretch.over(np.zeros(1))[:, 0]
     state = start_state(circuit, network, inputs)
     volts = network.voltage @ state + network.voltage_input @ inputs

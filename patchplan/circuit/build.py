@@ -13,6 +13,7 @@ from patchplan.circuit.catalogue import Catalogue
 from patchplan.circuit.packages import assign_places, decoupling
 from patchplan.circuit.records import Circuit, NodeMap, Part
 from patchplan.circuit.stages import Board, add_stage
+from patchplan.circuit.switched import switched_volts
 from patchplan.circuit.target import check_multiplier, switch_for
 from patchplan.equation.problem import Build, Recording
 from patchplan.equation.system import Source
@@ -44,6 +45,8 @@ def build_circuit(
 
     Parameters
     ----------
+    patch, sizing
+        With the references that switched sources need, see :func:`patchplan.circuit.switched.with_references`.
     stand_ins
         Waveforms (times, values) [problem units] for sources known only by their bounds.
 
@@ -55,11 +58,14 @@ def build_circuit(
     if patch.counts().get("multiplier"):
         check_multiplier(build, catalogue)
     held = build.run != "free"
-    switch = switch_for(build, catalogue) if held else None
+    switched = switched_volts(patch, sizing, target, float(form.system.duration))
+    switch = switch_for(build, catalogue) if held or switched else None
+    toggled = [s for s in patch.stages if (held and s.kind == "integrator") or s.name in switched]
+    toggled.sort(key=lambda stage: stage.kind == "source")
     places = assign_places(
-        patch, catalogue.op_amps[target.op_amp.name], catalogue.multipliers[target.multiplier.name], switch
+        patch, catalogue.op_amps[target.op_amp.name], catalogue.multipliers[target.multiplier.name], switch, toggled
     )
-    board = Board(patch, sizing, target, places, switch.name if switch else "")
+    board = Board(patch, sizing, target, places, switch, held, switched)
     for stage in patch.stages:
         add_stage(board, stage)
     for part in decoupling(places):
@@ -154,14 +160,17 @@ def output_loads(parts: Sequence[Part]) -> dict[str, float]:
 
 def _conductances(parts: Sequence[Part], closed: str) -> dict[str, float]:
     summing = {p.nets[1] for p in parts if p.kind == "op amp"}
-    # Behind an open switch no current flows.
-    off = {n for p in parts if p.kind == "switch" and p.closed != closed for n in p.nets} - summing
+    # Behind an open switch no current flows; a step that is on loads its reference.
+    off = {n for p in parts if p.kind == "switch" and not p.control and p.closed != closed for n in p.nets} - summing
+    stepped = {p.nets[1]: p.nets[0] for p in parts if p.closed == "high"}
     behind = {p.nets[0]: p.value * p.total for p in parts if p.kind == "potentiometer" and p.nets[1] == p.nets[2]}
     sums: dict[str, float] = {}
     for part in parts:
         if part.kind == "resistor" and off.isdisjoint(part.nets):
             for here, far in (part.nets, part.nets[::-1]):
-                sums[here] = sums.get(here, 0.0) + 1 / (part.value + behind.get(far, 0.0))
+                for net in (here, stepped.get(here)):
+                    if net is not None:
+                        sums[net] = sums.get(net, 0.0) + 1 / (part.value + behind.get(far, 0.0))
         elif part.kind == "potentiometer":
             # A rheostat counts at its setting; a track across two outputs has twice the volts.
             ohm = part.value * part.total if part.nets[1] == part.nets[2] else part.total / 2

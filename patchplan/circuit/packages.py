@@ -34,7 +34,8 @@ class Places:
     active
         Op amp or multiplier of each stage.
     operate, hold
-        Switch sections of each integrator; empty without a hold.
+        Switch sections of each integrator that is held, and of each step: closed in operate or while the step is on
+        ("normally open"), closed in hold or while it is off ("normally closed").
     packages
         Designators of all packages, in order.
     notes
@@ -48,26 +49,29 @@ class Places:
     notes: tuple[str, ...]
 
 
-def assign_places(patch: Patch, op_amp: PartData, multiplier: PartData, switch: PartData | None) -> Places:
+def assign_places(
+    patch: Patch, op_amp: PartData, multiplier: PartData, switch: PartData | None, toggled: Sequence[Stage]
+) -> Places:
     """Fill packages in stage order: op amps, then multipliers, then switches.
 
     Parameters
     ----------
     switch
-        None where the run has no hold.
+        None where the board has none.
+    toggled
+        Stages with a pair of switches: held integrators, then steps made from the reference.
     """
     amplified = [s for s in patch.stages if s.kind in WITH_OP_AMP]
     products = [s for s in patch.stages if s.kind == "multiplier"]
-    integrators = [s for s in patch.stages if s.kind == "integrator"] if switch else []
     active = _fill(amplified, op_amp.sections, 1)
     count = _last(active)
     multiplied = _fill(products, multiplier.sections, count + 1)
     count = max(count, _last(multiplied))
-    operate = _fill(integrators, (switch.operate if switch else ()) or ("",), count + 1)
-    hold = _fill(integrators, (switch.hold if switch else ()) or ("",), count + 1)
+    operate = _fill(toggled, (switch.operate if switch else ()) or ("",), count + 1)
+    hold = _fill(toggled, (switch.hold if switch else ()) or ("",), count + 1)
     if switch and not switch.hold:
-        # A part with one contact: two of them for each integrator.
-        hold = _fill(integrators, ("",), _last(operate) + 1)
+        # A part with one contact: two of them for each stage.
+        hold = _fill(toggled, ("",), _last(operate) + 1)
     count = max(count, _last(operate), _last(hold))
     left = op_amp.sections[len(amplified) % len(op_amp.sections) :] if len(amplified) % len(op_amp.sections) else ()
     notes = []

@@ -42,7 +42,12 @@ class Part:
         Catalogue name of an active part, dielectric of a capacitor, name of the Source of a source, or
         :data:`DC_LIMIT`.
     closed
-        Of a switch: "operate" or "hold".
+        Of a switch: "operate" or "hold"; with ``control``: "high" or "low".
+    control
+        Of a switch that makes a step: name of the Source, whose line is high while the Source is not zero. Empty for
+        the switches of the operate line.
+    pins
+        Pin numbers in the order of ``nets``; empty where the catalogue knows none.
     stage
         Name of the patch stage it belongs to, "" for shared parts.
     package, section
@@ -60,9 +65,12 @@ class Part:
     model: str = ""
     total: float = 0.0
     closed: str = ""
+    control: str = ""
+    pins: tuple[int, ...] = ()
 
     def __str__(self) -> str:
-        return f"{self.ref} {self.kind} {' '.join(self.nets)} {self.value:.9g} {self.model} {self.closed}".rstrip()
+        when = f"{self.closed} {self.control}"
+        return f"{self.ref} {self.kind} {' '.join(self.nets)} {self.value:.9g} {self.model} {when}".rstrip()
 
 
 @dataclass(frozen=True, slots=True)

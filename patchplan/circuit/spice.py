@@ -9,13 +9,13 @@ import numpy as np
 from numpy.typing import NDArray
 
 from patchplan.circuit.records import Circuit, NodeMap, Part
-from patchplan.circuit.spice_models import multiplier_model, num, op_amp_model
+from patchplan.circuit.spice_models import LEAST_OHM, multiplier_model, num, op_amp_model
 from patchplan.circuit.spice_sources import SourceText
 
 Array = NDArray[np.float64]
 
-#: An open switch, and the least resistance of an end of a potentiometer [ohm].
-_OPEN, _LEAST_OHM = 1e12, 1e-3
+#: An open switch [ohm].
+_OPEN = 1e12
 #: The trapezoidal rule takes nothing away from a lossless loop; the tolerances hold the summing nodes to microvolts.
 _OPTIONS = ".options method=trap reltol=1e-6 vntol=1e-8 abstol=1e-12 chgtol=1e-16"
 
@@ -73,6 +73,8 @@ def spice_text(circuit: Circuit, start: Mapping[str, float], *, max_step: float,
     for part in circuit.parts:
         if part.kind == "source":
             sources.add(part)
+        elif part.control:
+            sources.add_switch(part)
         else:
             lines += _element(part)
     lines += [*sources.lines, *_start(circuit, start), _OPTIONS]
@@ -100,7 +102,7 @@ def _element(part: Part) -> list[str]:
     if part.kind == "potentiometer":
         return _potentiometer(part)
     if part.kind == "switch":
-        value = max(part.value, _LEAST_OHM) if part.closed == "operate" else _OPEN
+        value = max(part.value, LEAST_OHM) if part.closed == "operate" else _OPEN
         return [f"* {part.ref}: closed in {part.closed}", f"R{part.ref} {nets} {num(value)}"]
     if part.kind == "op amp":
         return [f"X{part.ref} {nets} opamp"]
@@ -117,7 +119,7 @@ def _potentiometer(part: Part) -> list[str]:
     lines = [f"* {part.ref}: {num(part.total)} ohm, set to {num(part.value)}"]
     for a, b, share, end in halves:
         if a != b:
-            lines.append(f"R{part.ref}{end} {a} {b} {num(max(share * part.total, _LEAST_OHM))}")
+            lines.append(f"R{part.ref}{end} {a} {b} {num(max(share * part.total, LEAST_OHM))}")
     return lines
 
 

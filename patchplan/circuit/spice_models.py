@@ -6,6 +6,8 @@ from patchplan.sizing.records import MultiplierFigures, OpAmpFigures
 
 #: Capacitance of every pole node [F]; it only sets the size of the currents in the subcircuits.
 POLE_FARAD = 1e-9
+#: Least resistance of a switch and of an end of a potentiometer [ohm].
+LEAST_OHM = 1e-3
 
 
 def num(value: float) -> str:

@@ -9,8 +9,9 @@ from fractions import Fraction
 import numpy as np
 from numpy.typing import NDArray
 
-from patchplan.circuit.records import Circuit, Part
-from patchplan.circuit.spice_models import num
+from patchplan.circuit.records import GROUND, Circuit, Part
+from patchplan.circuit.spice_models import LEAST_OHM, num
+from patchplan.circuit.switched import level_of
 from patchplan.equation.problem import Recording
 from patchplan.equation.tree import PIECEWISE, Binary, Call, Minus, Name, Node, Number
 from patchplan.equation.waveform import Waveform
@@ -52,6 +53,19 @@ class SourceText:
             text = self.expression(source.waveform.tree)
             level = f"+({num(offset)})" if offset else ""
             self.lines.append(f"B{part.ref} {part.nets[0]} 0 V={num(part.value)}*({text}){level}")
+
+    def add_switch(self, part: Part) -> None:
+        """Append a switch whose control line follows a step: its conductance goes with the line, 0 to 1."""
+        source = self.circuit.sources[part.control]
+        level = level_of(source, self.circuit.duration / self.circuit.time_scale)
+        assert source.waveform is not None
+        assert source.waveform.tree is not None
+        line = f"({num(1 / level)}*{self.expression(source.waveform.tree)})"
+        closed = line if part.closed == "high" else f"(1-{line})"
+        a, b = part.nets
+        across = f"v({a})-v({b})" if b != GROUND else f"v({a})"
+        self.lines.append(f"* {part.ref}: {num(part.value)} ohm, closed while {part.control} is {part.closed}")
+        self.lines.append(f"B{part.ref} {a} {b} I=({across})*{closed}*{num(1 / max(part.value, LEAST_OHM))}")
 
     def expression(self, tree: Node) -> str:
         """A function of time in SPICE's words."""

@@ -3,10 +3,11 @@
 from __future__ import annotations
 
 from collections import Counter
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field, replace
 from functools import cached_property
 
+from patchplan.circuit.catalogue import PartData
 from patchplan.circuit.knobs import TRACK_TOLERANCE, Dial, crossing, rheostat
 from patchplan.circuit.packages import Place, Places
 from patchplan.circuit.records import DC_LIMIT, GROUND, Part
@@ -22,13 +23,23 @@ _LETTERS = {
 
 @dataclass(frozen=True)
 class Board:
-    """What every stage needs to know, and the parts and notes laid down so far."""
+    """What every stage needs to know, and the parts and notes laid down so far.
+
+    Attributes
+    ----------
+    held
+        Whether the run has a hold.
+    switched
+        Volts while on of the source stages that are switches from the reference, by name.
+    """
 
     patch: Patch
     sizing: Sizing
     target: Target
     places: Places
-    switch_name: str
+    switch: PartData | None
+    held: bool
+    switched: Mapping[str, float]
     parts: list[Part] = field(default_factory=list)
     notes: list[str] = field(default_factory=list)
     numbers: Counter[str] = field(default_factory=Counter)
@@ -83,9 +94,17 @@ def _reference(board: Board, stage: Stage) -> None:
 
 
 def _source(board: Board, stage: Stage) -> None:
-    board.put(Part("", "source", (stage.node,), board.volts(stage.node), 0.0, stage.name, model=stage.signal))
-    if not board.patch.sources[stage.signal].external:
-        board.notes.append(f"Source {stage.node} is a switch from the reference, closed and opened at its jumps.")
+    if stage.name not in board.switched:
+        board.put(Part("", "source", (stage.node,), board.volts(stage.node), 0.0, stage.name, model=stage.signal))
+        return
+    reference = _reference_node(board, board.switched[stage.name])
+    _switch(board, stage, (reference, stage.node), "high", board.places.operate[stage.name], stage.signal)
+    _switch(board, stage, (stage.node, GROUND), "low", board.places.hold[stage.name], stage.signal)
+    on, off = board.parts[-2].ref, board.parts[-1].ref
+    board.notes.append(
+        f"Source {stage.node} is made on the board: {on} joins it to {reference} while its control line is high, "
+        f"{off} to ground while it is low."
+    )
 
 
 def _op_amp(board: Board, stage: Stage) -> None:
@@ -113,7 +132,7 @@ def _leg(board: Board, stage: Stage, source: str, leg: Leg, into: str, index: in
 def _integrator(board: Board, stage: Stage) -> None:
     sized = board.sizing.stages[stage.name]
     inverting = f"{stage.node}_inv"
-    held = sized.start is not None and bool(board.switch_name)
+    held = sized.start is not None and board.held
     _legs(board, stage, sized.legs, f"{stage.node}_bus" if held else inverting)
     if held:
         _switch(board, stage, (f"{stage.node}_bus", inverting), "operate", board.places.operate[stage.name])
@@ -142,14 +161,16 @@ def _reference_node(board: Board, polarity: float) -> str:
     for stage in board.references:
         if stage.sign * polarity > 0:
             return stage.node
-    raise ValueError(f"The patch has no {'positive' if polarity > 0 else 'negative'} reference for a start value.")
+    raise ValueError(f"The patch has no {'positive' if polarity > 0 else 'negative'} reference.")
 
 
-def _switch(board: Board, stage: Stage, nets: tuple[str, str], closed: str, place: Place) -> None:
+def _switch(board: Board, stage: Stage, nets: tuple[str, str], closed: str, place: Place, control: str = "") -> None:
+    assert board.switch is not None
+    ohm = board.switch.si("on_resistance")
     board.put(
         Part(
-            "", "switch", nets, board.target.switch_on, 0.0, stage.name, place.package, place.section,
-            board.switch_name, closed=closed,
+            "", "switch", nets, ohm, 0.0, stage.name, place.package, place.section, board.switch.name,
+            closed=closed, control=control,
         )
     )  # fmt: skip
 

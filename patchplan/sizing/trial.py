@@ -28,7 +28,7 @@ from patchplan.sizing.values import (
 Array = NDArray[np.float64]
 #: By how hard to think: most attempts (starting points, not seconds), and the predicted error that is good enough, as a
 #: fraction of peak: normally a tenth of what 1 % resistors spread in a signal that follows one of them.
-ATTEMPTS = {"low": (20, 2e-3), "normal": (120, 5e-4), "high": (2000, 5e-5)}
+ATTEMPTS = {"low": (20, 2e-3), "normal": (250, 5e-4), "high": (2000, 5e-5)}
 #: How far a value may lie from the wanted one at the start of an attempt, in logs: three steps of E24.
 WIDTH = 0.3
 #: The same for capacitors: two steps of E6, and the most values of one start ratio that a menu holds.
