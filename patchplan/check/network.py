@@ -132,19 +132,9 @@ def build_network(circuit: Circuit, mode: str = "operate", high: Container[str] 
     rows = {net: i for i, net in enumerate(layout.nets)}
     current = solution[n_free:]
     rate = _rate_rows(circuit, layout, rows, voltage, current)
-    n_x = layout.n_states
-
-    def split(matrix: Array) -> tuple[Matrix, Matrix]:
-        left, right = np.ascontiguousarray(matrix[:, :n_x]), np.ascontiguousarray(matrix[:, n_x:])
-        if n_x <= DENSE_LIMIT:
-            return left, right
-        from scipy.sparse import csr_array
-
-        return csr_array(left), csr_array(right)
-
     op_amp, times = circuit.op_amp, circuit.multiplier
     n_a, n_m = len(layout.op_amps), len(layout.multipliers)
-    (voltage_x, voltage_u), (rate_x, rate_u) = split(voltage), split(rate)
+    (voltage_x, voltage_u), (rate_x, rate_u) = (_parted(m, layout.n_states) for m in (voltage, rate))
 
     def poles(of_op_amp: float, of_multiplier: float) -> Array:
         return np.repeat([of_op_amp, of_multiplier], [n_a, n_m])
@@ -169,6 +159,16 @@ def build_network(circuit: Circuit, mode: str = "operate", high: Container[str] 
         capacitor_nets=tuple((p.nets[0], p.nets[1]) for p in layout.capacitors),
         warnings=layout.warnings,
     )
+
+
+def _parted(matrix: Array, n_states: int) -> tuple[Matrix, Matrix]:
+    """The columns of the states and those of the inputs."""
+    left, right = np.ascontiguousarray(matrix[:, :n_states]), np.ascontiguousarray(matrix[:, n_states:])
+    if n_states <= DENSE_LIMIT:
+        return left, right
+    from scipy.sparse import csr_array
+
+    return csr_array(left), csr_array(right)
 
 
 def _solve(layout: Layout) -> Array:
