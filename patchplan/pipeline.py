@@ -25,6 +25,8 @@ from patchplan.sizing.size import size
 
 #: A plan with offsets has more wires and must better the plan without by this factor in error and spread together.
 OFFSET_COST = 1.25
+#: Branch-and-bound nodes that the search for the fewest sign stages may take.
+SIGN_NODES = {"low": 100, "normal": 500, "high": 20000}
 
 
 @dataclass(frozen=True, slots=True)
@@ -91,7 +93,7 @@ def plan_with(
         system, reach, problem.terminals, offsets=choices.offsets, swing=min(-target.op_amp.low, target.op_amp.high)
     )
     say("Drawing the patch")
-    patch = build_patch(form, hold=build.run != "free")
+    patch = build_patch(form, hold=build.run != "free", node_limit=SIGN_NODES[choices.think])
     ranges = find_ranges(patch, form, reach)
     sensitivity = find_sensitivity(form, patch, ranges)
     say("Choosing values")
