@@ -37,6 +37,8 @@ SPEED_PLAY = 1.5
 MOST_POINTS = 400
 #: Inverters and start networks load an output by at most one over this of its rated load.
 LIGHT = 4.0
+#: Drift over the run, as a fraction of peak, that is left alone in a free run.
+DRIFT_ALLOWED = 0.01
 #: A coefficient further off than this was not in reach of the parts.
 OUT_OF_REACH = 0.1
 
@@ -76,11 +78,15 @@ def size(
     effect = _effect(model, patch, sensitivity, pace)
     values = choose_values(model, target, effect, comfortable=dict.fromkeys(limited, LIMITED), think=think)
     scales = _node_scales(patch, ranges, model, values)
-    stages = {s.name: _stage(s, patch, target, values, scales) for s in patch.stages}
-    for name in limited:
-        node = next(s.node for s in patch.stages if s.name == name)
-        stages[name] = replace(stages[name], feedback=limit_resistor(stages[name], target, model.limit[node]))
     time_scale = exp(model.at(model.speed, values.theta))
+    stages = {s.name: _stage(s, patch, target, values, scales) for s in patch.stages}
+    for stage in (s for s in patch.stages if s.name in limited):
+        sized, scale = stages[stage.name], scales[stage.node]
+        rate = offset_rate(sized, target)
+        share, _ = drift_share(stage.name, rate, sensitivity, scale.volts_per_unit, time_scale)
+        if share > DRIFT_ALLOWED:
+            resistor = limit_resistor(sized, target, scale.limit_volts)
+            stages[stage.name] = replace(sized, feedback=resistor)
     sizing = Sizing(
         time_scale,
         pace.window,
