@@ -12,9 +12,10 @@ from numpy.typing import NDArray
 from patchplan.circuit.catalogue import Catalogue
 from patchplan.circuit.packages import assign_places, decoupling
 from patchplan.circuit.records import Circuit, NodeMap, Part
-from patchplan.circuit.stages import Board, add_stage
+from patchplan.circuit.stages import REFERENCE_AMPERE, Board, add_stage
 from patchplan.circuit.switched import switched_volts
-from patchplan.circuit.target import check_multiplier, switch_for
+from patchplan.circuit.target import check_multiplier, reference_for, switch_for
+from patchplan.circuit.wiring import spare_switches, wiring_of, with_pins
 from patchplan.equation.problem import Build, Recording
 from patchplan.equation.system import Source
 from patchplan.equation.waveform import Waveform
@@ -23,9 +24,6 @@ from patchplan.patch.records import Patch
 from patchplan.sizing.records import Sizing, Target
 
 Array = NDArray[np.float64]
-
-#: What a voltage reference gives before it sags [A] (common practice, no source).
-REFERENCE_AMPERE = 10e-3
 
 
 def build_circuit(
@@ -65,14 +63,15 @@ def build_circuit(
     places = assign_places(
         patch, catalogue.op_amps[target.op_amp.name], catalogue.multipliers[target.multiplier.name], switch, toggled
     )
-    board = Board(patch, sizing, target, places, switch, held, switched)
+    board = Board(patch, sizing, target, places, switch, reference_for(build, catalogue), held, switched)
     for stage in patch.stages:
         add_stage(board, stage)
-    for part in decoupling(places):
+    for part in decoupling(places, [p.ref for p in board.parts if p.kind == "reference"]):
         board.put(part)
-    notes = (*board.notes, *places.notes, *_load_notes(board, catalogue))
+    parts = with_pins(board.parts, catalogue)
+    notes = (*board.notes, *places.notes, *spare_switches(parts, catalogue), *_load_notes(board, catalogue))
     return Circuit(
-        parts=tuple(board.parts),
+        parts=parts,
         nodes=_node_maps(form, patch, sizing),
         watched=dict(patch.watched),
         op_amp=target.op_amp,
@@ -84,6 +83,7 @@ def build_circuit(
         sources={name: _with_waveform(source, stand_ins or {}) for name, source in patch.sources.items()},
         notes=notes,
         start={} if held else _start_volts(patch, sizing),
+        wiring=wiring_of(parts, catalogue),
     )
 
 
@@ -130,10 +130,11 @@ def _with_waveform(source: Source, stand_ins: Mapping[str, tuple[Array, Array]])
 def _load_notes(board: Board, catalogue: Catalogue) -> list[str]:
     """One sentence for each output that drives less than the load its part is rated for."""
     target = board.target
+    ampere = board.reference.si("current") if board.reference else REFERENCE_AMPERE
     rated = {
         "op amp": (target.op_amp.name, target.op_amp.load),
         "multiplier": (target.multiplier.name, catalogue.multipliers[target.multiplier.name].si("load")),
-        "reference": ("a reference", target.reference / REFERENCE_AMPERE),
+        "reference": ("a reference", target.reference / ampere),
     }
     loads = output_loads(board.parts)
     notes = []

@@ -55,10 +55,29 @@ FIGURES: dict[str, dict[str, tuple[str, str]]] = {
         "leakage": ("A", "leakage when open, typical"),
         "charge_injection": ("C", "charge injected when it opens, typical"),
     },
+    "reference": {
+        "supply_min": ("V", "least supply above ground"),
+        "supply_max": ("V", "largest supply above ground"),
+        "volts": ("V", "output"),
+        "tolerance": ("1", "relative error of the output, largest"),
+        "current": ("A", "largest output current"),
+    },
 }
 #: Figures that mean nothing at 0.
 _POSITIVE = frozenset(
-    {"supply_max", "gain", "gain_bandwidth", "slew", "load", "scale", "full_scale", "bandwidth", "on_resistance"}
+    {
+        "supply_max",
+        "gain",
+        "gain_bandwidth",
+        "slew",
+        "load",
+        "scale",
+        "full_scale",
+        "bandwidth",
+        "on_resistance",
+        "volts",
+        "current",
+    }
 )
 #: Keys of a part table that are no figures.
 _TEXT_KEYS = ("kind", "like", "text", "source")
@@ -83,7 +102,7 @@ class PartData:
     Attributes
     ----------
     kind
-        ``op_amp``, ``multiplier`` or ``switch``.
+        ``op_amp``, ``multiplier``, ``switch`` or ``reference``.
     figures
         By key of :data:`FIGURES`.
     pins
@@ -118,6 +137,7 @@ class Catalogue:
     op_amps: Mapping[str, PartData]
     multipliers: Mapping[str, PartData]
     switches: Mapping[str, PartData]
+    references: Mapping[str, PartData] = field(default_factory=dict)
 
 
 def load_catalogue(own_parts: Mapping[str, Mapping[str, Any]] | None = None) -> Catalogue:
@@ -126,8 +146,8 @@ def load_catalogue(own_parts: Mapping[str, Mapping[str, Any]] | None = None) -> 
     Parameters
     ----------
     own_parts
-        The ``[part.NAME]`` tables: ``kind`` (``"op amp"``, ``"multiplier"``, ``"switch"``), optionally ``like`` (a part
-        whose figures hold where none is given), and figures as SI numbers or text with a unit.
+        The ``[part.NAME]`` tables: ``kind`` (``"op amp"``, ``"multiplier"``, ``"switch"``, ``"reference"``), optionally
+        ``like`` (a part whose figures hold where none is given), and figures as SI numbers or text with a unit.
 
     Raises
     ------
@@ -144,7 +164,7 @@ def load_catalogue(own_parts: Mapping[str, Mapping[str, Any]] | None = None) -> 
             parts[part.kind] = {name: part, **parts[part.kind]}
     if faults:
         raise ProblemFaults(faults)
-    return Catalogue(parts["op_amp"], parts["multiplier"], parts["switch"])
+    return Catalogue(parts["op_amp"], parts["multiplier"], parts["switch"], parts["reference"])
 
 
 def catalogue_names() -> dict[str, list[str]]:
@@ -214,7 +234,7 @@ def _own_part(
     kind = str(table.get("kind", "")).replace(" ", "_")
     if kind not in FIGURES:
         found = f"The kind of {name} is not known." if "kind" in table else f"The kind of {name} is missing."
-        faults.append(Fault(found, 'Write kind = "op amp", "multiplier" or "switch".', f"{key}.kind"))
+        faults.append(Fault(found, 'Write kind = "op amp", "multiplier", "switch" or "reference".', f"{key}.kind"))
         return None
     if name in parts[kind]:
         faults.append(Fault(f"{name} is already in the catalogue.", "Give your part another name.", key))

@@ -13,6 +13,8 @@ from patchplan.patch.records import Patch, Stage
 RAILS = ("vcc", "vee")
 #: One across each rail of each package (common practice, no source) [F].
 DECOUPLING = 100e-9
+#: One across each rail where the supply comes in (common practice, no source) [F].
+BULK = 10e-6
 #: Stages that take an op amp.
 WITH_OP_AMP = ("integrator", "summer", "inverter")
 
@@ -81,11 +83,19 @@ def assign_places(
     return Places(active | multiplied, operate, hold, tuple(f"U{i}" for i in range(1, count + 1)), tuple(notes))
 
 
-def decoupling(places: Places) -> Iterator[Part]:
-    """Capacitors from both rails to ground for each package, without designators."""
-    for package in places.packages:
-        for rail in RAILS:
-            yield Part("", "decoupling", (rail, GROUND), DECOUPLING, 0.2, package=package, model="ceramic")
+def decoupling(places: Places, references: Sequence[str]) -> Iterator[Part]:
+    """Capacitors from the rails to ground for each package and where the supply comes in, without designators.
+
+    Parameters
+    ----------
+    references
+        Designators of the references; they use the high rail alone.
+    """
+    rails = [(package, rail) for package in places.packages for rail in RAILS]
+    for package, rail in (*rails, *((ref, RAILS[0]) for ref in references)):
+        yield Part("", "decoupling", (rail, GROUND), DECOUPLING, 0.2, package=package, model="ceramic")
+    for rail in RAILS:
+        yield Part("", "decoupling", (rail, GROUND), BULK, 0.2, model="electrolytic")
 
 
 def _fill(stages: Sequence[Stage], sections: Sequence[str], first: int) -> dict[str, Place]:

@@ -74,6 +74,18 @@ class Part:
 
 
 @dataclass(frozen=True, slots=True)
+class Pin:
+    """One pin of a package and the net it goes to.
+
+    ``net`` is a net of the board, a rail, a control line (in capitals) or a join of the pins of a section left over.
+    """
+
+    package: str
+    number: int
+    net: str
+
+
+@dataclass(frozen=True, slots=True)
 class NodeMap:
     """What a signal node means: v(node) = sign * volts_per_unit * signal + offset_volts."""
 
@@ -106,6 +118,8 @@ class Circuit:
         The waveforms behind the source parts, by name.
     start
         Node -> volts wanted at the start, for integrators that no hold network sets.
+    wiring
+        All pins of all packages whose pins are known.
     """
 
     parts: tuple[Part, ...]
@@ -120,6 +134,7 @@ class Circuit:
     sources: Mapping[str, Source] = field(default_factory=dict)
     notes: tuple[str, ...] = ()
     start: Mapping[str, float] = field(default_factory=dict)
+    wiring: tuple[Pin, ...] = ()
 
     def __str__(self) -> str:
         return "\n".join(map(str, self.parts))

@@ -15,6 +15,8 @@ from patchplan.patch.records import Patch, Stage
 from patchplan.sizing.records import Leg, Sizing, StageSizing, Target
 
 DIELECTRIC = "C0G or film"
+#: What a voltage reference gives before it sags [A] (common practice, no source).
+REFERENCE_AMPERE = 10e-3
 _LETTERS = {
     "resistor": "R", "potentiometer": "RV", "capacitor": "C", "decoupling": "C", "switch": "S",
     "reference": "REF", "source": "SRC",
@@ -27,6 +29,8 @@ class Board:
 
     Attributes
     ----------
+    reference
+        None where the catalogue has none of these volts.
     held
         Whether the run has a hold.
     switched
@@ -38,6 +42,7 @@ class Board:
     target: Target
     places: Places
     switch: PartData | None
+    reference: PartData | None
     held: bool
     switched: Mapping[str, float]
     parts: list[Part] = field(default_factory=list)
@@ -87,10 +92,19 @@ def add_stage(board: Board, stage: Stage) -> None:
 
 
 def _reference(board: Board, stage: Stage) -> None:
-    target = board.target
-    board.put(
-        Part("", "reference", (stage.node,), stage.sign * target.reference, target.reference_tolerance, stage.name)
-    )
+    target, model = board.target, board.reference.name if board.reference else ""
+    volts = stage.sign * target.reference
+    board.put(Part("", "reference", (stage.node,), volts, target.reference_tolerance, stage.name, model=model))
+    if board.reference is None:
+        board.notes.append(
+            f"No reference of the catalogue gives {target.reference:g} V on this supply. "
+            f"{board.parts[-1].ref} may be any that gives {1e3 * REFERENCE_AMPERE:g} mA."
+        )
+    elif board.reference.si("tolerance") > target.reference_tolerance * (1 + 1e-9):
+        board.notes.append(
+            f"{model} is good for {100 * board.reference.si('tolerance'):g} %, {board.parts[-1].ref} is to hold "
+            f"{100 * target.reference_tolerance:g} %. Trim it, or take a closer grade."
+        )
 
 
 def _source(board: Board, stage: Stage) -> None:

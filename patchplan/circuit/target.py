@@ -67,6 +67,16 @@ def switch_for(build: Build, catalogue: Catalogue) -> PartData:
     )
 
 
+def reference_for(build: Build, catalogue: Catalogue) -> PartData | None:
+    """First reference of the catalogue that gives the volts wanted on the high rail, None where none does."""
+    rail = build.supply[1]
+    for part in catalogue.references.values():
+        fits = part.si("supply_min") <= rail <= part.si("supply_max")
+        if fits and math.isclose(part.si("volts"), build.reference, rel_tol=1e-3):
+            return part
+    return None
+
+
 def _op_amp(build: Build, part: PartData) -> OpAmpFigures:
     _check_supply(build, part)
     low, high = build.supply

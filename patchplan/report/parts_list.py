@@ -10,12 +10,18 @@ _SHOWN = {
     "op_amp": {"gain_bandwidth": ("GBW", "Hz"), "slew": ("slew", "V/µs"), "offset": ("Vos", "V"), "bias": ("Ib", "A")},
     "multiplier": {"scale": ("scale", "V"), "bandwidth": ("bandwidth", "Hz"), "scale_error": ("error", "%")},
     "switch": {"on_resistance": ("Ron", "Ω"), "leakage": ("leakage", "A")},
+    "reference": {"volts": ("output", "V"), "tolerance": ("error", "%"), "current": ("current", "A")},
 }
 
 
 def parts_list(catalogue: Catalogue) -> str:
-    """Op amps, multipliers and switches with their main figures, in the order of the catalogue."""
-    kinds = (("Op amps", catalogue.op_amps), ("Multipliers", catalogue.multipliers), ("Switches", catalogue.switches))
+    """Op amps, multipliers, switches and references with their main figures, in the order of the catalogue."""
+    kinds = (
+        ("Op amps", catalogue.op_amps),
+        ("Multipliers", catalogue.multipliers),
+        ("Switches", catalogue.switches),
+        ("References", catalogue.references),
+    )
     lines: list[str] = []
     for heading, parts in kinds:
         lines += [heading, *(line for part in parts.values() for line in _part_lines(part)), ""]

@@ -9,7 +9,8 @@ from patchplan.circuit.catalogue import FIGURES, catalogue_names, figure_value, 
 from patchplan.errors import ProblemFaults
 
 CATALOGUE = load_catalogue()
-ALL = [p for parts in (CATALOGUE.op_amps, CATALOGUE.multipliers, CATALOGUE.switches) for p in parts.values()]
+KINDS = (CATALOGUE.op_amps, CATALOGUE.multipliers, CATALOGUE.switches, CATALOGUE.references)
+ALL = [p for parts in KINDS for p in parts.values()]
 
 
 @pytest.mark.parametrize("part", ALL, ids=lambda p: p.name)
