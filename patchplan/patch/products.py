@@ -3,9 +3,12 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Iterator
-from itertools import product
+from itertools import chain, combinations, islice, product
 
 from patchplan.equation.system import Monomial
+
+#: Sets of helping products that are tried before the greedy plan is taken.
+MOST_SETS = 3000
 
 
 def degree(monomial: Monomial) -> int:
@@ -25,13 +28,32 @@ def plan_products(needed: Iterable[Monomial]) -> list[tuple[Monomial, Monomial, 
     """Multipliers (product, left, right) that make every needed monomial, each built once and before its use.
 
     Products of lower degree come first, so that higher ones are split into what is there already; among equals the
-    split of least cascade depth wins, since a product of products loses headroom and adds lag.
+    split of least cascade depth wins, since a product of products loses headroom and adds lag. Where that builds more
+    than the needed products themselves, all smaller sets of helping products are tried, as far as :data:`MOST_SETS`.
     """
+    wanted = sorted({m for m in needed if degree(m) > 1}, key=lambda m: (degree(m), m))
+    made = _build(wanted)
+    for helping in _helping_sets(wanted, len(made) - len(wanted)):
+        trial = _build(sorted({*wanted, *helping}, key=lambda m: (degree(m), m)))
+        if len(trial) == len(wanted) + len(helping):
+            return trial
+    return made
+
+
+def _build(wanted: Iterable[Monomial]) -> list[tuple[Monomial, Monomial, Monomial]]:
     depth: dict[Monomial, int] = {}
     made: list[tuple[Monomial, Monomial, Monomial]] = []
-    for monomial in sorted(set(needed), key=lambda m: (degree(m), m)):
+    for monomial in wanted:
         _make(monomial, depth, made)
     return made
+
+
+def _helping_sets(wanted: list[Monomial], fewer_than: int) -> Iterator[tuple[Monomial, ...]]:
+    """Sets of products that are not wanted but divide wanted ones, smallest first, fewer than a given number."""
+    divisors = {d for m in wanted for split in _splits(m) for d in split if degree(d) > 1} - set(wanted)
+    ordered = sorted(divisors, key=lambda m: (degree(m), m))
+    sets = chain.from_iterable(combinations(ordered, size) for size in range(1, fewer_than))
+    return islice(sets, MOST_SETS)
 
 
 def _make(monomial: Monomial, depth: dict[Monomial, int], made: list[tuple[Monomial, Monomial, Monomial]]) -> None:
