@@ -5,13 +5,12 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from pathlib import Path
 
-from patchplan.quantity import engineering
 from patchplan.report import style, words
 from patchplan.report.pictures import MOST_SIGNALS
 from patchplan.report.plan_json import notes_of, warnings_of
 from patchplan.report.records import Plan
+from patchplan.report.sheet import control_table, package_table, static_table, steps
 from patchplan.report.tables import (
-    Table,
     budget_table,
     coefficient_table,
     node_table,
@@ -22,9 +21,6 @@ from patchplan.report.tables import (
 )
 
 _TEMPLATE = Path(__file__).with_name("page.html")
-#: What a node may be off in hold before something is wrong: offsets, 1 % parts; common practice, no source.
-_HOLD_TOLERANCE_VOLTS = 0.05
-_HOLD_TOLERANCE = 0.02
 
 
 def page(
@@ -64,8 +60,10 @@ def page(
         tables=[
             signal_table(plan), node_table(plan), source_table(plan, sources), stage_table(plan),
             coefficient_table(plan), budget_table(plan), parts_table(plan.circuit),
+            package_table(plan),
         ],
         steps=steps(plan),
+        control=control_table(plan),
         static=static_table(plan, start),
         cautions=words.CAUTIONS,
         problem=plan.problem.text,
@@ -80,29 +78,3 @@ def embedded(svg: str, name: str) -> str:
     for mark in ('id="', 'href="#', "url(#"):
         body = body.replace(mark, f"{mark}{prefix}-")
     return style.themed(body)
-
-
-def steps(plan: Plan) -> tuple[str, ...]:
-    """Order of power-up for this board."""
-    assert plan.circuit is not None
-    low, high = plan.circuit.supply
-    target, waits = plan.target, [
-        max(v.start) * v.capacitor for v in plan.sizing.stages.values() if v.start is not None
-    ]  # fmt: skip
-    hold = words.HOLD.format(wait=engineering(max(10 * max(waits), 1e-3), "s", 2)) if waits else words.NO_HOLD
-    values = {"low": low, "high": high, "reference": target.reference, "hold": hold}
-    values["tolerance"] = words.percent(100 * target.reference_tolerance)
-    return tuple(step.format(**values) for step in words.POWER_UP)
-
-
-def static_table(plan: Plan, start: Mapping[str, float]) -> Table:
-    """What a voltmeter should show at each signal node in hold."""
-    assert plan.circuit is not None
-    rows = []
-    for node, meaning in plan.circuit.nodes.items():
-        if node in start:
-            allowed = _HOLD_TOLERANCE_VOLTS + _HOLD_TOLERANCE * abs(start[node])
-            rows.append((node, meaning.signal, f"{start[node]:+z.3f} V", f"± {allowed:.2f} V"))
-    return Table(
-        "Static check", ("node", "signal", "expected", "allowed"), tuple(rows), frozenset({2, 3}), words.STATIC_NOTE
-    )

@@ -10,7 +10,9 @@ from typing import Any
 
 import numpy as np
 
+from patchplan.circuit.build import output_loads
 from patchplan.circuit.records import KINDS, Circuit, NodeMap, Part
+from patchplan.circuit.wiring import line_of
 from patchplan.quantity import engineering
 from patchplan.report.plan_json import transfer_gains, units_range
 from patchplan.report.records import Plan
@@ -158,16 +160,8 @@ def source_table(plan: Plan, files: dict[str, str]) -> Table:
 
 def _source_row(plan: Plan, name: str, node: str, sign: int, files: dict[str, str]) -> tuple[str, ...]:
     scale = plan.sizing.scales[node].volts_per_unit
-    sized = plan.sizing.stages
-    legs = [
-        leg.transfer
-        for stage in plan.patch.stages
-        if stage.name in sized
-        for wire, leg in zip(stage.wires, sized[stage.name].legs, strict=False)
-        if wire.source == node
-    ]
     # All legs load the source together; the drop over its impedance is the same for each.
-    load = 1 / sum(1 / ohm for ohm in legs) if legs else _INPUT_OHM
+    load = output_loads(plan.circuit.parts if plan.circuit else ()).get(node, _INPUT_OHM)
     return name, node, engineering(sign * scale, "V"), engineering(load / 1000, "Ω", 2), files[name]
 
 
@@ -183,7 +177,10 @@ def nodes_csv(data: dict[str, Any]) -> str:
 
 def parts_csv(circuit: Circuit) -> str:
     """parts.csv: one row a part, values in SI units."""
-    headers = ("ref", "kind", "value", "unit", "tolerance_percent", "model", "nets", "stage", "package", "section")
+    headers = (
+        "ref", "kind", "value", "unit", "tolerance_percent", "model", "nets", "stage", "package", "section", "pins",
+        "closed", "control_line", "setting",
+    )  # fmt: skip
     return csv_text(headers, map(_part_row, circuit.parts))
 
 
@@ -203,6 +200,10 @@ def _part_row(part: Part) -> tuple[Any, ...]:
         part.stage,
         part.package,
         part.section,
+        " ".join(map(str, part.pins)),
+        part.closed,
+        line_of(part) if part.kind == "switch" else "",
+        f"{part.value:.9g}" if part.kind == "potentiometer" else "",
     )
 
 

@@ -142,20 +142,31 @@ CAUTIONS = (
     "Figures of the catalogue may be from memory, as it says there: confirm them with the maker's data sheet.",
 )
 
-POWER_UP = (
-    "Look over the board bare: no shorts between the rails and ground, every decoupling capacitor at its package.",
-    "Without packages, apply {low:.3g} V and {high:.3g} V and measure both rails at every socket.",
-    "Switch off, fit the packages, set the current limit to what the packages need at rest and half as much again.",
-    "Switch on. Measure the reference: it should stand at {reference:.4g} V within {tolerance}.",
-    "{hold}",
-    "Connect the sources, outputs at zero, then operate. Compare each watched terminal with its picture.",
+BARE = "Look over the board bare: no shorts between the rails and ground, every decoupling capacitor at its package."
+RAILS = "Without packages, apply {low:.3g} V and {high:.3g} V and measure both rails at every socket.{logic}"
+LOGIC = " Pins named LOGIC want the supply of the control lines, 5 V."
+FIT = "Switch off, fit the packages, set the current limit to what the packages need at rest and half as much again."
+REFERENCE = "Switch on. Measure {ref}: it should stand at {volts:.4g} V within {tolerance}."
+NO_REFERENCE = "Switch on and measure both rails again. This board needs no reference."
+HOLD = (
+    "Keep OPERATE low: the board is in hold. Set sources and other control lines to what they are at time 0, wait "
+    "{wait} (ten time constants of the slowest start network), and check the volts below, node by node."
 )
-
-HOLD = "Put the board in hold, wait {wait}, and check the volts in the table below, node by node."
-NO_HOLD = "This board has no hold: it runs from power-up. Check each node against the limits of its swing below."
+NO_HOLD = "This board has no hold: it runs from power-up. Check each node against the limits of its swing."
+OPERATE = (
+    "Take OPERATE high and start the sources in the same moment; a run lasts {run}. Compare each watched terminal with "
+    "its picture."
+)
+RUN = "Start the sources; the pictures show the first {run}. Compare each watched terminal with its picture."
+WHEN_OPERATE = "for the run, {run}; low (hold) for at least {rest} before each run"
+CONTROL_NOTE = (
+    "Times are circuit time, counted from the start of operate. High closes the normally open contacts, low the "
+    "normally closed ones. A line is a logic signal from outside; nothing on the board drives it."
+)
+PIN_NOTE = "Confirm the pin numbers with the maker's data sheet. Names in capitals are control lines and spare pins."
 STATIC_NOTE = (
     "Integrators stand at their start values; summers, inverters and multipliers follow from them. The allowance "
-    "covers 1 % parts and usual offsets; common practice, no source. A node far off points at the stage that drives it."
+    "covers the tolerances of the parts and usual offsets. A node far off points at the stage that drives it."
 )
 
 

@@ -111,16 +111,16 @@ def problem_files(plan: Plan, taken: list[str]) -> dict[str, bytes]:
 def source_files(plan: Plan) -> dict[str, tuple[str, str]]:
     """Source -> (file name, CSV text) for every waveform that the board takes from outside."""
     files: dict[str, tuple[str, str]] = {}
-    for stage in plan.patch.stages:
-        source = plan.patch.sources.get(stage.signal)
-        if stage.kind != "source" or source is None or not source.external or plan.circuit is None:
+    parts = plan.circuit.parts if plan.circuit else ()
+    for part in parts:
+        if part.kind != "source" or plan.circuit is None:
             continue
-        meaning = plan.circuit.nodes[stage.node]
-        times, values = _waveform(plan, stage.signal)
+        meaning = plan.circuit.nodes[part.nets[0]]
+        times, values = _waveform(plan, part.model)
         volts = meaning.sign * meaning.volts_per_unit * values + meaning.offset_volts
-        name = unused_name("source", stage.signal, "csv", [taken for taken, _ in files.values()])
+        name = unused_name("source", part.model, "csv", [taken for taken, _ in files.values()])
         columns = {"circuit_time_s": times * plan.sizing.time_scale, "volts": volts}
-        files[stage.signal] = (name, _columns_csv(columns))
+        files[part.model] = (name, _columns_csv(columns))
     return files
 
 
