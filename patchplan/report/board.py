@@ -23,5 +23,5 @@ def board_rate(plan: Plan) -> float:
     """Rate of the states over the run that the simulator's largest step is set by [rad/s of circuit time]."""
     ranges = plan.ranges
     nodes = [s.node for s in plan.patch.stages if s.kind == "integrator" and ranges.nodes[s.node].peak > 0]
-    rates = np.array([ranges.rates[n] / ranges.nodes[n].peak for n in nodes]).reshape(len(nodes), -1)
+    rates = np.array([ranges.rates[n] / ranges.nodes[n].peak for n in nodes]).reshape(len(nodes), len(ranges.times))
     return lasting_rate(ranges.times, np.nan_to_num(rates, posinf=0.0, neginf=0.0)) / plan.sizing.time_scale
