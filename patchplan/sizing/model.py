@@ -125,11 +125,14 @@ def build_model(
     if speed[1] > speed[0]:
         clock = Affine(0.0, {len(bounds): 1.0})
         bounds.append((log(speed[0]), log(speed[1])))
-    feedback = {}
+    # Stages under one knob share the feedback, so that the sections of a ganged potentiometer turn alike.
+    feedback: dict[str, int] = {}
+    columns: dict[str, int] = {}
     for stage in patch.stages:
         if stage.knob and not stage.bipolar:
-            feedback[stage.name] = len(bounds)
-            bounds.append((log(max(5e3, target.resistors[0])), log(min(1e5, target.resistors[-1]))))
+            feedback[stage.name] = columns.setdefault(stage.knob, len(bounds))
+            if feedback[stage.name] == len(bounds):
+                bounds.append((log(max(5e3, target.resistors[0])), log(min(1e5, target.resistors[-1]))))
     ratios = _ratios(patch, target, scale, clock, feedback, weights or {})
     low, high = np.array(bounds).reshape(-1, 2).T
     return Model(tuple(ratios), scale, low, high, clock, feedback, limit)

@@ -23,6 +23,7 @@ from patchplan.sizing.drift import (
     offset_rate,
     slow_modes,
 )
+from patchplan.sizing.faults import find_faults
 from patchplan.sizing.model import Model, build_model
 from patchplan.sizing.records import Coefficient, Leg, NodeScale, Sizing, StageSizing, Target
 from patchplan.sizing.search import Effect
@@ -39,8 +40,6 @@ MOST_POINTS = 400
 LIGHT = 4.0
 #: Drift over the run, as a fraction of peak, that is left alone in a free run.
 DRIFT_ALLOWED = 0.01
-#: A coefficient further off than this was not in reach of the parts.
-OUT_OF_REACH = 0.1
 
 
 def size(
@@ -79,7 +78,7 @@ def size(
     values = choose_values(model, target, effect, comfortable=dict.fromkeys(limited, LIMITED), think=think)
     scales = _node_scales(patch, ranges, model, values)
     time_scale = exp(model.at(model.speed, values.theta))
-    stages = {s.name: _stage(s, patch, target, values, scales) for s in patch.stages}
+    stages = {s.name: _stage(s, patch, target, model, values, scales) for s in patch.stages}
     for stage in (s for s in patch.stages if s.name in limited):
         sized, scale = stages[stage.name], scales[stage.node]
         rate = offset_rate(sized, target)
@@ -95,7 +94,7 @@ def size(
         stages,
         _coefficients(patch, model, values),
         tuple(float(e) for e in values.loop_errors),
-        _faults(pace, given, model, values, patch),
+        find_faults(pace, given, model, values, patch, target),
     )
     notes = _drift_notes(form, patch, ranges, sensitivity, target, sizing)
     return replace(sizing, notes=(*notes, *_content_notes(sizing, patch, ranges)))
@@ -149,7 +148,9 @@ def _node_scales(patch: Patch, ranges: Ranges, model: Model, values: Values) -> 
     return scales
 
 
-def _stage(stage: Stage, patch: Patch, target: Target, values: Values, scales: Mapping[str, NodeScale]) -> StageSizing:
+def _stage(
+    stage: Stage, patch: Patch, target: Target, model: Model, values: Values, scales: Mapping[str, NodeScale]
+) -> StageSizing:
     """Values of one stage, from the parts that the search chose."""
     if stage.kind not in ("integrator", "summer", "inverter"):
         return StageSizing(stage.name)
@@ -161,7 +162,7 @@ def _stage(stage: Stage, patch: Patch, target: Target, values: Values, scales: M
     legs = tuple(Leg(values.parts[stage.name, index]) for index in range(len(stage.wires)))
     if stage.kind == "summer":
         if stage.knob:
-            return StageSizing(stage.name, legs, feedback=_knob_feedback(stage, patch, legs, scales))
+            return StageSizing(stage.name, legs, feedback=exp(values.theta[model.feedback[stage.name]]))
         feedback = values.parts.get((stage.name, "Rf"), (_nearest(target.resistors, 1e4),))[0]
         return StageSizing(stage.name, legs, feedback=feedback)
     capacitor = values.parts.get((stage.name, "C"), (_nearest(target.capacitors, 1e-8),))[0]
@@ -178,15 +179,6 @@ def _start(stage: Stage, target: Target, values: Values) -> tuple[tuple[float, f
     first, second = values.parts[stage.name, -1]
     volts = target.reference * second / first
     return (first, second), volts * stage.sign * (1 if stage.start > 0 else -1)
-
-
-def _knob_feedback(stage: Stage, patch: Patch, legs: tuple[Leg, ...], scales: Mapping[str, NodeScale]) -> float:
-    """Feedback [ohm] at the nominal setting that makes the heaviest leg exact; the knob sets it."""
-    knob = abs(float(patch.knobs[stage.knob or ""].value))
-    here = scales[stage.node].volts_per_unit
-    gains = [abs(float(w.coefficient)) * knob * here / scales[w.source].volts_per_unit for w in stage.wires]
-    heaviest = int(np.argmax(gains))
-    return gains[heaviest] * legs[heaviest].transfer
 
 
 def _bipolar(stage: Stage, patch: Patch, target: Target, scales: Mapping[str, NodeScale]) -> StageSizing:
@@ -223,32 +215,6 @@ def _coefficients(patch: Patch, model: Model, values: Values) -> tuple[Coefficie
             wanted = float(wire.coefficient) * knob
             rows.append(Coefficient(f"{stage.node}<-{wire.source}", wanted, wanted * (1.0 + error)))
     return tuple(rows)
-
-
-def _faults(pace: Speed, given: float | None, model: Model, values: Values, patch: Patch) -> tuple[str, ...]:
-    """What the parts cannot do, a sentence each."""
-    faults = []
-    low, high = pace.window
-    if given is None and low > high:
-        faults.append(
-            f"No speed serves every stage: {pace.limits[0]} asks for at least {engineering(low, 's')} per unit of "
-            f"time, {pace.limits[1]} for at most {engineering(high, 's')}; faster parts or wider value limits would "
-            f"mend it."
-        )
-    nodes = {s.name: s for s in patch.stages}
-    for ratio, error in zip(model.ratios, values.errors, strict=True):
-        if abs(error) > OUT_OF_REACH:
-            stage = nodes[ratio.stage]
-            where = (
-                f"the start value of {stage.signal}"
-                if ratio.kind == "start"
-                else (f"the input {stage.wires[ratio.wire].source} of {stage.name}")
-            )
-            faults.append(
-                f"No purchasable value reaches {where} (off by {100 * error:.0f} %); wider resistor_limits or "
-                f"capacitor_limits, or another speed, would mend it."
-            )
-    return tuple(faults)
 
 
 def _drift_notes(
