@@ -13,9 +13,10 @@ from patchplan.circuit.switched import with_references
 from patchplan.circuit.target import target_of
 from patchplan.equation.explicit import build_system
 from patchplan.equation.faults import rendered
-from patchplan.equation.problem import Problem
+from patchplan.equation.problem import Build, Problem
 from patchplan.errors import ProblemFaults
 from patchplan.form.offsets import find_form
+from patchplan.form.records import Form
 from patchplan.patch.build import build_patch
 from patchplan.ranges import find_ranges
 from patchplan.reach.reference import find_reach
@@ -99,7 +100,7 @@ def plan_with(
     say("Choosing values")
     speed = build.speed if choices.speed is None else choices.speed
     sizing = size(form, patch, ranges, sensitivity, target, speed=speed, run=build.run, think=choices.think)
-    warnings = (*form.notes, *reach.warnings, *sizing.notes)
+    warnings = (*form.notes, *reach.warnings, *sizing.notes, *_unset_starts(form, build))
     found = Plan(
         problem, system, reach, form, patch, ranges, sensitivity, target, sizing, None,
         not_buildable(sizing.faults), asdict(choices), warnings,
@@ -119,6 +120,17 @@ def plan_with(
 def not_buildable(faults: tuple[str, ...]) -> Verdict:
     """Verdict of a plan that the parts at hand cannot realise."""
     return Verdict("not_buildable", 0.0, 0.0, 0.0, None, (), (), (), warnings=faults)
+
+
+def _unset_starts(form: Form, build: Build) -> tuple[str, ...]:
+    """A free run has nothing on the board that sets start values: which ones the file asks for all the same."""
+    moved = [s.name for s in form.system.states if s.start]
+    if build.run != "free" or not moved:
+        return ()
+    return (
+        f"A free run sets no start values: the check begins at those of the file, but the board begins near 0 V "
+        f'({", ".join(moved)}). run = "once" under [build] sets them.',
+    )
 
 
 def _merit(found: Plan, handicap: float = 1.0) -> tuple[int, float]:

@@ -1,0 +1,39 @@
+"""Decisions of the straight run that no single room can show."""
+
+from __future__ import annotations
+
+from patchplan.equation.reader import read_problem
+from patchplan.pipeline import Choices, plan, plan_with
+
+DECAY = """title = "decay"
+equations = ["x' = -x"]
+duration = 5
+[start]
+x = 1
+"""
+
+
+def test_a_free_run_says_that_start_values_are_not_set():
+    found = plan_with(read_problem(DECAY + '[build]\nrun = "free"\n'), Choices())
+    assert any("A free run sets no start values" in w for w in found.warnings)
+    assert not any("A free run" in w for w in plan_with(read_problem(DECAY), Choices()).warnings)
+
+
+def test_offsets_are_kept_only_where_they_pay():
+    """DETEST B2 (Hull et al. 1972): y3 swings from 0.8 to 1, but what spreads it is no offset voltage."""
+    chain = """title = "B2"
+equations = ["y1' = -y1 + y2", "y2' = y1 - 2*y2 + y3", "y3' = y2 - y3"]
+duration = 20
+[start]
+y1 = 2
+y2 = 0
+y3 = 1
+"""
+    assert not plan(read_problem(chain)).form.offsets
+
+
+def test_the_same_problem_gives_the_same_plan():
+    one, other = plan(read_problem(DECAY)), plan(read_problem(DECAY))
+    assert str(one.circuit) == str(other.circuit)
+    assert str(one.patch) == str(other.patch)
+    assert one.verdict.max_error_percent == other.verdict.max_error_percent
