@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 import re
+from collections.abc import Collection
 from decimal import Decimal
 from fractions import Fraction
 
@@ -21,6 +22,18 @@ _QUANTITY = re.compile(
     rf"\s*(?P<number>[+-]?{NUMBER.pattern})(?P<suffix>[{''.join(SUFFIXES)}]?)"
     r"(?:\s*(?P<percent>%)|\s+(?P<unit>[^\W\d_][^\s%]*|°[^\s%]*))?\s*"
 )
+
+#: Powers of ten of the SI prefixes (BIPM brochure, 9th edition, table 7).
+UNIT_PREFIXES = SUFFIXES | {
+    "da": 1, "d": -1, "c": -2, "h": 2, "P": 15, "E": 18, "Z": 21, "Y": 24, "µ": -6, "μ": -6, "a": -18, "z": -21,
+    "y": -24,
+}  # fmt: skip
+#: Units that prefixes are put before, and products of them that are written without a sign.
+_UNITS = {
+    "m", "g", "s", "A", "K", "mol", "cd", "Hz", "N", "Pa", "J", "W", "C", "V", "F", "ohm", "ohms", "Ohm", "Ω", "\u2126",
+    "S", "Wb", "T", "H", "lm", "lx", "bar", "l", "L", "rad", "eV", "Bq", "Gy", "Sv", "kat",
+    "Nm", "Ns", "Vs", "As", "Ws", "Wh", "Ah", "VA", "var",
+}  # fmt: skip
 _PREFIXES = {power: letter for letter, power in SUFFIXES.items()} | {-6: "µ", 0: ""}
 
 
@@ -75,6 +88,23 @@ def parse_number(text: str) -> Fraction:
         With a sentence that names the text.
     """
     return parse_quantity(text)[0]
+
+
+def unit_prefix(unit: str, plain: Collection[str] = ()) -> tuple[str, str] | None:
+    """Prefix and symbol of the first part of a unit that carries a prefix: ("m", "H") for "mH"; None for "N/m".
+
+    Parameters
+    ----------
+    plain
+        Parts that count as units of their own.
+    """
+    for part in re.findall(r"[A-Za-z°µμΩ\u2126]+", unit):
+        if part in _UNITS or part in plain or part == "kg":
+            continue
+        for prefix in UNIT_PREFIXES:
+            if part.startswith(prefix) and part[len(prefix) :] in _UNITS:
+                return prefix, part[len(prefix) :]
+    return None
 
 
 def engineering(value: float | Fraction, unit: str, digits: int = 3) -> str:

@@ -9,7 +9,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from patchplan.quantity import SUFFIXES, engineering, parse_number, parse_quantity
+from patchplan.quantity import SUFFIXES, engineering, parse_number, parse_quantity, unit_prefix
 
 
 @pytest.mark.parametrize(
@@ -83,3 +83,24 @@ def test_engineering_notation(value, unit, digits, text):
 def test_engineering_without_unit_reads_back(value):
     back = float(parse_number(engineering(value, "", 9).replace("µ", "u")))
     assert back == pytest.approx(value, rel=1e-8)
+
+
+# Symbols and prefixes: BIPM brochure, 9th edition, tables 2, 4, 7 and 8.
+@pytest.mark.parametrize(
+    ("unit", "found"),
+    [
+        ("mH", ("m", "H")), ("uF", ("u", "F")), ("µF", ("µ", "F")), ("kΩ", ("k", "Ω")), ("ms", ("m", "s")),
+        ("cm", ("c", "m")), ("daN", ("da", "N")), ("N/mm^2", ("m", "m")), ("V*(us)", ("u", "s")), ("mm²", ("m", "m")),
+        ("keV", ("k", "eV")), ("mNm", ("m", "Nm")), ("N mm", ("m", "m")), ("m/s·kPa", ("k", "Pa")),
+        ("N/m", None), ("kg", None), ("J/(kg*K)", None), ("m/s^2", None), ("min", None), ("mol", None), ("rad/s", None),
+        ("cd", None), ("Pa", None), ("Hz", None), ("ohm", None), ("T", None), ("°C", None), ("Nm", None), ("day", None),
+        ("rpm", None), ("h", None), ("", None),
+    ],
+)  # fmt: skip
+def test_prefix_of_a_unit(unit, found):
+    assert unit_prefix(unit) == found
+
+
+def test_a_unit_named_plain_has_no_prefix():
+    assert unit_prefix("V/ms", ("ms",)) is None
+    assert unit_prefix("mV/ms", ("ms",)) == ("m", "V")

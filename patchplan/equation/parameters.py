@@ -86,6 +86,7 @@ def _parameter(reading: Reading, name: str, given: Any, unit: str) -> Parameter 
         return None if value is None else Parameter(name, value, unit=unit)
     if "unit" in given:
         unit = reading.string(f"{key}.unit", given["unit"], "the unit") or ""
+        reading.whole_unit(f"{key}.unit", unit)
     tolerance = reading.tolerance(f"{key}.tolerance", given["tolerance"]) if "tolerance" in given else 0.0
     low, high = _range(reading, key, given, value)
     if value is None or tolerance is None:

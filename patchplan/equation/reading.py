@@ -15,7 +15,7 @@ from patchplan.equation.spans import Layout
 from patchplan.equation.syntax import parse_expression
 from patchplan.equation.tree import FUNCTIONS, Node
 from patchplan.errors import Fault, ProblemFaults
-from patchplan.quantity import parse_quantity, shown
+from patchplan.quantity import NUMBER, SUFFIXES, UNIT_PREFIXES, parse_quantity, shown, unit_prefix
 
 Given = TypeVar("Given")
 
@@ -126,7 +126,10 @@ class Reading:
     def number_or_tree(self, key: str, value: Any) -> tuple[Fraction, str] | Node | None:
         """A number with its unit, or the tree of a formula."""
         if isinstance(value, str):
-            return self._number_text(key, value) or self.expression(key, value)
+            read = self._number_text(key, value)
+            if read is None:
+                return self.expression(key, value)
+            return read if self.whole_unit(key, read[1], value) else None
         number = self.plain(key, value, "a number or a formula of numbers and parameters")
         return None if number is None else (number, "")
 
@@ -154,14 +157,40 @@ class Reading:
             return None
         if not unit.isprintable():
             return None
+        # Inputs and signals cannot stand in a value, so a letter of theirs is a suffix or a unit all the same.
+        parameters = self.data.get("parameters")
+        names = parameters if isinstance(parameters, dict) else {}
         letter = re.search(r"([A-Za-z])\s*$", text)
-        glued = letter is not None and not unit and letter[1] in self.names
-        if unit in self.names:
+        glued = letter is not None and not unit and letter[1] in names
+        if unit in names:
             self.fault(
                 key, f'In {shown(text)} "{unit}" is a name of this file, and a unit too.',
                 f"Write * for a product; a unit of this spelling stands in unit = {shown(unit)}.",
             )  # fmt: skip
         return None if glued else (value, unit)
+
+    def whole_unit(self, key: str, unit: str, text: str = "") -> bool:
+        """Whether a unit carries no prefix, which would ask for a conversion; a fault where it does.
+
+        Parameters
+        ----------
+        text
+            The text that number and unit stand in, where they stand together.
+        """
+        found = unit_prefix(unit, (str(self.data.get("time_unit", "s")),))
+        if found is None:
+            return True
+        prefix, symbol = found
+        number = re.fullmatch(rf"\s*([+-]?{NUMBER.pattern})\s.*", text)
+        remedy = "Write the unit without prefixes, and the number that goes with it."
+        if unit == prefix + symbol and number and "e" not in number[1].lower():
+            letter = "u" if UNIT_PREFIXES[prefix] == -6 else prefix
+            short = f'"{number[1]}{letter} {symbol}" or ' if letter in SUFFIXES else ""
+            remedy = f'Write {short}"{number[1]}e{UNIT_PREFIXES[prefix]} {symbol}".'
+        self.fault(
+            key, f"not built in this version: the prefix of a unit is not converted, here {shown(unit)}.", remedy
+        )
+        return False
 
     def plain(self, key: str, value: Any, wanted: str) -> Fraction | None:
         """A number as it stands in the file, no text."""
@@ -181,6 +210,8 @@ class Reading:
             number, unit = parse_quantity(value)
         except ValueError as error:
             self.fault(key, str(error), f"Write {wanted}.")
+            return None
+        if not self.whole_unit(key, unit, value):
             return None
         if unit and unit not in units:
             self.fault(key, f'The unit "{unit}" is not understood here.', f"Write {wanted}, a suffix glued to it.")

@@ -203,3 +203,24 @@ def test_recording_outside_the_folder_needs_leave(tmp_path, allowed):
         else:
             with pytest.raises(ProblemFaults, match="outside the problem file's folder"):
                 read_problem(path)
+
+
+def test_a_unit_of_the_files_own_time_needs_no_conversion():
+    text = 'time_unit = "ms"\n' + LEAST % "1" + 'k = "250 ms"\nc = { value = 1, unit = "V/ms" }\n'
+    assert read_problem(text).parameters["k"] == Parameter("k", Fraction(250), unit="ms")
+
+
+def test_a_letter_of_an_input_or_a_signal_is_a_suffix_where_only_a_number_can_stand():
+    text = (
+        'equations = ["k\' = -a*k + b*u"]\nduration = "1k"\n[inputs]\nu = 1\n[start]\nk = "2k"\n[parameters]\n'
+        'a = "4.7u"\nb = { value = "4.7u", from = "1u", to = "10k", tolerance = "1%" }\n'
+    )
+    problem = read_problem(text)
+    assert (problem.duration, problem.start["k"]) == (1000, 2000)
+    assert problem.parameters["a"].value == Fraction(47, 10**7)
+    assert (problem.parameters["b"].low, problem.parameters["b"].high) == (Fraction(1, 10**6), 10_000)
+
+
+def test_a_unit_spelled_like_a_signal_is_a_unit():
+    text = 'equations = ["V\' = -a*V"]\nduration = 1\n[start]\nV = "5 V"\n[parameters]\na = 1\n'
+    assert read_problem(text).start == {"V": 5}
