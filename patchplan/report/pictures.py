@@ -134,7 +134,7 @@ def _difference_panel(axes: Axes, plan: Plan, curve: Curve) -> None:
                     f"{engineering(plan.sizing.time_scale, 's')} on the board")  # fmt: skip
     _right_scale(axes, 100 / error_base(plan, curve), 0.0, "[% of peak]")
     if plan.verdict.horizon is not None:
-        _horizon(axes, plan.verdict.horizon)
+        axes.axvline(plan.verdict.horizon, **style.HORIZON_LINE)
 
 
 def _label(axes: Axes, text: str) -> None:
@@ -159,12 +159,15 @@ def error_base(plan: Plan, curve: Curve) -> float:
 
 def _horizon(axes: Axes, time: float) -> None:
     axes.axvline(time, **style.HORIZON_LINE)
+    # The name stands where there is room, clear of the limits' names at the left edge.
+    late = time > sum(axes.get_xlim()) / 2
     place: dict[str, Any] = {"xycoords": axes.get_xaxis_transform(), "textcoords": "offset points"}
     axes.annotate(
         "compared up to here",
-        (time, 0.02),
-        (-3, 0),
-        ha="right",
+        (time, 0.98),
+        (-3 if late else 3, 0),
+        ha="right" if late else "left",
+        va="top",
         fontsize=style.SMALL,
         color=style.LIGHT["over"],
         **place,

@@ -206,7 +206,8 @@ def _signal(plan: Plan, circuit: Circuit, meaning: NodeMap) -> dict[str, Any]:
         "peak_units": rounded(max(abs(low), abs(high))),
         "peak_volts": rounded(peak),
         "limit_volts": rounded(meaning.limit_volts),
-        "known_by": plan.ranges.nodes[meaning.node].known_by if meaning.node in plan.ranges.nodes else "stated",
+        # A constant that the board adds for its own steps is in no range.
+        "known_by": plan.ranges.nodes[meaning.node].known_by if meaning.node in plan.ranges.nodes else "proved",
     }
 
 

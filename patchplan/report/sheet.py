@@ -93,7 +93,9 @@ def package_table(plan: Plan) -> Table:
     models = {p.package or p.ref: p.model for p in plan.circuit.parts if p.kind != "decoupling"}
     pins: dict[str, list[str]] = {}
     for pin in sorted(plan.circuit.wiring, key=lambda pin: (len(pin.package), pin.package, pin.number)):
-        pins.setdefault(pin.package, []).append(f"{pin.number} {'ground' if pin.net == GROUND else pin.net}")
+        pins.setdefault(pin.package, []).append(
+            f"{pin.number}\N{NO-BREAK SPACE}{'ground' if pin.net == GROUND else pin.net}"
+        )
     rows = tuple((package, models[package], ", ".join(listed)) for package, listed in pins.items())
     return Table("Packages, pin by pin", ("package", "type", "pin and net"), rows, note=words.PIN_NOTE)
 

@@ -73,7 +73,10 @@ def coefficient_table(plan: Plan) -> Table:
     rows = tuple(
         (c.at, f"{c.wanted:.6g}", f"{c.realised:.6g}", f"{c.error_percent:+.3f} %") for c in plan.sizing.coefficients
     )
-    note = "In problem units, after all rounding, with the fitted scale factors and speed."
+    note = (
+        "In problem units, after all rounding, with the fitted scale factors and speed; what the operate switches and "
+        "the bandwidth of the op amps take is counted."
+    )
     return Table("Coefficients", ("at", "wanted", "realised", "error"), rows, frozenset({1, 2, 3}), note)
 
 

@@ -8,6 +8,7 @@ import jsonschema
 import numpy as np
 import pytest
 
+from patchplan.check.simulate import simulate
 from patchplan.check.start import hold_state
 from patchplan.report.plan_json import plan_data, plan_text, rebuild
 from patchplan.report.write import plan_folder
@@ -73,6 +74,30 @@ def test_waveforms_give_the_watched_signal_back_from_volts(plan):
         units = (table[f"v({node})"] - meaning.offset_volts) / (meaning.sign * meaning.volts_per_unit)
         peak = np.abs(units).max()
         np.testing.assert_allclose(table[f"{signal} circuit"], units, atol=0.005 * peak)
+
+
+def test_gains_of_the_stages_are_what_the_board_does(plan, data):
+    """v' = -sum(gain*v), v = -sum(gain*v) and v = gain*v1*v2 on the simulated board, to 0.5 % of the largest term.
+
+    Finite gain and bandwidth, which no gain of plan.json counts, take less than that.
+    """
+    run = simulate(
+        plan.circuit, times=np.linspace(0, plan.circuit.duration, 20001), waveforms=plan.reach.reference.waveforms
+    )
+    seen = 0
+    for row in data["stages"]:
+        if not row["inputs"]:
+            continue
+        out, volts = run.of(row["output"]), [run.of(i["node"]) for i in row["inputs"]]
+        terms = [-i["gain"] * v for i, v in zip(row["inputs"], volts, strict=True)]
+        if row["kind"] == "multiplier":
+            terms = [row["inputs"][0]["gain"] * volts[0] * volts[1]]
+        wanted = np.gradient(out, run.times) if row["kind"] == "integrator" else out
+        # Rows where an output or a source jumps are few, and mean nothing to a difference quotient.
+        off = np.quantile(np.abs(np.sum(terms, axis=0) - wanted), 0.99)
+        assert off <= 0.005 * np.abs(terms).max(), row
+        seen += 1
+    assert seen
 
 
 def test_same_plan_gives_the_same_folder(plan):
