@@ -76,6 +76,8 @@ def _loaded(source: str | Path) -> tuple[str, str, Path]:
         file, folder = str(source), Path(source).parent
         try:
             path = Path(source)
+            if path.is_dir():
+                _give_up(Fault("This is a folder.", "Name the problem file in it."), file)
             if not path.is_file():
                 raise FileNotFoundError
             with path.open("rb") as stream:

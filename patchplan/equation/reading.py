@@ -269,4 +269,4 @@ def nearest(word: str, known: Iterable[str], otherwise: str = "") -> str:
     near = get_close_matches(word[:_LONGEST_NAME], listed, 1) or [k for k in listed if k.lower() == word.lower()]
     if near:
         return f'Did you mean "{near[0]}"?'
-    return otherwise or f"Known here: {', '.join(listed[:30])}."
+    return otherwise or (f"Known here: {', '.join(listed[:30])}." if listed else "There is none to name here.")

@@ -87,7 +87,13 @@ def _rows(reader: Any) -> Iterator[tuple[int, list[str]]]:
 
 
 def _columns(reading: Reading, key: str, head: list[str], time: str, value: str) -> tuple[int, int] | None:
+    if not head:
+        raise _RowError("it is empty.", "Write a line of column titles, and two rows or more below it.")
     titles = [cell.strip() for cell in head]
+    if len(titles) == 1 and time != titles[0]:
+        for mark, name in ((";", "semicolons"), ("\t", "tabs")):
+            if mark in head[0]:
+                raise _RowError(f"its columns are parted by {name}.", "Save it as CSV with commas and decimal points.")
     for part, title in (("time", time), ("value", value)):
         if title not in titles:
             reading.fault(f"{key}.{part}", f"The recording has no column {shown(title)}.", nearest(title, titles[:20]))
@@ -99,7 +105,13 @@ def _recording(file: str, rows: Iterator[tuple[int, list[str]]], columns: tuple[
     values: list[float] = []
     for line, row in rows:
         time, value = (_cell(row, column, line) for column in columns)
-        if times and time <= times[-1]:
+        if times and time == times[-1]:
+            later = f"{time + (1e-6 * abs(time) or 1e-6):.9g}"
+            raise _RowError(
+                f"in line {line} the time {time:g} stands a second time.",
+                f"Let times rise row by row; a step is two rows a millionth apart, here {time:.9g} and {later}.",
+            )
+        if times and time < times[-1]:
             raise _RowError(f"in line {line} the time {time:g} follows {times[-1]:g}.", "Let times rise row by row.")
         times.append(time)
         values.append(value)

@@ -19,6 +19,10 @@ _KEYS = (*(f.name for f in fields(Build) if f.name != "reference_tolerance"), "p
 _VOLTS = ("V",)
 _OHMS = ("Ω", "Ω", "ohm", "Ohm", "ohms")
 _FARADS = ("F",)
+#: Reference voltages [V], and the share of the nearer rail that the largest chosen one may take (common practice, no
+#: source).
+_REFERENCES = (10.0, 5.0, 2.5, 1.25)
+_SHARE = 0.7
 
 
 def read_build(reading: Reading, part_names: Mapping[str, Collection[str]] | None) -> Build:
@@ -44,6 +48,9 @@ def read_build(reading: Reading, part_names: Mapping[str, Collection[str]] | Non
     found = {key: read(reading, f"build.{key}", table[key]) for key, read in readers.items() if key in table}
     if "reference" in table:
         found["reference"], found["reference_tolerance"] = _reference(reading, table["reference"])
+    elif found.get("supply"):
+        rail = min(abs(volts) for volts in found["supply"])
+        found["reference"] = next((volts for volts in _REFERENCES if volts <= _SHARE * rail), None)
     if "speed" not in table and reading.data.get("terminals"):
         found["speed"] = "real time"
     if "pairs" in table:

@@ -151,8 +151,8 @@ def test_parameter_values(written, value, unit):
 @pytest.mark.parametrize(
     ("written", "build"),
     [
-        ("supply = 12", Build(supply=(-12.0, 12.0))),
-        ('supply = "12 V"', Build(supply=(-12.0, 12.0))),
+        ("supply = 12", Build(supply=(-12.0, 12.0), reference=5.0)),
+        ('supply = "12 V"', Build(supply=(-12.0, 12.0), reference=5.0)),
         ("reference = 2.5", Build(reference=2.5)),
         ("reference = { volts = 2.5 }", Build(reference=2.5)),
         ("speed = 250", Build(speed=250.0)),
@@ -224,3 +224,13 @@ def test_a_letter_of_an_input_or_a_signal_is_a_suffix_where_only_a_number_can_st
 def test_a_unit_spelled_like_a_signal_is_a_unit():
     text = 'equations = ["V\' = -a*V"]\nduration = 1\n[start]\nV = "5 V"\n[parameters]\na = 1\n'
     assert read_problem(text).start == {"V": 5}
+
+
+@pytest.mark.parametrize(
+    ("supply", "volts"),
+    [("15", 10), ("14", 5), ("12", 5), ("5", 2.5), ("[-5, 12]", 2.5), ("3", 1.25), ("18", 10), ("[0, 5]", 10)],
+)
+def test_the_reference_goes_with_the_supply(supply, volts):
+    text = LEAST % "1" + f"[build]\nsupply = {supply}\n"
+    assert read_problem(text).build.reference == volts
+    assert read_problem(text + "reference = 7.5\n").build.reference == 7.5

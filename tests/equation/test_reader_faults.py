@@ -220,10 +220,14 @@ def test_long_lines_are_cut_around_the_place():
         ("t,height\n0,0\n1,x\n", 'in line 3 "x" is no finite number'),
         ("t,height\n0,0\n1,nan\n", 'in line 3 "nan" is no finite number'),
         ("t,height\n0,0\n1\n", 'in line 3 "" is no finite number'),
-        ("t,height\n0,0\n2,1\n2,1\n", "in line 4 the time 2 follows 2"),
+        ("t,height\n0,0\n2,1\n1,1\n", "in line 4 the time 1 follows 2"),
+        ("t,height\n0,0\n1,0\n1,1\n2,1\n", "in line 4 the time 1 stands a second time"),
+        ("t;height\n0;0\n2;1\n", "its columns are parted by semicolons"),
+        ("t\theight\n0\t0\n2\t1\n", "its columns are parted by tabs"),
+        ("\n\n", "it is empty"),
         ("t,height\n0,0\n", "it has 1 row of numbers"),
         ("t,height\n", "it has 0 rows of numbers"),
-        ("", 'no column "t"'),
+        ("", "it is empty"),
         ("t,heigt\n0,0\n2,1\n", 'no column "height"'),
         ("t,height\n0.5,0\n2,1\n", "it runs from 0.5 to 2, the problem from 0 to 2"),
         ("t,height\n0,0\n1.5,1\n", "it runs from 0 to 1.5, the problem from 0 to 2"),
@@ -243,6 +247,21 @@ def test_faulty_recordings(tmp_path, rows, found):
     assert error.rendered.startswith(f"{path}:6:")
 
 
+def test_a_step_in_a_recording_is_two_rows_a_millionth_apart(tmp_path):
+    table = GOOD.replace('"sin(t)"', '{ file = "road.csv", time = "t", value = "height" }')
+    (tmp_path / "p.toml").write_text(table, encoding="utf-8")
+    (tmp_path / "road.csv").write_text("t,height\n0,0\n1.5,0\n1.5,1\n2,1\n")
+    remedy = faults_of(tmp_path / "p.toml").faults[0].remedy
+    assert remedy.endswith("two rows a millionth apart, here 1.5 and 1.5000015.")
+    (tmp_path / "road.csv").write_text("t,height\n0,0\n1.5,0\n1.5000015,1\n2,1\n")
+    assert read_problem(tmp_path / "p.toml").inputs["u"].recording.values == (0, 0, 1, 1)
+
+
+def test_where_nothing_is_known_nothing_is_listed():
+    error = faults_of('equations = ["1 = 2"]\nduration = 1\nwatch = ["x"]\n')
+    assert "Known here: ." not in error.rendered
+
+
 @pytest.mark.parametrize("kind", ["folder", "pipe"])
 def test_a_recording_is_a_regular_file(tmp_path, kind):
     (tmp_path / "r").mkdir() if kind == "folder" else os.mkfifo(tmp_path / "r")
@@ -251,7 +270,11 @@ def test_a_recording_is_a_regular_file(tmp_path, kind):
     assert "is no regular file" in faults_of(path).faults[0].found
 
 
-@pytest.mark.parametrize("name", ["none.toml", "", "a\x00b", "."])
+def test_a_folder_is_no_problem_file(tmp_path):
+    assert faults_of(tmp_path).faults == (Fault("This is a folder.", "Name the problem file in it."),)
+
+
+@pytest.mark.parametrize("name", ["none.toml", "a\x00b"])
 def test_problem_file_that_is_none(tmp_path, monkeypatch, name):
     monkeypatch.chdir(tmp_path)
     assert "no such file" in faults_of(name).rendered
