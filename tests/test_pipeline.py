@@ -37,3 +37,19 @@ def test_the_same_problem_gives_the_same_plan():
     assert str(one.circuit) == str(other.circuit)
     assert str(one.patch) == str(other.patch)
     assert one.verdict.max_error_percent == other.verdict.max_error_percent
+
+
+def test_no_cause_of_a_budget_outgrows_a_small_error():
+    """A slow slew rate beside a fast bandwidth once made the board without bandwidth limit chatter: 14 % under 0.01 %."""
+    part = """[build]
+op_amp = "my_amp"
+[part.my_amp]
+like = "TL07x"
+kind = "op amp"
+gain = 1e5
+slew = 1e6
+"""
+    swing = 'title = "swing"\nequations = ["x\'\' = -4*x - 0.5*x\'"]\nduration = 8\n[start]\nx = 1\n"x\'" = 0\n'
+    verdict = plan_with(read_problem(swing + part), Choices()).verdict
+    assert verdict.max_error_percent < 0.1
+    assert max(c.error_percent for c in verdict.budget) < 0.2

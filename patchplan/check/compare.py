@@ -155,11 +155,15 @@ def _budget(circuit: Circuit, reference: Reference, nominal: Traces, rows: int) 
     if len(circuit.parts) > _MANY_PARTS:
         together = _apart(circuit, reference, nominal, perfect)
         return tuple(sorted([*causes, Cause("op amps and multipliers together", together)], key=_by_size))
-    if _steepest(circuit, nominal) < _SLEW_SHARE * circuit.op_amp.slew:
-        causes.append(Cause("slew", 0.0))
-        del limits["slew"]
+    slews = _steepest(circuit, nominal) >= _SLEW_SHARE * circuit.op_amp.slew
+    unslewed = run(circuit, slew=False) if slews else nominal
+    causes.append(Cause("slew", _apart(circuit, reference, nominal, unslewed)))
+    # A fast op amp with a slow slew rate would chatter: bandwidth is taken away where slew is gone already.
+    swift = run(circuit, bandwidth=False, slew=False)
+    causes.append(Cause("bandwidth", _apart(circuit, reference, unslewed, swift)))
     for cause, flag in limits.items():
-        causes.append(Cause(cause, _apart(circuit, reference, nominal, run(circuit, **{flag: False}))))
+        if flag not in ("bandwidth", "slew"):
+            causes.append(Cause(cause, _apart(circuit, reference, nominal, run(circuit, **{flag: False}))))
     if len(unlimited.parts) < len(circuit.parts):
         causes.append(Cause("DC-limit resistor", _apart(circuit, reference, nominal, run(unlimited))))
     causes.sort(key=_by_size)
