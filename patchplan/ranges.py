@@ -67,12 +67,12 @@ _STRENGTH = ("simulated", "stated", "proved")
 def find_ranges(patch: Patch, form: Form, reach: Reach) -> Ranges:
     """Range of every node of the patch, and its signal over the nominal run.
 
-    The patch is evaluated on every run, stage by stage. Nodes whose signal Reach knows take its range; others widen
-    what the runs show by what their inputs' ranges hold beyond the runs, or, where an input is known only by bounds,
-    take the interval of all combinations of their inputs' ranges.
+    The patch is evaluated on every run with that run's knobs, stage by stage. Nodes whose signal Reach knows take its
+    range; others widen what the runs show by what their inputs' ranges hold beyond the runs, or, where an input is
+    known only by bounds, take the interval of all combinations of their inputs' ranges.
     """
-    tables = [evaluate(patch, form, reach.reference.names, run) for run in reach.runs]
-    seen = _Seen(patch, reach, tables)
+    nominal = evaluate(patch, form, reach.reference.names, reach.runs[0])
+    seen = _Seen(patch, form, reach)
     bounded = any(s.within is not None and s.waveform is None for s in patch.sources.values())
     nodes: dict[str, NodeRange] = {}
     for stage in patch.stages:
@@ -84,8 +84,8 @@ def find_ranges(patch: Patch, form: Form, reach: Reach) -> Ranges:
     for stage in patch.stages:
         if stage.kind not in ("integrator", "source"):
             nodes[stage.node] = _node(stage, patch, form, reach, nodes, seen, bounded)
-    values = {node: pair[0] for node, pair in tables[0].items()}
-    rates = {node: pair[1] for node, pair in tables[0].items()}
+    values = {node: pair[0] for node, pair in nominal.items()}
+    rates = {node: pair[1] for node, pair in nominal.items()}
     return Ranges(nodes, reach.reference.times, values, rates)
 
 
@@ -132,13 +132,14 @@ def wire_gains(stage: Stage, patch: Patch, knobs: Mapping[str, float]) -> list[f
 class _Seen:
     """What the runs show: extremes and fastest rate of each node."""
 
-    def __init__(self, patch: Patch, reach: Reach, tables: list[Table]) -> None:
+    def __init__(self, patch: Patch, form: Form, reach: Reach) -> None:
         self.low: dict[str, float] = {}
         self.high: dict[str, float] = {}
         self.rate: dict[str, float] = {}
         nodes = [s.node for s in patch.stages]
         ends = []
-        for run, table in zip(reach.runs, tables, strict=True):
+        for run in reach.runs:
+            table = evaluate(patch, form, reach.reference.names, run)
             values = np.array([table[n][0] for n in nodes])
             rates = np.array([table[n][1] for n in nodes])
             fastest = np.abs(rates).max(axis=1)
@@ -195,17 +196,19 @@ def _widened(stage: Stage, patch: Patch, nodes: Mapping[str, NodeRange], seen: _
     low, high, rate = seen.low[stage.node], seen.high[stage.node], seen.rate[stage.node]
     inputs = [nodes[w.source] for w in stage.wires]
     known_by = _weakest([n.known_by for n in inputs])
-    if stage.kind == "multiplier":
-        growth = seen.growth(inputs[0]) * seen.growth(inputs[1])
-        low, high = low * growth if low < 0 else low / growth, high * growth if high > 0 else high / growth
-        return NodeRange(stage.node, low, high, rate * growth, known_by)
     if stage.kind == "inverter":
         return NodeRange(stage.node, inputs[0].low, inputs[0].high, inputs[0].rate, known_by)
+    counted = inputs[:1] if stage.bipolar else inputs
+    if stage.kind == "multiplier" or (stage.knob is not None and len(counted) == 1):
+        # By shares: a knob is seldom at its largest where its signal is.
+        growth = float(np.prod([seen.growth(n) for n in counted]))
+        low, high = low * growth if low < 0 else low / growth, high * growth if high > 0 else high / growth
+        return NodeRange(stage.node, low, high, rate * growth, known_by)
     more = 1.0
-    for gain, node in zip(wire_gains(stage, patch, {}), inputs, strict=False):
+    for interval, node in zip(_gain_intervals(stage, patch), inputs, strict=False):
         below, above = seen.beyond(node)
-        low -= gain * below if gain > 0 else -gain * above
-        high += gain * above if gain > 0 else -gain * below
+        low -= max(g * below if g > 0 else -g * above for g in interval)
+        high += max(g * above if g > 0 else -g * below for g in interval)
         more = max(more, seen.growth(node))
     return NodeRange(stage.node, low, high, rate * more, known_by)
 

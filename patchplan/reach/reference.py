@@ -18,7 +18,7 @@ from patchplan.reach.free import search_waveforms
 from patchplan.reach.inputs import Inputs, Stored
 from patchplan.reach.nominal import solve_nominal
 from patchplan.reach.records import Range, Reach, Reference, Run
-from patchplan.reach.search import box_points, coarse_grid, knobs_at, search_box, spread_of_boards
+from patchplan.reach.search import coarse_grid, first_points, knobs_at, search_box, spread_of_boards
 from patchplan.reach.solve import GrowsWithoutBoundError, grows_without_bound
 
 Array = NDArray[np.float64]
@@ -144,7 +144,7 @@ def _simulated(system: System, numeric: Field, build: Build, inputs: Inputs, nom
 
 def _linear_box(system: System, numeric: Field, inputs: Inputs, nominal: Run, ends: _Ends) -> _Ends:
     """Peak gains at the corners and a sample of the adjustable box."""
-    points = box_points(len(system.adjustable))
+    points = first_points(system)
     knobs = knobs_at(system, points)
     free = free_sources(system)
     low, high = ends.low, ends.high

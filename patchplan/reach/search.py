@@ -16,6 +16,7 @@ from patchplan.equation.system import System
 from patchplan.reach.batch import march
 from patchplan.reach.curves import extremes
 from patchplan.reach.field import DENSE_LIMIT, Bound, Field
+from patchplan.reach.followed import Followed
 from patchplan.reach.inputs import Inputs
 from patchplan.reach.nominal import LEAST_POINTS, linear_pieces, start_of, tabulate, uniform_grid
 from patchplan.reach.records import Run
@@ -23,12 +24,26 @@ from patchplan.reach.solve import GrowsWithoutBoundError, floors, solve
 
 Array = NDArray[np.float64]
 
-#: Boards of the ensemble, points of the sample of the box, rounds of climbing and points of each round.
-BOARDS, SAMPLE, ROUNDS, CLIMBERS = 16, 16, 2, 16
-#: Runs over the box that are kept for the nodes of the patch: those that are worst for most names.
-KEPT = 12
-#: All corners of the box up to this many adjustable parameters.
-CORNERS_UP_TO = 4
+#: Boards of the ensemble.
+BOARDS = 16
+
+
+@dataclass(frozen=True, slots=True)
+class Effort:
+    """How much is tried: all corners up to so many parameters, points of the sample of a box of one and of more
+    parameters, rounds of climbing, least and most points of a round.
+    """
+
+    corners_up_to: int
+    sample: tuple[int, int]
+    rounds: int
+    climbers: tuple[int, int]
+
+
+#: Above `DENSE_LIMIT` states runs are solved one by one.
+FULL, FEW = Effort(7, (16, 64), 3, (32, 48)), Effort(4, (16, 16), 2, (16, 16))
+#: Runs over the box are all kept for the nodes of the patch up to this many numbers, and so many of the worst at least.
+KEPT_NUMBERS, KEPT = 5_000_000, 24
 #: Tolerance of these runs: far below the margins they serve.
 _TOLERANCE = 1e-5
 SEED = 20240229
@@ -54,7 +69,8 @@ class Batch:
 
     def run(self, column: int, knobs: Mapping[str, float]) -> Run:
         """One of the runs as a record."""
-        return Run(knobs, self.times, self.values[:, column], self.rates[:, column])
+        # A copy, so that the run does not hold the whole batch.
+        return Run(knobs, self.times, self.values[:, column].copy(), self.rates[:, column].copy())
 
 
 def solve_batch(system: System, field: Field, weights: Array, inputs: Inputs, times: Array, peaks: Array) -> Batch:
@@ -129,31 +145,70 @@ def knobs_at(system: System, points: Array) -> dict[str, Array]:
     return {k.name: table[:, i] for i, k in enumerate(system.knobs)}
 
 
-def box_points(count: int) -> Array:
-    """Corners (or, with many parameters, ends of each axis) and a low-discrepancy sample of the unit box.
+def effort_for(system: System) -> Effort:
+    """How much is tried for a System."""
+    return FEW if len(system.states) > DENSE_LIMIT else FULL
+
+
+def box_points(count: int, effort: Effort) -> Array:
+    """Corners and a low-discrepancy sample of the unit box; of many parameters the ends of each axis and some corners.
 
     The sample is the additive sequence of the generalised golden ratio (Roberts 2018, The unreasonable effectiveness of
     quasirandom sequences); scipy's samplers would bring in all of scipy.stats, which takes longer than the runs.
     """
-    if count <= CORNERS_UP_TO:
+    size = effort.sample[count > 1]
+    if count <= effort.corners_up_to:
         corners = np.array(list(product((0.0, 1.0), repeat=count)))
     else:
-        corners = np.full((2 * count, count), 0.5)
-        corners[np.arange(2 * count), np.repeat(np.arange(count), 2)] = np.tile((0.0, 1.0), count)
+        axes = np.full((2 * count, count), 0.5)
+        axes[np.arange(2 * count), np.repeat(np.arange(count), 2)] = np.tile((0.0, 1.0), count)
+        corners = np.concatenate((axes, np.random.default_rng(SEED).choice((0.0, 1.0), (size, count))))
     ratio = 2.0
     for _ in range(40):
         ratio = (1 + ratio) ** (1 / (count + 1))
     steps = ratio ** -np.arange(1.0, count + 1)
-    sample = (0.5 + np.arange(1, SAMPLE + 1)[:, None] * steps) % 1.0
+    sample = (0.5 + np.arange(1, size + 1)[:, None] * steps) % 1.0
     return np.concatenate((corners, sample))
 
 
-def climb_points(points: Array, lows: Array, highs: Array, radius: float, random: np.random.Generator) -> Array:
-    """New points around those where some signal is lowest or highest."""
-    worst = np.unique(np.concatenate((lows.argmin(axis=1), highs.argmax(axis=1))))
-    chosen = points[worst[np.arange(CLIMBERS) % worst.size]]
+def first_points(system: System) -> Array:
+    """`box_points` of a System; where these leave out corners, also those of each knob that has several parameters."""
+    names, effort = [p.name for p in system.adjustable], effort_for(system)
+    points = [box_points(len(names), effort)]
+    for knob in system.knobs if len(names) > effort.corners_up_to else ():
+        moved = [names.index(p) for p in knob.parameters[: effort.corners_up_to]]
+        corners = np.array(list(product((0.0, 1.0), repeat=len(moved))))
+        points.append(np.full((len(corners), len(names)), 0.5))
+        points[-1][:, moved] = corners
+    return np.concatenate(points)
+
+
+def climb_points(
+    points: Array, heights: Array, count: tuple[int, int], radius: float, random: np.random.Generator
+) -> Array:
+    """New points, ``count`` at least and at most, around those where some row of ``heights`` is largest.
+
+    ``heights`` has the shape ``(n_rows, n_points)``.
+    """
+    worst = _most_worst(heights)
+    chosen = points[worst[np.arange(np.clip(worst.size, *count)) % worst.size]]
     moved: Array = np.clip(chosen + random.uniform(-radius, radius, chosen.shape), 0.0, 1.0)
     return moved
+
+
+def steep_corners(points: Array, heights: Array) -> Array:
+    """Corners of the box to which the planes through the rows of ``heights`` rise, for the most rows first."""
+    slopes = np.linalg.lstsq(points - points.mean(axis=0), (heights - heights.mean(axis=1, keepdims=True)).T)[0]
+    corners, uses = np.unique((slopes > 0).T.astype(float), axis=0, return_counts=True)
+    ordered: Array = corners[np.argsort(-uses, kind="stable")]
+    return ordered
+
+
+def _most_worst(heights: Array) -> NDArray[np.intp]:
+    """Places of the largest number of each row, those that serve most rows first."""
+    places, uses = np.unique(heights.argmax(axis=1), return_counts=True)
+    ordered: NDArray[np.intp] = places[np.argsort(-uses, kind="stable")]
+    return ordered
 
 
 @dataclass(frozen=True)
@@ -169,29 +224,50 @@ class Excursion:
 def search_box(system: System, field: Field, inputs: Inputs, times: Array, peaks: Array) -> Excursion:
     """Runs over the adjustable box: corners, sample, then climbing from the worst.
 
+    The worst are those where a signal, its slope, a product, a sum under a knob or a knob is lowest or highest. All
+    runs are given back, so that every node of the patch can be found over the box; of large systems the worst, then as
+    many others as `KEPT_NUMBERS` allows.
+
     Raises
     ------
     GrowsWithoutBoundError
         A setting of the parameters makes the solution grow without bound.
     """
     random = np.random.default_rng(SEED)
-    points = box_points(len(system.adjustable))
-    seen, lows, highs, runs = points, [], [], {}
-    for i in range(ROUNDS + 1):
+    followed, effort = Followed(field), effort_for(system)
+    points = seen = first_points(system)
+    heights = np.zeros((0, 0))
+    ends: list[tuple[Array, Array]] = []
+    runs: list[Run] = []
+    for i in range(effort.rounds + 1):
         knobs = knobs_at(system, points)
-        batch = solve_batch(system, field, field.weights(knobs), inputs, times, peaks)
-        low, high = batch.extremes()
-        lows.append(low)
-        highs.append(high)
-        for j in np.unique(np.concatenate((low.argmin(axis=1), high.argmax(axis=1)))):
-            runs[len(seen) - len(points) + int(j)] = batch.run(int(j), {k: float(v[j]) for k, v in knobs.items()})
-        if i < ROUNDS:
-            points = climb_points(seen, np.hstack(lows), np.hstack(highs), 0.15 / 3**i, random)
+        weights = field.weights(knobs)
+        batch = solve_batch(system, field, weights, inputs, times, peaks)
+        ends.append(batch.extremes())
+        here = _heights(batch, ends[-1], followed, weights, knobs)
+        heights = here if i == 0 else np.hstack((heights, here))
+        runs += [batch.run(j, {k: float(v[j]) for k, v in knobs.items()}) for j in range(len(points))]
+        most = max(KEPT, int(KEPT_NUMBERS / batch.values[:, 0].size))
+        if len(runs) > most:
+            kept = sorted(list(dict.fromkeys([*_most_worst(heights).tolist(), *range(len(runs))]))[:most])
+            heights, seen, runs = heights[:, kept], seen[kept], [runs[j] for j in kept]
+        if i < effort.rounds:
+            points = climb_points(seen, heights, effort.climbers, 0.15 / 3**i, random)
+            if len(system.adjustable) > effort.corners_up_to:
+                points = np.concatenate((points, steep_corners(seen, heights)[: effort.climbers[1]]))
             seen = np.concatenate((seen, points))
-    low, high = np.hstack(lows), np.hstack(highs)
-    places, uses = np.unique(np.concatenate((low.argmin(axis=1), high.argmax(axis=1))), return_counts=True)
-    worst = sorted(places[np.argsort(-uses, kind="stable")[:KEPT]].tolist())
-    return Excursion(low.min(axis=1), high.max(axis=1), tuple(runs[j] for j in worst))
+    low, high = (np.hstack(e) for e in zip(*ends, strict=True))
+    return Excursion(low.min(axis=1), high.max(axis=1), tuple(runs))
+
+
+def _heights(
+    batch: Batch, ends: tuple[Array, Array], followed: Followed, weights: Array, knobs: Mapping[str, Array]
+) -> Array:
+    """What the search drives up, shape ``(n_rows, m)``: see `search_box`."""
+    curves = [followed.curves(batch.values[:, j], weights[:, j]) for j in range(weights.shape[1])]
+    made = np.stack([np.concatenate((c.max(axis=1), -c.min(axis=1))) for c in curves], axis=1)
+    settings = [sign * values for values in knobs.values() for sign in (1, -1)]
+    return np.vstack((ends[1], -ends[0], made, np.abs(batch.rates).max(axis=2), *settings))
 
 
 def spread_of_boards(

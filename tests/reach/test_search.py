@@ -1,0 +1,40 @@
+"""Settings of the adjustable parameters that a search begins with and moves to."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+from fractions import Fraction
+
+import numpy as np
+
+from patchplan.equation.problem import Parameter
+from patchplan.reach.field import field_of
+from patchplan.reach.followed import Followed
+from patchplan.reach.search import FULL, first_points, steep_corners
+from tests.systems import knob, system, term
+
+
+def test_planes_rise_to_their_corners():
+    points = np.random.default_rng(1).uniform(0, 1, (40, 3))
+    heights = np.array([[1.0, -2.0, 3.0], [2.0, -1.0, 1.0], [-1.0, 1.0, 1.0]]) @ points.T + 5
+    assert steep_corners(points, heights).tolist() == [[1, 0, 1], [0, 1, 1]]
+
+
+def test_a_knob_of_several_parameters_gets_its_corners():
+    names = [f"p{i}" for i in range(FULL.corners_up_to + 1)]
+    made = system(
+        {"x": 1}, {"x": [term(-1, "x", knobs=["k"])]}, knobs=[replace(knob("k", 1, 2, 3), parameters=("p1", "p4"))]
+    )
+    made = replace(made, adjustable=tuple(Parameter(n, Fraction(2), Fraction(1), Fraction(3)) for n in names))
+    points = first_points(made)
+    corners = {(a, b) for a, b in points[:, [1, 4]][np.isin(points, (0.0, 0.5, 1.0)).all(axis=1)]}
+    assert corners >= {(0, 0), (0, 1), (1, 0), (1, 1)}
+
+
+def test_products_and_sums_under_a_knob_are_followed():
+    rate = [term(2, "x", knobs=["a"]), term(-1, "y", knobs=["a"]), term(3, "x", "y"), term(1, "y")]
+    made = system({"x": 1, "y": 1}, {"x": rate, "y": [term(-1, "y")]}, knobs=[knob("a", 1, 2, 3)])
+    field = field_of(made)
+    x, y = np.array([[1.0, 2.0, 5.0], [3.0, -4.0, 0.5]])
+    found = Followed(field).curves(np.array([x, y]), field.weights({"a": 2.0}))
+    np.testing.assert_allclose(found, [x * y, 2 * (2 * x - y)])
