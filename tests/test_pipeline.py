@@ -40,7 +40,7 @@ def test_the_same_problem_gives_the_same_plan():
 
 
 def test_no_cause_of_a_budget_outgrows_a_small_error():
-    """A slow slew rate beside a fast bandwidth once made the board without bandwidth limit chatter: 14 % under 0.01 %."""
+    """A slow slew rate beside a fast bandwidth once made the board without bandwidth limit chatter."""
     part = """[build]
 op_amp = "my_amp"
 [part.my_amp]
@@ -53,3 +53,33 @@ slew = 1e6
     verdict = plan_with(read_problem(swing + part), Choices()).verdict
     assert verdict.max_error_percent < 0.1
     assert max(c.error_percent for c in verdict.budget) < 0.2
+
+
+OSCILLATOR = """title = "swing"
+equations = ["x'' = -x"]
+duration = 8
+[start]
+x = 1
+"x'" = 0
+"""
+
+
+def test_overload_at_a_terminal_asks_for_fewer_volts():
+    from patchplan.report.words import remedies
+
+    found = plan(read_problem(OSCILLATOR + "[terminals]\nx = { volts_per_unit = 30 }\n"))
+    assert found.verdict.verdict == "overload"
+    assert remedies(found)[0] == "Ask for fewer volts per unit at the terminal of x."
+
+
+def test_a_signal_that_jumps_is_named():
+    step = """title = "step"
+equations = ["x' = -x + u"]
+duration = 8
+watch = ["x'"]
+[start]
+x = 0
+[inputs]
+u = "step(t - 1)"
+"""
+    assert any("x' jumps, which no board can" in w for w in plan(read_problem(step)).verdict.warnings)

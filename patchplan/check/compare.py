@@ -16,6 +16,7 @@ from patchplan.check.spread import spread_of
 from patchplan.circuit.records import DC_LIMIT, Circuit
 from patchplan.equation.system import System
 from patchplan.patch.records import Patch
+from patchplan.quantity import engineering
 from patchplan.reach.records import Reference
 from patchplan.sensitivity import Sensitivity
 from patchplan.sizing.records import Sizing, Target
@@ -30,6 +31,8 @@ _MANY_PARTS = 450
 _SWITCH_OFF = 1.1
 #: Time constants of an op amp, 1/w_t each, that an output is given to follow a jump.
 _SETTLING = 100.0
+#: Spread above which a linear estimate says little but that boards differ [%] (compared with boards drawn at random).
+_ROUGH = 20.0
 _REMEDY = {
     "resistors": "Resistors of a closer tolerance or trimmers would lower it.",
     "capacitors": "Measured capacitors, or capacitors of a closer tolerance, would lower it.",
@@ -97,7 +100,7 @@ def check_circuit(
         curves=_curves(circuit, reference, traces),
         times=traces.times,
         volts={net: traces.of(net) for net in circuit.nodes},
-        warnings=_warnings(traces, nodes, horizon, spreads, within, accept),
+        warnings=_warnings(traces, nodes, horizon, spreads, within, accept, _jumps(circuit, reference)),
     )
 
 
@@ -114,6 +117,18 @@ def _compare(circuit: Circuit, reference: Reference, traces: Traces, name: str, 
     counts = settled(reference, name, base, _wait(circuit))[:rows]
     wanted, rates = reference.values[index, :rows], reference.rates[index, :rows]
     return difference(reference.times[:rows], wanted, rates, found, base, counts)
+
+
+def _jumps(circuit: Circuit, reference: Reference) -> list[str]:
+    """Which watched signals jump, and for how long after each jump their error is not counted."""
+    jumping = [n for n in circuit.watched if not settled(reference, n, error_base(circuit, reference, n), 0.0).all()]
+    if not jumping:
+        return []
+    wait = engineering(_wait(circuit) * circuit.time_scale, "s")
+    return [
+        f"{', '.join(jumping)} jump{'s' if len(jumping) == 1 else ''}, which no board can: errors count from {wait} of "
+        f"circuit time after each jump."
+    ]
 
 
 def _wait(circuit: Circuit) -> float:
@@ -205,6 +220,7 @@ def _warnings(
     spreads: Mapping[str, Array],
     within: NDArray[np.bool_],
     accept: float,
+    jumps: list[str],
 ) -> tuple[str, ...]:
     found = [*traces.warnings, *([traces.failure] if traces.failure else []), *(n.cause for n in nodes if not n.ok)]
     if horizon is not None:
@@ -212,12 +228,15 @@ def _warnings(
             f"The sensitivity grows exponentially: errors and spread are compared up to {horizon:.4g} of problem time; "
             "beyond it only ranges and distributions mean anything."
         )
+    found += jumps
     total = np.sqrt(sum((s**2 for s in spreads.values()), np.zeros(1)))[:, within]
     signal, time = np.unravel_index(int(np.argmax(total)), total.shape)
     if 100.0 * total[signal, time] > accept:
         cause = max(spreads, key=lambda c: float(spreads[c][:, within][signal, time]))
+        share = 100.0 * float(total[signal, time])
         found.append(
-            f"Boards of this design will differ by {100.0 * total[signal, time]:.2g} % (one standard deviation), above "
-            f"the {accept:g} % accepted, mostly by {cause}. {_REMEDY[cause]}"
+            f"Boards of this design will differ by {share:.{0 if share >= 10 else 1}f} % (one standard deviation"
+            f"{', a linear estimate that is rough when so large' if share > _ROUGH else ''}), above the {accept:g} % "
+            f"accepted, mostly by {cause}. {_REMEDY[cause]}"
         )
     return tuple(found)

@@ -80,7 +80,7 @@ def remedies(plan: Plan) -> tuple[str, ...]:
     """What would mend a plan that does not work."""
     build, verdict = plan.problem.build, plan.verdict
     if verdict.verdict == "overload":
-        return ("State the range of the signal under [ranges], so that its scale factor leaves more room.",)
+        return tuple(dict.fromkeys(_more_room(plan, node.node) for node in verdict.nodes if not node.ok))
     if verdict.verdict != "inaccurate":
         return ()
     largest = _largest(verdict).cause if verdict.budget else ""
@@ -88,6 +88,17 @@ def remedies(plan: Plan) -> tuple[str, ...]:
     if build.speed != "free":
         ways.append('Let the planner choose the speed: speed = "free" under [build].')
     return (*ways, "Or accept more with --accept, if the rig can live with it.")
+
+
+def _more_room(plan: Plan, node: str) -> str:
+    """What gives the signal at an overloaded node more room."""
+    mapped = plan.circuit.nodes.get(node) if plan.circuit else None
+    signal = mapped.signal.removesuffix(".out") if mapped else node
+    if signal in plan.problem.terminals:
+        return f"Ask for fewer volts per unit at the terminal of {signal}."
+    if signal in plan.problem.ranges:
+        return f"Widen the range of {signal} under [ranges]: the solution leaves it."
+    return f"State a wider range of {signal} under [ranges], so that its scale factor leaves more room."
 
 
 def speed(plan: Plan) -> tuple[str, ...]:
@@ -189,7 +200,7 @@ def _factor(factor: float) -> str:
         return "in real time"
     return (
         f"{_times(factor)} times faster than real time"
-        if factor > 1
+        if factor >= 1
         else f"{_times(1 / factor)} times slower than real time"
     )
 
@@ -200,7 +211,8 @@ def _times(factor: float) -> str:
         return "any number of"
     if factor < 0.1:
         return f"1/{_times(1 / factor)}"
-    return f"{float(f'{factor:.3g}'):,.0f}".replace(",", " ") if factor >= 1000 else plain(factor)
+    rounded = float(f"{factor:.3g}")
+    return f"{rounded:,.0f}".replace(",", " ") if rounded >= 1000 else plain(rounded)
 
 
 def _sentence(text: str) -> str:

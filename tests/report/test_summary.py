@@ -98,7 +98,7 @@ def test_failure_says_what_then_why_then_what_mends_it(plan):
 def test_overload_names_node_time_and_cause(plan, cause, told):
     peaks = (NodePeak("x_d", 14.26, 12.0, False, 3.2e-3, cause), NodePeak("x", 7.0, 12.0, True))
     flat = " ".join(summary(replace(plan, verdict=replace(plan.verdict, verdict="overload", nodes=peaks))).split())
-    assert f"Does not work: x_d would leave the linear range. {told} To mend it: State the range" in flat
+    assert f"Does not work: x_d would leave the linear range. {told} To mend it: State a wider range" in flat
 
 
 def test_what_cannot_be_built_says_so_first(plan):
