@@ -41,13 +41,17 @@ class Affine:
 
 @dataclass(frozen=True, slots=True)
 class Ratio:
-    """One row: ``kind`` is integrator, summer or start; ``wire`` the wire's index (-1 for a start value)."""
+    """One row: ``kind`` is integrator, summer or start; ``wire`` the wire's index (-1 for a start value).
+
+    ``switched`` names the source where the board switches it from its reference, through an on-resistance.
+    """
 
     stage: str
     wire: int
     kind: str
     want: Affine
     weight: float = 1.0
+    switched: str = ""
 
 
 @dataclass(frozen=True)
@@ -133,7 +137,7 @@ def build_model(
             feedback[stage.name] = columns.setdefault(stage.knob, len(bounds))
             if feedback[stage.name] == len(bounds):
                 bounds.append((log(max(5e3, target.resistors[0])), log(min(1e5, target.resistors[-1]))))
-    ratios = _ratios(patch, target, scale, clock, feedback, weights or {})
+    ratios = _ratios(form, patch, target, scale, clock, feedback, weights or {})
     low, high = np.array(bounds).reshape(-1, 2).T
     return Model(tuple(ratios), scale, low, high, clock, feedback, limit)
 
@@ -169,6 +173,7 @@ def _scales(
 
 
 def _ratios(
+    form: Form,
     patch: Patch,
     target: Target,
     scale: Mapping[str, Affine],
@@ -177,6 +182,8 @@ def _ratios(
     weights: Mapping[tuple[str, int], float],
 ) -> list[Ratio]:
     ratios = []
+    sources = (s for s in patch.stages if s.kind == "source")
+    switches = {s.node for s in sources if not patch.sources[s.signal].external and s.signal not in form.scales}
     for stage in patch.stages:
         if stage.kind not in ("integrator", "summer") or stage.bipolar:
             continue
@@ -188,7 +195,9 @@ def _ratios(
                 want = want.plus(clock)
             elif stage.name in feedback:
                 want = want.plus(Affine(0.0, {feedback[stage.name]: 1.0}))
-            ratios.append(Ratio(stage.name, index, stage.kind, want, weights.get((stage.name, index), 1.0)))
+            weight = weights.get((stage.name, index), 1.0)
+            switched = wire.source if wire.source in switches else ""
+            ratios.append(Ratio(stage.name, index, stage.kind, want, weight, switched))
         if stage.kind == "integrator" and stage.start and target.switch_on:
             want = here.plus(Affine(log(abs(float(stage.start)) / target.reference)))
             ratios.append(Ratio(stage.name, -1, "start", want, weights.get((stage.name, -1), 1.0)))

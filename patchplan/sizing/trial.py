@@ -178,19 +178,26 @@ def _menu(board: _Board, choices: list[Choice], centre: Array) -> Menu:
 
 
 def _shift(board: _Board, y: Array) -> Array:
-    """log of what the operate switch and the op amp's finite bandwidth add to each R*C, shape ``(n_rows,)``.
+    """log of what switches and the op amp's finite bandwidth add to each R*C or ratio, shape ``(n_rows,)``.
 
-    All legs of a stage share the switch, so that Ron counts as Ron * sum(1/R); at infinite gain an integrator of gains
-    g is slower by 1 + sum(g)/w_t (Franco 2019).
+    All legs of a stage share the operate switch, so that Ron counts as Ron * sum(1/R), and so do all legs from a source
+    that is switched from the reference; at infinite gain an integrator of gains g is slower by 1 + sum(g)/w_t (Franco
+    2019).
     """
     column = {name: c for c, name in enumerate(board.unknowns.names)}
     extra: dict[str, float] = {}
     for ratio in board.model.ratios:
+        conductance = float(np.exp(-y[column[ratio.stage, ratio.wire]]))
+        if ratio.switched:
+            extra[ratio.switched] = extra.get(ratio.switched, 0.0) + board.target.switch_on * conductance
         if ratio.kind == "integrator":
-            conductance = float(np.exp(-y[column[ratio.stage, ratio.wire]]))
             slow = conductance / float(np.exp(y[column[ratio.stage, "C"]])) / board.target.op_amp.gain_bandwidth
             extra[ratio.stage] = extra.get(ratio.stage, 0.0) + board.target.switch_on * conductance + slow
-    return np.array([np.log1p(extra[r.stage]) if r.kind == "integrator" else 0.0 for r in board.model.ratios])
+    shares = [
+        (extra[r.stage] if r.kind == "integrator" else 0.0, extra.get(r.switched, 0.0)) for r in board.model.ratios
+    ]
+    total: Array = np.log1p(np.array(shares).reshape(-1, 2)).sum(axis=1)
+    return total
 
 
 def _finish(board: _Board, y: Array, choices: list[Choice]) -> Values:
