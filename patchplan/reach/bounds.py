@@ -35,6 +35,10 @@ class Impulse:
     rates: Array
     direct: Array
 
+    def moves(self, row: int) -> bool:
+        """Whether one name follows the source at all."""
+        return bool(self.direct[row] or self.values[row].any())
+
     def gain(self) -> Array:
         """Integral of the magnitude from 0 to each time, ``(n_names, n_times)``, with direct part and quadrature error.
 
@@ -132,7 +136,7 @@ def worst_waveform(
     h = response.values[name_row]
     peak = np.abs(h).max()
     if not peak:
-        level = np.full(2, middle + half * sign)
+        level = np.full(2, middle + half * sign * np.sign(response.direct[name_row]))
         return np.array([0.0, duration]), level
     counted = np.flatnonzero(np.abs(h) > 1e-6 * peak)
     signs, at = np.sign(h[counted]), response.times[counted]

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from fractions import Fraction
 
 import numpy as np
@@ -85,8 +85,7 @@ def _reach(system: System, numeric: Field, build: Build) -> Reach:
     low, high = extremes(times, values, rates)
     ends = _Ends(low, high, "proved", _EXACT)
     if worst is not None:
-        reason = worst.reason
-        ends = _Ends(np.minimum(low, worst.low), np.maximum(high, worst.high), worst.known_by, reason)
+        ends = replace(worst, low=np.minimum(low, worst.low), high=np.maximum(high, worst.high))
     if not system.is_linear or (system.adjustable and worst is None):
         ends = _simulated(system, numeric, build, inputs, nominal, ends)
     elif system.adjustable:
@@ -97,19 +96,39 @@ def _reach(system: System, numeric: Field, build: Build) -> Reach:
 def _linear_worst(
     system: System, numeric: Field, middle: tuple[Array, Array, Array]
 ) -> tuple[_Ends, dict[str, Stored]]:
-    """Proved bounds, and the waveforms that drive the first watched signal furthest."""
+    """Proved bounds, and the waveforms that drive the first watched signal furthest that the input moves at all."""
     bound = numeric.bind(numeric.weights(system.knob_values()))
     free = free_sources(system)
     responses = [impulse(system, bound, name) for name, _, _ in free]
     low, high = worst_case(middle, responses, [half for _, _, half in free])
-    row = numeric.names.index(system.watch[0][0]) if system.watch else 0
-    sign = -1.0 if middle[1][row, -1] < 0 else 1.0
-    duration = float(system.duration)
-    stand_ins = {
-        name: worst_waveform(response, row, mid, half, sign, duration)
-        for (name, mid, half), response in zip(free, responses, strict=True)
-    }
-    return _Ends(low, high, "proved", _GAIN), stand_ins
+    duration, stand_ins, said = float(system.duration), {}, []
+    targets = [name for name, _ in system.watch if name not in {n for n, _, _ in free}]
+    for (name, mid, half), response in zip(free, responses, strict=True):
+        moved = [t for t in targets if response.moves(numeric.names.index(t))]
+        if moved:
+            row = numeric.names.index(moved[0])
+            sign = -1.0 if middle[1][row, -1] < 0 else 1.0
+            stand_ins[name] = worst_waveform(response, row, mid, half, sign, duration)
+            said.append(_driven(name, f"the worst case for {moved[0]}", stand_ins[name]))
+        else:
+            stand_ins[name] = np.array([0.0, duration]), np.full(2, mid)
+            said.append(
+                f"The input {name} is known by its bounds only: the check holds it at their middle, {mid:.6g}, "
+                "as it moves no watched signal."
+            )
+    return _Ends(low, high, "proved", _GAIN, warnings=tuple(said)), stand_ins
+
+
+def _driven(name: str, how: str, waveform: Stored) -> str:
+    """A sentence on the waveform that stands in for an input known only by its bounds."""
+    levels = np.unique(waveform[1])
+    jumps = int((np.diff(waveform[1]) != 0).sum())
+    shape = f"a constant {levels[0]:.6g}"
+    if jumps:
+        between = "between" if levels.size == 2 else f"among {levels.size} levels from"
+        to = "and" if levels.size == 2 else "to"
+        shape = f"{jumps} jump{'s' if jumps > 1 else ''} {between} {levels[0]:.6g} {to} {levels[-1]:.6g}"
+    return f"The input {name} is known by its bounds only: the check drives it with {how}, {shape}."
 
 
 def _searched_worst(
@@ -122,7 +141,9 @@ def _searched_worst(
         steady = solve_nominal(system, bound, Inputs(system, levels))
         peaks = np.maximum(peaks, np.abs(steady[1][: numeric.n_states]).max(axis=1))
     found = search_waveforms(system, numeric, peaks)
-    return _Ends(found.low, found.high, "simulated", _SEARCHED), found.stand_ins
+    how = f"the worst case for {system.watch[0][0]} that a search found" if system.watch else "what a search found"
+    said = tuple(_driven(name, how, waveform) for name, waveform in found.stand_ins.items())
+    return _Ends(found.low, found.high, "simulated", _SEARCHED, warnings=said), found.stand_ins
 
 
 def _simulated(system: System, numeric: Field, build: Build, inputs: Inputs, nominal: Run, ends: _Ends) -> _Ends:
@@ -139,7 +160,7 @@ def _simulated(system: System, numeric: Field, build: Build, inputs: Inputs, nom
         low, high, runs = np.minimum(low, box.low), np.maximum(high, box.high), box.runs
         how.append(_BOX)
     reason = "; ".join([*(how or ["simulated"]), _BOARDS])
-    return _Ends(low, high, "simulated", reason, below, above, runs, boards.warnings)
+    return _Ends(low, high, "simulated", reason, below, above, runs, (*ends.warnings, *boards.warnings))
 
 
 def _linear_box(system: System, numeric: Field, inputs: Inputs, nominal: Run, ends: _Ends) -> _Ends:
@@ -156,7 +177,7 @@ def _linear_box(system: System, numeric: Field, inputs: Inputs, nominal: Run, en
         low, high = np.minimum(low, here[0]), np.maximum(high, here[1])
     peaks = np.abs(nominal.values[: numeric.n_states]).max(axis=1)
     box = search_box(system, numeric, inputs, coarse_grid(system, numeric, inputs, nominal.times), peaks)
-    return _Ends(low, high, "simulated", f"{_BOX}; at each, {_GAIN}", runs=box.runs)
+    return _Ends(low, high, "simulated", f"{_BOX}; at each, {_GAIN}", runs=box.runs, warnings=ends.warnings)
 
 
 def _ranges(system: System, numeric: Field, ends: _Ends) -> dict[str, Range]:

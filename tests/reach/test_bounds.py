@@ -78,3 +78,46 @@ def test_any_waveform_stays_inside_the_proof():
     assert y.max() < found.high
     # Middle 1 with half width 2: 1 + 2 * gain at most, gain below 6.386823 (closed form of zeta = 0.1).
     assert found.high < 1.73 + 2 * 6.386824
+
+
+def bounded(name):
+    return Source(name, None, (Fraction(0), Fraction(10)))
+
+
+def test_every_input_is_driven_for_the_first_watched_signal_it_moves():
+    rows = {"x": [term(-1, "x"), term(1, "u")], "y": [term(-2, "y"), term("-3/10", "u"), term(1, "w")]}
+    rows["z"] = [term(-1, "z"), term(1, "v")]
+    made = system(
+        dict.fromkeys(rows, 0), rows, sources=[bounded("u"), bounded("v"), bounded("w")], watch=["x", "y"], duration=10
+    )
+    reach = find_reach(made, {}, Build())
+    begin = "The input {} is known by its bounds only: the check "
+    assert reach.warnings == (
+        begin.format("u") + "drives it with the worst case for x, a constant 10.",
+        begin.format("v") + "holds it at their middle, 5, as it moves no watched signal.",
+        begin.format("w") + "drives it with the worst case for y, a constant 10.",
+    )
+    waveforms = {name: set(values) for name, (_, values) in reach.reference.waveforms.items()}
+    assert waveforms == {"u": {10.0}, "v": {5.0}, "w": {10.0}}
+
+
+def test_what_follows_an_input_at_once_is_driven_by_its_sign():
+    signals = {"y": [term(-2, "u"), term(1, "x")]}
+    made = system({"x": 1}, {"x": [term(-1, "x")]}, signals=signals, sources=[bounded("u")], watch=["y"], duration=5)
+    # The middle run ends below zero, y = exp(-5) - 2 * 5, so that the worst is the lowest: u at its upper end.
+    reach = find_reach(made, {}, Build())
+    assert set(reach.reference.of("u")) == {10.0}
+    assert reach.reference.of("y").min() == pytest.approx(reach.ranges["y"].low, rel=1e-3)
+
+
+@pytest.mark.parametrize("cubic", [0, 1], ids=["linear", "nonlinear"])
+def test_the_sentence_counts_the_jumps_of_the_waveform(cubic):
+    rate = [term(-1, "x"), term("-1/5", "v"), term(-cubic, "x", "x", "x"), term(1, "u")]
+    made = system({"x": 0, "v": 0}, {"x": [term(1, "v")], "v": rate}, sources=[bounded("u")], watch=["x"], duration=20)
+    reach = find_reach(made, {}, Build())
+    jumps = np.count_nonzero(np.diff(reach.reference.of("u")))
+    # A resonance of half period pi is driven furthest by about as many jumps as half periods fit.
+    assert jumps >= 4
+    (said,) = [w for w in reach.warnings if "known by its bounds" in w]
+    how = "the worst case for x that a search found" if cubic else "the worst case for x"
+    assert f"drives it with {how}, {jumps} jumps between 0 and 10." in said
