@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from fractions import Fraction
 from typing import NoReturn
 
@@ -210,7 +210,8 @@ class Algebra:
     def _note_divisor(self, node: Node, value: Polynomial) -> None:
         timed = sorted(a for a in value.atoms() if a.kind is Kind.TIME)
         if len(value) == 1:
-            self.divisors += [self.functions[a] for a in timed]
+            found = [self.functions[a] for a in timed]
+            self.divisors += [replace(x, origin=node.origin or x.origin) for x in found]
         elif timed:
             self.divisors.append(self.folded(node))
 
@@ -257,7 +258,7 @@ class Algebra:
         allowed = {"t"} if kind is Kind.TIME else self.adjustable
         if all(n.name in allowed for n in names_of(tree)):
             return Polynomial.of(self._register(kind, tree, node), 1, node.origin)
-        tree = self._without_cancelled(node)
+        tree = replace(self._without_cancelled(node), origin=node.origin)
         return Polynomial.of(self._register(kind, tree, tree), 1, node.origin)
 
     def _without_cancelled(self, node: Node) -> Node:

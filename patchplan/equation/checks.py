@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterable, Iterator, Mapping
 from difflib import get_close_matches
 from fractions import Fraction
+from math import prod
 
 import numpy as np
 
@@ -13,6 +14,7 @@ from patchplan.equation.knobs import divisors
 from patchplan.equation.outline import Outline, name_faults
 from patchplan.equation.polynomial import Kind
 from patchplan.equation.problem import Problem
+from patchplan.equation.system import System
 from patchplan.equation.tree import Call, Node, Number, text_of
 from patchplan.equation.waveform import SAMPLES, Array, numeric_tree
 from patchplan.errors import Fault
@@ -25,7 +27,7 @@ _PERIODIC = ("square", "triangle", "sawtooth")
 
 def faults_before(problem: Problem, outline: Outline) -> list[Fault]:
     """Faults that show before any mathematics."""
-    checks = (_duration, _recordings, name_faults, _terminals_of_inputs)
+    checks = (_duration, _recordings, name_faults, _terminals_of_inputs, _starts_in_ranges)
     return [fault for check in checks for fault in check(problem, outline)]
 
 
@@ -55,6 +57,38 @@ def _terminals_of_inputs(problem: Problem, _: Outline) -> Iterator[Fault]:
             yield Fault(f'"{base}" is a parameter, no signal.', "Name a signal.", f"{table}.{name}")
 
 
+def _starts_in_ranges(problem: Problem, _: Outline) -> Iterator[Fault]:
+    for name, (low, high) in problem.ranges.items():
+        if name in problem.start and not low <= problem.start[name] <= high:
+            yield _outside(name, float(problem.start[name]))
+
+
+def range_faults(problem: Problem, system: System) -> Iterator[Fault]:
+    """Stated ranges that inputs and definitions leave at the start already."""
+    values = {s.name: float(s.start) for s in system.states}
+    for source in system.sources:
+        values[source.name] = float(source.waveform.values(np.zeros(1))[0]) if source.waveform else np.nan
+    knobs = {k.name: float(k.value) for k in system.knobs}
+    for row in system.signals:
+        parts = (
+            float(t.coefficient) * prod(knobs[k] for k in t.knobs) * prod(values[n] ** p for n, p in t.factors)
+            for t in row.terms
+        )
+        values[row.name] = sum(parts)
+    for name, (low, high) in problem.ranges.items():
+        slack = 1e-9 * max(abs(float(low)), abs(float(high)))
+        value = values.get(name, np.nan)
+        if name not in problem.start and (value < float(low) - slack or value > float(high) + slack):
+            yield _outside(name, value)
+
+
+def _outside(name: str, value: float) -> Fault:
+    return Fault(
+        f"{name} starts at {value:.6g}, outside this range.",
+        "Widen the range so that it holds the start, or change the start values.", f"ranges.{name}",
+    )  # fmt: skip
+
+
 def start_faults(
     problem: Problem, orders: Mapping[str, int], at_rest: frozenset[str], outline: Outline
 ) -> Iterator[Fault]:
@@ -82,7 +116,7 @@ def start_faults(
             yield Fault(f"{name} is no state of the equations.", guess, f"start.{name}")
 
 
-def count_faults(outline: Outline, orders: Mapping[str, int], equations: int) -> Iterator[Fault]:
+def count_faults(orders: Mapping[str, int], equations: int) -> Iterator[Fault]:
     """As many differential equations as unknowns."""
     if equations != len(orders):
         names = ", ".join(orders) or "none"
@@ -107,15 +141,21 @@ def regular_faults(
     for name, (tree, key) in trees.items():
         found = _irregular(tree, float(duration))
         if found is not None:
-            yield _placed(tree, key, f"{name} has no finite value {_when(found)}.", "Change it, or the duration.")
+            yield _placed(tree, key, f"{name} has no finite value {_when(found)}.", _finite(found))
     for tree in divided:
         found = _zero(tree, float(duration))
         if found is not None:
-            yield _placed(tree, "equations", f"This divides by zero {_when(found)}.", "Change it, or the duration.")
+            yield _placed(tree, "equations", f"This divides by zero {_when(found)}.", _finite(found))
 
 
 def _when(time: float) -> str:
     return "at the start" if time == 0.0 else f"at t = {time:.6g}"
+
+
+def _finite(time: float) -> str:
+    if time == 0.0:
+        return "Write it so that it has a finite value at t = 0."
+    return "Write it so that it stays finite, or end the run before."
 
 
 def _placed(tree: Node, key: str, found: str, remedy: str) -> Fault:

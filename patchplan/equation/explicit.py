@@ -11,15 +11,17 @@ from patchplan.equation.checks import (
     count_faults,
     faults_before,
     jump_faults,
+    range_faults,
     regular_faults,
     start_faults,
     time_trees,
 )
 from patchplan.equation.choice import Choice, sorted_signals
+from patchplan.equation.formula import fault_at
 from patchplan.equation.knobs import Knobs
 from patchplan.equation.meaning import Meaning, meaning_of, slope_of, start_of
 from patchplan.equation.model import Block, identity, orders_of, solve, too_large
-from patchplan.equation.outline import Outline, outline_of
+from patchplan.equation.outline import Outline, names_in, outline_of, without_doubled
 from patchplan.equation.polynomial import MOST_TERMS, Atom, Kind, Polynomial, TooLargeError
 from patchplan.equation.problem import Problem
 from patchplan.equation.rates import Change, remove_rates
@@ -39,27 +41,35 @@ def build_system(problem: Problem) -> System:
     ProblemFaults
         With all faults found, each with key and span.
     """
+    problem, faults = without_doubled(problem, outline_of(problem))
     outline = outline_of(problem)
-    _stop(faults_before(problem, outline))
-    meaning = meaning_of(problem, outline)
+    faults += faults_before(problem, outline)
+    _stop(faults if problem.duration <= 0 else ())
+    meaning = meaning_of(problem, outline, faults)
     orders = _opened(meaning)
     blocks = _solved(problem, outline, meaning, orders)
+    # What is missing or unused in the tables alone does not keep the equations from being looked at further.
+    faults = [*meaning.faults, *_table_faults(problem, outline, meaning, orders)]
+    change = _without_rates(problem, meaning, orders, blocks, faults)
+    _stop(faults)
+    return _assembled(problem, outline, meaning, change)
+
+
+def _without_rates(
+    problem: Problem, meaning: Meaning, orders: Mapping[str, int], blocks: list[Block], faults: list[Fault]
+) -> Change:
+    """First-order equations without derivatives of inputs."""
     rates = {a: value for b in blocks for a, value in b.rates().items()}
     change = _change(problem, meaning, orders, blocks)
     try:
         change.wanted = _wanted(problem, meaning, orders, rates)
         remove_rates(change)
+    except ProblemFaults as error:
+        faults += error.faults
     except TooLargeError:
-        _stop(
-            [
-                Fault(
-                    f"Put into each other, the equations have over {MOST_TERMS} terms.",
-                    "Use lower powers.",
-                    "equations",
-                )
-            ]
-        )
-    return _assembled(problem, outline, meaning, change)
+        found = f"Put into each other, the equations have over {MOST_TERMS} terms."
+        faults.append(Fault(found, "Use lower powers.", "equations"))
+    return change
 
 
 def _stop(faults: Iterable[Fault]) -> None:
@@ -71,21 +81,26 @@ def _stop(faults: Iterable[Fault]) -> None:
 def _solved(problem: Problem, outline: Outline, meaning: Meaning, orders: Mapping[str, int]) -> list[Block]:
     """Blocks of the highest derivatives, or all faults found on the way."""
     trees = time_trees(meaning.algebra)
-    wrong_count = list(count_faults(outline, orders, len(meaning.equations)))
+    wrong_count = list(count_faults(orders, len(meaning.equations)))
     faults = [
         *jump_faults(trees, problem.duration),
         *regular_faults(trees, meaning.algebra.divisors, problem.duration),
         *wrong_count,
-        *start_faults(problem, orders, meaning.at_rest, outline),
-        *_unknown_signals(problem, meaning, orders),
     ]
     blocks = []
     try:
-        blocks = [] if wrong_count else solve(meaning.equations, orders, meaning.algebra)
+        blocks = [] if wrong_count or not meaning.whole else solve(meaning.equations, orders, meaning.algebra)
     except ProblemFaults as error:
         faults += error.faults
-    _stop(faults)
+    if faults or not meaning.whole:
+        _stop([*meaning.faults, *faults, *_table_faults(problem, outline, meaning, orders)])
     return blocks
+
+
+def _table_faults(problem: Problem, outline: Outline, meaning: Meaning, orders: Mapping[str, int]) -> list[Fault]:
+    # The output of a block in s that is at fault is no unknown yet.
+    at_rest = meaning.at_rest.union(outline.outputs)
+    return [*start_faults(problem, orders, at_rest, outline), *_unknown_signals(problem, outline, meaning, orders)]
 
 
 def _opened(meaning: Meaning) -> dict[str, int]:
@@ -111,7 +126,9 @@ def _opened(meaning: Meaning) -> dict[str, int]:
                 meaning.equations[index] = definitions.opened(value, hot.__contains__), equation
             except TooLargeError:
                 faults.append(too_large(equation))
-    _stop(faults)
+            except ProblemFaults as error:
+                faults += error.faults
+    _stop([*meaning.faults, *faults] if faults else ())
     return orders
 
 
@@ -129,8 +146,9 @@ def _asked(problem: Problem) -> dict[str, str]:
     return asked
 
 
-def _unknown_signals(problem: Problem, meaning: Meaning, orders: Mapping[str, int]) -> list[Fault]:
-    known = {*orders, *problem.inputs, *(a.name for a in meaning.definitions.polynomials)}
+def _unknown_signals(problem: Problem, outline: Outline, meaning: Meaning, orders: Mapping[str, int]) -> list[Fault]:
+    known = {*orders, *problem.inputs, *outline.definitions, *outline.outputs}
+    known |= {a.name for a in meaning.definitions.polynomials} | meaning.undefined | problem.parameters.keys()
     faults = []
     for text, key in _asked(problem).items():
         atom = _signal(text)
@@ -217,7 +235,7 @@ def _assembled(problem: Problem, outline: Outline, meaning: Meaning, change: Cha
     names = [(w.signal, w.polarity) for w in watch] or [(n, 0) for n in (*outline.unknowns, *outline.outputs)]
     wanted = {*asked, *(n for n, _ in names)}
     signals = _needed({**change.wanted, **change.replaced}, rows, wanted)
-    _stop(_held_rates(signals, asked))
+    _stop(_held_rates(signals, asked, outline))
     ordered, loop = sorted_signals(signals)
     assert not loop
     choice = Choice(rows, ordered, frozenset(a for a in ordered if a.text in wanted))
@@ -228,12 +246,14 @@ def _assembled(problem: Problem, outline: Outline, meaning: Meaning, change: Cha
     for name in problem.inputs:
         if name in wanted and _is_source(name, meaning):
             assembly.input(name)
-    return System(
+    made = System(
         tuple(State(a.text, change.start[a]) for a in change.order), state_rows, signal_rows,
         tuple(assembly.sources.values()), tuple(assembly.knobs.made.values()),
         tuple(p for p in problem.parameters.values() if p.adjustable), tuple(names), problem.duration,
         problem.time_unit, problem.time_unit_seconds,
     )  # fmt: skip
+    _stop(range_faults(problem, made))
+    return made
 
 
 def _needed(
@@ -250,19 +270,21 @@ def _needed(
     return {a: value for a, value in signals.items() if a in needed}
 
 
-def _held_rates(signals: Mapping[Atom, Polynomial], asked: Mapping[str, str]) -> list[Fault]:
+def _held_rates(signals: Mapping[Atom, Polynomial], asked: Mapping[str, str], outline: Outline) -> list[Fault]:
     faults = []
     for atom, value in signals.items():
-        rates = sorted(a.text for a in value.atoms() if a.kind is Kind.RATE)
-        if rates:
-            faults.append(
-                Fault(
-                    f"{atom.text} holds the derivative of an input ({', '.join(rates)}), which would have to be "
-                    f"differentiated.",
-                    f"Supply {rates[0]} as an input of its own, or do not ask for {atom.text}.",
-                    asked.get(atom.text, "equations"),
-                )
-            )
+        rates = sorted(a for a in value.atoms() if a.kind is Kind.RATE)
+        if not rates:
+            continue
+        texts = ", ".join(a.text for a in rates)
+        found = f"{atom.text} holds the derivative of an input ({texts}), which would have to be differentiated."
+        remedy = f"Supply {rates[0].text} as an input of its own, or do not ask for {atom.text}."
+        uses = [n for e in (*outline.definitions.values(), *outline.blocks) for n in names_in(e)]
+        place = max((n for n in uses if n.name == rates[0].name), key=lambda n: n.primes, default=None)
+        if atom.text in asked or place is None:
+            faults.append(Fault(found, remedy, asked.get(atom.text, "equations")))
+        else:
+            faults.append(fault_at(place, found, remedy))
     return faults
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from dataclasses import replace
 from fractions import Fraction
 from typing import NoReturn
 
@@ -78,6 +79,10 @@ def tree_derivative(node: Node) -> Node:
     ProblemFaults
         Where a function of time jumps.
     """
+    return replace(_derivative(node), origin=node.origin)
+
+
+def _derivative(node: Node) -> Node:
     if isinstance(node, Number):
         return _ZERO
     if isinstance(node, Name):

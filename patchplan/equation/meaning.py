@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass
 from fractions import Fraction
+from functools import partial
 
 from patchplan.equation.algebra import Algebra
 from patchplan.equation.choice import sorted_signals
@@ -11,7 +13,7 @@ from patchplan.equation.constants import names_of
 from patchplan.equation.formula import fault_at
 from patchplan.equation.laplace import realise
 from patchplan.equation.model import Definitions
-from patchplan.equation.outline import Outline
+from patchplan.equation.outline import Outline, names_in
 from patchplan.equation.polynomial import Atom, Kind, Polynomial
 from patchplan.equation.problem import Equation, Input, Problem
 from patchplan.equation.tree import Name, Node
@@ -86,6 +88,12 @@ class Meaning:
         Names of the file and of the states of blocks in s.
     at_rest
         Those that start at zero without being asked.
+    faults
+        All found so far.
+    whole
+        Whether every equation was understood; the polynomial of one that was not stands for its names alone.
+    undefined
+        Names that the equations use and nothing defines.
     """
 
     algebra: Algebra
@@ -93,38 +101,58 @@ class Meaning:
     definitions: Definitions
     unknowns: tuple[str, ...]
     at_rest: frozenset[str]
+    faults: tuple[Fault, ...] = ()
+    whole: bool = True
+    undefined: frozenset[str] = frozenset()
 
 
-def meaning_of(problem: Problem, outline: Outline) -> Meaning:
-    """Polynomials of all equations.
+def meaning_of(problem: Problem, outline: Outline, before: Iterable[Fault] = ()) -> Meaning:
+    """Polynomials of all equations, and all their faults: functions and quotients of signals, loops among definitions.
 
-    Raises
-    ------
-    ProblemFaults
-        All faults of all equations: functions and quotients of signals, loops among definitions.
+    Parameters
+    ----------
+    before
+        Faults found already; an equation that one of them names is not looked into.
     """
+    unsound = {fault.key for fault in before if fault.key.startswith("equations")}
     algebra, faults = algebra_of(problem, outline)
     equations: dict[int, tuple[Polynomial, Equation]] = {}
     definitions: dict[Atom, Polynomial] = {}
     at_rest: list[str] = []
+
+    def understood(equation: Equation, work: Callable[[], Polynomial]) -> Polynomial:
+        if equation.key not in unsound:
+            try:
+                return work()
+            except ProblemFaults as error:
+                faults.extend(error.faults)
+        return _names_alone(equation, algebra)
+
     for equation in outline.equations:
-        try:
-            equations[len(equations)] = _zero(equation, algebra), equation
-        except ProblemFaults as error:
-            faults += error.faults
+        equations[len(equations)] = understood(equation, partial(_zero, equation, algebra)), equation
     for name, equation in outline.definitions.items():
-        try:
-            definitions[Atom(Kind.SIGNAL, name)] = algebra.polynomial(equation.right)
-        except ProblemFaults as error:
-            faults += error.faults
-    faults += _blocks(problem, outline, algebra, equations, definitions, at_rest)
-    if faults:
-        raise ProblemFaults(faults)
+        value = understood(equation, partial(algebra.polynomial, equation.right))
+        definitions[Atom(Kind.SIGNAL, name)] = value
+    outline_blocks = [e for e in outline.blocks if e.key not in unsound]
+    faults += _blocks(problem, outline, outline_blocks, algebra, equations, definitions, at_rest)
     ordered, loop = sorted_signals(definitions)
-    if loop:
-        raise ProblemFaults([_loop(loop, outline)])
+    while loop:
+        faults.append(_loop(loop, outline))
+        ordered, loop = sorted_signals({a: value for a, value in definitions.items() if a not in loop})
     unknowns = (*outline.unknowns, *at_rest)
-    return Meaning(algebra, equations, Definitions(ordered, algebra), unknowns, frozenset(at_rest))
+    known = {*problem.parameters, *problem.inputs, *algebra.signals, *algebra.formulas, "t", "pi", "s"}
+    undefined = frozenset(n.name for e in problem.equations for n in names_in(e)) - known
+    return Meaning(
+        algebra, equations, Definitions(ordered, algebra), unknowns, frozenset(at_rest),
+        (*before, *faults), not (faults or unsound), undefined,
+    )  # fmt: skip
+
+
+def _names_alone(equation: Equation, algebra: Algebra) -> Polynomial:
+    """What an equation at fault still tells: the signals that it holds, and their order."""
+    names = names_in(equation)
+    atoms = sorted({Atom(Kind.SIGNAL, n.name, n.primes) for n in names if n.name in algebra.signals})
+    return Polynomial.sum([Polynomial.of(atom) for atom in atoms])
 
 
 def _zero(equation: Equation, algebra: Algebra) -> Polynomial:
@@ -141,20 +169,20 @@ def _zero(equation: Equation, algebra: Algebra) -> Polynomial:
 
 
 def _blocks(
-    problem: Problem, outline: Outline, algebra: Algebra, equations: dict[int, tuple[Polynomial, Equation]],
-    definitions: dict[Atom, Polynomial], at_rest: list[str],
+    problem: Problem, outline: Outline, blocks: Sequence[Equation], algebra: Algebra,
+    equations: dict[int, tuple[Polynomial, Equation]], definitions: dict[Atom, Polynomial], at_rest: list[str],
 ) -> list[Fault]:  # fmt: skip
     """Put the states of the block in s among the equations."""
     faults: list[Fault] = []
     taken = frozenset({*problem.parameters, *problem.inputs, *outline.unknowns, *outline.definitions})
-    for equation in outline.blocks[1:]:
+    for equation in blocks[1:]:
         faults.append(
             fault_at(
                 equation.left, "not built in this version: a second block in s.",
                 "Write one of them as a differential equation.",
             )
         )  # fmt: skip
-    for equation in outline.blocks[:1]:
+    for equation in blocks[:1]:
         try:
             made = realise(equation, algebra, taken)
         except ProblemFaults as error:
@@ -199,8 +227,8 @@ def slope_of(given: Input, algebra: Algebra, primes: int) -> Fraction:
     from patchplan.equation.waveform import numeric_tree
 
     if given.recording is not None:
-        after = next(i for i, x in enumerate(given.recording.times) if x > 0.0)
         times, values = given.recording.times, given.recording.values
+        after = next((i for i, x in enumerate(times) if i and x > 0.0), 1)
         leg = (values[after] - values[after - 1]) / (times[after] - times[after - 1])
         return Fraction(repr(leg)) if primes == 1 else Fraction(0)
     if given.tree is None:

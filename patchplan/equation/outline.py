@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import re
 from collections.abc import Iterable, Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from difflib import get_close_matches
 
 from patchplan.equation.constants import names_of
@@ -70,6 +70,30 @@ def outline_of(problem: Problem) -> Outline:
     unknowns = dict.fromkeys(n.name for n in names if n.name in primed and n.name not in taken)
     kept = tuple(n for n in unknowns if n not in definitions and n not in outputs and n not in ("t", "pi"))
     return Outline(definitions, tuple(equations), tuple(blocks), kept)
+
+
+def without_doubled(problem: Problem, outline: Outline) -> tuple[Problem, list[Fault]]:
+    """The problem without inputs and parameters that bear the name of an unknown or a definition, and those faults."""
+    too_many = len(outline.equations) > len(outline.unknowns)
+    started = {name.rstrip("'") for name in problem.start}
+    found: dict[str, Fault] = {}
+    for equation in outline.equations:
+        own = {n.name for n in names_in(equation) if n.primes and n.name in started}
+        what = "an unknown"
+        if isinstance(equation.left, Name) and too_many:
+            primed = any(n.primes for n in names_in(equation))
+            own |= {equation.left.name} if equation.left.primes or not primed else set()
+            what = "an unknown" if primed else "a definition"
+        for name in sorted(own):
+            for table, given in (("inputs", "an input"), ("parameters", "a parameter")):
+                if name in getattr(problem, table):
+                    fault = Fault(f'"{name}" is both {given} and {what}.', "Choose two names.", f"{table}.{name}")
+                    found.setdefault(name, fault)
+    if not found:
+        return problem, []
+    inputs = {name: given for name, given in problem.inputs.items() if name not in found}
+    parameters = {name: given for name, given in problem.parameters.items() if name not in found}
+    return replace(problem, inputs=inputs, parameters=parameters), list(found.values())
 
 
 def names_in(equation: Equation) -> list[Name]:

@@ -6,6 +6,7 @@ import re
 import tomllib
 from collections.abc import Collection, Mapping
 from contextlib import suppress
+from dataclasses import replace
 from fractions import Fraction
 from pathlib import Path
 from typing import Any, NoReturn
@@ -29,6 +30,7 @@ _KEYS = (
     "title", "equations", "duration", "time_unit", "watch",
     "parameters", "start", "inputs", "ranges", "terminals", "build", "part",
 )  # fmt: skip
+_MATHEMATICS = ("equations", "parameters.", "inputs.", "start.")
 # Time and memory that a dotted key costs grow with the square of its parts.
 _LONG_KEY = re.compile(r"(?<![\w-])(?:[\w-]++[ \t]*+\.[ \t]*+){16}")
 _STRING_OR_COMMENT = re.compile(
@@ -147,25 +149,47 @@ def _problem(reading: Reading, part_names: Mapping[str, Collection[str]] | None)
     duration = _duration(reading)
     inputs = read_inputs(reading, duration)
     signals = _signals(reading, equations, inputs.keys() - parameters.keys())
-    start, ranges = read_start(reading, signals), read_ranges(reading, signals)
-    terminals, watch = read_terminals(reading, signals), read_watch(reading, signals)
-    title = reading.string("title", data.get("title", Path(reading.file).stem), "the title")
     time_unit = _time_unit(reading)
+    sound = not reading.faults
+    start = read_start(reading, signals)
+    sound_start = not reading.faults
+    ranges, terminals = read_ranges(reading, signals), read_terminals(reading, signals)
+    watch = read_watch(reading, signals)
+    title = reading.string("title", data.get("title", Path(reading.file).stem), "the title")
     build, own_parts = read_build(reading, part_names), _own_parts(reading)
     if duration is None or title is None or time_unit is None:
         return None
-    return Problem(
+    problem = Problem(
         title, tuple(equations), duration, time_unit, watch, parameters, start, inputs, ranges, terminals,
         build, own_parts, reading.text, reading.file, reading.folder, reading.layout.values,
     )  # fmt: skip
+    if sound and reading.faults:
+        told = _MATHEMATICS if sound_start else _MATHEMATICS[:-1]
+        # A start value at fault is still given, which makes its name an unknown.
+        given = dict.fromkeys(reading.table("start", data.get("start", {})), Fraction(0)) | start
+        reading.faults += _faults_of_equations(replace(problem, start=given), told)
+    return problem
+
+
+def _faults_of_equations(problem: Problem, told: tuple[str, ...]) -> list[Fault]:
+    """What the mathematics would find next, where only start values, wishes and the like are at fault so far."""
+    from patchplan.equation.explicit import build_system
+
+    try:
+        build_system(problem)
+    except ProblemFaults as error:
+        return [f for f in error.faults if f.key == "start" or f.key.startswith(told)]
+    return []
 
 
 def _signals(reading: Reading, equations: list[Equation], inputs: Collection[str]) -> set[str] | None:
     """Names that start values and the like may use; None where an equation at fault may hold more."""
     if not 0 < len(equations) == len(_listed(reading.data.get("equations"))):
         return None
-    words = {name.name for e in equations for side in (e.left, e.right) for name in names_of(side)}
-    return (words | set(inputs)) - {"t", "pi"} - reading.values.keys() - reading.broken
+    names = [name for e in equations for side in (e.left, e.right) for name in names_of(side)]
+    # A parameter with a prime mark is an unknown too; what comes later tells of that.
+    numbers = (reading.values.keys() | reading.broken) - {name.name for name in names if name.primes}
+    return ({name.name for name in names} | set(inputs)) - {"t", "pi"} - numbers
 
 
 def _listed(value: Any) -> list[Any]:
