@@ -251,13 +251,15 @@ def _forward(plan: _Plan) -> tuple[Array, Array]:
 
 
 def _maps(plan: _Plan, ends: Array) -> tuple[Array, Array]:
-    """Maps of the steps between ``ends``, see `step_maps`."""
+    """Steps between ``ends`` as x -> map x + added, ``(n_steps, n, n)`` and ``(n_steps, n, n_columns)``."""
     times = stage_times(ends)
     values, rates = plan.at(times)
     slopes = _slopes(plan, _influence(plan, values, times.size))
-    forcing = plan.forcings(values, rates)
-    added = _additions(slopes)[..., plan.column_stage] * forcing.T[:, None]
-    return step_maps(ends, slopes[..., : len(plan.integrators)], added)
+    maps, parts = step_maps(ends, slopes[..., : len(plan.integrators)])
+    forcing = plan.forcings(values, rates).T.reshape(*parts.shape[:2], 1, -1)
+    at_stages = (parts @ _additions(slopes).reshape(*parts.shape[:3], -1))[..., plan.column_stage]
+    at_stages *= forcing
+    return maps, at_stages.sum(axis=1)
 
 
 def _kick(plan: _Plan, time: float) -> Array:
@@ -283,7 +285,7 @@ def _seen_at(plan: _Plan, times: Array, states: Array) -> Array:
     out = np.zeros((len(plan.watched), states.shape[2], times.size))
     for i, place in plan.seen():
         row = influence[place]
-        out[i] = np.einsum("ta,tac->ct", row[:, :n], states)
+        out[i] = (row[:, None, :n] @ states)[:, 0].T
         out[i, : places.size] += np.where(places >= n, row[:, places], 0.0).T * forcing
     return np.clip(out, -_LARGEST, _LARGEST)
 

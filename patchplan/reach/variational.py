@@ -11,6 +11,8 @@ Array = NDArray[np.float64]
 
 #: Stages of a step: order 5, L-stable.
 STEP_STAGES = 3
+#: Above this many states the few entries of A are made use of.
+_DENSE = 40
 
 
 def stage_times(ends: Array) -> Array:
@@ -20,8 +22,8 @@ def stage_times(ends: Array) -> Array:
     return times
 
 
-def step_maps(ends: Array, jacobians: Array, forcing: Array) -> tuple[Array, Array]:
-    """Steps of x' = A(t) x + F(t) as x -> R x + g, by the Radau IIA scheme of order 5.
+def step_maps(ends: Array, jacobians: Array) -> tuple[Array, Array]:
+    """Steps of x' = A(t) x + F(t) as x -> R x + sum over stages of P F(stage), by the Radau IIA scheme of order 5.
 
     Hairer & Wanner 1996, Solving Ordinary Differential Equations II, section IV.5.
 
@@ -29,22 +31,41 @@ def step_maps(ends: Array, jacobians: Array, forcing: Array) -> tuple[Array, Arr
     ----------
     ends
         Shape ``(n_steps + 1,)``.
-    jacobians, forcing
-        At ``stage_times(ends)``: shapes ``(n_times, n, n)`` and ``(n_times, n, n_columns)``.
+    jacobians
+        A at ``stage_times(ends)``, shape ``(n_times, n, n)``.
 
     Returns
     -------
-    R, g
-        Shapes ``(n_steps, n, n)`` and ``(n_steps, n, n_columns)``.
+    R, P
+        Shapes ``(n_steps, n, n)`` and ``(n_steps, 3, n, n)``.
     """
     scheme, h, n = radau(STEP_STAGES)[1], np.diff(ends), jacobians.shape[1]
-    system = -np.einsum("k,jl,kjab->kjalb", h, scheme, jacobians.reshape(h.size, STEP_STAGES, n, n))
-    system = system.reshape(h.size, STEP_STAGES * n, STEP_STAGES * n) + np.eye(STEP_STAGES * n)
-    width = n + forcing.shape[2]
-    right = np.concatenate((jacobians, forcing), axis=2).reshape(h.size, STEP_STAGES * n, width)
-    slopes = np.linalg.solve(system, right).reshape(h.size, STEP_STAGES, n, width)
-    step = np.einsum("k,l,klac->kac", h, scheme[-1], slopes)
-    return step[..., :n] + np.eye(n), step[..., n:]
+    matrices = jacobians.reshape(h.size, STEP_STAGES, n, n)
+    # P is a few rows of an inverse, so the transposed system is solved, for n right-hand sides only.
+    last = np.kron(scheme[-1][:, None], np.eye(n))
+    solve = _solved_sparse if n > _DENSE else _solved_dense
+    rows = solve(scheme, h, matrices, last).reshape(h.size, STEP_STAGES, n, n)
+    parts = rows.transpose(0, 1, 3, 2) * h[:, None, None, None]
+    return np.eye(n) + (parts @ matrices).sum(axis=1), parts
+
+
+def _solved_dense(scheme: Array, h: Array, matrices: Array, right: Array) -> Array:
+    size = right.shape[0]
+    system = -np.einsum("k,jl,kjab->klbja", h, scheme, matrices).reshape(h.size, size, size) + np.eye(size)
+    found: Array = np.linalg.solve(system, np.broadcast_to(right, (h.size, *right.shape)))
+    return found
+
+
+def _solved_sparse(scheme: Array, h: Array, matrices: Array, right: Array) -> Array:
+    from scipy.sparse import csr_array, eye_array, kron, vstack
+    from scipy.sparse.linalg import splu
+
+    found = np.empty((h.size, *right.shape))
+    for k, step in enumerate(h.tolist()):
+        blocks = [kron(scheme[[j]], csr_array(matrices[k, j])) for j in range(STEP_STAGES)]
+        system = eye_array(right.shape[0]) - step * vstack(blocks)
+        found[k] = splu(system.T.tocsc()).solve(right)
+    return found
 
 
 def convolved(kernels: Array, forcing: Array, rows: NDArray[np.intp]) -> Array:
