@@ -107,9 +107,12 @@ def _planned(
     with shown_progress(with_words) as progress:
         progress("Reading the problem")
         from patchplan.circuit.catalogue import catalogue_names
+        from patchplan.equation.explicit import system_of
         from patchplan.equation.reader import read_problem
 
         problem = read_problem(file, part_names=catalogue_names(), trust_paths=trust_paths)
+        # A faulty file is told of before the rooms below are loaded.
+        system = system_of(problem)
         from patchplan.errors import CannotBuild
         from patchplan.pipeline import plan as make_plan
         from patchplan.report.summary import refusal, summary
@@ -117,7 +120,7 @@ def _planned(
 
         colour = sys.stdout.isatty()
         try:
-            made = make_plan(problem, accept=accept, think=think.value, progress=progress)
+            made = make_plan(problem, accept=accept, think=think.value, progress=progress, system=system)
         except CannotBuild as error:
             write_refusal(problem, str(error), folder)
             return FAILS, refusal(problem.title, str(error), folder, colour=colour)

@@ -11,9 +11,10 @@ from patchplan.circuit.build import build_circuit
 from patchplan.circuit.catalogue import load_catalogue
 from patchplan.circuit.switched import with_references
 from patchplan.circuit.target import target_of
-from patchplan.equation.explicit import build_system
+from patchplan.equation.explicit import build_system, system_of
 from patchplan.equation.faults import rendered
 from patchplan.equation.problem import Build, Problem
+from patchplan.equation.system import System
 from patchplan.errors import ProblemFaults
 from patchplan.form.offsets import find_form
 from patchplan.form.records import Form
@@ -50,8 +51,9 @@ class Choices:
 
 
 def plan(
-    problem: Problem, *, accept: float = 5.0, think: str = "normal", progress: Callable[[str], None] | None = None
-) -> Plan:
+    problem: Problem, *, accept: float = 5.0, think: str = "normal", progress: Callable[[str], None] | None = None,
+    system: System | None = None,
+) -> Plan:  # fmt: skip
     """Plan a problem with the best of a short list of choices.
 
     Parameters
@@ -60,6 +62,8 @@ def plan(
         Largest nominal error of a plan that follows its equation [% of peak].
     progress
         Called with the name of each step as it begins.
+    system
+        The problem's System, where it is at hand.
 
     Raises
     ------
@@ -68,24 +72,26 @@ def plan(
     CannotBuild
         Where no part of the catalogue serves the wishes (supply, reference).
     """
+    system = system or system_of(problem)
     try:
-        found = plan_with(problem, Choices(think=think), accept=accept, progress=progress)
+        found = plan_with(problem, Choices(think=think), accept=accept, progress=progress, system=system)
         if not set(found.form.offsets) - set(found.form.scales):
             return found
-        plain = plan_with(problem, Choices(offsets=False, think=think), accept=accept, progress=progress)
+        plain = plan_with(problem, Choices(offsets=False, think=think), accept=accept, progress=progress, system=system)
     except ProblemFaults as error:
         raise rendered(error, problem) from None
     return found if _merit(found, OFFSET_COST) < _merit(plain) else plain
 
 
 def plan_with(
-    problem: Problem, choices: Choices, *, accept: float = 5.0, progress: Callable[[str], None] | None = None
-) -> Plan:
+    problem: Problem, choices: Choices, *, accept: float = 5.0, progress: Callable[[str], None] | None = None,
+    system: System | None = None,
+) -> Plan:  # fmt: skip
     """One straight run with all decisions taken."""
     say = progress or (lambda step: None)
     build = problem.build
     say("Reading the equations")
-    system = build_system(problem)
+    system = system or build_system(problem)
     catalogue = load_catalogue(problem.own_parts)
     target = target_of(build, catalogue)
     say("Solving the problem")

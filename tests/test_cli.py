@@ -50,6 +50,13 @@ def test_help_loads_nothing_heavy(arguments):
     assert loaded_by(arguments) & heavy == set()
 
 
+def test_a_faulty_file_is_told_of_before_anything_that_solves_is_loaded(tmp_path):
+    (tmp_path / "bad.toml").write_text(OSCILLATOR.replace("-x", "-sin(x) + 1/(t - 9.0001)^2"))
+    loaded = loaded_by(["plan", str(tmp_path / "bad.toml"), "--into", str(tmp_path / "made")])
+    assert "numpy" in loaded
+    assert loaded & {"scipy", "sympy", "matplotlib", "jinja2", "filelock"} == set()
+
+
 def test_help_names_the_commands(run):
     done = run("--help")
     assert done.exit_code == 0

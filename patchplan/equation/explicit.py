@@ -17,6 +17,7 @@ from patchplan.equation.checks import (
     time_trees,
 )
 from patchplan.equation.choice import Choice, sorted_signals
+from patchplan.equation.faults import rendered
 from patchplan.equation.formula import fault_at
 from patchplan.equation.knobs import Knobs
 from patchplan.equation.meaning import Meaning, meaning_of, slope_of, start_of
@@ -53,6 +54,20 @@ def build_system(problem: Problem) -> System:
     change = _without_rates(problem, meaning, orders, blocks, faults)
     _stop(faults)
     return _assembled(problem, outline, meaning, change)
+
+
+def system_of(problem: Problem) -> System:
+    """The same, with faults rendered for people.
+
+    Raises
+    ------
+    ProblemFaults
+        With all faults found, in file order, and their text in ``rendered``.
+    """
+    try:
+        return build_system(problem)
+    except ProblemFaults as error:
+        raise rendered(error, problem) from None
 
 
 def _without_rates(
