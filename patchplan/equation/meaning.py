@@ -150,7 +150,8 @@ def meaning_of(problem: Problem, outline: Outline, before: Iterable[Fault] = ())
 
 def _names_alone(equation: Equation, algebra: Algebra) -> Polynomial:
     """What an equation at fault still tells: the signals that it holds, and their order."""
-    names = names_in(equation)
+    # A definition does not need itself.
+    names = [n for n in names_in(equation) if n.primes or n is not equation.left]
     atoms = sorted({Atom(Kind.SIGNAL, n.name, n.primes) for n in names if n.name in algebra.signals})
     return Polynomial.sum([Polynomial.of(atom) for atom in atoms])
 

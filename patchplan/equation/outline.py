@@ -92,7 +92,12 @@ def without_doubled(problem: Problem, outline: Outline) -> tuple[Problem, list[F
     if not found:
         return problem, []
     inputs = {name: given for name, given in problem.inputs.items() if name not in found}
-    parameters = {name: given for name, given in problem.parameters.items() if name not in found}
+    # What only a dropped formula uses is no unused parameter.
+    dropped = [problem.inputs[name].tree for name in found if name in problem.inputs]
+    gone = found.keys() | {n.name for tree in dropped if tree for n in names_of(tree)}
+    gone -= {n.name for equation in problem.equations for n in names_in(equation)} - found.keys()
+    gone -= {n.name for given in inputs.values() if given.tree for n in names_of(given.tree)}
+    parameters = {name: given for name, given in problem.parameters.items() if name not in gone}
     return replace(problem, inputs=inputs, parameters=parameters), list(found.values())
 
 

@@ -62,7 +62,12 @@ def test_a_fault_names_its_place(equations, tables, key, words):
 def test_a_name_with_two_meanings_is_one_fault():
     for tables in ({"inputs": 'x = "t"'}, {"parameters": "x = 2"}):
         assert len(faults(["x' = -x"], start="x = 0", **tables)) == 1
+    assert len(faults(["x' = -x"], start="x = 0", inputs='x = "sin(k*t)"', parameters="k = 2")) == 1
     built(["x' = -x + u'"], start="x = 0", inputs='u = "sin(t)"')
+
+
+def test_a_definition_at_fault_is_no_loop():
+    assert len(faults(["x' = -x", "y = x^(1/2)", "z = 2*y"], start="x = 0")) == 1
 
 
 def test_a_fault_at_the_start_speaks_of_the_start():
