@@ -11,8 +11,8 @@ from numpy.typing import NDArray
 
 from patchplan.circuit.records import GROUND, Circuit, Part
 from patchplan.circuit.spice_models import LEAST_OHM, num
-from patchplan.circuit.switched import level_of
 from patchplan.equation.problem import Recording
+from patchplan.equation.system import level_of
 from patchplan.equation.tree import PIECEWISE, Binary, Call, Minus, Name, Node, Number
 from patchplan.equation.waveform import Waveform
 

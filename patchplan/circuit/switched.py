@@ -6,9 +6,7 @@ import math
 from dataclasses import replace
 from fractions import Fraction
 
-import numpy as np
-
-from patchplan.equation.system import Source
+from patchplan.equation.system import level_of
 from patchplan.patch.records import Patch, Stage, Wire
 from patchplan.sizing.records import Leg, NodeScale, Sizing, StageSizing, Target
 
@@ -16,20 +14,6 @@ from patchplan.sizing.records import Leg, NodeScale, Sizing, StageSizing, Target
 _INVERTER_OHM = 10e3
 #: A step stands for the reference where it agrees with it to this fraction.
 _SAME = 1e-6
-
-
-def level_of(source: Source, duration: float) -> float:
-    """Value of a step or pulse while it is on [problem units], 0 where it never is within the run.
-
-    Parameters
-    ----------
-    duration
-        Run [problem time].
-    """
-    if source.external or source.waveform is None:
-        return 0.0
-    values = source.waveform.values(np.array([0.0, *source.waveform.jumps(duration)]))
-    return float(values[np.argmax(np.abs(values))])
 
 
 def switched_volts(patch: Patch, sizing: Sizing, target: Target, duration: float) -> dict[str, float]:

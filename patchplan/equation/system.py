@@ -7,6 +7,8 @@ from dataclasses import dataclass, field
 from fractions import Fraction
 from typing import TypeAlias
 
+import numpy as np
+
 from patchplan.equation.problem import Parameter
 from patchplan.equation.tree import Node, Origin
 from patchplan.equation.waveform import Waveform
@@ -95,6 +97,20 @@ class Source:
     waveform: Waveform | None
     within: tuple[Fraction, Fraction] | None = None
     external: bool = True
+
+
+def level_of(source: Source, duration: float) -> float:
+    """Value of a step or pulse while it is on [problem units], 0 where it never is within the run.
+
+    Parameters
+    ----------
+    duration
+        Run [problem time].
+    """
+    if source.external or source.waveform is None:
+        return 0.0
+    values = source.waveform.values(np.array([0.0, *source.waveform.jumps(duration)]))
+    return float(values[np.argmax(np.abs(values))])
 
 
 @dataclass(frozen=True, slots=True)

@@ -2,12 +2,12 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping
+from collections.abc import Collection, Iterable, Mapping
 from dataclasses import dataclass, field, replace
 from fractions import Fraction
 from typing import TypeAlias
 
-from patchplan.equation.system import Knob, Monomial, Row, System, Term
+from patchplan.equation.system import Knob, Monomial, Row, System, Term, level_of
 from patchplan.equation.tree import Origin
 from patchplan.form.records import Form
 from patchplan.patch.naming import Names
@@ -153,6 +153,12 @@ def _signs(form: Form, drafts: Mapping[str, _Draft], hold: bool, node_limit: int
             links += [Link(draft.key, k, (turn if c > 0 else -turn)) for k, c, _ in draft.inputs]
         if hold and draft.kind == "integrator" and draft.start:
             links.append(Link(draft.key, REFERENCE, 1 if draft.start > 0 else -1, is_start=True))
+    duration = float(form.system.duration)
+    for source in form.system.sources:
+        # A switched step stands at the reference while it is on: the other polarity asks for the other reference.
+        level = level_of(source, duration)
+        if source.name in drafts and source.name not in form.scales and level:
+            links.append(Link(source.name, REFERENCE, -1 if level > 0 else 1, is_start=True))
     fixed = {REFERENCE: 1, **{n: (1 if s > 0 else -1) for n, s in form.scales.items() if n in drafts}}
     fixed |= {name: polarity for name, polarity in form.system.watch if polarity and name in drafts}
     return choose_signs(list(drafts), links, fixed, forced, node_limit=node_limit)
@@ -217,8 +223,9 @@ class _Board:
 def _assemble(form: Form, drafts: Mapping[str, _Draft], signs: Signs, hold: bool) -> Patch:
     """Number the stages, put in the sign stages and draw the wires."""
     board = _Board(drafts, signs)
+    switched = {s.name for s in form.system.sources if not s.external and s.name not in form.scales}
     for key, draft in drafts.items():
-        if key != REFERENCE or _reference_used(drafts, hold):
+        if key != REFERENCE or _reference_used(drafts, hold, switched):
             board.place(key, draft)
     system = form.system
     watched = {name.removesuffix(".out"): board.node[name] for name, _ in system.watch}
@@ -228,9 +235,11 @@ def _assemble(form: Form, drafts: Mapping[str, _Draft], signs: Signs, hold: bool
     return Patch(_ordered(board.stages), watched, sources, knobs, turning, signs.lower_bound)
 
 
-def _reference_used(drafts: Mapping[str, _Draft], hold: bool) -> bool:
+def _reference_used(drafts: Mapping[str, _Draft], hold: bool, switched: Collection[str]) -> bool:
     return any(
-        (hold and d.kind == "integrator" and d.start) or any(k == REFERENCE for k, _, _ in d.inputs)
+        (d.kind == "source" and d.key in switched)
+        or (hold and d.kind == "integrator" and d.start)
+        or any(k == REFERENCE for k, _, _ in d.inputs)
         for d in drafts.values()
     )
 

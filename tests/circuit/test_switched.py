@@ -10,11 +10,11 @@ from patchplan.check.start import hold_state
 from patchplan.circuit.build import build_circuit, output_loads, replace_part
 from patchplan.circuit.records import Circuit
 from patchplan.circuit.spice import spice_text
-from patchplan.circuit.switched import level_of, with_references
+from patchplan.circuit.switched import with_references
 from patchplan.circuit.target import target_of
 from patchplan.equation.problem import Build
 from patchplan.equation.syntax import parse_expression
-from patchplan.equation.system import Source
+from patchplan.equation.system import Source, level_of
 from patchplan.equation.waveform import Waveform
 from patchplan.patch.records import Patch, Stage
 from tests.circuit.boards import CATALOGUE, exact_sizing, form_of, wire

@@ -106,3 +106,17 @@ def test_a_wrong_sign_is_caught_when_read_back():
     flipped = tuple(replace(s, sign=-s.sign) if s.name == "I1" else s for s in patch.stages)
     with pytest.raises(ValueError, match="does not invert"):
         read_back(replace(patch, stages=flipped), ())
+
+
+def test_a_switched_step_takes_the_polarity_of_the_reference_that_is_there():
+    """A step that the board switches from +10 V needs no inverter while every sign can be served without."""
+    from patchplan.equation.syntax import parse_expression
+    from patchplan.equation.system import Source
+    from patchplan.equation.waveform import Waveform
+
+    step = Source("u", Waveform(parse_expression("5*step(t - 1)")), external=False)
+    made = system({"x": 0}, {"x": [term(1, "u"), term(-1, "x")]}, sources=[step])
+    patch = build_patch(Form(made))
+    assert patch.counts().get("inverter", 0) == 0
+    assert next(s.sign for s in patch.stages if s.kind == "source") == 1
+    assert any(s.kind == "reference" for s in patch.stages)
