@@ -6,7 +6,7 @@ from fractions import Fraction
 
 import pytest
 import sympy
-from hypothesis import assume, given
+from hypothesis import assume, given, settings
 from hypothesis import strategies as st
 from sympy.parsing.sympy_parser import auto_number, auto_symbol, rationalize
 
@@ -174,6 +174,8 @@ FORMULAS = st.recursive(
 )
 
 
+# The first use of sympy takes long, whatever the formula.
+@settings(deadline=None)
 @given(FORMULAS)
 def test_canonical_text_reads_back(text):
     try:
