@@ -73,14 +73,20 @@ def plan(
         Where no part of the catalogue serves the wishes (supply, reference).
     """
     system = system or system_of(problem)
+
+    def attempt(choices: Choices) -> Plan:
+        return plan_with(problem, choices, accept=accept, progress=progress, system=system)
+
     try:
-        found = plan_with(problem, Choices(think=think), accept=accept, progress=progress, system=system)
-        if not set(found.form.offsets) - set(found.form.scales):
-            return found
-        plain = plan_with(problem, Choices(offsets=False, think=think), accept=accept, progress=progress, system=system)
+        found = attempt(Choices(think=think))
+        if set(found.form.offsets) - set(found.form.scales):
+            plain = attempt(Choices(offsets=False, think=think))
+            found = found if _merit(found, OFFSET_COST) < _merit(plain) else plain
+        if found.verdict.verdict == "inaccurate" and think == "normal":
+            found = min(found, attempt(replace(Choices(**found.choices), think="high")), key=_merit)
     except ProblemFaults as error:
         raise rendered(error, problem) from None
-    return found if _merit(found, OFFSET_COST) < _merit(plain) else plain
+    return found
 
 
 def plan_with(

@@ -257,7 +257,7 @@ def _maps(plan: _Plan, ends: Array) -> tuple[Array, Array]:
     slopes = _slopes(plan, _influence(plan, values, times.size))
     maps, parts = step_maps(ends, slopes[..., : len(plan.integrators)])
     forcing = plan.forcings(values, rates).T.reshape(*parts.shape[:2], 1, -1)
-    at_stages = (parts @ _additions(slopes).reshape(*parts.shape[:3], -1))[..., plan.column_stage]
+    at_stages = (parts @ _additions(slopes).reshape(*parts.shape[:3], len(plan.stages)))[..., plan.column_stage]
     at_stages *= forcing
     return maps, at_stages.sum(axis=1)
 

@@ -2,8 +2,11 @@
 
 from __future__ import annotations
 
+import pytest
+
 from patchplan.equation.reader import read_problem
 from patchplan.pipeline import Choices, plan, plan_with
+from patchplan.report.write import write_plan
 
 DECAY = """title = "decay"
 equations = ["x' = -x"]
@@ -83,3 +86,14 @@ x = 0
 u = "step(t - 1)"
 """
     assert any("x' jumps, which no board can" in w for w in plan(read_problem(step)).verdict.warnings)
+
+
+STILL = 'title = "still"\nequations = ["x\'\' = -x"]\nduration = 8\n[start]\nx = 0\n"x\'" = 0\n'
+SUMMER = 'title = "sum"\nequations = ["y = 2*u"]\nduration = 8\n[inputs]\nu = "sin(t)"\n'
+
+
+@pytest.mark.parametrize("text", [STILL, SUMMER], ids=["nothing moves", "no integrator"])
+def test_boards_without_motion_or_integrators_are_written(text, tmp_path):
+    found = plan(read_problem(text))
+    assert found.verdict.verdict == "follows"
+    assert "circuit.cir" in write_plan(found, tmp_path / "plan", pictures=False)

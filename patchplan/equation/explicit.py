@@ -247,7 +247,9 @@ def _assembled(problem: Problem, outline: Outline, meaning: Meaning, change: Cha
     rows = {a: value for b in change.blocks for a, value in b.rates().items()}
     asked = _asked(problem)
     watch = problem.watch
-    names = [(w.signal, w.polarity) for w in watch] or [(n, 0) for n in (*outline.unknowns, *outline.outputs)]
+    # Without an unknown the definitions are all there is to see.
+    visible = (*outline.unknowns, *outline.outputs) or tuple(outline.definitions)
+    names = [(w.signal, w.polarity) for w in watch] or [(n, 0) for n in visible]
     wanted = {*asked, *(n for n, _ in names)}
     signals = _needed({**change.wanted, **change.replaced}, rows, wanted)
     _stop(_held_rates(signals, asked, outline))
