@@ -112,6 +112,7 @@ def _word(nodes: tuple[NodePeak, ...], traces: Traces, largest: float, accept: f
 
 def _compare(circuit: Circuit, reference: Reference, traces: Traces, name: str, rows: int) -> Difference:
     found = signal_of(circuit, traces, circuit.watched[name])[:rows]
+    rows = len(found)
     base = error_base(circuit, reference, name)
     index = reference.names.index(name)
     counts = settled(reference, name, base, _wait(circuit))[:rows]

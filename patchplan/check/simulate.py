@@ -214,9 +214,12 @@ def _integrate_dense(
 ) -> tuple[Array, str]:
     from scipy.integrate import ODEintWarning, odeint
 
+    # A first step that is long for the fastest pole diverges more often than the method may shorten it.
+    fastest = float(np.linalg.norm(jacobian(state, float(times[0])), np.inf))
+    first = min(1.0 / fastest, times[-1] - times[0]) if fastest else 0.0
     with warnings.catch_warnings():
         warnings.simplefilter("ignore", ODEintWarning)
-        states, info = odeint(rates, state, times, Dfun=jacobian, full_output=True, rtol=tolerance,
+        states, info = odeint(rates, state, times, Dfun=jacobian, full_output=True, rtol=tolerance, h0=first,
                               atol=tolerance * _VOLTS, mxstep=_MOST_EVALUATIONS, tcrit=[times[-1]])  # fmt: skip
     good = np.asarray(np.isfinite(states).all(axis=1))
     good[1:] &= info["tcur"] >= times[1:] * (1.0 - 1e-12)

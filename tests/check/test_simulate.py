@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from dataclasses import replace
 from fractions import Fraction
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -13,9 +14,11 @@ from scipy.integrate import solve_ivp
 from patchplan.check.simulate import simulate
 from patchplan.circuit.records import GROUND
 from patchplan.equation.problem import Recording
+from patchplan.equation.reader import read_problem
 from patchplan.equation.system import Source
 from patchplan.equation.tree import Binary, Call, Name, Number
 from patchplan.equation.waveform import Waveform
+from patchplan.pipeline import plan as make_plan
 from tests.check.boards import FORMULAS, OP_AMP, Board, oscillator, van_der_pol
 
 IDEAL = {"gain": False, "bandwidth": False, "slew": False, "bias": False, "multiplier": False}
@@ -167,3 +170,31 @@ def test_a_large_board_runs_on_sparse_matrices_as_a_small_one_does() -> None:
     for net in ("x0", "x1", "x2"):
         assert large.of(net) == pytest.approx(small.of(net), abs=1e-4)
     assert small.of("x0") == pytest.approx(5.0 * np.exp(-small.times / 1e-3), abs=1e-3)
+
+
+def test_the_ideal_board_passes_a_switched_step_that_its_fastest_pole_dwarfs(tmp_path: Path) -> None:
+    # The method's own first step after the switches turned was ten reductions too long for it.
+    (tmp_path / "pulse.toml").write_text(
+        """
+title = "Pulse into cubic decays"
+equations = [
+  "x1' = -62.5*x1 - 36.1*x1^3 + 43.3*u",
+  "x2' = -89.9*x2 - 49*x2^3",
+  "x3' = -15.4*x3 - 38*x3^3",
+  "out = 1.07*x1 + 0.305*x2 - 0.806*x3",
+]
+duration = 0.115
+time_unit = "us"
+watch = ["x3", "+out"]
+start = { x1 = 0.447, x2 = 1.07, x3 = -0.564 }
+inputs = { u = "1.55*pulse(t, 0.0371, 0.0669)" }
+build = { op_amp = "LT1365", resistors = "E12", capacitors = "E3", run = "free", speed = 2.65e-07 }
+""",
+        encoding="utf-8",
+    )
+    plan = make_plan(read_problem(tmp_path / "pulse.toml"))
+    circuit = plan.circuit
+    assert circuit is not None
+    run = simulate(circuit, **IDEAL)
+    assert run.failure == ""
+    assert run.times[-1] == circuit.duration
