@@ -6,7 +6,8 @@ from collections import deque
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
 
-import numpy as np
+from patchplan.patch.signs_graph import Edge, reduced
+from patchplan.patch.signs_search import fewest_removals
 
 
 @dataclass(frozen=True, slots=True)
@@ -40,6 +41,16 @@ class Signs:
     summed: frozenset[str] = field(default_factory=frozenset)
     lower_bound: int = 0
 
+    @property
+    def count(self) -> int:
+        """Number of sign stages."""
+        return len(self.inverted) + len(self.summed)
+
+    @property
+    def proved(self) -> bool:
+        """Whether fewer are impossible."""
+        return self.count == self.lower_bound
+
 
 def choose_signs(
     nodes: Sequence[str],
@@ -52,8 +63,11 @@ def choose_signs(
     """Fewest inverters and inverting summers over all polarities.
 
     A link is right when sign * s_target * s_source < 0. A wrong one is covered by an inverter on its source or by one
-    inverting summer in front of its target. First a two-colouring, which needs none; else a 0/1 linear program
-    (HiGHS through scipy), whose dual bound is the certificate.
+    inverting summer in front of its target. First a two-colouring, which needs none. Else every node is split into
+    what it gives and what it takes, two vertices tied to its polarity; a sign stage frees one of them from all its
+    links. So the fewest stages are the fewest vertices to take out of a signed graph until no cycle contradicts
+    itself: at least one of each such cycle (Barahona and Mahjoub 1989), which a 0/1 linear program decides (HiGHS
+    through scipy), whose dual bound is the certificate.
 
     Parameters
     ----------
@@ -66,14 +80,19 @@ def choose_signs(
     forced
         Nodes needed in both polarities in any case.
     node_limit
-        Branch-and-bound nodes before the search stops with a gap.
+        Branch-and-bound nodes before the search stops with a gap; patches of more than about 50 nodes, where one of
+        them costs more, get fewer.
     """
     forced = frozenset(forced)
     links = sorted(set(links), key=lambda x: (x.target, x.source, x.sign, x.is_start))
     sign, clean = _two_colour(nodes, links, fixed)
     if clean:
         return Signs(sign, forced, lower_bound=len(forced))
-    return _by_program(nodes, links, fixed, forced, node_limit) or _by_cover(sign, links, forced)
+    inverted, summed, lower = _by_cycles(nodes, [k for k in links if k.source not in forced], fixed, node_limit)
+    kept = [k for k in links if k.source not in inverted | forced and (k.is_start or k.target not in summed)]
+    sign, _ = _two_colour(nodes, kept, fixed)
+    inverted, summed = _cover([k for k in wrong_links(sign, links) if k.source not in forced])
+    return Signs(sign, inverted | forced, summed, lower + len(forced))
 
 
 def wrong_links(sign: Mapping[str, int], links: Iterable[Link]) -> list[Link]:
@@ -88,13 +107,12 @@ def _two_colour(nodes: Sequence[str], links: Sequence[Link], fixed: Mapping[str,
         around[link.target].append((link.source, -link.sign))
         around[link.source].append((link.target, -link.sign))
     sign = dict(fixed)
-    queue = deque(n for n in nodes if n in sign)
-    for root in nodes:
-        if root not in sign:
-            sign[root] = 1
-            queue.append(root)
+    # What is dictated spreads first; only then is there a free choice.
+    for roots in ([n for n in nodes if n in fixed], *([n] for n in nodes)):
+        queue = deque(roots)
         while queue:
             here = queue.popleft()
+            sign.setdefault(here, 1)
             for other, relation in around[here]:
                 if other not in sign:
                     sign[other] = relation * sign[here]
@@ -102,78 +120,58 @@ def _two_colour(nodes: Sequence[str], links: Sequence[Link], fixed: Mapping[str,
     return sign, not wrong_links(sign, links)
 
 
-def _by_program(
-    nodes: Sequence[str], links: Sequence[Link], fixed: Mapping[str, int], forced: frozenset[str], node_limit: int
-) -> Signs | None:
-    """Exact 0/1 program over s (1 means -), z (inverter on a source) and y (summer in front of a target)."""
-    from scipy.optimize import Bounds, LinearConstraint, milp
-    from scipy.sparse import coo_array
+def _by_cycles(
+    nodes: Sequence[str], links: Sequence[Link], fixed: Mapping[str, int], node_limit: int
+) -> tuple[frozenset[str], frozenset[str], int]:
+    """Nodes with an inverter and with a summer after which polarities fit, and how many are needed at least.
 
+    Vertices: what node i gives (i), what it takes (n + i), its polarity (2 n + i), the polarity + itself (3 n).
+    """
     n = len(nodes)
     at = {name: i for i, name in enumerate(nodes)}
-    target = np.array([at[k.target] for k in links])
-    source = np.array([at[k.source] for k in links])
-    positive = np.array([k.sign > 0 for k in links])
-    no_summer = np.array([k.is_start for k in links])
-    count, row = len(links), np.arange(len(links))
-    # A positive link is wrong when both polarities agree, a negative one when they differ: two linear bounds each.
-    first, second, floor = np.where(positive, 1.0, -1.0), np.ones(count), np.where(positive, 1.0, 0.0)
-    loops = target == source
-    rows = np.concatenate([np.tile(np.concatenate([row, row + count]), 3), np.concatenate([row, row + count])])
-    columns = np.concatenate(
-        [
-            np.concatenate([target, target]),
-            np.concatenate([source, source]),
-            np.concatenate([source, source]) + n,
-            np.concatenate([target, target]) + 2 * n,
-        ]
-    )
-    cover = np.where(no_summer, 0.0, 1.0)
-    values = np.concatenate([first, -first, second, -second, np.ones(2 * count), cover, cover])
-    values[: 4 * count][np.tile(loops, 4)] = 0.0
-    lowest = np.concatenate([floor, np.where(positive, -1.0, 0.0)])
-    self_floor = np.where(positive, 1.0, 0.0)
-    lowest[np.tile(loops, 2)] = np.tile(self_floor, 2)[np.tile(loops, 2)]
-    matrix = coo_array((values, (rows, columns)), shape=(2 * count, 3 * n)).tocsr()
-    low, high = np.zeros(3 * n), np.ones(3 * n)
-    for name, polarity in fixed.items():
-        low[at[name]] = high[at[name]] = float(polarity < 0)
-    if not fixed:
-        high[0] = 0.0
-    for name in forced:
-        low[n + at[name]] = 1.0
-    cost = np.concatenate([np.zeros(n), np.ones(n), np.full(n, 1.0 + 1e-6)])
-    found = milp(
-        cost,
-        constraints=LinearConstraint(matrix, lowest, np.inf),
-        bounds=Bounds(low, high),
-        integrality=np.ones(3 * n, dtype=np.int64),
-        options={"node_limit": node_limit},
-    )
-    if found.x is None:
-        return None
-    chosen = np.round(found.x).astype(int)
-    bound = found.mip_dual_bound if found.mip_dual_bound is not None else 0.0
-    return Signs(
-        {name: 1 - 2 * int(chosen[i]) for name, i in at.items()},
-        frozenset(name for name, i in at.items() if chosen[n + i]),
-        frozenset(name for name, i in at.items() if chosen[2 * n + i]),
-        max(len(forced), int(np.ceil(bound - 1e-3))),
+    # Where a polarity is dictated, it is tied to +, and so with all others that are.
+    centre = {name: (3 * n, fixed[name]) if name in fixed else (2 * n + i, 1) for name, i in at.items()}
+    edges: list[Edge] = [(vertex + n * part, *centre[name]) for name, vertex in at.items() for part in (0, 1)]
+    for link in links:
+        taken_by, turn = centre[link.target] if link.is_start else (n + at[link.target], 1)
+        edges.append((at[link.source], taken_by, -link.sign * turn))
+    pieces, taken = reduced(edges, frozenset(range(2 * n)))
+    chosen, lower = set(taken), len(taken)
+    for piece in pieces:
+        removed, bound = fewest_removals(piece, node_limit)
+        chosen.update(piece.names[v] for v in removed)
+        lower += bound
+    return (
+        frozenset(nodes[v] for v in chosen if v < n),
+        frozenset(nodes[v - n] for v in chosen if v >= n),
+        lower,
     )
 
 
-def _by_cover(sign: Mapping[str, int], links: Sequence[Link], forced: frozenset[str]) -> Signs:
-    """Fallback for very large patches: polarities of the colouring, greedy cover of the wrong links."""
-    left = [k for k in wrong_links(sign, links) if k.source not in forced]
-    inverted: set[str] = set(forced)
+def _cover(wrong: Sequence[Link]) -> tuple[frozenset[str], frozenset[str]]:
+    """Fewest inverters and summers for links of the wrong sign, inverters where there is a choice.
+
+    A least cover of a bipartite graph is as large as a largest matching (Koenig 1931).
+    """
+    from scipy.sparse import csr_array
+    from scipy.sparse.csgraph import maximum_bipartite_matching
+
+    inverted = {k.source for k in wrong if k.is_start}
+    targets: dict[str, list[str]] = {}
+    for link in wrong:
+        if link.source not in inverted:
+            targets.setdefault(link.source, []).append(link.target)
+    if not targets:
+        return frozenset(inverted), frozenset()
+    names = sorted({t for group in targets.values() for t in group})
+    grid = csr_array([[t in group for t in names] for group in targets.values()], dtype=int)
+    matched = maximum_bipartite_matching(grid, perm_type="column")
+    taker = {names[t]: source for source, t in zip(targets, matched, strict=True) if t >= 0}
+    # What alternating paths reach from the unmatched sources is covered at the targets, the rest at the sources.
+    reached = [source for source, t in zip(targets, matched, strict=True) if t < 0]
     summed: set[str] = set()
-    while left:
-        tally: dict[tuple[str, bool], int] = {}
-        for link in left:
-            tally[link.source, True] = tally.get((link.source, True), 0) + 1
-            if not link.is_start:
-                tally[link.target, False] = tally.get((link.target, False), 0) + 1
-        (name, is_source), _ = max(tally.items(), key=lambda item: (item[1], item[0][1], item[0][0]))
-        (inverted if is_source else summed).add(name)
-        left = [k for k in left if (k.source if is_source else k.target) != name]
-    return Signs(dict(sign), frozenset(inverted), frozenset(summed), max(1, len(forced)))
+    for source in reached:
+        new = [t for t in targets[source] if t not in summed]
+        summed.update(new)
+        reached += [taker[t] for t in new if taker[t] not in reached]
+    return frozenset(inverted | (targets.keys() - set(reached))), frozenset(summed)
