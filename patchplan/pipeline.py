@@ -111,7 +111,9 @@ def plan_with(
     sensitivity = find_sensitivity(form, patch, ranges)
     say("Choosing values")
     speed = build.speed if choices.speed is None else choices.speed
-    sizing = size(form, patch, ranges, sensitivity, target, speed=speed, run=build.run, think=choices.think)
+    sizing = size(
+        form, patch, ranges, sensitivity, target, speed=speed, run=build.run, think=choices.think, accept=accept
+    )
     warnings = (*form.notes, *reach.warnings, *sizing.notes, *_unset_starts(form, build))
     found = Plan(
         problem, system, reach, form, patch, ranges, sensitivity, target, sizing, None,

@@ -16,6 +16,7 @@ from patchplan.reach.curves import extremes
 from patchplan.reach.field import Field, field_of
 from patchplan.reach.free import search_waveforms
 from patchplan.reach.inputs import Inputs, Stored
+from patchplan.reach.length import check_length
 from patchplan.reach.nominal import solve_nominal
 from patchplan.reach.records import Range, Reach, Reference, Run
 from patchplan.reach.search import coarse_grid, first_points, knobs_at, search_box, spread_of_boards
@@ -23,6 +24,8 @@ from patchplan.reach.solve import GrowsWithoutBoundError, grows_without_bound
 
 Array = NDArray[np.float64]
 
+#: A signal beyond this many units is no signal any more.
+_BEYOND = 1e60
 _EXACT = "exact solution of linear equations with known inputs"
 _GAIN = "half the width of each input's bounds times the peak gain over the run, around the response to their middle"
 _BOARDS = "the margin is how far boards with parts within tolerance go beyond the nominal one"
@@ -61,9 +64,10 @@ def find_reach(system: System, stated: Mapping[str, tuple[Fraction, Fraction]], 
     Raises
     ------
     ProblemFaults
-        The solution grows without bound within the run.
+        The solution grows without bound within the run, or the run holds too many cycles.
     """
     numeric = field_of(system)
+    check_length(system, numeric)
     try:
         return _with_stated(_reach(system, numeric, build), stated)
     except GrowsWithoutBoundError as error:
@@ -82,6 +86,8 @@ def _reach(system: System, numeric: Field, build: Build) -> Reach:
     times, values, rates = solve_nominal(system, bound, inputs)
     reference = Reference(numeric.names, times, values, rates, tuple(inputs.edges[1:-1].tolist()), stand_ins)
     nominal = Run(knobs, times, values, rates)
+    if np.abs(values).max(initial=0.0) > _BEYOND:
+        raise GrowsWithoutBoundError(float(times[np.argmax(np.abs(values).max(axis=0) > _BEYOND)]))
     low, high = extremes(times, values, rates)
     ends = _Ends(low, high, "proved", _EXACT)
     if worst is not None:

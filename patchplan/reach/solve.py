@@ -36,6 +36,7 @@ def grows_without_bound(time: float) -> ProblemFaults:
             Fault(
                 f"The solution grows without bound at t = {time:.4g}.",
                 "Shorten the duration, or check signs, parameters and start values.",
+                "duration",
             )
         ]
     )

@@ -38,8 +38,8 @@ SPEED_PLAY = 1.5
 MOST_POINTS = 400
 #: Inverters and start networks load an output by at most one over this of its rated load.
 LIGHT = 4.0
-#: Drift over the run, as a fraction of peak, that is left alone in a free run.
-DRIFT_ALLOWED = 0.01
+#: A start value that comes out this many times too large is a fault, whatever its exact number.
+LEAST_SHARE = 1e-6
 
 
 def size(
@@ -52,6 +52,7 @@ def size(
     speed: str | float = "free",
     run: str = "once",
     think: str = "normal",
+    accept: float = 5.0,
 ) -> Sizing:
     """Choose volts per unit, time scale and all values.
 
@@ -63,6 +64,9 @@ def size(
         "once", "repeat" or "free"; a free run may need DC-limit resistors.
     think
         How many starting points the search takes: low, normal or high.
+    accept
+        Error allowed [% of peak]: a free run gets a DC-limit resistor where its drift exceeds that, and the resistor
+        does less harm than the drift.
     """
     sensitivity = within_horizon(sensitivity, linear=form.system.is_linear)
     unit = float(form.system.time_unit_seconds)
@@ -83,8 +87,9 @@ def size(
         sized, scale = stages[stage.name], scales[stage.node]
         rate = offset_rate(sized, target)
         share, _ = drift_share(stage.name, rate, sensitivity, scale.volts_per_unit, time_scale)
-        if share > DRIFT_ALLOWED:
-            resistor = limit_resistor(sized, target, scale.limit_volts)
+        resistor = limit_resistor(sized, target, scale.limit_volts)
+        leak = np.abs(sensitivity.leak[stage.name]).max(initial=0.0) * time_scale / (resistor * sized.capacitor)
+        if share > accept / 100.0 and leak < share:
             stages[stage.name] = replace(sized, feedback=resistor)
     sizing = Sizing(
         time_scale,
@@ -208,7 +213,7 @@ def _coefficients(patch: Patch, model: Model, values: Values) -> tuple[Coefficie
         stage = by_name[ratio.stage]
         if ratio.kind == "start":
             wanted = float(stage.start)
-            rows.append(Coefficient(f"{stage.node}(0)", wanted, wanted / (1.0 + error)))
+            rows.append(Coefficient(f"{stage.node}(0)", wanted, wanted / max(1.0 + error, LEAST_SHARE)))
         else:
             wire = stage.wires[ratio.wire]
             knob = float(patch.knobs[stage.knob].value) if stage.knob else 1.0

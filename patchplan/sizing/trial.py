@@ -101,7 +101,7 @@ def choose_values(
     best = [_finish(board, y, choices) for _, y, choices in attempts[:3]]
     if len(model.ratios) > SETTLED:
         best.append(choose_large(model, target, comfortable=comfortable or {}))
-    return min(best, key=lambda values: merit(effect, -np.log1p(values.errors)))
+    return min(best, key=lambda values: merit(effect, -np.log1p(np.maximum(values.errors, -1 + 1e-9))))
 
 
 def _count(unknowns: int, think: str) -> int:
