@@ -24,7 +24,7 @@ from patchplan.sizing.drift import (
     slow_modes,
 )
 from patchplan.sizing.faults import find_faults
-from patchplan.sizing.model import Model, build_model
+from patchplan.sizing.model import LEAST_USE, MOST_USE, Model, build_model
 from patchplan.sizing.records import Coefficient, Leg, NodeScale, Sizing, StageSizing, Target
 from patchplan.sizing.search import Effect
 from patchplan.sizing.speed import Speed, choose_speed
@@ -102,7 +102,7 @@ def size(
         find_faults(pace, given, model, values, patch, target),
     )
     notes = _drift_notes(form, patch, ranges, sensitivity, target, sizing)
-    return replace(sizing, notes=(*notes, *_content_notes(sizing, patch, ranges)))
+    return replace(sizing, notes=(*notes, *_content_notes(sizing, patch, ranges), *_use_notes(form, patch, scales)))
 
 
 def _limited_stages(form: Form, patch: Patch, ranges: Ranges) -> tuple[str, ...]:
@@ -238,6 +238,26 @@ def _drift_notes(
         limit = sizing.stages[stage.name].feedback
         notes.append(text + (f"; {engineering(limit, 'Ω')} across its capacitor bounds it." if limit else "."))
     return notes
+
+
+def _use_notes(form: Form, patch: Patch, scales: Mapping[str, NodeScale]) -> list[str]:
+    """Which nodes swing over less than half or more than 95 % of their limit, and what sets them."""
+    why: dict[str, list[str]] = {}
+    for stage in patch.stages:
+        scale = scales[stage.node]
+        use = scale.peak_volts / scale.limit_volts
+        if stage.kind == "reference" or LEAST_USE - 1e-6 <= use <= MOST_USE + 1e-6 or not scale.peak_volts:
+            continue
+        if stage.signal in form.scales:
+            cause = "dictated by a terminal"
+        elif stage.kind == "multiplier":
+            cause = "products, set by their factors"
+        elif stage.kind == "inverter":
+            cause = "inverters, set by what they invert"
+        else:
+            cause = "switched from the reference" if stage.kind == "source" else "the values leave no better"
+        why.setdefault(cause, []).append(f"{stage.node} {100 * use:.0f} %")
+    return [f"Outside 50 to 95 % of the limit, {cause}: {', '.join(nodes)}." for cause, nodes in why.items()]
 
 
 def _content_notes(sizing: Sizing, patch: Patch, ranges: Ranges) -> list[str]:
