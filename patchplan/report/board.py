@@ -15,13 +15,26 @@ def board_of(plan: Plan) -> tuple[Mapping[str, float], str]:
     """Volts of every net at the start of the run, and circuit.cir; for a plan that was built."""
     assert plan.circuit is not None
     start = hold_state(plan.circuit, plan.reach.reference.waveforms)
-    step = largest_step(plan.circuit.duration, board_rate(plan))
+    step = largest_step(plan.circuit.duration, board_rate(plan), speed_gain(plan))
     return start, spice_text(plan.circuit, start, max_step=step, title=plan.problem.title)
 
 
 def board_rate(plan: Plan) -> float:
     """Rate of the states over the run that the simulator's largest step is set by [rad/s of circuit time]."""
     ranges = plan.ranges
-    nodes = [s.node for s in plan.patch.stages if s.kind == "integrator" and ranges.nodes[s.node].peak > 0]
-    rates = np.array([ranges.rates[n] / ranges.nodes[n].peak for n in nodes]).reshape(len(nodes), len(ranges.times))
+    # Half the swing, not the peak: a signal far from zero oscillates as fast as one around it.
+    swings = {s.node: np.ptp(ranges.values[s.node]) / 2 for s in plan.patch.stages if s.kind == "integrator"}
+    nodes = [node for node, swing in swings.items() if swing > 0]
+    rates = np.array([ranges.rates[n] / swings[n] for n in nodes]).reshape(len(nodes), len(ranges.times))
     return lasting_rate(ranges.times, np.nan_to_num(rates, posinf=0.0, neginf=0.0)) / plan.sizing.time_scale
+
+
+def speed_gain(plan: Plan) -> float:
+    """Largest move of a watched signal, of its base, per relative change of all integrators' gains."""
+    found = plan.sensitivity
+    integrators = {s.name for s in plan.patch.stages if s.kind == "integrator"}
+    wires = [i for i, (stage, _) in enumerate(found.wires) if stage in integrators]
+    horizon = plan.verdict.horizon
+    within = found.times <= (np.inf if horizon is None else horizon)
+    moves = np.abs(found.coefficient[:, wires][..., within]).sum(axis=1)
+    return float(moves.max(initial=0.0))
