@@ -120,7 +120,11 @@ def made_of(plan: Plan) -> str:
     counts, patch = plan.patch.counts(), plan.patch
     pieces = [counted(counts.get(kind, 0), kind) for kind in ("integrator", "summer", "inverter", "multiplier")]
     if patch.sign_stages and patch.sign_stages <= patch.sign_stages_lower_bound:
-        pieces[2] += " (fewest possible)"
+        summing = sum(s.signal.startswith("part of ") for s in patch.stages)
+        if counts.get("inverter", 0):
+            pieces[2] += " (fewest possible)"
+        elif summing:
+            pieces[1] += f" ({summing} for signs, fewest possible)"
     sentence = ", ".join(p for p in pieces if not p.startswith("no ") or p.endswith("multiplier"))
     if plan.circuit is None:
         return sentence + "."
