@@ -119,7 +119,8 @@ def _with_free_offsets(form: Form, reach: Reach) -> tuple[Form, list[str]]:
         if gain > LEAST_GAIN + max(added, 0):
             form = replace(form, system=trial, offsets={**form.offsets, state.name: offset})
             notes.append(
-                f"{state.name} is carried as {state.name} - {float(offset):.6g}: {gain:.3g} times the headroom "
+                f"{state.name} is carried as {state.name} {'-' if offset > 0 else '+'} {abs(float(offset)):.6g}: "
+                f"{gain:.3g} times the headroom "
                 f"for {max(added, 0)} more reference wire{'s' if added != 1 else ''}."
             )
     return form, notes

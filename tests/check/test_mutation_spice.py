@@ -47,9 +47,10 @@ def resistors_swapped(circuit: Circuit) -> Circuit:
     return swap(circuit, legs[0], legs[-1])
 
 
-def capacitors_swapped(circuit: Circuit) -> Circuit:
-    one, other = (p for p in circuit.parts if p.kind == "capacitor")
-    return swap(circuit, one, other)
+def capacitor_mistaken(circuit: Circuit) -> Circuit:
+    """The next value of E6 but one, as a hand in the wrong box takes it: two good ones may be alike."""
+    one = next(p for p in circuit.parts if p.kind == "capacitor")
+    return replace_part(circuit, one.ref, value=2.2 * one.value)
 
 
 def start_resistors_swapped(circuit: Circuit) -> Circuit:
@@ -92,7 +93,7 @@ def spice_of(plan: Plan, circuit: Circuit) -> tuple[dict[str, Array], Array]:
 
 
 @pytest.mark.parametrize(
-    "mutation", [unchanged, resistors_swapped, capacitors_swapped, start_resistors_swapped, wire_cut, factor_flipped]
+    "mutation", [unchanged, resistors_swapped, capacitor_mistaken, start_resistors_swapped, wire_cut, factor_flipped]
 )
 def test_check_and_spice_see_the_same_board(plan: Plan, mutation: Mutation) -> None:
     """Equal within 0.5 % of peak at every node, and far from the good board wherever there is a fault."""
@@ -104,7 +105,8 @@ def test_check_and_spice_see_the_same_board(plan: Plan, mutation: Mutation) -> N
     for net, own in verdict.volts.items():
         peak = float(np.abs(own).max())
         seen = np.interp(verdict.times, seconds, volts[net])
-        assert np.abs(seen - own).max() <= 0.005 * peak, net
+        # A node that a cut wire leaves within a millivolt of ground shows nothing but bias currents.
+        assert np.abs(seen - own).max() <= max(0.005 * peak, 1e-3), net
         good = plan.verdict.volts[net][: len(own)]
         apart = max(apart, float(np.abs(seen - good).max() / np.abs(good).max()))
     if mutation is unchanged:
