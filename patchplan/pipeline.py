@@ -10,7 +10,7 @@ from patchplan.check.records import Verdict
 from patchplan.circuit.build import build_circuit
 from patchplan.circuit.catalogue import load_catalogue
 from patchplan.circuit.switched import with_references
-from patchplan.circuit.target import target_of
+from patchplan.circuit.target import check_multiplier, target_of
 from patchplan.equation.explicit import build_system, system_of
 from patchplan.equation.faults import rendered
 from patchplan.equation.problem import Build, Problem
@@ -107,6 +107,8 @@ def plan_with(
     )
     say("Drawing the patch")
     patch = build_patch(form, hold=build.run != "free", node_limit=SIGN_NODES[choices.think])
+    if patch.counts().get("multiplier"):
+        check_multiplier(build, catalogue)
     ranges = find_ranges(patch, form, reach)
     sensitivity = find_sensitivity(form, patch, ranges)
     say("Choosing values")

@@ -31,8 +31,10 @@ Array = NDArray[np.float64]
 ATTEMPTS = {"low": (20, 2e-3), "normal": (250, 5e-4), "high": (2000, 5e-5)}
 #: How far a value may lie from the wanted one at the start of an attempt, in logs: three steps of E24.
 WIDTH = 0.3
-#: The same for capacitors: two steps of E6, and the most values of one start ratio that a menu holds.
+#: The same for capacitors and for the feedback of summers (steps of E6 and E24), and the most values of one start ratio
+#: that a menu holds.
 CAPACITOR_WIDTH = 0.9
+FEEDBACK_WIDTH = 0.6
 MOST_NEAR = 16
 #: Boards with more ratios than this take only the search that grows no faster than the board.
 LARGE = 40
@@ -153,20 +155,20 @@ def _choices(board: _Board, wanted: Array, picked: dict[tuple[str, int | str], f
 
 
 def _menu(board: _Board, choices: list[Choice], centre: Array) -> Menu:
-    """Moves of an attempt: near values of each resistor and start ratio; capacitors take their resistors along."""
+    """Moves of an attempt: near values of resistors and start ratios; capacitors, feedbacks take their legs along."""
     names = board.unknowns.names
     moves: list[dict[int, float]] = []
     for column, ((stage, what), choice) in enumerate(zip(names, choices, strict=True)):
-        if what == "C":
+        if what == "C" or what == "Rf":
             legs = [c for c, (s, w) in enumerate(names) if s == stage and isinstance(w, int) and w >= 0]
-            near = choice.logs[choice.near(float(centre[column]), CAPACITOR_WIDTH)]
+            width = CAPACITOR_WIDTH if what == "C" else FEEDBACK_WIDTH
+            near = choice.logs[choice.near(float(centre[column]), width)]
             for value in near[np.abs(near - centre[column]) > 1e-9]:
-                wanted = centre[legs] + centre[column] - value
-                nearest = [
-                    choices[c].logs[np.argmin(np.abs(choices[c].logs - w))] for c, w in zip(legs, wanted, strict=True)
-                ]
+                # R times C and R over Rf stay: resistors fall where the capacitor grows, and grow with the feedback.
+                shift = (centre[column] - value) * (1 if what == "C" else -1)
+                nearest = [choices[c].logs[np.argmin(np.abs(choices[c].logs - centre[c] - shift))] for c in legs]
                 moves.append({column: float(value), **dict(zip(legs, map(float, nearest), strict=True))})
-        elif what != "Rf":
+        else:
             near = choice.logs[choice.near(float(centre[column]), WIDTH)]
             near = near[np.argsort(np.abs(near - centre[column]), kind="stable")[:MOST_NEAR]]
             moves += [{column: float(value)} for value in near]
