@@ -101,7 +101,7 @@ def size(
         tuple(float(e) for e in values.loop_errors),
         find_faults(pace, given, model, values, patch, target),
     )
-    notes = _drift_notes(form, patch, ranges, sensitivity, target, sizing)
+    notes = [*_speed_notes(pace, given), *_drift_notes(form, patch, ranges, sensitivity, target, sizing)]
     return replace(sizing, notes=(*notes, *_content_notes(sizing, patch, ranges), *_use_notes(form, patch, scales)))
 
 
@@ -238,6 +238,18 @@ def _drift_notes(
         limit = sizing.stages[stage.name].feedback
         notes.append(text + (f"; {engineering(limit, 'Ω')} across its capacitor bounds it." if limit else "."))
     return notes
+
+
+def _speed_notes(pace: Speed, given: float | None) -> list[str]:
+    """What a speed outside the window runs into."""
+    low, high = pace.window
+    if given is None or low <= given <= high:
+        return []
+    limit, end = (pace.limits[0], low) if given < low else (pace.limits[1], high)
+    return [
+        f"The speed asked for, {engineering(given, 's')} per unit of time, lies outside the window: {limit} sets "
+        f"{engineering(end, 's')}."
+    ]
 
 
 def _use_notes(form: Form, patch: Patch, scales: Mapping[str, NodeScale]) -> list[str]:

@@ -204,3 +204,11 @@ def test_content_below_the_dc_limit_decade_is_told():
     fast = system({"x": 0}, {"x": [term(-1, "u")]}, sources=[source("u", "cos(200*t)")], duration=10)
     _, _, sizing = sized(fast, build=Build(run="free"))
     assert not any("of its content below" in note for note in sizing.notes)
+
+
+def test_a_speed_outside_the_window_is_told():
+    _, _, sizing = sized(van_der_pol(), speed=1e5)
+    assert any(
+        n.startswith("The speed asked for, 10 µs per unit of time, lies outside the window") for n in sizing.notes
+    )
+    assert not any("outside the window" in n for n in sized(van_der_pol(), speed=100.0)[2].notes)
