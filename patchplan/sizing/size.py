@@ -72,10 +72,7 @@ def size(
     unit = float(form.system.time_unit_seconds)
     given = None if speed == "free" else unit if speed == "real time" else unit / float(speed)
     pace = choose_speed(form, patch, ranges, sensitivity, target, given=given)
-    bounds = (pace.chosen, pace.chosen)
-    if given is None:
-        bounds = max(pace.window[0], pace.chosen / SPEED_PLAY), min(pace.window[1], pace.chosen * SPEED_PLAY)
-        bounds = bounds if bounds[0] < bounds[1] else (pace.chosen, pace.chosen)
+    bounds = _speed_bounds(pace, given)
     limited = _limited_stages(form, patch, ranges) if run == "free" else ()
     model = build_model(form, patch, ranges, target, bounds, _weights(patch, sensitivity))
     effect = _effect(model, patch, sensitivity, pace)
@@ -85,12 +82,7 @@ def size(
     stages = {s.name: _stage(s, patch, target, model, values, scales) for s in patch.stages}
     for stage in (s for s in patch.stages if s.name in limited):
         sized, scale = stages[stage.name], scales[stage.node]
-        rate = offset_rate(sized, target)
-        share, _ = drift_share(stage.name, rate, sensitivity, scale.volts_per_unit, time_scale)
-        resistor = limit_resistor(sized, target, scale.limit_volts)
-        leak = np.abs(sensitivity.leak[stage.name]).max(initial=0.0) * time_scale / (resistor * sized.capacitor)
-        if share > accept / 100.0 and leak < share:
-            stages[stage.name] = replace(sized, feedback=resistor)
+        stages[stage.name] = _dc_limit(stage, sized, scale, sensitivity, target, time_scale, accept / 100.0)
     sizing = Sizing(
         time_scale,
         pace.window,
@@ -103,6 +95,32 @@ def size(
     )
     notes = [*_speed_notes(pace, given), *_drift_notes(form, patch, ranges, sensitivity, target, sizing)]
     return replace(sizing, notes=(*notes, *_content_notes(sizing, patch, ranges), *_use_notes(form, patch, scales)))
+
+
+def _speed_bounds(pace: Speed, given: float | None) -> tuple[float, float]:
+    """Time scales that the search may take: the one given, or a little around the one chosen."""
+    if given is None:
+        low, high = max(pace.window[0], pace.chosen / SPEED_PLAY), min(pace.window[1], pace.chosen * SPEED_PLAY)
+        if low < high:
+            return low, high
+    return pace.chosen, pace.chosen
+
+
+def _dc_limit(
+    stage: Stage,
+    sized: StageSizing,
+    scale: NodeScale,
+    sensitivity: Sensitivity,
+    target: Target,
+    time_scale: float,
+    allowed: float,
+) -> StageSizing:
+    """The stage with a DC-limit resistor where its drift exceeds what is allowed and the resistor does less harm."""
+    rate = offset_rate(sized, target)
+    share, _ = drift_share(stage.name, rate, sensitivity, scale.volts_per_unit, time_scale)
+    resistor = limit_resistor(sized, target, scale.limit_volts)
+    leak = np.abs(sensitivity.leak[stage.name]).max(initial=0.0) * time_scale / (resistor * sized.capacitor)
+    return replace(sized, feedback=resistor) if allowed < share and leak < share else sized
 
 
 def _limited_stages(form: Form, patch: Patch, ranges: Ranges) -> tuple[str, ...]:
