@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import pytest
 
+from patchplan.check.start import hold_state
 from patchplan.equation.reader import read_problem
 from patchplan.pipeline import Choices, plan, plan_with
 from patchplan.report.write import write_plan
@@ -73,6 +74,9 @@ def test_overload_at_a_terminal_asks_for_fewer_volts():
     found = plan(read_problem(OSCILLATOR + "[terminals]\nx = { volts_per_unit = 30 }\n"))
     assert found.verdict.verdict == "overload"
     assert remedies(found)[0] == "Ask for fewer volts per unit at the terminal of x."
+    # 30 V are asked for at the start: the output stands at its swing of 12 V, a soft edge of slew/K = 0.69 V beyond it.
+    assert found.circuit is not None
+    assert max(abs(v) for v in hold_state(found.circuit).values()) < 12.75
 
 
 def test_a_signal_that_jumps_is_named():

@@ -114,7 +114,8 @@ class Model:
         Notes
         -----
         Pseudo-transient continuation (Kelley and Keyes 1998): one implicit Euler step of each length, so that the point
-        found is one that the board itself would settle to. Slew limits play no part in a point of rest.
+        found is one that the board itself would settle to. Slew limits play no part in a point of rest, unless an
+        output stands at its swing: there the drive is all that a limit leaves of it.
         """
         state, push = state.copy(), self.push(inputs)
         free = np.flatnonzero(~held)
@@ -124,6 +125,11 @@ class Model:
             rate = self.rates(state, push, slewing=False)[free]
             slope = self.jacobian(state, push, slewing=False)
             state[free] += self._implicit(slope, free, rate, float(step))
+        poles, net = state[self.poles], self.network
+        if np.any((poles < net.low) | (poles > net.high)):
+            for step in (*_REST_STEPS, *[_REST_STEPS[-1]] * _REST_AGAIN):
+                rate = self.rates(state, push)[free]
+                state[free] += self._implicit(self.jacobian(state, push), free, rate, float(step))
         return state
 
     def _implicit(self, slope: Matrix, free: NDArray[np.int_], rate: Array, step: float) -> Array:
