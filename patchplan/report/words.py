@@ -43,7 +43,7 @@ def headline(plan: Plan) -> str:
         return f"Does not work: {_list([n.node for n in verdict.nodes if not n.ok])} would leave the linear range."
     if verdict.verdict == "inaccurate":
         return f"Does not follow the equation closely enough: the error reaches {largest} of peak."
-    within = f"Follows the equation within {largest} of peak"
+    within = f"Follows the equation within {largest.removeprefix('below ')} of peak"
     if verdict.horizon is not None:
         unit = plan.system.time_unit
         within += f" up to {plain(verdict.horizon)} {unit}, as far as a chaotic system can be followed"
