@@ -80,8 +80,8 @@ def choose_signs(
     forced
         Nodes needed in both polarities in any case.
     node_limit
-        Branch-and-bound nodes before the search stops with a gap; patches of more than about 50 nodes, where one of
-        them costs more, get fewer.
+        Branch-and-bound nodes before the search stops with a gap, for about 65 nodes with polarities; fewer of them,
+        where one costs less, get more, and more get fewer.
     """
     forced = frozenset(forced)
     links = sorted(set(links), key=lambda x: (x.target, x.source, x.sign, x.is_start))

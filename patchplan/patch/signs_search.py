@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable
 from math import ceil
 from random import Random
 
@@ -12,14 +11,16 @@ from patchplan.patch.signs_cycles import Cycle, cycle_bound, matrix, packing, po
 from patchplan.patch.signs_graph import SignedGraph
 
 _HEAVY = 10**6
-#: Steps of one local search, at most and per vertex; starts of it.
-_STEPS, _STEPS_EACH, _STARTS = 10_000, 200, 3
+#: Steps of one local search at most, and starts of it.
+_STEPS, _STARTS = 10_000, 3
 #: Vertex visits of all rounds of cutting planes, which bounds the work on large graphs.
 _CUT_VISITS = 20_000
-#: Graphs up to this size get all nodes of the limit; a node of a larger one costs more, so it gets fewer.
-_FULL_SIZE = 100
-#: How often the graph is mended for the first pool of cycles, and after each answer.
-_FIRST_POOL, _NEXT_POOL = 10, 5
+#: Size of the graph for which the limit of nodes is meant; a larger one, where a node costs more, gets fewer, and a
+#: smaller one more, but not more than this factor.
+_USUAL_SIZE, _MOST_NODES = 130, 10
+#: How often the graph is mended for the first pool of cycles: vertices for each time, and their square times that at
+#: most. A large pool spares branches, until the program itself gets slow.
+_POOL_EACH, _POOL_WORK = 4, 200_000
 
 
 def fewest_removals(graph: SignedGraph, node_limit: int) -> tuple[frozenset[int], int]:
@@ -30,15 +31,18 @@ def fewest_removals(graph: SignedGraph, node_limit: int) -> tuple[frozenset[int]
     graph
         A connected piece.
     node_limit
-        Branch-and-bound nodes, for graphs of up to a hundred vertices.
+        Branch-and-bound nodes for a graph of 130 vertices; smaller ones get more, larger ones fewer.
     """
     cycles = violated(graph, np.zeros(graph.size))
     lower = packing(cycles)
-    best = _local_search(graph, lower)
+    best = _search(graph, 0, lower)
     if len(best) > lower:
         rounds = max(5, _CUT_VISITS // graph.size)
         lower = max(lower, _up(cycle_bound(graph, cycles, rounds)))
-    nodes = int(node_limit * min(1.0, (_FULL_SIZE / graph.size) ** 4))
+    for seed in range(1, _STARTS):
+        if len(best) > lower:
+            best = min(best, _search(graph, seed, lower), key=len)
+    nodes = int(node_limit * min(_MOST_NODES, (_USUAL_SIZE / graph.size) ** 6))
     return _branch(graph, cycles, best, lower, nodes)
 
 
@@ -47,14 +51,9 @@ def _up(bound: float) -> int:
     return ceil(bound - 1e-3)
 
 
-def _local_search(graph: SignedGraph, goal: int) -> frozenset[int]:
-    """Best of a few runs of a tabu search."""
-    best: frozenset[int] = frozenset(np.flatnonzero(graph.removable).tolist())
-    for seed in range(_STARTS):
-        best = min(best, _Search(graph, seed).run(min(_STEPS, _STEPS_EACH * graph.size), goal), key=len)
-        if len(best) <= goal:
-            break
-    return best
+def _search(graph: SignedGraph, seed: int, goal: int) -> frozenset[int]:
+    """Best of one run of the local search."""
+    return _Search(graph, seed).run(min(_STEPS, graph.size**2), goal)
 
 
 class _Search:
@@ -128,52 +127,44 @@ class _Search:
 def _branch(
     graph: SignedGraph, cycles: list[Cycle], best: frozenset[int], lower: int, nodes: int
 ) -> tuple[frozenset[int], int]:
-    """Exact 0/1 program over the cycles, which grow by those that its answers leave, until the bounds meet."""
+    """Ask for a smaller set that meets every cycle known, add the cycles it leaves, and again, until there is none."""
     random = np.random.default_rng(0)
+    repeats = min(graph.size // _POOL_EACH, _POOL_WORK // graph.size**2 + 1)
     if lower < len(best) and nodes:
-        cycles = list(dict.fromkeys([*cycles, *pool(graph, np.zeros(graph.size), random, _FIRST_POOL)]))
+        cycles = list(dict.fromkeys([*cycles, *pool(graph, np.zeros(graph.size), random, repeats)]))
     least_nodes = max(1, nodes // 50)
     while lower < len(best) and nodes > 0:
-        taken, bound, used = _program(graph.size, cycles, lower, len(best), nodes)
-        nodes -= max(used, least_nodes)
-        lower = max(lower, min(bound, len(best)))
+        taken, used = _program(graph.size, cycles, lower, len(best) - 1, nodes)
         if taken is None:
-            break
-        left = pool(graph, _indicator(taken, graph.size), random, _NEXT_POOL)
+            return best, len(best) if used < nodes else lower
+        nodes -= max(used, least_nodes)
+        chosen = np.zeros(graph.size)
+        chosen[list(taken)] = 1
+        left = pool(graph, chosen, random, repeats // 2 + 1)
         if not left:
             best = taken
         cycles += left
     return best, lower
 
 
-def _indicator(taken: Iterable[int], size: int) -> np.ndarray[tuple[int], np.dtype[np.float64]]:
-    chosen = np.zeros(size)
-    chosen[list(taken)] = 1
-    return chosen
+def _program(size: int, cycles: list[Cycle], lower: int, upper: int, nodes: int) -> tuple[frozenset[int] | None, int]:
+    """A set of a size within bounds that meets every cycle, or None, and the nodes used; all of them if undecided.
 
-
-def _program(
-    size: int, cycles: list[Cycle], lower: int, upper: int, nodes: int
-) -> tuple[frozenset[int] | None, int, int]:
-    """A set smaller than ``upper`` that meets every cycle, or None; a lower bound; nodes used.
-
-    The last column stands for the set already known, so that there is always an answer, and with it a bound.
+    Nothing is minimised: whether there is a set so small at all takes HiGHS less time to decide.
     """
     from scipy.optimize import Bounds, LinearConstraint, milp
 
-    rows = matrix([(*c, size) for c in cycles], size + 1)
-    count = np.ones((1, size + 1))
-    count[0, size] = upper - 1
-    cost = np.ones(size + 1)
-    cost[size] = upper
     found = milp(
-        cost,
-        constraints=[LinearConstraint(rows, 1, np.inf), LinearConstraint(count, lower, upper - 1)],
+        np.zeros(size),
+        constraints=[
+            LinearConstraint(matrix(cycles, size), 1, np.inf),
+            LinearConstraint(np.ones((1, size)), lower, upper),
+        ],
         bounds=Bounds(0, 1),
-        integrality=np.ones(size + 1, dtype=np.int64),
+        integrality=np.ones(size, dtype=np.int64),
         options={"node_limit": nodes},
     )
     if found.x is None:
-        return None, lower, nodes
-    chosen = frozenset(np.flatnonzero(found.x > 0.5).tolist())
-    return (None if size in chosen else chosen), _up(found.mip_dual_bound), int(found.mip_node_count)
+        infeasible = found.status == 2
+        return None, 0 if infeasible else nodes
+    return frozenset(np.flatnonzero(found.x > 0.5).tolist()), int(found.mip_node_count or 0)
