@@ -18,6 +18,8 @@ _CUT_VISITS = 20_000
 #: Size of the graph for which the limit of nodes is meant; a larger one, where a node costs more, gets fewer, and a
 #: smaller one more, but not more than this factor.
 _USUAL_SIZE, _MOST_NODES = 130, 10
+#: With fewer nodes than this the branching is not begun: its preparation costs as much.
+_LEAST_NODES = 100
 #: How often the graph is mended for the first pool of cycles: vertices for each time, and their square times that at
 #: most. A large pool spares branches, until the program itself gets slow.
 _POOL_EACH, _POOL_WORK = 4, 200_000
@@ -42,8 +44,8 @@ def fewest_removals(graph: SignedGraph, node_limit: int) -> tuple[frozenset[int]
     for seed in range(1, _STARTS):
         if len(best) > lower:
             best = min(best, _search(graph, seed, lower), key=len)
-    nodes = int(node_limit * min(_MOST_NODES, (_USUAL_SIZE / graph.size) ** 6))
-    return _branch(graph, cycles, best, lower, nodes)
+    nodes = int(node_limit * min(_MOST_NODES, (_USUAL_SIZE / graph.size) ** 8))
+    return _branch(graph, cycles, best, lower, nodes) if nodes >= _LEAST_NODES and len(best) > lower else (best, lower)
 
 
 def _up(bound: float) -> int:
@@ -130,8 +132,7 @@ def _branch(
     """Ask for a smaller set that meets every cycle known, add the cycles it leaves, and again, until there is none."""
     random = np.random.default_rng(0)
     repeats = min(graph.size // _POOL_EACH, _POOL_WORK // graph.size**2 + 1)
-    if lower < len(best) and nodes:
-        cycles = list(dict.fromkeys([*cycles, *pool(graph, np.zeros(graph.size), random, repeats)]))
+    cycles = list(dict.fromkeys([*cycles, *pool(graph, np.zeros(graph.size), random, repeats)]))
     least_nodes = max(1, nodes // 50)
     while lower < len(best) and nodes > 0:
         taken, used = _program(graph.size, cycles, lower, len(best) - 1, nodes)

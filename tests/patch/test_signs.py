@@ -12,40 +12,63 @@ from scipy.sparse.csgraph import maximum_bipartite_matching
 from patchplan.form.records import Form
 from patchplan.patch.build import build_patch
 from patchplan.patch.signs import Link, choose_signs, wrong_links
+from tests.patch.random_links import three_a_row
 from tests.systems import companion
 
 
-def brute_force(names: list[str], links: list[Link]) -> int:
+def brute_force(names: list[str], links: list[Link], fixed: dict[str, int], forced: set[str]) -> int:
     """Least cover over all polarities: a bipartite cover is as large as the largest matching (Koenig 1931)."""
-    best = len(links)
+    best = 2 * len(names)
     at = {n: i for i, n in enumerate(names)}
-    for signs in product((1, -1), repeat=len(names) - 1):
-        sign = dict(zip(names, (1, *signs), strict=True))
-        wrong = wrong_links(sign, links)
+    free = [n for n in names if n not in fixed]
+    for signs in product((1, -1), repeat=len(free)):
+        wrong = wrong_links({**fixed, **dict(zip(free, signs, strict=True))}, links)
+        inverted = forced | {k.source for k in wrong if k.is_start}
         grid = np.zeros((len(names), len(names)))
         for link in wrong:
-            grid[at[link.source], at[link.target]] = 1
+            if link.source not in inverted:
+                grid[at[link.source], at[link.target]] = 1
         matched = maximum_bipartite_matching(csr_array(grid), perm_type="column")
-        best = min(best, int((matched >= 0).sum()))
+        best = min(best, len(inverted) + int((matched >= 0).sum()))
     return best
 
 
-@pytest.mark.parametrize("seed", range(12))
-def test_against_brute_force(seed):
+def random_case(seed: int) -> tuple[list[str], list[Link], dict[str, int], set[str]]:
+    """Up to nine nodes; a quarter of the seeds without dictated polarities, half with forced inverters, some starts."""
     random = np.random.default_rng(seed)
-    count = int(random.integers(3, 9))
-    names = [f"x{i}" for i in range(count)]
-    pairs = {(int(i), int(j)) for i in range(count) for j in random.integers(0, count, 3)}
-    links = [Link(names[i], names[j], int(random.choice([-1, 1]))) for i, j in sorted(pairs)]
-    found = choose_signs(names, links, {})
-    assert len(found.inverted) + len(found.summed) == found.lower_bound == brute_force(names, links)
-    left = [
-        k for k in wrong_links(found.sign, links) if k.source not in found.inverted and k.target not in found.summed
-    ]
-    assert not left
+    names = [f"x{i}" for i in range(int(random.integers(2, 10)))]
+    pairs = {(t, str(s)) for t in names for s in random.choice(names, int(random.integers(1, 5)))}
+    links = [Link(t, s, int(random.choice([-1, 1]))) for t, s in sorted(pairs)]
+    fixed: dict[str, int] = {}
+    forced: set[str] = set()
+    if seed % 4:
+        fixed = {n: int(random.choice([-1, 1])) for n in names if random.random() < 0.3}
+    if seed % 4 >= 2:
+        forced = {n for n in names if random.random() < 0.15}
+    if seed % 4 == 3:
+        fixed["x0"] = 1
+        links += [Link(n, "x0", int(random.choice([-1, 1])), True) for n in names[1:] if random.random() < 0.5]
+    return names, links, fixed, forced
 
 
-@pytest.mark.parametrize("order", [2, 3, 6, 9])
+@pytest.mark.parametrize("seed", range(60))
+def test_against_brute_force(seed):
+    names, links, fixed, forced = random_case(seed)
+    found = choose_signs(names, links, fixed, forced)
+    assert found.count == found.lower_bound == brute_force(names, links, fixed, forced)
+    assert found.proved
+    assert found.inverted >= forced
+    assert {n: found.sign[n] for n in fixed} == fixed
+    assert not uncovered(links, found)
+
+
+def uncovered(links, found):
+    """Wrong links without a sign stage."""
+    wrong = wrong_links(found.sign, links)
+    return [k for k in wrong if k.source not in found.inverted and (k.is_start or k.target not in found.summed)]
+
+
+@pytest.mark.parametrize("order", [2, 3, 6, 9, 40])
 def test_companion_form_needs_one(order):
     patch = build_patch(Form(companion(order)))
     assert patch.sign_stages == patch.sign_stages_lower_bound == 1
@@ -55,3 +78,43 @@ def test_dictated_polarity_is_kept():
     found = choose_signs(["a", "b"], [Link("a", "b", 1)], {"a": 1, "b": 1})
     assert found.sign == {"a": 1, "b": 1}
     assert found.lower_bound == 1
+
+
+def test_dictated_polarity_reaches_nodes_named_before_it():
+    found = choose_signs(["a", "b"], [Link("b", "a", 1)], {"b": 1})
+    assert found.sign == {"a": -1, "b": 1}
+    assert found.count == 0
+
+
+def test_inverter_wins_over_summer_among_equals():
+    found = choose_signs(["a", "b"], [Link("a", "b", 1)], {"a": 1, "b": 1})
+    assert (found.inverted, found.summed) == ({"b"}, set())
+
+
+def test_ring_of_integrators_needs_one_however_long():
+    """An odd number of inverting stages in a ring turns the sign once too often or not at all."""
+    names = [f"x{i}" for i in range(301)]
+    links = [Link(b, a, 1) for a, b in zip(names, names[1:] + names[:1], strict=True)]
+    found = choose_signs(names, links, {})
+    assert found.count == found.lower_bound == 1
+
+
+@pytest.mark.parametrize("seed", range(4))
+def test_medium_random_systems_are_proved(seed):
+    names, links = three_a_row(20, seed)
+    found = choose_signs(names, links, {})
+    assert found.proved
+    assert not uncovered(links, found)
+
+
+def test_search_that_stops_early_states_a_gap():
+    names, links = three_a_row(50, 0)
+    found = choose_signs(names, links, {}, node_limit=0)
+    assert 0 < found.lower_bound < found.count < 1.5 * found.lower_bound
+    assert not found.proved
+    assert not uncovered(links, found)
+
+
+def test_same_input_gives_the_same_plan():
+    names, links = three_a_row(20, 6)
+    assert choose_signs(names, links, {}) == choose_signs(names, links[::-1], {})
