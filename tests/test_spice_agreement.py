@@ -30,6 +30,7 @@ PLANS = {
     "oven": "an offset, a square wave",
     "thermal_rc_chain_10": "ten states",
     "motor_speed_loop": "real time, terminals",
+    "tank_real_time": "two hours of circuit time, networks of three resistors",
     "integrator": "free-running, DC-limit resistor",
     "two_mass_drive": "steps and pulses from the reference, an algebraic signal",
 }

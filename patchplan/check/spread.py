@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 from patchplan.circuit.switched import switched_volts
 from patchplan.patch.records import Patch, Stage
 from patchplan.sensitivity import Sensitivity
-from patchplan.sizing.records import Leg, Sizing, StageSizing, Target
+from patchplan.sizing.records import Sizing, StageSizing, Target
 
 Array = NDArray[np.float64]
 
@@ -49,7 +49,7 @@ def spread_of(sensitivity: Sensitivity, patch: Patch, sizing: Sizing, target: Ta
             continue
         sized = sizing.stages[stage.name]
         for leg, response in zip(sized.legs, own, strict=False):
-            columns["resistors"].append(resistor * _leg_factor(leg) * response)
+            columns["resistors"].append(resistor * leg.spread * response)
         shared = np.sum(own, axis=0) if own else np.zeros_like(rate)
         if stage.kind == "integrator":
             columns["capacitors"].append(capacitor * shared)
@@ -100,18 +100,9 @@ def _through(sensitivity: Sensitivity, patch: Patch, wires: dict[tuple[str, int]
     return total
 
 
-def _leg_factor(leg: Leg) -> float:
-    """Relative change of a leg's transfer per relative change of its resistors, root sum of squares."""
-    if len(leg.resistors) == 1:
-        return 1.0
-    first, shunt, last = leg.resistors
-    cross = first * last / shunt
-    return sqrt((first + cross) ** 2 + cross**2 + (last + cross) ** 2) / leg.transfer
-
-
 def _offset_gain(stage: Stage, sized: StageSizing, time_scale: float) -> float:
     """Volts at the output, or volts per unit of problem time of an integrator, for one volt of offset."""
-    conductance = sum(_into(leg) for leg in sized.legs)
+    conductance = sum(1.0 / leg.into for leg in sized.legs)
     if stage.kind == "integrator":
         feedback = 1.0 / sized.feedback if sized.feedback else 0.0
         return (conductance + feedback) / sized.capacitor * time_scale
@@ -127,11 +118,3 @@ def _leaked(times: Array, stage: Stage, sized: StageSizing, time_scale: float) -
         return np.ones(len(times))
     x = np.maximum(times * time_scale / (sized.feedback * sized.capacitor), 1e-12)
     return np.asarray(-np.expm1(-x) / x)
-
-
-def _into(leg: Leg) -> float:
-    """Conductance that the summing node sees into a leg, its source at ground [S]."""
-    if len(leg.resistors) == 1:
-        return 1.0 / leg.resistors[0]
-    first, shunt, last = leg.resistors
-    return 1.0 / (last + first * shunt / (first + shunt))

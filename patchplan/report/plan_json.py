@@ -14,7 +14,7 @@ from patchplan.equation.problem import Problem
 from patchplan.patch.records import Patch, Stage
 from patchplan.report.codec import decode, encode, rounded
 from patchplan.report.records import Plan
-from patchplan.sizing.records import Leg, Sizing, StageSizing
+from patchplan.sizing.records import Sizing, StageSizing
 from patchplan.version import __version__
 
 CONTRACT = 1
@@ -146,19 +146,11 @@ def transfer_gains(plan: Plan, stage: Stage) -> tuple[float, ...]:
         return (sign / plan.target.multiplier.scale,) * len(stage.wires)
     if stage.kind == "integrator":
         switch = plan.target.switch_on if values.start is not None else 0.0
-        loss = 1.0 + switch * sum(1.0 / _seen_resistance(leg) for leg in values.legs)
+        loss = 1.0 + switch * sum(1.0 / leg.into for leg in values.legs)
         return tuple(1.0 / (leg.transfer * values.capacitor * loss) for leg in values.legs)
     if stage.bipolar:
         return _bipolar_gains(plan, stage)
     return tuple(values.feedback / leg.transfer for leg in values.legs)
-
-
-def _seen_resistance(leg: Leg) -> float:
-    """Resistance to ground that the summing net sees in a leg whose source is stiff [ohm]."""
-    if len(leg.resistors) == 1:
-        return leg.resistors[0]
-    first, shunt, last = leg.resistors
-    return last + first * shunt / (first + shunt)
 
 
 def _bipolar_gains(plan: Plan, stage: Stage) -> tuple[float, ...]:

@@ -74,7 +74,7 @@ def _jacobian(system: System, at: dict[str, float]) -> Array:
 
 def offset_rate(sizing: StageSizing, target: Target) -> float:
     """Volts per circuit second that typical Vos and Ib push into an integrator's output (Conant, Analog Dialogue)."""
-    conductance = sum(1.0 / leg.transfer for leg in sizing.legs)
+    conductance = sum(1.0 / leg.into for leg in sizing.legs)
     return (target.op_amp.offset * conductance + target.op_amp.bias + target.switch_leakage) / sizing.capacitor
 
 
@@ -94,7 +94,7 @@ def limit_resistor(sizing: StageSizing, target: Target, limit: float) -> float:
 
     The settled offset is (1 + Rf * sum(1/R)) * Vos + Rf * Ib (Sedra and Smith, problem 2.106).
     """
-    conductance = sum(1.0 / leg.transfer for leg in sizing.legs)
+    conductance = sum(1.0 / leg.into for leg in sizing.legs)
     values = np.array(target.resistors)
     settled = (1.0 + values * conductance) * target.op_amp.offset + values * target.op_amp.bias
     fits = values[settled <= limit / 20]

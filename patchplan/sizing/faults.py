@@ -8,8 +8,9 @@ from numpy.typing import NDArray
 from patchplan.patch.records import Patch, Stage
 from patchplan.quantity import engineering
 from patchplan.sizing.model import Model, Ratio
+from patchplan.sizing.networks import largest_transfer
 from patchplan.sizing.records import Target
-from patchplan.sizing.speed import T_REACH, Speed
+from patchplan.sizing.speed import Speed
 from patchplan.sizing.values import Values, wanted_products
 
 Array = NDArray[np.float64]
@@ -56,7 +57,7 @@ def find_faults(
 
 def _beyond(model: Model, values: Values, target: Target) -> dict[tuple[str, int], str]:
     """(stage, wire) -> what it asks for, where no value of the limits reaches it."""
-    longest = T_REACH * target.resistors[-1] * target.capacitors[-1]
+    longest = largest_transfer(target.resistors) * target.capacitors[-1]
     shortest = target.resistors[0] * target.capacitors[0]
     found: dict[tuple[str, int], str] = {}
     wanted = wanted_products(model, values.theta)
@@ -70,7 +71,7 @@ def _beyond(model: Model, values: Values, target: Target) -> dict[tuple[str, int
             found[ratio.stage, ratio.wire] = f"{product:.3g} of the reference"
     for ratio, product in zip(model.ratios, wanted.tolist(), strict=True):
         widest = max(by_stage.get(ratio.stage, [0.0]))
-        if ratio.kind == "integrator" and widest > T_REACH * _span(target) * product:
+        if ratio.kind == "integrator" and widest * target.resistors[0] > largest_transfer(target.resistors) * product:
             found.setdefault((ratio.stage, ratio.wire), f"a gain {widest / product:.3g} times its smallest one")
     return found
 

@@ -114,8 +114,10 @@ def _slow_down(model: Model, target: Target, picked: Mapping[tuple[str, int | st
     extra: dict[str, float] = {}
     for ratio, product in zip(model.ratios, wanted_products(model, model.centre), strict=True):
         if ratio.kind == "integrator":
-            conductance = picked[ratio.stage, "C"] / float(product)
-            slow = target.switch_on * conductance + 1.0 / (float(product) * target.op_amp.gain_bandwidth)
+            farad = picked[ratio.stage, "C"]
+            # What the summing node sees of a network of three is little more than its last, largest resistor.
+            conductance = max(farad / float(product), 1.0 / target.resistors[-1])
+            slow = conductance * (target.switch_on + 1.0 / (farad * target.op_amp.gain_bandwidth))
             extra[ratio.stage] = extra.get(ratio.stage, 0.0) + slow
     return {stage: float(np.log1p(value)) for stage, value in extra.items()}
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
+from math import sqrt
 
 
 @dataclass(frozen=True, slots=True)
@@ -85,6 +86,23 @@ class Leg:
             return self.resistors[0]
         first, shunt, last = self.resistors
         return first + last + first * last / shunt
+
+    @property
+    def into(self) -> float:
+        """Resistance that the summing node sees into the leg, its source at ground [ohm]."""
+        if len(self.resistors) == 1:
+            return self.resistors[0]
+        first, shunt, last = self.resistors
+        return last + first * shunt / (first + shunt)
+
+    @property
+    def spread(self) -> float:
+        """Relative change of the transfer per relative change of its resistors, root sum of squares."""
+        if len(self.resistors) == 1:
+            return 1.0
+        first, shunt, last = self.resistors
+        cross = first * last / shunt
+        return sqrt((first + cross) ** 2 + cross**2 + (last + cross) ** 2) / self.transfer
 
 
 @dataclass(frozen=True, slots=True)

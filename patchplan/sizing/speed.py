@@ -14,6 +14,7 @@ from patchplan.quantity import engineering
 from patchplan.ranges import Ranges
 from patchplan.sensitivity import Sensitivity
 from patchplan.sizing.model import node_limits
+from patchplan.sizing.networks import largest_transfer
 from patchplan.sizing.records import Target
 
 Array = NDArray[np.float64]
@@ -24,9 +25,6 @@ SLACK = 1e-4
 #: Resistance that the capacitors are chosen for [ohm]; between the 5k that loads outputs and the 1M that strays and
 #: bias currents disturb (common practice, no source).
 COMFORTABLE = 5e4
-#: A T of three resistors stands for at most this many times the largest resistor: it multiplies the share of offsets as
-#: much (common practice, no source). The planner's own speed does without.
-T_REACH = 100.0
 #: The planner's own speed keeps capacitors at or above this, so that some 10 pF of wiring and input capacitance count
 #: for 0.1 % at most [F] (common practice, no source).
 ABOVE_STRAYS = 1e-8
@@ -242,7 +240,7 @@ def _slow_ends(
     gains: Mapping[str, Array],
 ) -> list[tuple[float, str]]:
     """Highest time scale by each cause, with its sentence."""
-    largest = T_REACH * target.resistors[-1] * target.capacitors[-1]
+    largest = largest_transfer(target.resistors) * target.capacitors[-1]
     ends = []
     for name, values in gains.items():
         if values.size:

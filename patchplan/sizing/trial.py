@@ -138,10 +138,17 @@ def _choices(board: _Board, wanted: Array, picked: dict[tuple[str, int | str], f
     """What each unknown may be, and the log it should have, shape ``(n_unknowns,)``."""
     at = {(r.stage, r.wire): row for row, r in enumerate(board.model.ratios)}
     choices, centre = [], []
+    most = board.target.resistors[-1]
+    long = {
+        r.stage
+        for r, product in zip(board.model.ratios, wanted.tolist(), strict=True)
+        if r.kind == "integrator" and product > most * picked[r.stage, "C"]
+    }
     for stage, what in board.unknowns.names:
         if what == "C" or what == "Rf":
             series = board.target.capacitors if what == "C" else board.target.resistors
-            choices.append(plain(series))
+            # A stage with a network of three keeps the capacitor that needs the least of it: offsets count by it.
+            choices.append(plain((picked[stage, what],) if what == "C" and stage in long else series))
             centre.append(log(picked[stage, what]))
         elif what == -1:
             choices.append(start_ratios(board.target.resistors))
@@ -189,7 +196,8 @@ def _shift(board: _Board, y: Array) -> Array:
     column = {name: c for c, name in enumerate(board.unknowns.names)}
     extra: dict[str, float] = {}
     for ratio in board.model.ratios:
-        conductance = float(np.exp(-y[column[ratio.stage, ratio.wire]]))
+        # What the summing node sees of a network of three is little more than its last, largest resistor.
+        conductance = max(float(np.exp(-y[column[ratio.stage, ratio.wire]])), 1.0 / board.target.resistors[-1])
         if ratio.switched:
             extra[ratio.switched] = extra.get(ratio.switched, 0.0) + board.target.switch_on * conductance
         if ratio.kind == "integrator":

@@ -11,8 +11,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from patchplan.sizing.model import Model, Ratio
+from patchplan.sizing.networks import networks
 from patchplan.sizing.records import Leg, Target
-from patchplan.sizing.speed import COMFORTABLE, T_REACH
+from patchplan.sizing.speed import COMFORTABLE
 
 Array = NDArray[np.float64]
 #: Feedback resistors of summers sit between these, for the pole with the input capacitance [ohm].
@@ -106,21 +107,17 @@ def plain(values: tuple[float, ...]) -> Choice:
 
 
 def resistor(wanted: float, target: Target) -> Choice:
-    """One resistor, or a T of three where the wanted transfer resistance is above the largest [ohm]."""
+    """One resistor, or a network of three where the wanted transfer resistance is above the largest [ohm]."""
     if wanted <= 1.03 * target.resistors[-1]:
         return plain(target.resistors)
-    return _t_legs(target.resistors, wanted)
+    return _networks(target.resistors)
 
 
-@lru_cache(maxsize=64)
-def _t_legs(resistors: tuple[float, ...], wanted: float) -> Choice:
-    """T legs R1 = R3 with any shunt; the smallest arms whose shunt stays twice above the smallest resistor."""
-    values = np.array(resistors)
-    reach = 2 * values + values**2 / (2 * values[0])
-    arm = float(values[min(int(np.searchsorted(reach, wanted)), len(values) - 1)])
-    shunts = values[values <= arm]
-    parts = [(arm, float(s), arm) for s in shunts[::-1] if 2 * arm + arm**2 / s <= T_REACH * values[-1]]
-    return Choice(np.log(np.array([Leg(p).transfer for p in parts])), tuple(parts))
+@lru_cache(maxsize=8)
+def _networks(resistors: tuple[float, ...]) -> Choice:
+    """Networks of three resistors, above the largest single one."""
+    parts = networks(resistors)
+    return Choice(np.log(np.array([Leg(p).transfer for p in parts])), parts)
 
 
 @lru_cache(maxsize=8)
@@ -150,6 +147,8 @@ def pick_capacitor(wanted: Array, target: Target, rank: int = 0, comfortable: fl
     )
     middle = np.abs(np.log(np.sqrt(resistors.min(axis=1) * resistors.max(axis=1)) / comfortable))
     order = np.argsort(100 * over.sum(axis=1) + middle, kind="stable")
+    # Any other than the best makes networks of three longer, and offsets count by their length.
+    rank = 0 if over[order[0]].any() else rank
     return float(capacitors[order[min(rank, len(order) - 1)]])
 
 

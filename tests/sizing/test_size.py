@@ -116,7 +116,7 @@ def test_out_of_reach_is_a_sentence():
     _, _, sizing = sized(made, speed="real time")
     assert sizing.faults == (
         "The speed asked for is too slow: one unit of time would take 1 s on the board, and largest T of resistors "
-        "times largest capacitor, 100 s, at I1 allows no more than 100 µs. Another speed under [build] or wider value "
+        "times largest capacitor, 502 s, at I1 allows no more than 502 µs. Another speed under [build] or wider value "
         "limits would mend it.",
     )
 

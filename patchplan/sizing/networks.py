@@ -1,0 +1,46 @@
+"""Networks of three resistors that stand for one larger than any: a divider from the source and a resistor onwards.
+
+A leg R1 (from the source), R2 (to ground), R3 (to the summing node) passes the current of R1 + R3 + R1*R3/R2, while the
+summing node sees little more than R3. What that costs is counted elsewhere: offsets and finite gain act through what
+the summing node sees, and the three tolerances add up.
+"""
+
+from __future__ import annotations
+
+from functools import lru_cache
+
+import numpy as np
+
+from patchplan.sizing.records import Leg
+
+#: Last resistors that are tried: the largest one and the next below it. The larger, the less offsets count.
+LAST = 6
+#: Networks are kept one for each step of this size in the log of the transfer resistance.
+STEP = 0.002
+#: First resistors are near this value [ohm]: light for the node that drives them, and small against the input
+#: resistance and strays of what follows (common practice, no source).
+FIRST = 1e5
+
+
+@lru_cache(maxsize=8)
+def largest_transfer(resistors: tuple[float, ...]) -> float:
+    """Largest transfer resistance that three resistors of a rising series make [ohm]."""
+    return Leg((resistors[-1], resistors[0], resistors[-1])).transfer
+
+
+@lru_cache(maxsize=8)
+def networks(resistors: tuple[float, ...]) -> tuple[tuple[float, float, float], ...]:
+    """Networks above the largest resistor, rising in transfer resistance, one for each :data:`STEP` where there is one.
+
+    Within a step the larger last resistor wins, as the summing node sees it, then the first resistor nearest to
+    :data:`FIRST`.
+    """
+    values = np.array(resistors)
+    last, shunt, first = (a.ravel() for a in np.meshgrid(values[-LAST:], values, values, indexing="ij"))
+    transfer = first + last + first * last / shunt
+    step = np.floor(np.log(transfer / values[-1]) / STEP).astype(int)
+    order = np.lexsort((shunt, np.abs(np.log(first / FIRST)), -last, step))
+    order = order[step[order] >= 0]
+    kept = order[np.flatnonzero(np.diff(step[order], prepend=-1))]
+    kept = kept[np.argsort(transfer[kept], kind="stable")]
+    return tuple(zip(first[kept].tolist(), shunt[kept].tolist(), last[kept].tolist(), strict=True))
