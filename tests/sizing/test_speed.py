@@ -70,7 +70,8 @@ def test_values_set_both_ends_of_a_decay(stages, target):
     assert "smallest resistor times smallest capacitor" in speed.limits[0]
     assert "largest T of resistors times largest capacitor" in speed.limits[1]
     assert {f for f, (fast, _) in moves.items() if fast} == {"smallest R", "smallest C"}
-    assert {f for f, (_, slow) in moves.items() if slow} == {"largest R", "largest C"}
+    # The longest network has the smallest resistor to ground.
+    assert {f for f, (_, slow) in moves.items() if slow} == {"largest R", "largest C", "smallest R"}
 
 
 def test_bandwidth_sets_the_fast_end_of_an_oscillator(target):
