@@ -18,11 +18,13 @@ from patchplan.equation.system import System
 from patchplan.errors import ProblemFaults
 from patchplan.form.offsets import find_form
 from patchplan.form.records import Form
+from patchplan.form.rewrite import with_forms
 from patchplan.patch.build import build_patch
 from patchplan.ranges import find_ranges
 from patchplan.reach.reference import find_reach
 from patchplan.report.records import Plan
 from patchplan.sensitivity import find_sensitivity
+from patchplan.shortlist import Forms, consider, extent, shortlist, told
 from patchplan.sizing.size import size
 
 #: A plan with offsets has more wires and must better the plan without by this factor in error and spread together.
@@ -43,11 +45,14 @@ class Choices:
         "free", "real time", or how many times faster than the problem; None takes the problem file's wish.
     think
         How long to search: low, normal or high.
+    blocks
+        Form of linear blocks, as (name of the output, form); blocks that are not named stay as written.
     """
 
     offsets: bool = True
     speed: str | float | None = None
     think: str = "normal"
+    blocks: Forms = ()
 
 
 def plan(
@@ -78,15 +83,17 @@ def plan(
         return plan_with(problem, choices, accept=accept, progress=progress, system=system)
 
     try:
-        found = attempt(Choices(think=think))
+        considered = consider(problem, system)
+        runs = [attempt(Choices(think=think, blocks=forms)) for forms in shortlist(considered)]
+        found = min(runs, key=lambda run: _merit(run, extent(run.patch)))
         if set(found.form.offsets) - set(found.form.scales):
-            plain = attempt(Choices(offsets=False, think=think))
+            plain = attempt(replace(Choices(**found.choices), offsets=False))
             found = found if _merit(found, OFFSET_COST) < _merit(plain) else plain
         if found.verdict.verdict == "inaccurate" and think == "normal":
             found = min(found, attempt(replace(Choices(**found.choices), think="high")), key=_merit)
     except ProblemFaults as error:
         raise rendered(error, problem) from None
-    return found
+    return replace(found, considered=told(considered, [*runs, found], found))
 
 
 def plan_with(
@@ -101,9 +108,14 @@ def plan_with(
     catalogue = load_catalogue(problem.own_parts)
     target = target_of(build, catalogue)
     say("Solving the problem")
-    reach = find_reach(system, problem.ranges, build)
+    written = with_forms(system, dict(choices.blocks))
+    reach = find_reach(written.extended, problem.ranges, build)
     form = find_form(
-        system, reach, problem.terminals, offsets=choices.offsets, swing=min(-target.op_amp.low, target.op_amp.high)
+        written.system,
+        reach,
+        problem.terminals,
+        offsets=choices.offsets,
+        swing=min(-target.op_amp.low, target.op_amp.high),
     )
     say("Drawing the patch")
     patch = build_patch(form, hold=build.run != "free", node_limit=SIGN_NODES[choices.think])
@@ -116,6 +128,7 @@ def plan_with(
     sizing = size(
         form, patch, ranges, sensitivity, target, speed=speed, run=build.run, think=choices.think, accept=accept
     )
+    form = replace(form, notes=(*written.notes, *form.notes))
     warnings = (*form.notes, *reach.warnings, *sizing.notes, *_unset_starts(form, build))
     found = Plan(
         problem, system, reach, form, patch, ranges, sensitivity, target, sizing, None,

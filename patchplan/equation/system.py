@@ -143,6 +143,8 @@ class System:
         (signal name, polarity asked for or 0); names of states, sources or signals.
     time_unit_seconds
         Seconds in one unit of problem time.
+    derived
+        Signals that no board sums up: changes of variables, which the tolerances of parts do not touch.
     """
 
     states: tuple[State, ...]
@@ -155,6 +157,7 @@ class System:
     duration: Fraction
     time_unit: str
     time_unit_seconds: Fraction
+    derived: tuple[str, ...] = ()
 
     @property
     def is_linear(self) -> bool:

@@ -45,7 +45,9 @@ def extremes(times: Array, values: Array, rates: Array) -> tuple[Array, Array]:
     # y(s) = a + p s + c2 s^2 + c3 s^3 on 0 <= s <= 1; opposite slopes leave exactly one turning point inside.
     c2, c3 = 3 * (b - a) - 2 * p - q, p + q - 2 * (b - a)
     root = np.sqrt(np.maximum(c2 * c2 - 3 * c3 * p, 0.0))
-    s = np.clip(-p / (c2 + np.where(p > 0, -1.0, 1.0) * root), 0.0, 1.0)
+    slope = c2 + np.where(p > 0, -1.0, 1.0) * root
+    # Squares of curves below 1e-150 or so vanish; such a curve turns nowhere that matters.
+    s = np.clip(-p / np.where(slope == 0.0, np.inf, slope), 0.0, 1.0)
     turn = a + s * (p + s * (c2 + s * c3))
     lows, highs = np.atleast_1d(low).copy(), np.atleast_1d(high).copy()
     spot = tuple(where) if where else (np.zeros_like(at),)

@@ -129,6 +129,9 @@ def board_factors(system: System, field: Field, build: Build, *, size: float = 1
     capacitors = random.uniform(-1, 1, (field.n_states, BOARDS)) * build.capacitor_tolerance
     factors: Array = 1 + size * resistors
     factors[block.terms] *= 1 + size * capacitors[block.rows]
+    exact = [1 + field.names.index(name) for name in system.derived]
+    for sums in field.signal_blocks if exact else ():
+        factors[sums.terms][np.isin(sums.places[sums.rows], exact)] = 1.0
     return factors
 
 

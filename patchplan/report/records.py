@@ -18,12 +18,43 @@ from patchplan.sensitivity import Sensitivity
 from patchplan.sizing.records import Sizing, Target
 
 
+@dataclass(frozen=True, slots=True)
+class Considered:
+    """One form that a linear block could take.
+
+    Attributes
+    ----------
+    block, order, form
+        Output of the block, its number of states, and the form.
+    stages, wires
+        Of the whole board in that form; 0 where the block can't take it.
+    tolerance_percent
+        Spread of the watched signals by the tolerances of resistors and capacitors, before values are chosen, largest
+        over time [% of the error base]; None where the block can't take the form.
+    error_percent, spread_percent
+        Nominal error and spread of the board that was planned in that form, None where none was.
+    reason
+        Why the block can't take the form, "" where it can.
+    """
+
+    block: str
+    order: int
+    form: str
+    stages: int = 0
+    wires: int = 0
+    tolerance_percent: float | None = None
+    error_percent: float | None = None
+    spread_percent: float | None = None
+    chosen: bool = False
+    reason: str = ""
+
+
 @dataclass(frozen=True)
 class Plan:
     """Everything found on the way from the problem to the verdict.
 
     ``circuit`` is None where the plan is not buildable; ``verdict`` then says so. ``choices`` names the free decisions
-    taken, for the record.
+    taken, for the record; ``considered`` the forms of linear blocks that were weighed.
     """
 
     problem: Problem
@@ -39,3 +70,4 @@ class Plan:
     verdict: Verdict
     choices: Mapping[str, Any] = field(default_factory=dict)
     warnings: tuple[str, ...] = ()
+    considered: tuple[Considered, ...] = ()
