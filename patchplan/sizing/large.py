@@ -22,6 +22,8 @@ Array = NDArray[np.float64]
 SWEEPS = 3
 #: How many exact hits on either side of each row's place are tried in one move.
 REACH = 3
+#: Most logs compared with the grid in one move: an unknown of many rows, as the speed, tries a part of their hits.
+MOST_COMPARED = 200_000
 #: Speeds that the search begins from: at most this many, and about this many rows settled in all.
 MOST_SPEEDS, WORK = 24, 2400
 
@@ -139,6 +141,7 @@ def _move(rows: _Rows, model: Model, theta: Array, x: Array, column: int) -> Non
     steps = np.unique(np.round(np.concatenate([[0.0], steps]), 12))
     fits = (theta[column] + steps >= model.low[column]) & (theta[column] + steps <= model.high[column])
     steps = steps[fits | (steps == 0.0)]
+    steps = np.append(steps[:: max(1, steps.size * touched.size // MOST_COMPARED)], 0.0)
     moved = x[touched][None, :] + steps[:, None] * slopes[None, :]
     cost = ((rows.weights[touched] * rows.distance(moved, touched)) ** 2).sum(axis=1)
     step = steps[int(np.argmin(cost + 1e-15 * np.abs(steps)))]

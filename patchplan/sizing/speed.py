@@ -107,13 +107,12 @@ def choose_speed(
         chosen = float(np.sqrt(low * high))
     else:
         grid = np.geomspace(low, plain if low < plain else high, 81)
-        bias = np.array([bias_error(patch, sensitivity, target, scales, gains, t) for t in grid])
-        error = lag / grid + bias
+        error = lag / grid + bias_error(patch, sensitivity, target, scales, gains, grid)
         good = (error <= 1.1 * error.min() + SLACK) & (grid >= min(grid[-1], _above_strays(gains)))
         chosen = float(grid[np.argmax(good)] if good.any() else grid[np.argmin(error)])
-    predicted = lag / chosen + bias_error(patch, sensitivity, target, scales, gains, chosen)
+    bias = float(bias_error(patch, sensitivity, target, scales, gains, np.array([chosen]))[0])
     leak = leak_error(patch, sensitivity, target, scales, gains)
-    return Speed((low, high), (low_text, high_text), chosen, predicted, late, leak)
+    return Speed((low, high), (low_text, high_text), chosen, lag / chosen + bias, late, leak)
 
 
 def _plain_end(target: Target, gains: Mapping[str, Array]) -> float:
@@ -179,25 +178,28 @@ def bias_error(
     target: Target,
     scales: Mapping[str, float],
     gains: Mapping[str, Array],
-    time_scale: float,
-) -> float:
-    """Error by bias current and switch leakage into the capacitors chosen for a time scale, fraction of peak."""
-    total = 0.0
+    time_scales: Array,
+) -> Array:
+    """Error by bias current and switch leakage into the capacitors chosen for each time scale, fraction of peak.
+
+    ``time_scales`` has the shape ``(n,)``, and so has what comes out.
+    """
+    node = {s.name: s.node for s in patch.stages}
+    moved = np.abs(sensitivity.rate).max(axis=(0, 2), initial=0.0)
+    total = np.zeros(len(time_scales))
     for index, name in enumerate(sensitivity.stages):
         if name in gains:
-            capacitor = comfortable_capacitor(gains[name], target, time_scale)
-            node = next(s.node for s in patch.stages if s.name == name)
-            drift = (target.op_amp.bias + target.switch_leakage) / capacitor * time_scale / scales[node]
-            total += drift * float(np.max(np.abs(sensitivity.rate[:, index]), initial=0.0))
-    return total
+            capacitors = comfortable_capacitors(gains[name], target, time_scales)
+            total += time_scales / capacitors * (float(moved[index]) / scales[node[name]])
+    return (target.op_amp.bias + target.switch_leakage) * total
 
 
-def comfortable_capacitor(gains: Array, target: Target, time_scale: float) -> float:
-    """Capacitance [F] that puts the geometric middle of a stage's resistors at :data:`COMFORTABLE`."""
+def comfortable_capacitors(gains: Array, target: Target, time_scales: Array) -> Array:
+    """Capacitance [F] that puts the middle of a stage's resistors at :data:`COMFORTABLE`, for each time scale."""
     if gains.size == 0:
-        return target.capacitors[len(target.capacitors) // 2]
+        return np.full(len(time_scales), target.capacitors[len(target.capacitors) // 2])
     middle = float(np.sqrt(gains.min() * gains.max()))
-    return float(np.clip(time_scale / (middle * COMFORTABLE), target.capacitors[0], target.capacitors[-1]))
+    return np.clip(time_scales / (middle * COMFORTABLE), target.capacitors[0], target.capacitors[-1])
 
 
 def _fast_ends(
@@ -246,7 +248,7 @@ def _slow_ends(
         if values.size:
             text = f"largest T of resistors times largest capacitor, {engineering(largest, 's')}, at {name}"
             ends.append((float(values.min()) * largest, text))
-    slow = bias_error(patch, sensitivity, target, scales, gains, 1e6)
+    slow = float(bias_error(patch, sensitivity, target, scales, gains, np.array([1e6]))[0])
     if slow > 0:
         # At a very slow speed every capacitor sits at its largest, so the error is proportional to the time scale.
         text = f"bias current of {target.op_amp.name} into the largest capacitor costs {100 * END_ERROR:g} % of peak"
