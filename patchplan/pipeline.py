@@ -18,13 +18,16 @@ from patchplan.equation.system import System
 from patchplan.errors import ProblemFaults
 from patchplan.form.offsets import find_form
 from patchplan.form.records import Form
-from patchplan.form.rewrite import with_forms
+from patchplan.form.rewrite import Rewritten, with_forms
 from patchplan.patch.build import build_patch
-from patchplan.ranges import find_ranges
+from patchplan.patch.records import Patch
+from patchplan.ranges import Ranges, find_ranges
+from patchplan.reach.records import Reach
 from patchplan.reach.reference import find_reach
 from patchplan.report.records import Plan
-from patchplan.sensitivity import find_sensitivity
+from patchplan.sensitivity import Sensitivity, find_sensitivity
 from patchplan.shortlist import Forms, consider, extent, shortlist, told
+from patchplan.sizing.records import Sizing, Target
 from patchplan.sizing.size import size
 
 #: A plan with offsets has more wires and must better the plan without by this factor in error and spread together.
@@ -110,25 +113,13 @@ def plan_with(
     say("Solving the problem")
     written = with_forms(system, dict(choices.blocks))
     reach = find_reach(written.extended, problem.ranges, build)
-    form = find_form(
-        written.system,
-        reach,
-        problem.terminals,
-        offsets=choices.offsets,
-        swing=min(-target.op_amp.low, target.op_amp.high),
-    )
+    form = form_of(problem, choices, written, reach, target)
     say("Drawing the patch")
-    patch = build_patch(form, hold=build.run != "free", node_limit=SIGN_NODES[choices.think])
+    patch, ranges, sensitivity = drawn(build, choices, form, reach)
     if patch.counts().get("multiplier"):
         check_multiplier(build, catalogue)
-    ranges = find_ranges(patch, form, reach)
-    sensitivity = find_sensitivity(form, patch, ranges)
     say("Choosing values")
-    speed = build.speed if choices.speed is None else choices.speed
-    sizing = size(
-        form, patch, ranges, sensitivity, target, speed=speed, run=build.run, think=choices.think, accept=accept
-    )
-    form = replace(form, notes=(*written.notes, *form.notes))
+    sizing = sized(build, choices, form, patch, ranges, sensitivity, target, accept=accept)
     warnings = (*form.notes, *reach.warnings, *sizing.notes, *_unset_starts(form, build))
     found = Plan(
         problem, system, reach, form, patch, ranges, sensitivity, target, sizing, None,
@@ -144,6 +135,31 @@ def plan_with(
     )
     found = replace(found, patch=patch, sizing=sizing)
     return replace(found, circuit=circuit, verdict=verdict, warnings=(*warnings, *circuit.notes, *verdict.warnings))
+
+
+def form_of(problem: Problem, choices: Choices, written: Rewritten, reach: Reach, target: Target) -> Form:
+    """The Form that the choices ask for."""
+    swing = min(-target.op_amp.low, target.op_amp.high)
+    form = find_form(written.system, reach, problem.terminals, offsets=choices.offsets, swing=swing)
+    return replace(form, notes=(*written.notes, *form.notes))
+
+
+def drawn(build: Build, choices: Choices, form: Form, reach: Reach) -> tuple[Patch, Ranges, Sensitivity]:
+    """What follows from a Form alone, whatever the parts."""
+    patch = build_patch(form, hold=build.run != "free", node_limit=SIGN_NODES[choices.think])
+    ranges = find_ranges(patch, form, reach)
+    return patch, ranges, find_sensitivity(form, patch, ranges)
+
+
+def sized(
+    build: Build, choices: Choices, form: Form, patch: Patch, ranges: Ranges, sensitivity: Sensitivity, target: Target,
+    *, accept: float,
+) -> Sizing:  # fmt: skip
+    """Values for one Target."""
+    speed = build.speed if choices.speed is None else choices.speed
+    return size(
+        form, patch, ranges, sensitivity, target, speed=speed, run=build.run, think=choices.think, accept=accept
+    )
 
 
 def not_buildable(faults: tuple[str, ...]) -> Verdict:

@@ -17,7 +17,8 @@ TESTS = sorted((ROOT / "tests").rglob("*.py"))
 #: Rows of the house, top first; a module imports from its own room and from rows above.
 ROWS = (
     ("errors", "quantity", "version"), ("equation",), ("reach",), ("form",), ("patch",), ("ranges",), ("sensitivity",),
-    ("horizon",), ("sizing",), ("circuit",), ("check",), ("report",), ("shortlist",), ("pipeline",), ("cli",),
+    ("horizon",), ("sizing",), ("circuit",), ("check",), ("compare",), ("report",), ("shortlist",), ("pipeline",),
+    ("options",), ("cli",),
 )  # fmt: skip
 ROW_OF = {room: row for row, rooms in enumerate(ROWS) for room in rooms}
 SYMPY_ROOMS = ("equation", "form", "patch")

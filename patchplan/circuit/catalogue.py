@@ -30,6 +30,7 @@ FIGURES: dict[str, dict[str, tuple[str, str]]] = {
         "bias": ("A", "input bias current, typical"),
         "bias_difference": ("A", "difference of the bias currents, typical"),
         "noise": ("V/sqrt(Hz)", "input voltage noise density"),
+        "supply_current": ("A", "drawn at rest by each amplifier, typical"),
     },
     "multiplier": {
         "supply_min": ("V", "least total supply"),
@@ -47,6 +48,7 @@ FIGURES: dict[str, dict[str, tuple[str, str]]] = {
         "scale_error": ("1", "relative error of the scale, typical"),
         "bias": ("A", "input bias current, typical"),
         "noise": ("V/sqrt(Hz)", "output noise density"),
+        "supply_current": ("A", "drawn at rest, typical"),
     },
     "switch": {
         "supply_min": ("V", "least total supply"),
@@ -54,6 +56,7 @@ FIGURES: dict[str, dict[str, tuple[str, str]]] = {
         "on_resistance": ("ohm", "on-resistance, typical"),
         "leakage": ("A", "leakage when open, typical"),
         "charge_injection": ("C", "charge injected when it opens, typical"),
+        "supply_current": ("A", "drawn at rest, largest"),
     },
     "reference": {
         "supply_min": ("V", "least supply above ground"),
@@ -61,6 +64,7 @@ FIGURES: dict[str, dict[str, tuple[str, str]]] = {
         "volts": ("V", "output"),
         "tolerance": ("1", "relative error of the output, largest"),
         "current": ("A", "largest output current"),
+        "supply_current": ("A", "drawn at rest, typical"),
     },
 }
 #: Figures that mean nothing at 0.
@@ -79,6 +83,8 @@ _POSITIVE = frozenset(
         "current",
     }
 )
+#: Figures that a part of the user's own may lack: no plan hangs on them.
+_OPTIONAL = frozenset({"supply_current"})
 #: Keys of a part table that are no figures.
 _TEXT_KEYS = ("kind", "like", "text", "source")
 _PREFIXES = {"": 0, **SUFFIXES}
@@ -241,7 +247,7 @@ def _own_part(
     base = _base_part(name, table, parts[kind], faults)
     figures = dict(base.figures) if base else {}
     figures |= dict(_own_figures(name, kind, table, faults))
-    missing = [k for k in FIGURES[kind] if k not in figures and k not in table]
+    missing = [k for k in FIGURES[kind] if k not in figures and k not in table and k not in _OPTIONAL]
     if missing and "like" not in table:
         remedy = 'Give them, or write like = "NAME" to take them from a part of the catalogue.'
         faults.append(Fault(f"Figures of {name} are missing: {', '.join(missing)}.", remedy, key))

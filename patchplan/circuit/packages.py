@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import dataclass
 
 from patchplan.circuit.catalogue import PartData
@@ -81,6 +81,13 @@ def assign_places(
         sections = f"sections {', '.join(left[:-1])} and {left[-1]}" if len(left) > 1 else f"section {left[0]}"
         notes.append(f"Not used: {sections} of U{_last(active)}. Tie minus to out and plus to ground.")
     return Places(active | multiplied, operate, hold, tuple(f"U{i}" for i in range(1, count + 1)), tuple(notes))
+
+
+def counts_to_fit(parts: Iterable[Part]) -> tuple[int, int]:
+    """Packages, and all that has to be fitted: packages and the parts apart from them; sources are not on the board."""
+    fitted = [p for p in parts if p.kind != "source"]
+    packages = {p.package for p in fitted if p.package}
+    return len(packages), len(packages) + sum(not p.package for p in fitted)
 
 
 def decoupling(places: Places, references: Sequence[str]) -> Iterator[Part]:

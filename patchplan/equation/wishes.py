@@ -49,13 +49,18 @@ def read_build(reading: Reading, part_names: Mapping[str, Collection[str]] | Non
     if "reference" in table:
         found["reference"], found["reference_tolerance"] = _reference(reading, table["reference"])
     elif found.get("supply"):
-        rail = min(abs(volts) for volts in found["supply"])
-        found["reference"] = next((volts for volts in _REFERENCES if volts <= _SHARE * rail), None)
+        found["reference"] = reference_for_supply(found["supply"])
     if "speed" not in table and reading.data.get("terminals"):
         found["speed"] = "real time"
     if "pairs" in table:
         _pairs(reading, table["pairs"])
     return Build(**{key: value for key, value in found.items() if value is not None})
+
+
+def reference_for_supply(supply: tuple[float, float]) -> float | None:
+    """Reference [V] that a file gets which states its rails [V] alone; None for the usual one."""
+    rail = min(abs(volts) for volts in supply)
+    return next((volts for volts in _REFERENCES if volts <= _SHARE * rail), None)
 
 
 def _supply(reading: Reading, key: str, given: Any) -> tuple[float, float] | None:

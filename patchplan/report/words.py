@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 
 from patchplan.check.records import Cause, NodePeak, Verdict
+from patchplan.circuit.packages import counts_to_fit
 from patchplan.quantity import engineering
 from patchplan.report.records import Plan
 
@@ -128,10 +129,8 @@ def made_of(plan: Plan) -> str:
     sentence = ", ".join(p for p in pieces if not p.startswith("no ") or p.endswith("multiplier"))
     if plan.circuit is None:
         return sentence + "."
-    parts = [p for p in plan.circuit.parts if p.kind != "source"]
-    packages = {p.package for p in parts if p.package}
-    to_fit = len(packages) + sum(not p.package for p in parts)
-    return f"{sentence}; {counted(len(packages), 'package')}, {counted(to_fit, 'part')}."
+    packages, to_fit = counts_to_fit(plan.circuit.parts)
+    return f"{sentence}; {counted(packages, 'package')}, {counted(to_fit, 'part')}."
 
 
 def largest_error(plan: Plan) -> str:

@@ -1,0 +1,111 @@
+"""Combinations of parts, values, speed and form, and the figures of each."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from typing import Any
+
+from patchplan.check.records import Cause
+from patchplan.equation.problem import Build
+
+
+@dataclass(frozen=True, slots=True)
+class Axes:
+    """What to vary; an empty axis stays as in the problem file. With all empty, a grid is made of the catalogue.
+
+    Attributes
+    ----------
+    op_amps, series
+        Names; ``series`` of the resistors.
+    tolerances
+        Of the resistors, 0.01 for 1 %.
+    supplies
+        (low, high) rails [V].
+    speeds
+        As ``Build.speed``.
+    """
+
+    op_amps: tuple[str, ...] = ()
+    series: tuple[str, ...] = ()
+    tolerances: tuple[float, ...] = ()
+    supplies: tuple[tuple[float, float], ...] = ()
+    speeds: tuple[str | float, ...] = ()
+
+    @property
+    def given(self) -> bool:
+        """Whether any axis is."""
+        return any((self.op_amps, self.series, self.tolerances, self.supplies, self.speeds))
+
+
+@dataclass(frozen=True)
+class Form:
+    """A way to carry the equations: its name for people, "" for the usual one, and what it asks of ``Choices``."""
+
+    name: str = ""
+    choices: Mapping[str, Any] = field(default_factory=dict)
+
+
+@dataclass(frozen=True)
+class Combination:
+    """One build: its wishes and the form of the equations."""
+
+    build: Build
+    form: Form = Form()
+
+
+@dataclass(frozen=True)
+class Option:
+    """One combination with its figures.
+
+    Attributes
+    ----------
+    error_percent
+        Predicted error of the nominal board [% of peak], and ``causes`` of it, largest first.
+    spread_percent
+        One standard deviation between boards [% of peak], and ``spread_causes`` of it, largest first.
+    parts
+        What has to be fitted: packages, resistors, capacitors and the rest.
+    supply_current
+        Estimate of what one rail gives [A].
+    speed
+        How many times faster than the problem the circuit runs.
+    best
+        Whether no other combination is at least as good in all five figures and better in one.
+    fault
+        Why it cannot be built, "" where it can; the figures then say nothing.
+    """
+
+    combination: Combination
+    error_percent: float = 0.0
+    spread_percent: float = 0.0
+    parts: int = 0
+    packages: int = 0
+    supply_current: float = 0.0
+    speed: float = 0.0
+    causes: tuple[Cause, ...] = ()
+    spread_causes: tuple[Cause, ...] = ()
+    best: bool = False
+    fault: str = ""
+
+    @property
+    def figures(self) -> tuple[float, ...]:
+        """The five figures that are compared; less is better in each."""
+        return (self.error_percent, self.spread_percent, self.parts, self.packages, self.supply_current)
+
+
+@dataclass(frozen=True)
+class Wish:
+    """What a pick has to meet: largest nominal error and, where not None, largest spread [% of peak]."""
+
+    error_percent: float
+    spread_percent: float | None = None
+
+
+@dataclass(frozen=True)
+class Comparison:
+    """All combinations of one problem, in the order of the grid."""
+
+    title: str
+    options: tuple[Option, ...]
+    time_unit: str = "s"
