@@ -4,14 +4,17 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from patchplan.form.records import Form
 from patchplan.patch.records import Patch, Stage
+from patchplan.patch.sums import node_sums, wire_gains
+from patchplan.reach.bounds import ends_of
 from patchplan.reach.curves import extremes
-from patchplan.reach.records import Range, Reach, Run
+from patchplan.reach.records import Bounded, Range, Reach, Run
 
 Array = NDArray[np.float64]
 
@@ -68,10 +71,15 @@ def find_ranges(patch: Patch, form: Form, reach: Reach) -> Ranges:
     """Range of every node of the patch, and its signal over the nominal run.
 
     The patch is evaluated on every run with that run's knobs, stage by stage. Nodes whose signal Reach knows take its
-    range; others widen what the runs show by what their inputs' ranges hold beyond the runs, or, where an input is
-    known only by bounds, take the interval of all combinations of their inputs' ranges.
+    range; others widen what the runs show by what their inputs' ranges hold beyond the runs. Where an input is known
+    only by bounds, every node of a linear patch has a peak gain of its own, and others take the interval of all
+    combinations of their inputs' ranges.
     """
     nominal = evaluate(patch, form, reach.reference.names, reach.runs[0])
+    values = {node: pair[0] for node, pair in nominal.items()}
+    rates = {node: pair[1] for node, pair in nominal.items()}
+    if reach.bounded:
+        return Ranges(_bounded(patch, form, reach), reach.reference.times, values, rates)
     seen = _Seen(patch, form, reach)
     bounded = any(s.within is not None and s.waveform is None for s in patch.sources.values())
     nodes: dict[str, NodeRange] = {}
@@ -84,8 +92,6 @@ def find_ranges(patch: Patch, form: Form, reach: Reach) -> Ranges:
     for stage in patch.stages:
         if stage.kind not in ("integrator", "source"):
             nodes[stage.node] = _node(stage, patch, form, reach, nodes, seen, bounded)
-    values = {node: pair[0] for node, pair in nominal.items()}
-    rates = {node: pair[1] for node, pair in nominal.items()}
     return Ranges(nodes, reach.reference.times, values, rates)
 
 
@@ -120,13 +126,40 @@ def evaluate(patch: Patch, form: Form, names: tuple[str, ...], run: Run) -> Tabl
     return table
 
 
-def wire_gains(stage: Stage, patch: Patch, knobs: Mapping[str, float]) -> list[float]:
-    """Coefficient of each wire that counts in the equation, the stage's knob included."""
-    knob = 1.0
-    if stage.knob is not None:
-        knob = knobs[stage.knob] if stage.knob in knobs else float(patch.knobs[stage.knob].value)
-    counted = stage.wires[:1] if stage.bipolar else stage.wires
-    return [knob * float(w.coefficient) for w in counted]
+def _bounded(patch: Patch, form: Form, reach: Reach) -> dict[str, NodeRange]:
+    """Each node of a linear patch by its own peak gain, at every setting that Reach looked at."""
+    lows, highs, rates, proved = [], [], [], True
+    for case in reach.bounded:
+        sums, slopes = node_sums(patch, form, case.names, case.middle.knobs)
+        ends, moving = ends_of(case, sums), ends_of(case, sums[:, 1:] @ slopes)
+        lows.append(ends.low)
+        highs.append(ends.high)
+        rates.append(np.maximum(-moving.low, moving.high) + _steepest_inputs(case, sums))
+        proved &= ends.proved
+    low, high, fastest = np.min(lows, axis=0), np.max(highs, axis=0), np.max(rates, axis=0)
+    known_by = "proved" if proved and len(reach.bounded) == 1 else "simulated"
+    nodes = {}
+    for i, stage in enumerate(patch.stages):
+        found = _known(stage, form, reach)
+        if found is None or stage.kind == "reference":
+            found = Range(
+                stage.signal, float(low[i]), float(high[i]), "proved" if stage.kind == "reference" else known_by
+            )
+        nodes[stage.node] = NodeRange(stage.node, found.low, found.high, float(fastest[i]), found.known_by)
+    return nodes
+
+
+def _steepest_inputs(case: Bounded, sums: Any) -> Array:
+    """Largest slope that the sources alone give each node, shape ``(n_nodes,)``; inf where one may jump."""
+    first = len(case.responses[0].missed)
+    run, count = case.middle, len(case.names)
+    steepest = np.abs(run.rates[first:count]).max(axis=1)
+    jumps = np.flatnonzero(np.diff(run.times) == 0)
+    moves = np.abs(np.diff(run.values[first:count], axis=1)[:, jumps]).max(axis=1, initial=0.0)
+    steepest[moves > 1e-9 * np.abs(run.values[first:count]).max(axis=1)] = np.inf
+    steepest[[r.place for r in case.responses]] = np.inf
+    fed = abs(sums[:, 1 + first :]).toarray()
+    return np.asarray(np.where(fed > 0, fed * np.where(fed > 0, steepest, 0.0), 0.0).sum(axis=1))
 
 
 class _Seen:

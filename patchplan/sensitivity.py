@@ -11,7 +11,8 @@ from numpy.typing import NDArray
 
 from patchplan.form.records import Form
 from patchplan.patch.records import Patch, Stage
-from patchplan.ranges import Ranges, wire_gains
+from patchplan.patch.sums import wire_gains
+from patchplan.ranges import Ranges
 from patchplan.reach.curves import Curves
 from patchplan.reach.linear import solve_linear
 from patchplan.reach.variational import convolved, stage_times, step_maps

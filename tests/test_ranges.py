@@ -78,7 +78,7 @@ def test_a_stated_range_is_taken_as_it_stands():
     assert (found.low, found.high, found.known_by) == (-3.0, 3.0, "stated")
 
 
-def test_patch_sums_under_free_inputs_by_intervals():
+def test_a_patch_sum_under_a_free_input_has_a_peak_gain_of_its_own():
     made = system(
         {"x": 0, "y": 0},
         {"x": [term(-1, "x"), term(1, "u")], "y": [term(-1, "y"), term(1, "u")]},
@@ -94,10 +94,11 @@ def test_patch_sums_under_free_inputs_by_intervals():
     )
     patch = Patch(stages, {"x": "x"}, {"u": made.sources[0]}, {})
     found = find_ranges(patch, Form(made), reach).nodes["d"]
-    # x and y stay within -1 ... 2 (low-pass of gain 1, never negative), x - 3 y within -1 - 6 ... 2 + 3.
-    assert (found.low, found.high) == pytest.approx((-7.0, 5.0), rel=1e-3)
+    # x and y are one and the same, within -1 ... 2 (low-pass of gain 1, never negative), so that x - 3 y = -2 x. It is
+    # steepest where u jumps from one end to the other: 2 (2 + 1).
+    assert (found.low, found.high) == pytest.approx((-4.0, 2.0), rel=1e-7)
     assert found.known_by == "proved"
-    assert found.rate == pytest.approx(3 + 9, rel=1e-3)
+    assert found.rate == pytest.approx(6.0, rel=1e-7)
 
 
 def test_a_knob_stage_holds_the_nominal_run():

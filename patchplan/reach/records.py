@@ -8,6 +8,8 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
+from patchplan.reach.collocation import Pieces
+
 Array = NDArray[np.float64]
 
 
@@ -79,6 +81,69 @@ class Range:
 
 
 @dataclass(frozen=True)
+class Response:
+    """What an impulse of one source known only by its bounds does to the states of a linear System.
+
+    Attributes
+    ----------
+    place
+        Place of the source among the sources.
+    middle, half
+        Middle and half width of its bounds [problem units].
+    pieces
+        The states after the impulse.
+    missed
+        Shape ``(n_states,)``: bound of the integral over the run of how far ``pieces`` may be from the truth.
+    proved
+        Whether that bound is a proof.
+    """
+
+    source: str
+    place: int
+    middle: float
+    half: float
+    pieces: Pieces
+    missed: Array
+    proved: bool
+
+
+@dataclass(frozen=True)
+class Bounded:
+    """A linear System under inputs known only by their bounds, at one setting of its knobs.
+
+    Attributes
+    ----------
+    names
+        States, then sources.
+    middle
+        The run with every such input at the middle of its bounds.
+    """
+
+    names: tuple[str, ...]
+    middle: Run
+    responses: tuple[Response, ...]
+
+
+@dataclass(frozen=True)
+class WorstCase:
+    """The waveforms inside their bounds that drive one watched signal furthest, and the run with them.
+
+    Attributes
+    ----------
+    value, time
+        The extreme that the run reaches [problem units], and when [problem time].
+    said
+        Sentences on the waveforms.
+    """
+
+    signal: str
+    value: float
+    time: float
+    reference: Reference
+    said: tuple[str, ...] = ()
+
+
+@dataclass(frozen=True)
 class Reach:
     """Ranges of all signals of the equation, and where they come from.
 
@@ -88,9 +153,16 @@ class Reach:
         By name: every state, source and signal of the System.
     runs
         All runs share ``names`` of the Reference; the first is the nominal one.
+    bounded
+        Of a linear System with inputs known only by their bounds: what proves the range of any sum of its signals, at
+        the nominal setting first.
+    worst
+        The worst case of each watched signal that such inputs move; the Reference is that of the first.
     """
 
     reference: Reference
     ranges: Mapping[str, Range]
     runs: tuple[Run, ...]
     warnings: tuple[str, ...] = ()
+    bounded: tuple[Bounded, ...] = ()
+    worst: tuple[WorstCase, ...] = ()

@@ -11,16 +11,17 @@ from numpy.typing import NDArray
 
 from patchplan.equation.problem import Build
 from patchplan.equation.system import System
-from patchplan.reach.bounds import free_sources, impulse, worst_case, worst_waveform
+from patchplan.reach.bounds import bounded_of, ends_of, free_sources, name_rows
 from patchplan.reach.curves import extremes
 from patchplan.reach.field import Field, field_of
 from patchplan.reach.free import search_waveforms
 from patchplan.reach.inputs import Inputs, Stored
 from patchplan.reach.length import check_length
 from patchplan.reach.nominal import solve_nominal
-from patchplan.reach.records import Range, Reach, Reference, Run
+from patchplan.reach.records import Bounded, Range, Reach, Reference, Run
 from patchplan.reach.search import coarse_grid, first_points, knobs_at, search_box, spread_of_boards
 from patchplan.reach.solve import GrowsWithoutBoundError, grows_without_bound
+from patchplan.reach.worst import driven, worst_cases
 
 Array = NDArray[np.float64]
 
@@ -28,6 +29,7 @@ Array = NDArray[np.float64]
 _BEYOND = 1e60
 _EXACT = "exact solution of linear equations with known inputs"
 _GAIN = "half the width of each input's bounds times the peak gain over the run, around the response to their middle"
+_ESTIMATED = "the error of the impulse responses is estimated, not bounded"
 _BOARDS = "the margin is how far boards with parts within tolerance go beyond the nominal one"
 _BOX = "simulated over corners and a sample of the adjustable parameters"
 _SEARCHED = (
@@ -75,66 +77,51 @@ def find_reach(system: System, stated: Mapping[str, tuple[Fraction, Fraction]], 
 
 
 def _reach(system: System, numeric: Field, build: Build) -> Reach:
+    if free_sources(system) and system.is_linear:
+        return _linear_worst(system, numeric)
     knobs = system.knob_values()
     bound = numeric.bind(numeric.weights(knobs))
     stand_ins: dict[str, Stored] = {}
     worst: _Ends | None = None
     if free_sources(system):
         middle = solve_nominal(system, bound, Inputs(system))
-        worst, stand_ins = (_linear_worst if system.is_linear else _searched_worst)(system, numeric, middle)
+        worst, stand_ins = _searched_worst(system, numeric, middle)
     inputs = Inputs(system, stand_ins)
     times, values, rates = solve_nominal(system, bound, inputs)
     reference = Reference(numeric.names, times, values, rates, tuple(inputs.edges[1:-1].tolist()), stand_ins)
     nominal = Run(knobs, times, values, rates)
-    if np.abs(values).max(initial=0.0) > _BEYOND:
-        raise GrowsWithoutBoundError(float(times[np.argmax(np.abs(values).max(axis=0) > _BEYOND)]))
+    _check_size(times, values)
     low, high = extremes(times, values, rates)
     ends = _Ends(low, high, "proved", _EXACT)
     if worst is not None:
         ends = replace(worst, low=np.minimum(low, worst.low), high=np.maximum(high, worst.high))
-    if not system.is_linear or (system.adjustable and worst is None):
+    if not system.is_linear or system.adjustable:
         ends = _simulated(system, numeric, build, inputs, nominal, ends)
-    elif system.adjustable:
-        ends = _linear_box(system, numeric, inputs, nominal, ends)
     return Reach(reference, _ranges(system, numeric, ends), (nominal, *ends.runs), ends.warnings)
 
 
-def _linear_worst(
-    system: System, numeric: Field, middle: tuple[Array, Array, Array]
-) -> tuple[_Ends, dict[str, Stored]]:
-    """Proved bounds, and the waveforms that drive the first watched signal furthest that the input moves at all."""
-    bound = numeric.bind(numeric.weights(system.knob_values()))
-    free = free_sources(system)
-    responses = [impulse(system, bound, name) for name, _, _ in free]
-    low, high = worst_case(middle, responses, [half for _, _, half in free])
-    duration, stand_ins, said = float(system.duration), {}, []
-    targets = [name for name, _ in system.watch if name not in {n for n, _, _ in free}]
-    for (name, mid, half), response in zip(free, responses, strict=True):
-        moved = [t for t in targets if response.moves(numeric.names.index(t))]
-        if moved:
-            row = numeric.names.index(moved[0])
-            sign = -1.0 if middle[1][row, -1] < 0 else 1.0
-            stand_ins[name] = worst_waveform(response, row, mid, half, sign, duration)
-            said.append(_driven(name, f"the worst case for {moved[0]}", stand_ins[name]))
-        else:
-            stand_ins[name] = np.array([0.0, duration]), np.full(2, mid)
-            said.append(
-                f"The input {name} is known by its bounds only: the check holds it at their middle, {mid:.6g}, "
-                "as it moves no watched signal."
-            )
-    return _Ends(low, high, "proved", _GAIN, warnings=tuple(said)), stand_ins
+def _check_size(times: Array, values: Array) -> None:
+    if np.abs(values).max(initial=0.0) > _BEYOND:
+        raise GrowsWithoutBoundError(float(times[np.argmax(np.abs(values).max(axis=0) > _BEYOND)]))
 
 
-def _driven(name: str, how: str, waveform: Stored) -> str:
-    """A sentence on the waveform that stands in for an input known only by its bounds."""
-    levels = np.unique(waveform[1])
-    jumps = int((np.diff(waveform[1]) != 0).sum())
-    shape = f"a constant {levels[0]:.6g}"
-    if jumps:
-        between = "between" if levels.size == 2 else f"among {levels.size} levels from"
-        to = "and" if levels.size == 2 else "to"
-        shape = f"{jumps} jump{'s' if jumps > 1 else ''} {between} {levels[0]:.6g} {to} {levels[-1]:.6g}"
-    return f"The input {name} is known by its bounds only: the check drives it with {how}, {shape}."
+def _linear_worst(system: System, numeric: Field) -> Reach:
+    """Ranges under every waveform within the bounds, and the runs with the worst of them."""
+    knobs = system.knob_values()
+    bound = numeric.bind(numeric.weights(knobs))
+    bounded = [bounded_of(system, bound, knobs)]
+    _check_size(bounded[0].middle.times, bounded[0].middle.values)
+    rows = name_rows(bound)
+    found = ends_of(bounded[0], rows)
+    cases = worst_cases(system, bound, bounded[0], rows, found)
+    known = "proved" if found.proved else "simulated"
+    ends = _Ends(found.low, found.high, known, _GAIN if found.proved else f"{_GAIN}; {_ESTIMATED}")
+    if system.adjustable:
+        ends, more = _linear_box(system, numeric, ends)
+        bounded += more
+    reference = cases[0].reference
+    nominal = Run(knobs, reference.times, reference.values, reference.rates)
+    return Reach(reference, _ranges(system, numeric, ends), (nominal,), cases[0].said, tuple(bounded), cases)
 
 
 def _searched_worst(
@@ -148,7 +135,7 @@ def _searched_worst(
         peaks = np.maximum(peaks, np.abs(steady[1][: numeric.n_states]).max(axis=1))
     found = search_waveforms(system, numeric, peaks)
     how = f"the worst case for {system.watch[0][0]} that a search found" if system.watch else "what a search found"
-    said = tuple(_driven(name, how, waveform) for name, waveform in found.stand_ins.items())
+    said = tuple(driven(name, how, waveform) for name, waveform in found.stand_ins.items())
     return _Ends(found.low, found.high, "simulated", _SEARCHED, warnings=said), found.stand_ins
 
 
@@ -169,21 +156,17 @@ def _simulated(system: System, numeric: Field, build: Build, inputs: Inputs, nom
     return _Ends(low, high, "simulated", reason, below, above, runs, (*ends.warnings, *boards.warnings))
 
 
-def _linear_box(system: System, numeric: Field, inputs: Inputs, nominal: Run, ends: _Ends) -> _Ends:
+def _linear_box(system: System, numeric: Field, ends: _Ends) -> tuple[_Ends, list[Bounded]]:
     """Peak gains at the corners and a sample of the adjustable box."""
-    points = first_points(system)
-    knobs = knobs_at(system, points)
-    free = free_sources(system)
-    low, high = ends.low, ends.high
-    for i in range(len(points)):
-        bound = numeric.bind(numeric.weights({name: v[i] for name, v in knobs.items()}))
-        middle = solve_nominal(system, bound, Inputs(system))
-        responses = [impulse(system, bound, name) for name, _, _ in free]
-        here = worst_case(middle, responses, [half for _, _, half in free])
-        low, high = np.minimum(low, here[0]), np.maximum(high, here[1])
-    peaks = np.abs(nominal.values[: numeric.n_states]).max(axis=1)
-    box = search_box(system, numeric, inputs, coarse_grid(system, numeric, inputs, nominal.times), peaks)
-    return _Ends(low, high, "simulated", f"{_BOX}; at each, {_GAIN}", runs=box.runs, warnings=ends.warnings)
+    knobs = knobs_at(system, first_points(system))
+    low, high, found = ends.low, ends.high, []
+    for i in range(len(next(iter(knobs.values())))):
+        here = {name: float(v[i]) for name, v in knobs.items()}
+        bound = numeric.bind(numeric.weights(here))
+        found.append(bounded_of(system, bound, here))
+        tops = ends_of(found[-1], name_rows(bound))
+        low, high = np.minimum(low, tops.low), np.maximum(high, tops.high)
+    return _Ends(low, high, "simulated", f"{_BOX}; at each, {_GAIN}"), found
 
 
 def _ranges(system: System, numeric: Field, ends: _Ends) -> dict[str, Range]:
@@ -215,4 +198,4 @@ def _with_stated(reach: Reach, stated: Mapping[str, tuple[Fraction, Fraction]]) 
                 f"{name} is stated to stay within {float(low):.6g} to {float(high):.6g}, "
                 f"but reaches {found.low:.6g} to {found.high:.6g} ({found.known_by})."
             )
-    return Reach(reach.reference, ranges, reach.runs, tuple(warnings))
+    return replace(reach, ranges=ranges, warnings=tuple(warnings))
