@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from math import ceil, floor, log10
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -19,9 +21,17 @@ OUT_OF_REACH = 0.1
 
 
 def find_faults(
-    pace: Speed, given: float | None, model: Model, values: Values, patch: Patch, target: Target
+    pace: Speed, given: float | None, unit: float, model: Model, values: Values, patch: Patch, target: Target
 ) -> tuple[str, ...]:
-    """Sentences on why the plan cannot be built; none where every value is within :data:`OUT_OF_REACH`."""
+    """Sentences on why the plan cannot be built; none where every value is within :data:`OUT_OF_REACH`.
+
+    Parameters
+    ----------
+    given
+        Time scale asked for, None where it is free.
+    unit
+        Seconds per unit of problem time.
+    """
     low, high = pace.window
     faults = []
     if given is None and low > high:
@@ -34,11 +44,11 @@ def find_faults(
     if not off or faults:
         return tuple(faults)
     if given is not None and not low <= given <= high:
-        side, limit, end = ("fast", pace.limits[0], low) if given < low else ("slow", pace.limits[1], high)
+        side, least, limit, end = _outside(pace, given)
         return (
             f"The speed asked for is too {side}: one unit of time would take {engineering(given, 's')} on the board, "
-            f"and {limit} allows {'no less' if side == 'fast' else 'no more'} than {engineering(end, 's')}. Another "
-            f"speed under [build] or wider value limits would mend it.",
+            f"and no {least} than {engineering(end, 's')} will do ({limit}). The nearest speed that works is speed = "
+            f"{nearest_speed(pace, given, unit)} under [build]; wider value limits would mend it, too.",
         )
     stages = {s.name: s for s in patch.stages}
     beyond = _beyond(model, values, target)
@@ -53,6 +63,32 @@ def find_faults(
         f"{100 * worst:.0f} % off at {_place(stages[ratio.stage], ratio)}. Wider resistor_limits or capacitor_limits, "
         f"a finer series or --think high would mend it.",
     )
+
+
+def speed_notes(pace: Speed, given: float | None, unit: float) -> list[str]:
+    """What a speed outside the window runs into; parameters as for :func:`find_faults`."""
+    low, high = pace.window
+    if given is None or low <= given <= high:
+        return []
+    side, _, limit, end = _outside(pace, given)
+    return [
+        f"The speed asked for, {engineering(given, 's')} per unit of time, lies outside the window. The {side} end is "
+        f"{engineering(end, 's')}, set by {limit}; speed = {nearest_speed(pace, given, unit)} is the nearest inside."
+    ]
+
+
+def nearest_speed(pace: Speed, given: float, unit: float) -> str:
+    """The speed at the window's near end, rounded to three digits into the window."""
+    slow = given > pace.window[1]
+    speed = unit / (pace.window[1] if slow else pace.window[0])
+    step = 10.0 ** (floor(log10(speed)) - 2)
+    return f"{step * (ceil(speed / step) if slow else floor(speed / step)):.6g}"
+
+
+def _outside(pace: Speed, given: float) -> tuple[str, str, str, float]:
+    """Side, comparative, limit and end of the window beyond which a time scale lies."""
+    low, high = pace.window
+    return ("fast", "less", pace.limits[0], low) if given < low else ("slow", "more", pace.limits[1], high)
 
 
 def _beyond(model: Model, values: Values, target: Target) -> dict[tuple[str, int], str]:

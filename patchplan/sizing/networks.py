@@ -7,12 +7,15 @@ the summing node sees, and the three tolerances add up.
 
 from __future__ import annotations
 
+from dataclasses import dataclass
 from functools import lru_cache
 
 import numpy as np
+from numpy.typing import NDArray
 
 from patchplan.sizing.records import Leg
 
+Array = NDArray[np.float64]
 #: Last resistors that are tried: the largest one and the next below it. The larger, the less offsets count.
 LAST = 6
 #: Networks are kept one for each step of this size in the log of the transfer resistance.
@@ -44,3 +47,42 @@ def networks(resistors: tuple[float, ...]) -> tuple[tuple[float, float, float], 
     kept = order[np.flatnonzero(np.diff(step[order], prepend=-1))]
     kept = kept[np.argsort(transfer[kept], kind="stable")]
     return tuple(zip(first[kept].tolist(), shunt[kept].tolist(), last[kept].tolist(), strict=True))
+
+
+@dataclass(frozen=True)
+class Legs:
+    """Legs of any values as arrays of one shape: a single resistor has no first and an endless shunt [ohm]."""
+
+    first: Array
+    shunt: Array
+    last: Array
+
+    @property
+    def into(self) -> Array:
+        """What the summing node sees, as :attr:`Leg.into`."""
+        return self.last + self.first / (1.0 + self.first / self.shunt)
+
+    @property
+    def spread(self) -> Array:
+        """Relative change per relative change of the resistors, as :attr:`Leg.spread`."""
+        cross = self.first * self.last / self.shunt
+        far = np.where(self.first > 0.0, self.first + cross, 0.0)
+        moved = np.sqrt(far**2 + cross**2 + (self.last + cross) ** 2)
+        return np.asarray(moved / (self.first + self.last + cross))
+
+    def leg(self, *place: int) -> Leg:
+        """One of them."""
+        first, shunt, last = (float(a[place]) for a in (self.first, self.shunt, self.last))
+        return Leg((first, shunt, last) if first else (last,))
+
+
+def exact_legs(transfer: Array, resistors: tuple[float, ...]) -> Legs:
+    """Legs of exactly these transfer resistances, a network wherever one resistor of the series would not reach."""
+    most = resistors[-1]
+    long = transfer > most
+    first = np.clip(FIRST, resistors[0], most)
+    # Just above the largest resistor the two in series have to share what is left.
+    first = np.where(long, np.minimum(first, (transfer - most) / 2), 0.0)
+    rest = np.where(long, transfer - most - first, 1.0)
+    shunt = np.where(long, first * most / rest, np.inf)
+    return Legs(first, shunt, np.where(long, most, transfer))

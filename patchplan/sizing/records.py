@@ -55,7 +55,8 @@ class Target:
     """What the soldered board offers: purchasable values and the parts' figures.
 
     ``resistors`` and ``capacitors`` are rising values inside the limits [ohm], [F]; ``reference`` is in volts;
-    ``switch_on`` is the operate switch's resistance [ohm], 0 where the run has no hold.
+    ``switch_on`` is the operate switch's resistance [ohm], 0 where the run has no hold. The other parts of the
+    catalogue that would do on this supply are there for advice only.
     """
 
     resistors: tuple[float, ...]
@@ -68,6 +69,8 @@ class Target:
     multiplier: MultiplierFigures
     switch_on: float
     switch_leakage: float
+    other_op_amps: tuple[OpAmpFigures, ...] = ()
+    other_multipliers: tuple[MultiplierFigures, ...] = ()
 
 
 @dataclass(frozen=True, slots=True)
@@ -157,6 +160,67 @@ class Coefficient:
         return 100.0 * (self.realised / self.wanted - 1.0)
 
 
+@dataclass(frozen=True, slots=True)
+class SpeedLimit:
+    """One figure that keeps the board from running faster or slower.
+
+    Attributes
+    ----------
+    end
+        ``fast`` or ``slow``.
+    stage
+        Stage that it binds; where all stages add up, the one that adds most.
+    part, figure, value, unit
+        Whose figure it is, which, and how large: TL07x, gain-bandwidth, 3e6, Hz.
+    time_scale
+        Lowest (``fast``) or highest (``slow``) time scale that it allows.
+    text
+        What it is in words, for sentences.
+    """
+
+    end: str
+    stage: str
+    part: str
+    figure: str
+    value: float
+    unit: str
+    time_scale: float
+    text: str
+
+
+@dataclass(frozen=True)
+class SpeedCurve:
+    """Predicted error and spread against speed, fractions of peak, of boards whose values are exact at every speed.
+
+    Values that the search chooses add their rounding, and may make up for a part of the error.
+
+    Attributes
+    ----------
+    time_scales
+        Rising.
+    error, spread
+        Largest over watched signals and time: the nominal board's error; the standard deviation between boards.
+    parts, spreads
+        The same by cause, each alone.
+    chosen, real_time
+        (error, spread) at the plan's time scale, and in real time.
+    judgement
+        Real time is ``possible``, ``with other parts`` or ``impossible``.
+    reason
+        A sentence on it.
+    """
+
+    time_scales: tuple[float, ...]
+    error: tuple[float, ...]
+    spread: tuple[float, ...]
+    parts: Mapping[str, tuple[float, ...]]
+    spreads: Mapping[str, tuple[float, ...]]
+    chosen: tuple[float, float]
+    real_time: tuple[float, float]
+    judgement: str
+    reason: str
+
+
 @dataclass(frozen=True)
 class Sizing:
     """Scale factors, speed and values.
@@ -177,6 +241,10 @@ class Sizing:
         Sentences on what cannot be built; empty for a usable plan.
     notes
         Sentences for the plan: drift of modes, content below the DC-limit decade, forced choices.
+    speed_limits
+        Every figure that limits the speed, those at the window's ends among them.
+    speed_curve
+        Error and spread against speed, None where nothing moves.
     """
 
     time_scale: float
@@ -188,3 +256,5 @@ class Sizing:
     loop_errors: tuple[float, ...] = ()
     faults: tuple[str, ...] = ()
     notes: tuple[str, ...] = field(default=())
+    speed_limits: tuple[SpeedLimit, ...] = ()
+    speed_curve: SpeedCurve | None = None

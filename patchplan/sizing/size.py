@@ -23,7 +23,7 @@ from patchplan.sizing.drift import (
     offset_rate,
     slow_modes,
 )
-from patchplan.sizing.faults import find_faults
+from patchplan.sizing.faults import find_faults, speed_notes
 from patchplan.sizing.model import LEAST_USE, MOST_USE, Model, build_model
 from patchplan.sizing.records import Coefficient, Leg, NodeScale, Sizing, StageSizing, Target
 from patchplan.sizing.search import Effect
@@ -91,9 +91,10 @@ def size(
         stages,
         _coefficients(patch, model, values),
         tuple(float(e) for e in values.loop_errors),
-        find_faults(pace, given, model, values, patch, target),
+        find_faults(pace, given, unit, model, values, patch, target),
+        speed_limits=pace.rows,
     )
-    notes = [*_speed_notes(pace, given), *_drift_notes(form, patch, ranges, sensitivity, target, sizing)]
+    notes = [*speed_notes(pace, given, unit), *_drift_notes(form, patch, ranges, sensitivity, target, sizing)]
     return replace(sizing, notes=(*notes, *_content_notes(sizing, patch, ranges), *_use_notes(form, patch, scales)))
 
 
@@ -256,18 +257,6 @@ def _drift_notes(
         limit = sizing.stages[stage.name].feedback
         notes.append(text + (f"; {engineering(limit, 'Ω')} across its capacitor bounds it." if limit else "."))
     return notes
-
-
-def _speed_notes(pace: Speed, given: float | None) -> list[str]:
-    """What a speed outside the window runs into."""
-    low, high = pace.window
-    if given is None or low <= given <= high:
-        return []
-    limit, end = (pace.limits[0], low) if given < low else (pace.limits[1], high)
-    return [
-        f"The speed asked for, {engineering(given, 's')} per unit of time, lies outside the window: {limit} sets "
-        f"{engineering(end, 's')}."
-    ]
 
 
 def _use_notes(form: Form, patch: Patch, scales: Mapping[str, NodeScale]) -> list[str]:

@@ -13,7 +13,7 @@ from numpy.typing import NDArray
 from patchplan.sizing.model import Model, Ratio
 from patchplan.sizing.networks import networks
 from patchplan.sizing.records import Leg, Target
-from patchplan.sizing.speed import COMFORTABLE
+from patchplan.sizing.speed_errors import COMFORTABLE
 
 Array = NDArray[np.float64]
 #: Feedback resistors of summers sit between these, for the pole with the input capacitance [ohm].

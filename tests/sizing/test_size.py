@@ -115,9 +115,9 @@ def test_out_of_reach_is_a_sentence():
     made = system({"x": 1}, {"x": [term("-1/1000000", "x")]}, duration=2_000_000)
     _, _, sizing = sized(made, speed="real time")
     assert sizing.faults == (
-        "The speed asked for is too slow: one unit of time would take 1 s on the board, and largest T of resistors "
-        "times largest capacitor, 502 s, at I1 allows no more than 502 µs. Another speed under [build] or wider value "
-        "limits would mend it.",
+        "The speed asked for is too slow: one unit of time would take 1 s on the board, and no more than 33.5 µs will "
+        "do (offsets of TL07x through networks of three resistors, at 1 % of peak). The nearest speed that works is "
+        "speed = 29900 under [build]; wider value limits would mend it, too.",
     )
 
 
@@ -208,7 +208,11 @@ def test_content_below_the_dc_limit_decade_is_told():
 
 def test_a_speed_outside_the_window_is_told():
     _, _, sizing = sized(van_der_pol(), speed=1e5)
-    assert any(
-        n.startswith("The speed asked for, 10 µs per unit of time, lies outside the window") for n in sizing.notes
-    )
+    (note,) = [n for n in sizing.notes if "outside the window" in n]
+    assert note.startswith("The speed asked for, 10 µs per unit of time, lies outside the window. The fast end is ")
+    assert ", set by bandwidth of AD633, which costs 1 % of peak; speed = " in note
+    # The speed that the sentence names is inside, and no note is left.
+    nearest = float(note.rpartition("speed = ")[2].split()[0])
+    assert sizing.window[0] <= 1 / nearest <= 1.01 * sizing.window[0]
+    assert not any("outside the window" in n for n in sized(van_der_pol(), speed=nearest)[2].notes)
     assert not any("outside the window" in n for n in sized(van_der_pol(), speed=100.0)[2].notes)

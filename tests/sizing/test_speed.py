@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from dataclasses import replace
 
+import numpy as np
 import pytest
 
 from patchplan.circuit.catalogue import load_catalogue
@@ -14,8 +15,11 @@ from patchplan.patch.build import build_patch
 from patchplan.ranges import find_ranges
 from patchplan.reach.reference import find_reach
 from patchplan.sensitivity import find_sensitivity
+from patchplan.sizing.networks import FIRST
 from patchplan.sizing.records import Target
 from patchplan.sizing.speed import Speed, choose_speed
+from patchplan.sizing.speed_errors import middle_scales
+from patchplan.sizing.speed_limits import END_ERROR, find_limits, ground_of, network_conductance
 from tests.systems import system, term, van_der_pol
 
 
@@ -43,6 +47,8 @@ def parts_of(made):
 CHANGES = {
     "op amp bandwidth": lambda t, f: replace(t, op_amp=replace(t.op_amp, gain_bandwidth=t.op_amp.gain_bandwidth / f)),
     "op amp slew": lambda t, f: replace(t, op_amp=replace(t.op_amp, slew=t.op_amp.slew / f)),
+    "op amp offset": lambda t, f: replace(t, op_amp=replace(t.op_amp, offset=t.op_amp.offset * f)),
+    "op amp gain": lambda t, f: replace(t, op_amp=replace(t.op_amp, gain=t.op_amp.gain / f)),
     "bias": lambda t, f: replace(t, op_amp=replace(t.op_amp, bias=t.op_amp.bias * f), switch_leakage=0.0),
     "multiplier bandwidth": lambda t, f: replace(
         t, multiplier=replace(t.multiplier, bandwidth=t.multiplier.bandwidth / f)
@@ -65,13 +71,55 @@ def moved(stages, target: Target, factor: float) -> tuple[Speed, dict[str, tuple
 
 
 def test_values_set_both_ends_of_a_decay(stages, target):
-    quick = replace(target, op_amp=replace(target.op_amp, gain_bandwidth=100 * target.op_amp.gain_bandwidth))
-    speed, moves = moved(stages, quick, 1.1)
+    amp = target.op_amp
+    ideal = replace(target, op_amp=replace(amp, gain_bandwidth=100 * amp.gain_bandwidth, gain=1e12, offset=0.0))
+    speed, moves = moved(stages, ideal, 1.1)
     assert "smallest resistor times smallest capacitor" in speed.limits[0]
-    assert "largest T of resistors times largest capacitor" in speed.limits[1]
+    assert "largest network of three resistors times largest capacitor" in speed.limits[1]
     assert {f for f, (fast, _) in moves.items() if fast} == {"smallest R", "smallest C"}
     # The longest network has the smallest resistor to ground.
     assert {f for f, (_, slow) in moves.items() if slow} == {"largest R", "largest C", "smallest R"}
+
+
+def test_offsets_through_networks_set_the_slow_end_of_a_decay(stages, target):
+    """x' = -x, one input: a network at R, C largest adds (1/R_max - 1/R) * Vos / C to x' (Conant, Analog Dialogue).
+
+    The response to a constant rate is 1 - exp(-t), and END_ERROR of the peak of 1 is reached.
+    """
+    speed, moves = moved(stages, target, 1.1)
+    assert speed.limits[1] == "offsets of TL07x through networks of three resistors, at 1 % of peak"
+    assert {f for f, (_, slow) in moves.items() if slow} == {"op amp offset", "largest R", "largest C"}
+    scale = middle_scales(*stages[:3], target)[stages[1].watched["x"]]
+    largest = target.resistors[-1] * target.capacitors[-1]
+    into = target.resistors[-1] + FIRST  # the shunt is far below the first resistor
+    time = 0.01 / (1 - np.exp(-5)) * scale / target.op_amp.offset * largest
+    assert speed.window[1] == pytest.approx(time * into / target.resistors[-1] + largest, rel=0.1)
+
+
+@pytest.mark.parametrize("which", ["offset", "gain"])
+def test_a_limit_is_where_its_figure_costs_one_percent(stages, target, which):
+    """The rows hold what each figure allows: the error it makes there, by the sensitivities, is END_ERROR."""
+    poor = replace(target, op_amp=replace(target.op_amp, gain=2e4))
+    on = ground_of(*stages, poor)
+    row = next(r for r in find_limits(on) if r.figure.endswith(which) and r.end == "slow")
+    extra = network_conductance(on, np.array([row.time_scale]))[0, 0]
+    name = stages[1].stages[-1].name
+    response = np.abs(stages[3].leak[name] if which == "gain" else stages[3].rate[:, 0]).max()
+    cost = extra / row.value if which == "gain" else extra * row.value / on.scales[stages[1].watched["x"]]
+    assert cost * response == pytest.approx(END_ERROR, rel=1e-2)
+    assert row.stage == name
+
+
+def test_every_limit_has_its_numbers(stages, target):
+    rows = choose_speed(*stages, target).rows
+    assert {(r.end, r.figure) for r in rows} == {
+        ("fast", "gain-bandwidth"), ("fast", "slew rate"), ("fast", "R × C"),
+        ("slow", "R × C"), ("slow", "bias current"), ("slow", "offset"), ("slow", "open-loop gain"),
+    }  # fmt: skip
+    assert all(r.value > 0 and r.time_scale > 0 and r.unit and r.part and r.stage for r in rows)
+    values = {r.figure: r.value for r in rows}
+    assert values["gain-bandwidth"] == pytest.approx(3e6)
+    assert values["slew rate"] == pytest.approx(13e6)
 
 
 def test_bandwidth_sets_the_fast_end_of_an_oscillator(target):
