@@ -24,8 +24,8 @@ from patchplan.reach.retold import retold
 from patchplan.report.records import Considered, Plan
 from patchplan.sensitivity import Sensitivity, find_sensitivity
 
-#: Straight runs of the forms that look best.
-RUNS = 2
+#: Straight runs of the forms that look best; none of a form that costs so many times what the best does.
+RUNS, TOO_DEAR = 2, 1.3
 #: Blocks whose forms are weighed, and the largest System in which they are: each form takes a patch and a sensitivity.
 MOST_BLOCKS, MOST_STATES = 4, 120
 #: Nodes of the search for signs in a patch that is only counted.
@@ -101,7 +101,8 @@ def shortlist(considered: Iterable[Considered]) -> tuple[Forms, ...]:
     losses = [
         (_cost(row) / (_cost(rows[0]) or 1.0), name, row.form) for name, rows in ranked.items() for row in rows[1:]
     ]
-    runs = [best, *({**best, name: form} for _, name, form in sorted(losses)[: RUNS - 1])]
+    close = sorted(loss for loss in losses if loss[0] < TOO_DEAR)[: RUNS - 1]
+    runs = [best, *({**best, name: form} for _, name, form in close)]
     return tuple(tuple(run.items()) for run in runs)
 
 

@@ -32,6 +32,7 @@ PLANS = {
     "motor_speed_loop": "real time, terminals",
     "tank_real_time": "two hours of circuit time, networks of three resistors",
     "integrator": "free-running, DC-limit resistor",
+    "torque_filter": "a block in other states than the file's, real time",
     "two_mass_drive": "steps and pulses from the reference, an algebraic signal",
 }
 

@@ -6,6 +6,7 @@ from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 from fractions import Fraction
 from functools import lru_cache
+from math import sqrt
 from typing import Any
 
 import numpy as np
@@ -147,12 +148,16 @@ def _place(draft: _Draft, section: Section, inlet: str, *, coupled: bool) -> lis
         into = short((b0 - b1 * damping) / turn)
         draft.add(_term(-damping, first), _term(-turn, second), _term(into, inlet))
         draft.add(_term(turn, first), _term(-damping, second), _term(b1, inlet))
-    elif b1:
-        draft.add(_term(-a0, second), _term(b0, inlet))
-        draft.add(_term(1, first), _term(-a1, second), _term(b1, inlet))
+        return [_term(1, second), *through]
+    # Both integrators of a loop get the same gain, so that all states are of the size of the output.
+    turn = short(sqrt(a0)) if a0 > 0 else Fraction(1)
+    loop, entry = _term(-short(a0 / turn), second), _term(short(b0 / turn), inlet)
+    if b1:
+        draft.add(loop, entry)
+        draft.add(_term(turn, first), _term(-a1, second), _term(b1, inlet))
     else:
-        draft.add(_term(-a1, first), _term(-a0, second), _term(b0, inlet))
-        draft.add(_term(1, first))
+        draft.add(_term(-a1, first), loop, entry)
+        draft.add(_term(turn, first))
     return [_term(1, second), *through]
 
 
@@ -215,7 +220,8 @@ def _ladder(block: Block, numerator: Vector, denominator: Vector) -> Realisation
     names = [f"{block.name}.{k + 1}" for k in range(n)]
     matrix = [[Fraction(0)] * n for _ in range(n)]
     for k in range(n - 1):
-        matrix[k][k + 1], matrix[k + 1][k] = Fraction(1), short(-gains[k])
+        turn = short(sqrt(gains[k]))
+        matrix[k][k + 1], matrix[k + 1][k] = turn, -turn
     matrix[-1][-1] = short(-denominator[n - 1])
     shape = tuple(map(tuple, matrix))
     unit = tuple(Fraction(k == 0) for k in range(n))

@@ -85,23 +85,30 @@ def _note(block: Block, made: Realisation) -> str:
 
 
 def _with_known_names(block: Block, made: Realisation) -> Realisation:
-    """Give states that are needed states of the block their names."""
+    """Let states that are a needed state of the block, or a multiple of one, be that one."""
     matrix, _, over, _ = made.open_rows()
     seen = observability(over[made.outlet.name], matrix)
-    names = dict(zip(made.states, made.states, strict=True))
+    known: dict[str, tuple[str, Fraction]] = {}
     for name in block.needed:
         row = seen[block.states.index(name)]
         same = [k for k, c in enumerate(row) if c]
-        if len(same) == 1 and row[same[0]] == 1:
-            names[made.states[same[0]]] = name
+        if len(same) == 1 and made.states[same[0]] not in known:
+            known[made.states[same[0]]] = name, row[same[0]]
 
     def renamed(row: Row) -> Row:
-        terms = (replace(t, factors=tuple((names.get(n, n), p) for n, p in t.factors)) for t in row.terms)
-        return row_of(names.get(row.name, row.name), terms, row.origin)
+        name, size = known.get(row.name, (row.name, Fraction(1)))
+        terms = []
+        for term in row.terms:
+            inner, factor = known.get(term.factors[0][0], (term.factors[0][0], Fraction(1)))
+            terms.append(_linear(short(term.coefficient * size / factor), inner))
+        return row_of(name, terms, row.origin)
 
-    outlet = row_of(made.outlet.name, renamed(replace(made.outlet, name="")).terms)
+    outlet = replace(renamed(replace(made.outlet, name="")), name=made.outlet.name)
     rows, signals = tuple(map(renamed, made.rows)), tuple(map(renamed, made.signals))
-    return replace(made, states=tuple(names.values()), rows=rows, signals=signals, outlet=outlet)
+    sizes = [known.get(name, (name, Fraction(1)))[1] for name in made.states]
+    change = tuple(tuple(short(size * x) for x in row) for size, row in zip(sizes, made.change, strict=True))
+    states = tuple(row.name for row in rows)
+    return replace(made, states=states, rows=rows, signals=signals, outlet=outlet, change=change)
 
 
 def _drive(block: Block, made: Realisation) -> tuple[tuple[Term, ...], Row | None]:

@@ -13,6 +13,7 @@ from patchplan.report.sheet import control_table, package_table, static_table, s
 from patchplan.report.tables import (
     budget_table,
     coefficient_table,
+    form_table,
     node_table,
     parts_table,
     signal_table,
@@ -59,7 +60,7 @@ def page(
         pictures_left_out=len(plan.verdict.curves) - MOST_SIGNALS if drawings else 0,
         tables=[
             signal_table(plan), node_table(plan), source_table(plan, sources), stage_table(plan),
-            coefficient_table(plan), budget_table(plan), parts_table(plan.circuit),
+            coefficient_table(plan), form_table(plan), budget_table(plan), parts_table(plan.circuit),
             package_table(plan),
         ],
         steps=steps(plan),

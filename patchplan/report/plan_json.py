@@ -53,6 +53,7 @@ def plan_data(plan: Plan, files: Sequence[str] = ()) -> dict[str, Any]:
         "coefficients": _coefficients(sizing),
         "parts": _parts(plan.circuit) if plan.circuit else [],
         "choices": encode(plan.choices),
+        "considered": encode(plan.considered),
         "problem": plan.problem.text,
         "records": records_of(plan),
     }
@@ -78,6 +79,7 @@ def refusal_data(problem: Problem, reason: str, files: Sequence[str] = ()) -> di
         "sign_stages": 0,
         "sign_stages_lower_bound": 0,
         "choices": {},
+        "considered": [],
         "problem": problem.text,
         "records": {"patch": {}, "sizing": {}, "circuit": None},
     }

@@ -36,7 +36,7 @@ def summary(plan: Plan, folder: Path | None = None, *, colour: bool = False) -> 
     if remedies:
         blocks.append(_wrapped(f"To mend it: {' '.join(remedies)}"))
     if plan.circuit is not None:
-        blocks += map(_wrapped, (*words.speed(plan), words.made_of(plan)))
+        blocks += map(_wrapped, (*words.speed(plan), words.made_of(plan), *words.forms(plan)))
         blocks += ["", *_columns(_first_rows(node_table(plan))), ""]
         blocks += [_wrapped(s) for s in (words.largest_error(plan),) if s]
     blocks += [_wrapped(f"Warning: {warning}") for warning in warnings_of(plan)]

@@ -80,6 +80,26 @@ def coefficient_table(plan: Plan) -> Table:
     return Table("Coefficients", ("at", "wanted", "realised", "error"), rows, frozenset({1, 2, 3}), note)
 
 
+def form_table(plan: Plan) -> Table:
+    """The forms of linear blocks that were weighed, the chosen ones marked."""
+
+    def shown(value: float | None) -> str:
+        return "" if value is None else percent(value)
+
+    rows = tuple(
+        (row.block, row.form, str(row.stages or ""), str(row.wires or ""), shown(row.tolerance_percent),
+         shown(row.error_percent), shown(row.spread_percent), "chosen" if row.chosen else row.reason)
+        for row in plan.considered
+    )  # fmt: skip
+    headers = ("block", "form", "stages", "wires", "tolerances", "error", "spread", "")
+    note = (
+        "Stages and wires are those of the whole board. Tolerances: spread of the watched signals by resistors and "
+        "capacitors, before values are chosen. Error and spread: of a board planned in that form. What a form costs "
+        "is error and spread times stages and wires."
+    )
+    return Table("Forms considered", headers, rows, frozenset(range(2, 7)), note)
+
+
 def stage_table(plan: Plan) -> Table:
     """Every stage with its output, inputs and values."""
     rows = tuple(_stage_row(plan, index) for index in range(len(plan.patch.stages))) if plan.circuit else ()

@@ -133,6 +133,25 @@ def made_of(plan: Plan) -> str:
     return f"{sentence}; {counted(packages, 'package')}, {counted(to_fit, 'part')}."
 
 
+def forms(plan: Plan) -> tuple[str, ...]:
+    """A sentence on each linear block whose form was chosen among several."""
+    sentences = []
+    for row in (r for r in plan.considered if r.chosen):
+        rivals = [r for r in plan.considered if r.block == row.block and r.tolerance_percent is not None]
+        written = next(r for r in plan.considered if r.block == row.block)
+        spread, other = percent(row.tolerance_percent or 0.0), percent(written.tolerance_percent or 0.0)
+        if row is written:
+            sentences.append(
+                f"{row.block} keeps its companion form, the best of {len(rivals)} weighed (parts spread it {spread})."
+            )
+        else:
+            sentences.append(
+                f"{row.block} is built in the form {row.form}: parts spread it {spread}, in its companion form {other} "
+                f"({row.stages} stages instead of {written.stages})."
+            )
+    return tuple(sentences)
+
+
 def largest_error(plan: Plan) -> str:
     """The top of the error budget, "" where there is none."""
     if not plan.verdict.budget:
@@ -143,7 +162,7 @@ def largest_error(plan: Plan) -> str:
 
 def story(plan: Plan) -> tuple[str, ...]:
     """The plan told in about five sentences."""
-    return tuple(s for s in (headline(plan), *speed(plan), made_of(plan), largest_error(plan)) if s)
+    return tuple(s for s in (headline(plan), *speed(plan), made_of(plan), *forms(plan), largest_error(plan)) if s)
 
 
 CAUTIONS = (
