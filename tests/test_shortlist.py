@@ -93,8 +93,8 @@ def rows_by_form(problem: Problem) -> Mapping[str, Considered]:
 def test_the_companion_form_of_butterworth_6_is_far_more_sensitive(problem: Problem) -> None:
     """Published fact (for example Moschytz 1974, Linear Integrated Networks), in numbers of two kinds that agree.
 
-    Tone at 85 % of the corner, resistors of 1 % and capacitors of 2 %: boards of the companion form differ by 8.2 % (one
-    standard deviation), those of the cascade by 3.5 %.
+    Tone at 85 % of the corner, resistors of 1 % and capacitors of 2 %: boards of the companion form differ by 8.2 %
+    (one standard deviation), those of the cascade by 3.5 %.
     """
     rows = rows_by_form(problem)
     for form in ("companion", "cascade"):
