@@ -6,10 +6,13 @@ import math
 from collections.abc import Mapping
 
 from patchplan.circuit.catalogue import Catalogue, PartData
-from patchplan.equation.problem import Build
+from patchplan.equation.problem import Build, Stock
 from patchplan.errors import CannotBuild
-from patchplan.sizing.records import MultiplierFigures, OpAmpFigures, Target
+from patchplan.sizing.records import MultiplierFigures, OpAmpFigures, Pile, Target
 from patchplan.sizing.series import values_between
+
+#: Limits are ends that count, through rounding too.
+_SLACK = 1e-12
 
 
 def target_of(build: Build, catalogue: Catalogue) -> Target:
@@ -35,17 +38,21 @@ def target_of(build: Build, catalogue: Catalogue) -> Target:
             f"{op_amp.high:.3g} V, and is wanted in both polarities. Choose a lower reference or a higher supply."
         )
     switch = switch_for(build, catalogue) if build.run != "free" else None
+    resistors = _piles(build.resistor_stock, build.resistor_limits, build.resistor_tolerance, "resistor")
+    capacitors = _piles(build.capacitor_stock, build.capacitor_limits, build.capacitor_tolerance, "capacitor")
     return Target(
-        resistors=_values(build.resistors, build.resistor_limits, "resistor"),
-        capacitors=_values(build.capacitors, build.capacitor_limits, "capacitor"),
-        resistor_tolerance=build.resistor_tolerance,
-        capacitor_tolerance=build.capacitor_tolerance,
+        resistors=_values(resistors, build.resistors, build.resistor_limits, "resistor"),
+        capacitors=_values(capacitors, build.capacitors, build.capacitor_limits, "capacitor"),
+        resistor_tolerance=_worst(resistors, build.resistor_tolerance),
+        capacitor_tolerance=_worst(capacitors, build.capacitor_tolerance),
         reference=build.reference,
         reference_tolerance=build.reference_tolerance,
         op_amp=op_amp,
         multiplier=_multiplier(build, _part(catalogue.multipliers, build.multiplier, "multiplier")),
         switch_on=switch.si("on_resistance") if switch else 0.0,
         switch_leakage=switch.si("leakage") if switch else 0.0,
+        resistor_piles=resistors,
+        capacitor_piles=capacitors,
     )
 
 
@@ -143,7 +150,35 @@ def _part(parts: Mapping[str, PartData], name: str, kind: str) -> PartData:
     return parts[name]
 
 
-def _values(series: str, limits: tuple[float, float], kind: str) -> tuple[float, ...]:
+def _piles(
+    stock: Stock | None, limits: tuple[float, float], tolerance: float, kind: str
+) -> tuple[Pile, ...] | None:
+    """The parts on hand inside the limits, by value."""
+    if stock is None:
+        return None
+    low, high = limits
+    piles = []
+    for row in stock.rows:
+        if row.count and low * (1 - _SLACK) <= row.value <= high * (1 + _SLACK):
+            usual = tolerance if row.measured is None else 0.0
+            of = usual if row.tolerance is None else row.tolerance
+            piles.append(Pile(row.measured or row.value, row.count, row.value, of, row.serial))
+    if not piles:
+        raise CannotBuild(
+            f"{stock.file} has no {kind} between {low:g} and {high:g}. Widen {kind}_limits under [build], or add parts."
+        )
+    return tuple(sorted(piles, key=lambda pile: (pile.value, pile.tolerance)))
+
+
+def _worst(piles: tuple[Pile, ...] | None, tolerance: float) -> float:
+    return tolerance if piles is None else max(pile.tolerance for pile in piles)
+
+
+def _values(
+    piles: tuple[Pile, ...] | None, series: str, limits: tuple[float, float], kind: str
+) -> tuple[float, ...]:
+    if piles is not None:
+        return tuple(dict.fromkeys(pile.value for pile in piles))
     values = values_between(series, *limits)
     if not values:
         raise CannotBuild(

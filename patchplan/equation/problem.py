@@ -101,8 +101,46 @@ class Terminal:
 
 
 @dataclass(frozen=True, slots=True)
+class StockRow:
+    """One line of a stock file.
+
+    Attributes
+    ----------
+    value
+        Marked value [ohm] or [F].
+    count
+        Pieces on hand; 1 with a serial number.
+    tolerance
+        None where the file gives none.
+    measured
+        Of a part with a serial number, None where it was not measured [ohm] or [F].
+    line
+        In the file, from 1.
+    """
+
+    value: float
+    count: int
+    tolerance: float | None = None
+    serial: str = ""
+    measured: float | None = None
+    line: int = 0
+
+
+@dataclass(frozen=True, slots=True)
+class Stock:
+    """Parts on hand, from a CSV file beside the problem file."""
+
+    file: str
+    rows: tuple[StockRow, ...]
+
+
+@dataclass(frozen=True, slots=True)
 class Build:
-    """Wishes for the board; every field has a default."""
+    """Wishes for the board; every field has a default.
+
+    ``resistors`` and ``capacitors`` name a series, or a stock file whose rows ``resistor_stock`` and
+    ``capacitor_stock`` hold.
+    """
 
     supply: tuple[float, float] = (-15.0, 15.0)
     reference: float = 10.0
@@ -118,6 +156,8 @@ class Build:
     multiplier: str = "AD633"
     #: "free", "real time", or how many times faster than the problem the circuit runs.
     speed: str | float = "free"
+    resistor_stock: Stock | None = None
+    capacitor_stock: Stock | None = None
 
 
 @dataclass(frozen=True)

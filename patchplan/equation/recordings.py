@@ -32,7 +32,7 @@ def read_recording(reading: Reading, key: str, given: Mapping[str, Any], duratio
     if len(texts) < 3 or any(text is None for text in texts.values()):
         return None
     file, time, value = (str(texts[part]) for part in ("file", "time", "value"))
-    path = _path(reading, f"{key}.file", file)
+    path = safe_path(reading, f"{key}.file", file)
     if path is None:
         return None
     try:
@@ -55,8 +55,11 @@ def read_recording(reading: Reading, key: str, given: Mapping[str, Any], duratio
     return None
 
 
-def _path(reading: Reading, key: str, file: str) -> Path | None:
-    """Path of a regular file under the problem file's folder."""
+def safe_path(reading: Reading, key: str, file: str) -> Path | None:
+    """Path of a regular file under the problem file's folder; None with the fault noted.
+
+    With ``reading.trust_paths`` it may lie anywhere.
+    """
     try:
         folder = reading.folder.resolve()
         path = (folder / file).resolve()

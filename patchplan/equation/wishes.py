@@ -8,14 +8,17 @@ from dataclasses import fields
 from fractions import Fraction
 from typing import Any
 
-from patchplan.equation.problem import Build
+from patchplan.equation.problem import Build, Stock
 from patchplan.equation.reading import Reading, kind_of, nearest
+from patchplan.equation.stock import read_stock
 from patchplan.quantity import shown
 
 SERIES = ("E3", "E6", "E12", "E24", "E48", "E96", "E192")
 RUNS = ("once", "repeat", "free")
 
-_KEYS = (*(f.name for f in fields(Build) if f.name != "reference_tolerance"), "pairs")
+#: Fields of a Build that another key fills.
+_FILLED = {"reference_tolerance", "resistor_stock", "capacitor_stock"}
+_KEYS = (*(f.name for f in fields(Build) if f.name not in _FILLED), "pairs")
 _VOLTS = ("V",)
 _OHMS = ("Ω", "Ω", "ohm", "Ohm", "ohms")
 _FARADS = ("F",)
@@ -45,7 +48,9 @@ def read_build(reading: Reading, part_names: Mapping[str, Collection[str]] | Non
         "op_amp": lambda r, k, v: _part(r, k, v, part_names), "multiplier": lambda r, k, v: _part(r, k, v, part_names),
         "speed": _speed,
     }  # fmt: skip
-    found = {key: read(reading, f"build.{key}", table[key]) for key, read in readers.items() if key in table}
+    found: dict[str, Any] = {key: read(reading, f"build.{key}", table[key]) for key, read in readers.items() if key in table}
+    for kind, units in (("resistor", _OHMS), ("capacitor", _FARADS)):
+        found[f"{kind}_stock"] = _stock(reading, f"build.{kind}s", found.get(f"{kind}s"), units)
     if "reference" in table:
         found["reference"], found["reference_tolerance"] = _reference(reading, table["reference"])
     elif found.get("supply"):
@@ -111,15 +116,26 @@ def _run(reading: Reading, key: str, given: Any) -> str | None:
 
 
 def _series(reading: Reading, key: str, given: Any) -> str | None:
-    if isinstance(given, str) and given in SERIES:
-        return given
+    if isinstance(given, str) and (given in SERIES or _names_file(given)):
+        return reading.string(key, given, "a series or a stock file")
     if isinstance(given, str) and re.fullmatch(r"[eE]\s?\d+", given):
         reading.fault(key, f"Unknown series {shown(given)}.", nearest(given, SERIES, f"Known: {', '.join(SERIES)}."))
-    elif isinstance(given, str | list):
-        reading.fault(key, "Stock files are not built in this version.", f"Write a series: {', '.join(SERIES)}.")
+    elif isinstance(given, str):
+        reading.fault(
+            key, f"{shown(given)} is no series, and no name of a CSV file.",
+            f'Write a series, {", ".join(SERIES)}, or a stock file such as "stock.csv".',
+        )  # fmt: skip
     else:
-        reading.fault(key, f"This is {kind_of(given)}.", f"Write a series in quotes: {', '.join(SERIES)}.")
+        reading.fault(key, f"This is {kind_of(given)}.", f"Write a series in quotes, {', '.join(SERIES)}, or a stock file.")
     return None
+
+
+def _names_file(given: str) -> bool:
+    return given.lower().endswith(".csv")
+
+
+def _stock(reading: Reading, key: str, given: str | None, units: Collection[str]) -> Stock | None:
+    return read_stock(reading, key, given, units) if given is not None and _names_file(given) else None
 
 
 def _limits(reading: Reading, key: str, given: Any, units: Collection[str]) -> tuple[float, float] | None:

@@ -51,12 +51,36 @@ class MultiplierFigures:
 
 
 @dataclass(frozen=True, slots=True)
+class Pile:
+    """Equal parts on hand.
+
+    Attributes
+    ----------
+    value
+        What the parts are planned with: the measured value where there is one [ohm], [F].
+    marked
+        What is written on them.
+    tolerance
+        Of ``value``; 0 for a measured part unless the stock file says otherwise.
+    serial
+        Of a single part.
+    """
+
+    value: float
+    count: int
+    marked: float
+    tolerance: float
+    serial: str = ""
+
+
+@dataclass(frozen=True, slots=True)
 class Target:
     """What the soldered board offers: purchasable values and the parts' figures.
 
     ``resistors`` and ``capacitors`` are rising values inside the limits [ohm], [F]; ``reference`` is in volts;
     ``switch_on`` is the operate switch's resistance [ohm], 0 where the run has no hold. The other parts of the
-    catalogue that would do on this supply are there for advice only.
+    catalogue that would do on this supply are there for advice only. ``resistor_piles`` and ``capacitor_piles`` are the parts on hand, None where any number of each value can be had; then the tolerances are
+    those of the worst of them.
     """
 
     resistors: tuple[float, ...]
@@ -71,6 +95,13 @@ class Target:
     switch_leakage: float
     other_op_amps: tuple[OpAmpFigures, ...] = ()
     other_multipliers: tuple[MultiplierFigures, ...] = ()
+    resistor_piles: tuple[Pile, ...] | None = None
+    capacitor_piles: tuple[Pile, ...] | None = None
+
+    @property
+    def stocked(self) -> bool:
+        """Whether parts are counted."""
+        return self.resistor_piles is not None or self.capacitor_piles is not None
 
 
 @dataclass(frozen=True, slots=True)
