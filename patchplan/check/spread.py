@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Container
-from math import sqrt
+from math import hypot, sqrt
 
 import numpy as np
 from numpy.typing import NDArray
@@ -12,6 +12,7 @@ from patchplan.circuit.switched import switched_volts
 from patchplan.patch.records import Patch, Stage
 from patchplan.sensitivity import Sensitivity
 from patchplan.sizing.records import Sizing, StageSizing, Target
+from patchplan.sizing.stock import tolerance_of
 
 Array = NDArray[np.float64]
 
@@ -29,7 +30,11 @@ def spread_of(sensitivity: Sensitivity, patch: Patch, sizing: Sizing, target: Ta
     dict
         ``resistors``, ``capacitors``, ``reference``, ``offsets``, ``multipliers``. Causes are independent.
     """
-    resistor, capacitor = target.resistor_tolerance / sqrt(3), target.capacitor_tolerance / sqrt(3)
+    resistor = target.resistor_tolerance / sqrt(3)
+
+    def ohm_sigma(value: float) -> float:
+        return tolerance_of(value, target.resistor_piles, target.resistor_tolerance) / sqrt(3)
+
     columns: dict[str, list[Array]] = {
         "resistors": [], "capacitors": [], "reference": [], "offsets": [], "multipliers": []
     }  # fmt: skip
@@ -49,17 +54,19 @@ def spread_of(sensitivity: Sensitivity, patch: Patch, sizing: Sizing, target: Ta
             continue
         sized = sizing.stages[stage.name]
         for leg, response in zip(sized.legs, own, strict=False):
-            columns["resistors"].append(resistor * leg.spread * response)
+            off = [share * ohm_sigma(ohm) for share, ohm in zip(leg.shares, leg.resistors, strict=True)]
+            columns["resistors"].append(hypot(*off) * response)
         shared = np.sum(own, axis=0) if own else np.zeros_like(rate)
         if stage.kind == "integrator":
-            columns["capacitors"].append(capacitor * shared)
+            farads = tolerance_of(sized.capacitor, target.capacitor_piles, target.capacitor_tolerance)
+            columns["capacitors"].append(farads / sqrt(3) * shared)
         else:
-            columns["resistors"].append(resistor * shared)
+            columns["resistors"].append(ohm_sigma(sized.feedback) * shared)
         drift = target.op_amp.offset * _offset_gain(stage, sized, sizing.time_scale) / volts
         columns["offsets"].append(drift * _leaked(sensitivity.times, stage, sized, sizing.time_scale) * rate)
         if sized.start is not None and sized.start[0]:
             start = sensitivity.start[stage.name] * sized.start_volts / volts
-            columns["resistors"].append(sqrt(2) * resistor * start)
+            columns["resistors"].append(hypot(*map(ohm_sigma, sized.start)) * start)
     steps = _steps(sensitivity, patch, sizing, target)
     low = _through(sensitivity, patch, wires, {node for node, volts in steps.items() if volts < 0.0})
     high = _through(sensitivity, patch, wires, {node for node, volts in steps.items() if volts > 0.0})

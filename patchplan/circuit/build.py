@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from patchplan.circuit.catalogue import Catalogue
+from patchplan.circuit.ledger import Ledger
 from patchplan.circuit.packages import assign_places, decoupling
 from patchplan.circuit.records import Circuit, NodeMap, Part
 from patchplan.circuit.stages import REFERENCE_AMPERE, Board, add_stage
@@ -63,7 +64,10 @@ def build_circuit(
     places = assign_places(
         patch, catalogue.op_amps[target.op_amp.name], catalogue.multipliers[target.multiplier.name], switch, toggled
     )
-    board = Board(patch, sizing, target, places, switch, reference_for(build, catalogue), held, switched)
+    board = Board(
+        patch, sizing, target, places, switch, reference_for(build, catalogue), held, switched,
+        ledger=Ledger.of(target),
+    )  # fmt: skip
     for stage in patch.stages:
         add_stage(board, stage)
     for part in decoupling(places, [p.ref for p in board.parts if p.kind == "reference"]):

@@ -46,6 +46,10 @@ class Part:
     control
         Of a switch that makes a step: name of the Source, whose line is high while the Source is not zero. Empty for
         the switches of the operate line.
+    serial
+        Of a single part on hand, "" for any other.
+    marked
+        What is written on a part that was measured, in the unit of ``value``; 0 for any other.
     pins
         Pin numbers in the order of ``nets``; empty where the catalogue knows none.
     stage
@@ -67,6 +71,8 @@ class Part:
     closed: str = ""
     control: str = ""
     pins: tuple[int, ...] = ()
+    serial: str = ""
+    marked: float = 0.0
 
     def __str__(self) -> str:
         when = f"{self.closed} {self.control}"

@@ -9,6 +9,7 @@ from functools import cached_property
 
 from patchplan.circuit.catalogue import PartData
 from patchplan.circuit.knobs import TRACK_TOLERANCE, Dial, crossing, rheostat
+from patchplan.circuit.ledger import Ledger
 from patchplan.circuit.packages import Place, Places
 from patchplan.circuit.records import DC_LIMIT, GROUND, Part
 from patchplan.patch.records import Patch, Stage
@@ -47,6 +48,7 @@ class Board:
     switched: Mapping[str, float]
     parts: list[Part] = field(default_factory=list)
     notes: list[str] = field(default_factory=list)
+    ledger: Ledger = field(default_factory=Ledger)
     numbers: Counter[str] = field(default_factory=Counter)
 
     @cached_property
@@ -71,7 +73,18 @@ class Board:
 
     def resistor(self, stage: Stage, a: str, b: str, value: float, model: str = "") -> None:
         """Lay down a resistor."""
-        self.put(Part("", "resistor", (a, b), value, self.target.resistor_tolerance, stage.name, model=model))
+        self.passive(stage, "resistor", (a, b), value, model)
+
+    def passive(self, stage: Stage, kind: str, nets: tuple[str, str], value: float, model: str) -> None:
+        """Lay down a resistor or capacitor, from the stock where there is one."""
+        pile = self.ledger.take(kind, value)
+        if pile is None:
+            usual = self.target.resistor_tolerance if kind == "resistor" else self.target.capacitor_tolerance
+            self.put(Part("", kind, nets, value, usual, stage.name, model=model))
+            return
+        marked = pile.marked if pile.marked != pile.value else 0.0
+        part = Part("", kind, nets, value, pile.tolerance, stage.name, model=model, serial=pile.serial, marked=marked)
+        self.put(part)
 
     def volts(self, node: str) -> float:
         """Signed volts per unit of the signal at a node."""
@@ -151,9 +164,7 @@ def _integrator(board: Board, stage: Stage) -> None:
     if held:
         _switch(board, stage, (f"{stage.node}_bus", inverting), "operate", board.places.operate[stage.name])
     _op_amp(board, stage)
-    tolerance = board.target.capacitor_tolerance
-    nets = (inverting, stage.node)
-    board.put(Part("", "capacitor", nets, sized.capacitor, tolerance, stage.name, model=DIELECTRIC))
+    board.passive(stage, "capacitor", (inverting, stage.node), sized.capacitor, DIELECTRIC)
     if sized.feedback:
         board.resistor(stage, inverting, stage.node, sized.feedback, DC_LIMIT)
     if held:

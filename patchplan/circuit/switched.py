@@ -7,8 +7,10 @@ from dataclasses import replace
 from fractions import Fraction
 
 from patchplan.equation.system import level_of
+from patchplan.errors import CannotBuild
 from patchplan.patch.records import Patch, Stage, Wire
 from patchplan.sizing.records import Leg, NodeScale, Sizing, StageSizing, Target
+from patchplan.sizing.stock import left_over, matched_pair
 
 #: Resistors of the inverter that makes the second polarity of the reference [ohm].
 _INVERTER_OHM = 10e3
@@ -55,11 +57,22 @@ def with_references(patch: Patch, sizing: Sizing, target: Target, duration: floa
         taken = {s.name for s in stages}
         name = next(n for n in (f"N{i}" for i in range(1, len(stages) + 2)) if n not in taken)
         stages.append(Stage(name, "inverter", node, "1", -first.sign, (Wire(first.node, Fraction(1)),)))
-        ohm = min(target.resistors, key=lambda r: abs(math.log(r / _INVERTER_OHM)))
-        values[name] = StageSizing(name, (Leg((ohm,)),), feedback=ohm)
+        leg, feedback = _pair(patch, sizing, target)
+        values[name] = StageSizing(name, (Leg((leg,)),), feedback=feedback)
         scales[node] = replace(scales[first.node], node=node)
         signs += 1
     return replace(patch, stages=tuple(stages), sign_stages=signs), replace(sizing, scales=scales, stages=values)
+
+
+def _pair(patch: Patch, sizing: Sizing, target: Target) -> tuple[float, float]:
+    """Two equal resistors, or as equal as what is on hand."""
+    if target.resistor_piles is None:
+        ohm = min(target.resistors, key=lambda r: abs(math.log(r / _INVERTER_OHM)))
+        return ohm, ohm
+    pair = matched_pair(left_over(patch, sizing, target), _INVERTER_OHM)
+    if pair is None:
+        raise CannotBuild("The stock has no two resistors left for the second polarity of the reference. Add two.")
+    return pair
 
 
 def _inverters(patch: Patch, reference: Stage) -> list[Stage]:

@@ -150,9 +150,7 @@ def _part(parts: Mapping[str, PartData], name: str, kind: str) -> PartData:
     return parts[name]
 
 
-def _piles(
-    stock: Stock | None, limits: tuple[float, float], tolerance: float, kind: str
-) -> tuple[Pile, ...] | None:
+def _piles(stock: Stock | None, limits: tuple[float, float], tolerance: float, kind: str) -> tuple[Pile, ...] | None:
     """The parts on hand inside the limits, by value."""
     if stock is None:
         return None
@@ -174,9 +172,7 @@ def _worst(piles: tuple[Pile, ...] | None, tolerance: float) -> float:
     return tolerance if piles is None else max(pile.tolerance for pile in piles)
 
 
-def _values(
-    piles: tuple[Pile, ...] | None, series: str, limits: tuple[float, float], kind: str
-) -> tuple[float, ...]:
+def _values(piles: tuple[Pile, ...] | None, series: str, limits: tuple[float, float], kind: str) -> tuple[float, ...]:
     if piles is not None:
         return tuple(dict.fromkeys(pile.value for pile in piles))
     values = values_between(series, *limits)

@@ -48,7 +48,9 @@ def read_build(reading: Reading, part_names: Mapping[str, Collection[str]] | Non
         "op_amp": lambda r, k, v: _part(r, k, v, part_names), "multiplier": lambda r, k, v: _part(r, k, v, part_names),
         "speed": _speed,
     }  # fmt: skip
-    found: dict[str, Any] = {key: read(reading, f"build.{key}", table[key]) for key, read in readers.items() if key in table}
+    found: dict[str, Any] = {
+        key: read(reading, f"build.{key}", table[key]) for key, read in readers.items() if key in table
+    }
     for kind, units in (("resistor", _OHMS), ("capacitor", _FARADS)):
         found[f"{kind}_stock"] = _stock(reading, f"build.{kind}s", found.get(f"{kind}s"), units)
     if "reference" in table:
@@ -126,7 +128,9 @@ def _series(reading: Reading, key: str, given: Any) -> str | None:
             f'Write a series, {", ".join(SERIES)}, or a stock file such as "stock.csv".',
         )  # fmt: skip
     else:
-        reading.fault(key, f"This is {kind_of(given)}.", f"Write a series in quotes, {', '.join(SERIES)}, or a stock file.")
+        reading.fault(
+            key, f"This is {kind_of(given)}.", f"Write a series in quotes, {', '.join(SERIES)}, or a stock file."
+        )
     return None
 
 

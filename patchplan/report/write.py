@@ -90,20 +90,22 @@ def plan_folder(plan: Plan, *, pictures: bool = True, board: Board = board_of) -
 
 
 def problem_files(plan: Plan, taken: list[str]) -> dict[str, bytes]:
-    """problem.toml and copies of its recordings, at the same places beside it.
+    """problem.toml and copies of its recordings and stock files, at the same places beside it.
 
-    A recording outside the problem's folder, or of a name that the plan needs, is copied under a name of its own.
+    One outside the problem's folder, or of a name that the plan needs, is copied under a name of its own.
     """
     files = {"problem.toml": plan.problem.text.encode()}
     recordings = {i.recording.file for i in plan.problem.inputs.values() if i.recording}
     recordings |= {
         s.waveform.recording.file for s in plan.patch.sources.values() if s.waveform and s.waveform.recording
     }
-    for file in sorted(recordings):
+    stocks = (plan.problem.build.resistor_stock, plan.problem.build.capacitor_stock)
+    named = dict.fromkeys(sorted(recordings), "recording") | {stock.file: "stock" for stock in stocks if stock}
+    for file, kind in named.items():
         name = os.path.normpath(file)
         used = {other.lower() for other in (*taken, *files)}
         if os.path.isabs(name) or name.startswith("..") or name.lower() in used:
-            name = unused_name("recording", Path(file).stem, "csv", (*taken, *files))
+            name = unused_name(kind, Path(file).stem, "csv", (*taken, *files))
         files[name] = (plan.problem.folder / file).read_bytes()
     return files
 

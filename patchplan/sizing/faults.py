@@ -33,8 +33,8 @@ def find_faults(
         Seconds per unit of problem time.
     """
     low, high = pace.window
-    faults = []
-    if given is None and low > high:
+    faults = list(values.missing)
+    if not faults and given is None and low > high:
         faults.append(
             f"No speed serves every stage: {pace.limits[0]} asks for at least {engineering(low, 's')} per unit of "
             f"time, {pace.limits[1]} for at most {engineering(high, 's')}. Faster parts or wider value limits would "

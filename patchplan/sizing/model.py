@@ -156,7 +156,7 @@ def _scales(
         peak = ranges.nodes[stage.node].peak or 1.0
         if stage.kind == "reference":
             scale[stage.node] = Affine(log(target.reference))
-        elif stage.kind == "inverter":
+        elif stage.kind == "inverter" and (stage.signal == "1" or target.resistor_piles is None):
             scale[stage.node] = scale[stage.wires[0].source]
         elif stage.kind == "multiplier":
             left, right = (scale[w.source] for w in stage.wires)
@@ -184,8 +184,10 @@ def _ratios(
     ratios = []
     sources = (s for s in patch.stages if s.kind == "source")
     switches = {s.node for s in sources if not patch.sources[s.signal].external and s.signal not in form.scales}
+    # Two parts on hand are seldom alike, so that inverters have a ratio, and mostly a scale, of their own.
+    counted = ("integrator", "summer") if target.resistor_piles is None else ("integrator", "summer", "inverter")
     for stage in patch.stages:
-        if stage.kind not in ("integrator", "summer") or stage.bipolar:
+        if stage.kind not in counted or stage.bipolar or (stage.kind == "inverter" and stage.signal == "1"):
             continue
         here = scale[stage.node]
         for index, wire in enumerate(stage.wires):
@@ -197,7 +199,8 @@ def _ratios(
                 want = want.plus(Affine(0.0, {feedback[stage.name]: 1.0}))
             weight = weights.get((stage.name, index), 1.0)
             switched = wire.source if wire.source in switches else ""
-            ratios.append(Ratio(stage.name, index, stage.kind, want, weight, switched))
+            kind = "integrator" if stage.kind == "integrator" else "summer"
+            ratios.append(Ratio(stage.name, index, kind, want, weight, switched))
         if stage.kind == "integrator" and stage.start and target.switch_on:
             want = here.plus(Affine(log(abs(float(stage.start)) / target.reference)))
             ratios.append(Ratio(stage.name, -1, "start", want, weights.get((stage.name, -1), 1.0)))

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
-from math import sqrt
+from math import hypot
 
 
 @dataclass(frozen=True, slots=True)
@@ -130,13 +130,18 @@ class Leg:
         return last + first * shunt / (first + shunt)
 
     @property
-    def spread(self) -> float:
-        """Relative change of the transfer per relative change of its resistors, root sum of squares."""
+    def shares(self) -> tuple[float, ...]:
+        """Relative change of the transfer per relative change of each resistor, sizes alone."""
         if len(self.resistors) == 1:
-            return 1.0
+            return (1.0,)
         first, shunt, last = self.resistors
         cross = first * last / shunt
-        return sqrt((first + cross) ** 2 + cross**2 + (last + cross) ** 2) / self.transfer
+        return (first + cross) / self.transfer, cross / self.transfer, (last + cross) / self.transfer
+
+    @property
+    def spread(self) -> float:
+        """Relative change of the transfer per relative change of its resistors, root sum of squares."""
+        return hypot(*self.shares)
 
 
 @dataclass(frozen=True, slots=True)

@@ -28,6 +28,8 @@ from patchplan.sizing.model import LEAST_USE, MOST_USE, Model, build_model
 from patchplan.sizing.records import Coefficient, Leg, NodeScale, Sizing, StageSizing, Target
 from patchplan.sizing.search import Effect
 from patchplan.sizing.speed import Speed, choose_speed
+from patchplan.sizing.stock import taken, without
+from patchplan.sizing.stocked import choose_stocked
 from patchplan.sizing.trial import choose_values
 from patchplan.sizing.values import FEEDBACK, Values
 
@@ -76,13 +78,19 @@ def size(
     limited = _limited_stages(form, patch, ranges) if run == "free" else ()
     model = build_model(form, patch, ranges, target, bounds, _weights(patch, sensitivity))
     effect = _effect(model, patch, sensitivity, pace)
-    values = choose_values(model, target, effect, comfortable=dict.fromkeys(limited, LIMITED), think=think)
+    comfortable = dict.fromkeys(limited, LIMITED)
+    if target.stocked:
+        values = choose_stocked(model, patch, target, effect, comfortable=comfortable, think=think)
+    else:
+        values = choose_values(model, target, effect, comfortable=comfortable, think=think)
     scales = _node_scales(patch, ranges, model, values)
     time_scale = exp(model.at(model.speed, values.theta))
-    stages = {s.name: _stage(s, patch, target, model, values, scales) for s in patch.stages}
+    stages = _stages(patch, target, model, values, scales)
     for stage in (s for s in patch.stages if s.name in limited):
         sized, scale = stages[stage.name], scales[stage.node]
-        stages[stage.name] = _dc_limit(stage, sized, scale, sensitivity, target, time_scale, accept / 100.0)
+        left = without(target, *taken(patch, stages))
+        if left.resistors:
+            stages[stage.name] = _dc_limit(stage, sized, scale, sensitivity, left, time_scale, accept / 100.0)
     sizing = Sizing(
         time_scale,
         pace.window,
@@ -172,19 +180,26 @@ def _node_scales(patch: Patch, ranges: Ranges, model: Model, values: Values) -> 
     return scales
 
 
-def _stage(
-    stage: Stage, patch: Patch, target: Target, model: Model, values: Values, scales: Mapping[str, NodeScale]
-) -> StageSizing:
+def _stages(
+    patch: Patch, target: Target, model: Model, values: Values, scales: Mapping[str, NodeScale]
+) -> dict[str, StageSizing]:
+    """Values of all stages; knobs through zero take what the others leave."""
+    stages = {s.name: _stage(s, target, model, values) for s in patch.stages if not s.bipolar}
+    for stage in (s for s in patch.stages if s.bipolar):
+        left = without(target, *taken(patch, stages))
+        stages[stage.name] = _bipolar(stage, patch, left if left.resistors else target, scales)
+    return {s.name: stages[s.name] for s in patch.stages}
+
+
+def _stage(stage: Stage, target: Target, model: Model, values: Values) -> StageSizing:
     """Values of one stage, from the parts that the search chose."""
     if stage.kind not in ("integrator", "summer", "inverter"):
         return StageSizing(stage.name)
-    if stage.kind == "inverter":
+    if stage.kind == "inverter" and (stage.name, 0) not in values.parts:
         both = _nearest(target.resistors, max(1e4, LIGHT * target.op_amp.load))
         return StageSizing(stage.name, (Leg((both,)),), feedback=both)
-    if stage.bipolar:
-        return _bipolar(stage, patch, target, scales)
     legs = tuple(Leg(values.parts[stage.name, index]) for index in range(len(stage.wires)))
-    if stage.kind == "summer":
+    if stage.kind in ("summer", "inverter"):
         if stage.knob:
             return StageSizing(stage.name, legs, feedback=exp(values.theta[model.feedback[stage.name]]))
         feedback = values.parts.get((stage.name, "Rf"), (_nearest(target.resistors, 1e4),))[0]
@@ -199,7 +214,10 @@ def _start(stage: Stage, target: Target, values: Values) -> tuple[tuple[float, f
     if not target.switch_on:
         return None, 0.0
     if not stage.start:
-        return (0.0, _nearest(target.resistors, max(2e4, LIGHT * target.op_amp.load))), 0.0
+        (hold,) = values.parts.get(
+            (stage.name, "hold"), (_nearest(target.resistors, max(2e4, LIGHT * target.op_amp.load)),)
+        )
+        return (0.0, hold), 0.0
     first, second = values.parts[stage.name, -1]
     volts = target.reference * second / first
     return (first, second), volts * stage.sign * (1 if stage.start > 0 else -1)

@@ -20,6 +20,8 @@ Array = NDArray[np.float64]
 FEEDBACK = (5e3, 1e5)
 #: Start networks hold through a feedback resistor near this value [ohm] (common practice, no source).
 START_FEEDBACK = 2e4
+#: Merit of a capacitor with which no single resistor serves: above any without.
+OVER = 1e4
 
 
 @dataclass(frozen=True)
@@ -54,6 +56,8 @@ class Values:
         Relative errors of the independent loops, shape ``(n_loops,)``.
     errors
         Relative error of each row, shape ``(n_rows,)``.
+    missing
+        Sentences on parts that are not on hand.
     """
 
     parts: dict[tuple[str, int | str], tuple[float, ...]]
@@ -61,6 +65,7 @@ class Values:
     worst: float
     loop_errors: Array
     errors: Array
+    missing: tuple[str, ...] = ()
 
 
 @dataclass(frozen=True)
@@ -135,21 +140,27 @@ def start_ratios(resistors: tuple[float, ...]) -> Choice:
     return Choice(np.array(logs), tuple(best[x] for x in logs))
 
 
-def pick_capacitor(wanted: Array, target: Target, rank: int = 0, comfortable: float = COMFORTABLE) -> float:
-    """Capacitor for a stage whose R*C products are wanted [s]; ``rank`` 0 is the best, 1 the next.
+def capacitor_merit(wanted: Array, target: Target, comfortable: float = COMFORTABLE) -> Array:
+    """How little each capacitor suits a stage whose R*C products are wanted [s], shape ``(n_capacitors,)``.
 
     Out-of-range resistors count most, then the distance of their middle from ``comfortable`` [ohm].
     """
-    capacitors = np.array(target.capacitors)
-    resistors = wanted[None, :] / capacitors[:, None]
+    resistors = wanted[None, :] / np.array(target.capacitors)[:, None]
     over = np.maximum(np.log(resistors / target.resistors[-1]), 0) + np.maximum(
         np.log(target.resistors[0] / resistors), 0
     )
     middle = np.abs(np.log(np.sqrt(resistors.min(axis=1) * resistors.max(axis=1)) / comfortable))
-    order = np.argsort(100 * over.sum(axis=1) + middle, kind="stable")
+    merit: Array = 100 * over.sum(axis=1) + middle
+    return np.where(over.any(axis=1), OVER, 0.0) + merit
+
+
+def pick_capacitor(wanted: Array, target: Target, rank: int = 0, comfortable: float = COMFORTABLE) -> float:
+    """Capacitor for a stage whose R*C products are wanted [s]; ``rank`` 0 is the best, 1 the next."""
+    merit = capacitor_merit(wanted, target, comfortable)
+    order = np.argsort(merit, kind="stable")
     # Any other than the best makes networks of three longer, and offsets count by their length.
-    rank = 0 if over[order[0]].any() else rank
-    return float(capacitors[order[min(rank, len(order) - 1)]])
+    rank = 0 if merit[order[0]] >= OVER else rank
+    return target.capacitors[int(order[min(rank, len(order) - 1)])]
 
 
 def pick_feedback(wanted: Array, target: Target) -> float:

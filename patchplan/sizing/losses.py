@@ -1,0 +1,37 @@
+"""What switches and the op amp's finite bandwidth add to each R*C or ratio."""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+from patchplan.sizing.model import Ratio
+from patchplan.sizing.records import Target
+
+Array = NDArray[np.float64]
+
+
+def added_logs(ratios: tuple[Ratio, ...], target: Target, resistance: Array, capacitance: Array) -> Array:
+    """log of what is added to each row, shape ``(n_rows,)``.
+
+    All legs of a stage share the operate switch, so that Ron counts as Ron * sum(1/R), and so do all legs from a source
+    that is switched from the reference; at infinite gain an integrator of gains g is slower by 1 + sum(g)/w_t (Franco
+    2019).
+
+    Parameters
+    ----------
+    resistance
+        Of each row's leg, shape ``(n_rows,)`` [ohm]; of no matter for start values.
+    capacitance
+        Of each row's stage, shape ``(n_rows,)`` [F]; of no matter but for integrators.
+    """
+    extra: dict[str, float] = {}
+    for ratio, ohm, farad in zip(ratios, resistance.tolist(), capacitance.tolist(), strict=True):
+        if ratio.switched:
+            extra[ratio.switched] = extra.get(ratio.switched, 0.0) + target.switch_on / ohm
+        if ratio.kind == "integrator":
+            slow = 1.0 / (ohm * farad * target.op_amp.gain_bandwidth)
+            extra[ratio.stage] = extra.get(ratio.stage, 0.0) + target.switch_on / ohm + slow
+    shares = [(extra[r.stage] if r.kind == "integrator" else 0.0, extra.get(r.switched, 0.0)) for r in ratios]
+    total: Array = np.log1p(np.array(shares).reshape(-1, 2)).sum(axis=1)
+    return total

@@ -1,0 +1,326 @@
+"""Values from parts on hand: the same descent on loop errors, with pieces that are counted.
+
+Every resistor and capacitor that the board needs is a slot; a slot holds one piece (a T leg three). An attempt begins
+with an assignment of pieces to slots (Kuhn 1955, through scipy) at some scale factors and speed, and descends over
+single and paired moves, exchanges among them, none of which takes more of a value than there is.
+"""
+
+from __future__ import annotations
+
+from collections import Counter
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, replace
+from math import log
+from typing import TypeAlias
+
+import numpy as np
+from numpy.typing import NDArray
+
+from patchplan.patch.records import Patch
+from patchplan.sizing.losses import added_logs
+from patchplan.sizing.model import Model
+from patchplan.sizing.pieces import Menu, Shelf, State, assigned, descend_counted, menu_of, t_options
+from patchplan.sizing.records import Target
+from patchplan.sizing.search import Effect, Loops, find_loops, loop_errors, merit, split_rest
+from patchplan.sizing.speed import COMFORTABLE
+from patchplan.sizing.stock import PLENTY, counts, matched_pair, missing_sentence, without
+from patchplan.sizing.values import START_FEEDBACK, Values, capacitor_merit, pick_feedback, wanted_products
+
+Array = NDArray[np.float64]
+#: By how hard to think: attempts, and the predicted error that is good enough, as a fraction of peak.
+ATTEMPTS = {"low": (20, 2e-3), "normal": (250, 5e-4), "high": (2000, 5e-5)}
+#: Boards with more slots than this take fewer attempts, down to one.
+MANY_SLOTS = 25
+#: Slots that only need some value take one near this [ohm]; the first of a name counts.
+EASY = {"hold": 2e4, "ready": 1e4, "Rf": 2e4, "S2": START_FEEDBACK}
+#: A row further off than this was not in reach of the stock, see :data:`patchplan.sizing.faults.OUT_OF_REACH`.
+FAR = 0.1
+Name: TypeAlias = tuple[str, int | str]
+
+
+@dataclass(frozen=True)
+class _Board:
+    """What all attempts share.
+
+    Attributes
+    ----------
+    names, capacitive
+        The slots, and whether each holds a capacitor.
+    incidence
+        Shape ``(n_rows, n_slots)``; zero columns for slots that only need some value.
+    shelf
+        The values on hand and their counts, less the pairs.
+    pairs
+        Stage -> the resistors of an inverter on the reference; "" is one that a step may need yet.
+    """
+
+    model: Model
+    target: Target
+    names: tuple[Name, ...]
+    capacitive: NDArray[np.bool_]
+    incidence: Array
+    matrix: Array
+    constant: Array
+    effect: Effect
+    loops: Loops
+    comfortable: Mapping[str, float]
+    shelf: Shelf
+    pairs: Mapping[str, tuple[float, float]]
+
+
+def choose_stocked(
+    model: Model,
+    patch: Patch,
+    target: Target,
+    effect: Effect,
+    *,
+    comfortable: Mapping[str, float],
+    think: str = "normal",
+    seed: int = 1,
+) -> Values:
+    """Values from the parts on hand; ``Values.missing`` says what the stock lacks.
+
+    Parameters as for :func:`patchplan.sizing.trial.choose_values`. Measured parts are searched to the end, as their
+    values leave no other error.
+    """
+    board = _board(model, patch, target, effect, comfortable)
+    found = _searched(board, think, seed)
+    if found is not None and np.abs(found.errors).max(initial=0.0) <= FAR:
+        return found
+    # What would do if any number of each value were on hand: what it takes beyond the stock is missing.
+    plenty = replace(board, shelf=replace(board.shelf, count=np.full_like(board.shelf.count, PLENTY)))
+    wished = _searched(plenty, think, seed)
+    assert wished is not None
+    missing = _missing(wished, board)
+    if missing and np.abs(wished.errors).max(initial=0.0) <= FAR:
+        return replace(wished, missing=missing)
+    return found or replace(wished, missing=missing)
+
+
+def _missing(wished: Values, board: _Board) -> tuple[str, ...]:
+    sentences = []
+    for kind, unit, piles in (
+        ("resistor", "Ω", board.target.resistor_piles),
+        ("capacitor", "F", board.target.capacitor_piles),
+    ):
+        needed: Counter[float] = Counter()
+        for (_, what), parts in wished.parts.items():
+            if (what == "C") == (kind == "capacitor"):
+                needed.update(parts)
+        sentences.append(missing_sentence(kind, unit, needed, piles))
+    return tuple(s for s in sentences if s)
+
+
+def _board(model: Model, patch: Patch, target: Target, effect: Effect, comfortable: Mapping[str, float]) -> _Board:
+    names: dict[Name, int] = {}
+    entries: list[tuple[int, int, float]] = []
+
+    def slot(stage: str, what: int | str) -> int:
+        return names.setdefault((stage, what), len(names))
+
+    for row, ratio in enumerate(model.ratios):
+        if ratio.kind == "start":
+            entries += [(row, slot(ratio.stage, "S2"), 1.0), (row, slot(ratio.stage, "S1"), -1.0)]
+            continue
+        entries.append((row, slot(ratio.stage, ratio.wire), 1.0))
+        if ratio.kind == "integrator":
+            entries.append((row, slot(ratio.stage, "C"), 1.0))
+        elif ratio.stage not in model.feedback:
+            entries.append((row, slot(ratio.stage, "Rf"), -1.0))
+    for stage in patch.stages:
+        if stage.kind == "integrator":
+            slot(stage.name, "C")
+            if target.switch_on and not stage.start:
+                slot(stage.name, "hold")
+        elif stage.kind == "summer" and not stage.knob:
+            slot(stage.name, "Rf")
+        elif stage.bipolar:
+            slot(stage.name, 0), slot(stage.name, "Rf")
+    incidence = np.zeros((len(model.ratios), len(names)))
+    for row, column, sign in entries:
+        incidence[row, column] = sign
+    matrix = np.zeros((len(model.ratios), len(model.low)))
+    for row, ratio in enumerate(model.ratios):
+        for column, value in ratio.want.slope.items():
+            matrix[row, column] += value
+    pairs = _reference_pairs(patch, target)
+    rest = without(target, Counter(r for pair in pairs.values() for r in pair))
+    have = [counts(rest.resistors, rest.resistor_piles), counts(rest.capacitors, rest.capacitor_piles)]
+    return _Board(
+        model, target, tuple(names), np.array([what == "C" for _, what in names], dtype=bool), incidence, matrix,
+        np.array([r.want.constant for r in model.ratios]), effect, find_loops(matrix, effect), comfortable,
+        Shelf(
+            np.array([*have[0], *have[1]]), np.array([*have[0].values(), *have[1].values()]),
+            np.repeat([False, True], [len(have[0]), len(have[1])]),
+        ),
+        pairs,
+    )  # fmt: skip
+
+
+def _reference_pairs(patch: Patch, target: Target) -> dict[str, tuple[float, float]]:
+    """Resistors as equal as can be for every inverter on the reference, whose scale is not free."""
+    if target.resistor_piles is None:
+        return {}
+    stages = [s.name for s in patch.stages if s.kind == "inverter" and s.signal == "1"]
+    if not stages and any(s.kind == "source" and not patch.sources[s.signal].external for s in patch.stages):
+        stages = [""]
+    found: dict[str, tuple[float, float]] = {}
+    for stage in stages:
+        pair = matched_pair(without(target, Counter(r for p in found.values() for r in p)), EASY["ready"])
+        if pair is not None:
+            found[stage] = pair
+    return found
+
+
+def _searched(board: _Board, think: str, seed: int) -> Values | None:
+    """The best of several attempts; None where there are fewer pieces than slots."""
+    random = np.random.default_rng(seed)
+    most, enough = ATTEMPTS[think]
+    measured = any(p.serial for p in (*(board.target.resistor_piles or ()), *(board.target.capacitor_piles or ())))
+    share = min(1.0, MANY_SLOTS / max(len(board.names), 1))
+    attempts = []
+    for number in range(max(1, round(most * share**1.5))):
+        found = _attempt(board, number, random)
+        if found is None:
+            break
+        attempts.append(found)
+        if found[0] < enough and not measured:
+            break
+    attempts.sort(key=lambda found: found[0])
+    best = [_finish(board, state) for _, state in attempts[:3]]
+    return min(best, key=lambda v: merit(board.effect, -np.log1p(np.maximum(v.errors, -1 + 1e-9))), default=None)
+
+
+def _attempt(board: _Board, number: int, random: np.random.Generator) -> tuple[float, State] | None:
+    """Assign and descend from one starting point: the middle first, then scattered ones."""
+    model = board.model
+    theta = model.centre
+    if number:
+        theta = theta + random.uniform(-0.35, 0.35, len(theta)) * (model.high - model.low)
+    wanted = wanted_products(model, theta)
+    state = State(np.zeros(len(board.names)), np.zeros((len(board.names), len(board.shelf.value)), dtype=np.int64), {})
+
+    def noise(shape: tuple[int, ...]) -> Array:
+        return random.exponential(0.5, shape) if number else np.zeros(shape)
+
+    if not _place_anchors(board, state, wanted, noise):
+        return None
+    menu = _place_rest(board, state, wanted)
+    if menu is None:
+        return None
+    return _settled(board, state, menu), state
+
+
+def _settled(board: _Board, state: State, menu: Menu) -> float:
+    """Descend in place; the loop errors left, and what staying inside the bounds of theta costs."""
+    effect = board.loops.basis.T @ (board.loops.shape @ board.incidence)
+    for _ in range(2):
+        offset = board.constant - _shift(board, state.y)
+
+        def errors(y: Array, offset: Array = offset) -> Array:
+            return board.loops.errors(board.incidence @ y - offset)
+
+        descend_counted(state, menu, effect, errors, board.shelf)
+    residual = board.incidence @ state.y - board.constant + _shift(board, state.y)
+    left = board.loops.errors(residual)
+    return float(np.sqrt(left @ left)) + board.loops.outside(residual, board.model.low, board.model.high)
+
+
+def _place_anchors(board: _Board, state: State, wanted: Array, noise: Callable[[tuple[int, ...]], Array]) -> bool:
+    """Capacitors, feedback resistors and those that hold start values; whether there are enough."""
+    rows: dict[str, list[int]] = {}
+    for row, ratio in enumerate(board.model.ratios):
+        if ratio.kind != "start":
+            rows.setdefault(ratio.stage, []).append(row)
+    capacitors = [i for i, (_, what) in enumerate(board.names) if what == "C"]
+    merits = np.array([
+        capacitor_merit(wanted[rows[stage]], board.target, board.comfortable.get(stage, COMFORTABLE))
+        if stage in rows else np.abs(np.log(np.array(board.target.capacitors) / 1e-8))
+        for stage, _ in (board.names[i] for i in capacitors)
+    ]).reshape(len(capacitors), -1)  # fmt: skip
+    ready = assigned(state, board.shelf, capacitors, merits + noise(merits.shape), board.shelf.capacitive)
+    others = [i for i, (_, what) in enumerate(board.names) if what in ("Rf", "S2")]
+    near = [
+        log(pick_feedback(wanted[rows[stage]], board.target))
+        if what == "Rf" and stage in rows
+        else log(EASY[str(what)])
+        for stage, what in (board.names[i] for i in others)
+    ]
+    values = np.log(board.shelf.value[~board.shelf.capacitive])
+    costs = np.abs(values[None, :] - np.array(near)[:, None]).reshape(len(others), len(values))
+    # Legs come by the exact pieces later: what lies within a factor is as good, and scattered from start to start.
+    return ready and assigned(state, board.shelf, others, costs + noise(costs.shape), ~board.shelf.capacitive)
+
+
+def _place_rest(board: _Board, state: State, wanted: Array) -> Menu | None:
+    """Legs and the other resistors, and the menu of every slot around what it should hold; None where too few."""
+    centre, at = state.y.copy(), dict[Name, int]()
+    at.update(((r.stage, r.wire), row) for row, r in enumerate(board.model.ratios))
+    column = {name: i for i, name in enumerate(board.names)}
+    ts: dict[int, list[tuple[float, tuple[int, ...]]]] = {}
+    slots, costs = [], []
+    values = np.log(board.shelf.value[~board.shelf.capacitive])
+    for i, (stage, what) in enumerate(board.names):
+        if i in state.parts:
+            continue
+        if (stage, what) in at or what == "S1":
+            centre[i] = _wanted_log(board, state, stage, what, wanted, at, column)
+            if what != "S1" and centre[i] > values[-1] + 0.03:
+                ts[i] = t_options(board.shelf, float(centre[i]))
+            costs.append(np.abs(values - centre[i]))
+        else:
+            centre[i] = log(EASY.get(str(what), 4e4))
+            costs.append(0.01 * np.abs(values - centre[i]))
+        slots.append(i)
+    for i, options in ts.items():
+        left = state.left(board.shelf)
+        fits = [o for o in options if all(o[1].count(v) <= left[v] for v in o[1])]
+        if fits:
+            state.put(i, *min(fits, key=lambda o: abs(o[0] - centre[i])))
+    waiting = [k for k, i in enumerate(slots) if i not in state.parts]
+    table = np.array([costs[k] for k in waiting]).reshape(len(waiting), len(values))
+    if not assigned(state, board.shelf, [slots[k] for k in waiting], table, ~board.shelf.capacitive):
+        return None
+    moving = [i for i in range(len(board.names)) if board.incidence[:, i].any()]
+    return menu_of(board.shelf, moving, centre, board.capacitive, ts)
+
+
+def _wanted_log(
+    board: _Board, state: State, stage: str, what: int | str, wanted: Array, at: Mapping[Name, int],
+    column: Mapping[Name, int],
+) -> float:  # fmt: skip
+    """log of the resistor that a slot should hold beside the anchor of its stage."""
+    if what == "S1":
+        return float(state.y[column[stage, "S2"]]) - log(wanted[at[stage, -1]])
+    product = log(wanted[at[stage, what]])
+    if (stage, "C") in column:
+        return product - float(state.y[column[stage, "C"]])
+    return product + (float(state.y[column[stage, "Rf"]]) if (stage, "Rf") in column else 0.0)
+
+
+def _shift(board: _Board, y: Array) -> Array:
+    """What switches and bandwidth add to each row, shape ``(n_rows,)``."""
+    column = {name: i for i, name in enumerate(board.names)}
+    ones = np.ones(len(board.model.ratios))
+    ohm, farad = ones.copy(), ones.copy()
+    for row, ratio in enumerate(board.model.ratios):
+        if ratio.kind != "start":
+            # What the summing node sees of a network of three is little more than its last, largest resistor.
+            ohm[row] = min(float(np.exp(y[column[ratio.stage, ratio.wire]])), board.target.resistors[-1])
+        if ratio.kind == "integrator":
+            farad[row] = np.exp(y[column[ratio.stage, "C"]])
+    return added_logs(board.model.ratios, board.target, ohm, farad)
+
+
+def _finish(board: _Board, state: State) -> Values:
+    """Split what is left over the scale factors and name the parts."""
+    residual = board.incidence @ state.y - board.constant + _shift(board, state.y)
+    theta, worst = split_rest(board.matrix, residual, board.effect, board.model.low, board.model.high)
+    errors = np.expm1(-(residual - board.matrix @ theta))
+    held = {name: tuple(float(board.shelf.value[v]) for v in state.parts[i]) for i, name in enumerate(board.names)}
+    for stage, what in board.names:
+        if what == "S1":
+            held[stage, -1] = held.pop((stage, "S1")) + held.pop((stage, "S2"))
+    for stage, (leg, feedback) in board.pairs.items():
+        held |= {(stage, 0): (leg,), (stage, "Rf"): (feedback,)}
+    return Values(held, theta, worst, loop_errors(board.matrix, residual), errors)
