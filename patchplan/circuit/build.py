@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from patchplan.circuit.catalogue import Catalogue
+from patchplan.circuit.dials import find_dials
 from patchplan.circuit.ledger import Ledger
 from patchplan.circuit.packages import assign_places, decoupling
 from patchplan.circuit.records import Circuit, NodeMap, Part
@@ -66,7 +67,7 @@ def build_circuit(
     )
     board = Board(
         patch, sizing, target, places, switch, reference_for(build, catalogue), held, switched,
-        ledger=Ledger.of(target),
+        ledger=Ledger.of(target), dials=find_dials(patch, sizing, target, form.system.adjustable),
     )  # fmt: skip
     for stage in patch.stages:
         add_stage(board, stage)
@@ -88,6 +89,7 @@ def build_circuit(
         notes=notes,
         start={} if held else _start_volts(patch, sizing),
         wiring=wiring_of(parts, catalogue),
+        knobs=tuple(board.knobs),
     )
 
 

@@ -80,6 +80,42 @@ class Part:
 
 
 @dataclass(frozen=True, slots=True)
+class KnobLaw:
+    """What a potentiometer does to its knob.
+
+    Attributes
+    ----------
+    knob, parameter
+        The function of adjustable parameters that it sets, and the parameter; "" where there are several.
+    ref, stage
+        The potentiometer and the stage it belongs to.
+    wanted
+        Range of the knob.
+    covers
+        The knob at both ends of the travel, setting 0 first.
+    covers_least
+        The same with a track at the low end of its tolerance.
+    setting
+        Nominal, 0 to 1.
+    points
+        (setting, knob, parameter), the loading of the wiper counted; the parameter is None outside its range.
+    bend
+        Largest distance of the law from a straight line, as a share of the travel.
+    """
+
+    knob: str
+    parameter: str
+    ref: str
+    stage: str
+    wanted: tuple[float, float]
+    covers: tuple[float, float]
+    covers_least: tuple[float, float]
+    setting: float
+    points: tuple[tuple[float, float, float | None], ...]
+    bend: float
+
+
+@dataclass(frozen=True, slots=True)
 class Pin:
     """One pin of a package and the net it goes to.
 
@@ -126,6 +162,8 @@ class Circuit:
         Node -> volts wanted at the start, for integrators that no hold network sets.
     wiring
         All pins of all packages whose pins are known.
+    knobs
+        The law of every potentiometer that an adjustable parameter has.
     """
 
     parts: tuple[Part, ...]
@@ -141,6 +179,7 @@ class Circuit:
     notes: tuple[str, ...] = ()
     start: Mapping[str, float] = field(default_factory=dict)
     wiring: tuple[Pin, ...] = ()
+    knobs: tuple[KnobLaw, ...] = ()
 
     def __str__(self) -> str:
         return "\n".join(map(str, self.parts))

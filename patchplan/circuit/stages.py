@@ -8,10 +8,11 @@ from dataclasses import dataclass, field, replace
 from functools import cached_property
 
 from patchplan.circuit.catalogue import PartData
-from patchplan.circuit.knobs import TRACK_TOLERANCE, Dial, crossing, rheostat
+from patchplan.circuit.dials import STRAIGHT, Fitted
+from patchplan.circuit.knobs import TRACK_TOLERANCE, Dial
 from patchplan.circuit.ledger import Ledger
 from patchplan.circuit.packages import Place, Places
-from patchplan.circuit.records import DC_LIMIT, GROUND, Part
+from patchplan.circuit.records import DC_LIMIT, GROUND, KnobLaw, Part
 from patchplan.patch.records import Patch, Stage
 from patchplan.sizing.records import Leg, Sizing, StageSizing, Target
 
@@ -49,6 +50,8 @@ class Board:
     parts: list[Part] = field(default_factory=list)
     notes: list[str] = field(default_factory=list)
     ledger: Ledger = field(default_factory=Ledger)
+    dials: Mapping[str, Fitted] = field(default_factory=dict)
+    knobs: list[KnobLaw] = field(default_factory=list)
     numbers: Counter[str] = field(default_factory=Counter)
 
     @cached_property
@@ -211,46 +214,43 @@ def _summer(board: Board, stage: Stage) -> None:
     if stage.knob is None or stage.bipolar:
         board.resistor(stage, inverting, stage.node, sized.feedback)
     else:
-        _rheostat_feedback(board, stage, sized, inverting)
+        _rheostat_feedback(board, stage, inverting)
 
 
-def _rheostat_feedback(board: Board, stage: Stage, sized: StageSizing, inverting: str) -> None:
-    assert stage.knob is not None
-    knob = board.patch.knobs[stage.knob]
-    wire = stage.wires[0]
-    scales = board.sizing.scales
-    gain = abs(wire.coefficient) * scales[stage.node].volts_per_unit / scales[wire.source].volts_per_unit
-    # A knob that starts at zero has no feedback at its nominal setting to go by.
-    per_unit = sized.feedback / abs(knob.value) if knob.value else sized.legs[0].transfer * gain
-    ends = (float(knob.low), float(knob.high))
-    dial = rheostat(float(per_unit), float(knob.value), ends, board.target.resistors)
+def _rheostat_feedback(board: Board, stage: Stage, inverting: str) -> None:
+    dial = board.dials[stage.name].dial
     start = stage.node
     if dial.fixed:
         start = f"{stage.node}_w"
         board.resistor(stage, stage.node, start, dial.fixed)
     # The unused end is tied to the wiper, so that a lost wiper leaves the whole track in the loop.
     _potentiometer(board, stage, (start, inverting, inverting), dial)
+    if dial.parallel:
+        board.resistor(stage, start, inverting, dial.parallel)
 
 
 def _crossing_leg(board: Board, stage: Stage, sized: StageSizing, inverting: str) -> None:
-    assert stage.knob is not None
-    knob = board.patch.knobs[stage.knob]
-    first, second = (w.source for w in stage.wires)
-    per_unit = board.volts(stage.node) * float(stage.wires[0].coefficient) / board.volts(first)
-    gains = (per_unit * float(knob.value), per_unit * float(knob.low), per_unit * float(knob.high))
-    ratio = -board.volts(second) / board.volts(first)
-    dial = crossing(stage, gains, ratio, sized.legs[0], sized.feedback)
-    _potentiometer(board, stage, (first, f"{stage.node}_w", second), dial)
+    dial = board.dials[stage.name].dial
+    ends = []
+    for wire, ohm, name in zip(stage.wires, (dial.end_a, dial.end_b), ("wa", "wb"), strict=True):
+        ends.append(f"{stage.node}_{name}" if ohm else wire.source)
+        if ohm:
+            board.resistor(stage, wire.source, ends[-1], ohm)
+    _potentiometer(board, stage, (ends[0], f"{stage.node}_w", ends[1]), dial)
     _leg(board, stage, f"{stage.node}_w", sized.legs[0], inverting, 1)
 
 
 def _potentiometer(board: Board, stage: Stage, nets: tuple[str, str, str], dial: Dial) -> None:
     board.put(Part("", "potentiometer", nets, dial.setting, TRACK_TOLERANCE, stage.name, total=dial.track))
-    knob = board.patch.knobs[stage.knob or ""]
+    law = replace(board.dials[stage.name].law, ref=board.parts[-1].ref)
+    board.knobs.append(law)
+    low, high = sorted(law.covers)
+    least = sorted(law.covers_least)
+    shape = "linear" if law.bend < STRAIGHT else f"{100 * law.bend:.0f} % off a straight line at most"
     board.notes.append(
-        f"{board.parts[-1].ref} sets {knob.name}: the dial covers {100 * min(dial.low, dial.high):.1f} % to "
-        f"{100 * max(dial.low, dial.high):.1f} % of its track for {float(knob.low):.4g} to {float(knob.high):.4g}; "
-        f"{float(knob.value):.4g} is at {100 * dial.setting:.1f} %."
+        f"{law.ref} sets {law.knob}, {law.wanted[0]:.4g} to {law.wanted[1]:.4g}: its travel covers {low:.4g} to "
+        f"{high:.4g} ({least[0]:.4g} to {least[1]:.4g} with a track {100 * TRACK_TOLERANCE:g} % short), {shape}; "
+        f"{float(board.patch.knobs[law.knob].value):.4g} is at {100 * law.setting:.1f} % of it."
     )
 
 

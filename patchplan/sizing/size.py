@@ -40,6 +40,8 @@ SPEED_PLAY = 1.5
 MOST_POINTS = 400
 #: Inverters and start networks load an output by at most one over this of its rated load.
 LIGHT = 4.0
+#: Resistor after the wiper of a knob through zero: large against its track [ohm] (common practice, no source).
+CROSSING_LEG = 4e4
 #: A start value that comes out this many times too large is a fault, whatever its exact number.
 LEAST_SHARE = 1e-6
 
@@ -224,18 +226,20 @@ def _start(stage: Stage, target: Target, values: Values) -> tuple[tuple[float, f
 
 
 def _bipolar(stage: Stage, patch: Patch, target: Target, scales: Mapping[str, NodeScale]) -> StageSizing:
-    """A knob through zero: full scale a little above the range's end, the setting does the rest."""
+    """A knob through zero: full scale as little above the range's end as values and their tolerance allow."""
     knob = patch.knobs[stage.knob or ""]
     most = max(abs(float(knob.low)), abs(float(knob.high)))
     wire = stage.wires[0]
     gain = most * abs(float(wire.coefficient)) * scales[stage.node].volts_per_unit
-    gain /= scales[wire.source].volts_per_unit
-    feedback = np.array([r for r in target.resistors if FEEDBACK[0] <= r <= FEEDBACK[1]] or target.resistors)
-    wanted = feedback / (1.05 * gain)
-    best = int(np.argmin(np.abs(np.log(wanted / 4e4))))
-    below = [r for r in target.resistors if r <= wanted[best]]
-    leg = Leg((below[-1] if below else target.resistors[0],))
-    return StageSizing(stage.name, (leg,), feedback=float(feedback[best]))
+    gain *= (1.0 + 2.0 * target.resistor_tolerance) / min(scales[w.source].volts_per_unit for w in stage.wires)
+    values = np.array(target.resistors)
+    feedback = np.array([r for r in target.resistors if FEEDBACK[0] <= r <= FEEDBACK[1]] or target.resistors)[:, None]
+    excess = np.log(feedback / (gain * values))
+    # A hundredth of excess is worth a factor of e away from the leg that suits the track.
+    cost = excess + 0.01 * np.abs(np.log(values / CROSSING_LEG))
+    fits = (excess >= -1e-9) & (feedback != values)
+    row, column = np.unravel_index(int(np.argmin(np.where(fits, cost, 1e3 + np.abs(excess)))), cost.shape)
+    return StageSizing(stage.name, (Leg((float(values[column]),)),), feedback=float(feedback[row, 0]))
 
 
 def _nearest(values: tuple[float, ...], wanted: float) -> float:

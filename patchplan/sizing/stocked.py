@@ -234,7 +234,7 @@ def _place_anchors(board: _Board, state: State, wanted: Array, noise: Callable[[
             rows.setdefault(ratio.stage, []).append(row)
     capacitors = [i for i, (_, what) in enumerate(board.names) if what == "C"]
     merits = np.array([
-        capacitor_merit(wanted[rows[stage]], board.target, board.comfortable.get(stage, COMFORTABLE))
+        capacitor_merit(wanted[rows[stage]], board.target, board.comfortable.get(stage, COMFORTABLE))[0]
         if stage in rows else np.abs(np.log(np.array(board.target.capacitors) / 1e-8))
         for stage, _ in (board.names[i] for i in capacitors)
     ]).reshape(len(capacitors), -1)  # fmt: skip

@@ -20,8 +20,6 @@ Array = NDArray[np.float64]
 FEEDBACK = (5e3, 1e5)
 #: Start networks hold through a feedback resistor near this value [ohm] (common practice, no source).
 START_FEEDBACK = 2e4
-#: Merit of a capacitor with which no single resistor serves: above any without.
-OVER = 1e4
 
 
 @dataclass(frozen=True)
@@ -140,26 +138,26 @@ def start_ratios(resistors: tuple[float, ...]) -> Choice:
     return Choice(np.array(logs), tuple(best[x] for x in logs))
 
 
-def capacitor_merit(wanted: Array, target: Target, comfortable: float = COMFORTABLE) -> Array:
-    """How little each capacitor suits a stage whose R*C products are wanted [s], shape ``(n_capacitors,)``.
+def capacitor_merit(wanted: Array, target: Target, comfortable: float = COMFORTABLE) -> tuple[Array, NDArray[np.bool_]]:
+    """How little each capacitor suits a stage whose R*C products are wanted [s], and where a resistor is out of range.
 
-    Out-of-range resistors count most, then the distance of their middle from ``comfortable`` [ohm].
+    Out-of-range resistors count most, then the distance of their middle from ``comfortable`` [ohm]. Both have the shape
+    ``(n_capacitors,)``.
     """
     resistors = wanted[None, :] / np.array(target.capacitors)[:, None]
     over = np.maximum(np.log(resistors / target.resistors[-1]), 0) + np.maximum(
         np.log(target.resistors[0] / resistors), 0
     )
     middle = np.abs(np.log(np.sqrt(resistors.min(axis=1) * resistors.max(axis=1)) / comfortable))
-    merit: Array = 100 * over.sum(axis=1) + middle
-    return np.where(over.any(axis=1), OVER, 0.0) + merit
+    return 100 * over.sum(axis=1) + middle, np.any(over, axis=1)
 
 
 def pick_capacitor(wanted: Array, target: Target, rank: int = 0, comfortable: float = COMFORTABLE) -> float:
     """Capacitor for a stage whose R*C products are wanted [s]; ``rank`` 0 is the best, 1 the next."""
-    merit = capacitor_merit(wanted, target, comfortable)
+    merit, over = capacitor_merit(wanted, target, comfortable)
     order = np.argsort(merit, kind="stable")
     # Any other than the best makes networks of three longer, and offsets count by their length.
-    rank = 0 if merit[order[0]] >= OVER else rank
+    rank = 0 if over[order[0]] else rank
     return target.capacitors[int(order[min(rank, len(order) - 1)])]
 
 
