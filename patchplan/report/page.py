@@ -9,7 +9,7 @@ from patchplan.report import style, words
 from patchplan.report.pictures import MOST_SIGNALS
 from patchplan.report.plan_json import notes_of, warnings_of
 from patchplan.report.records import Plan
-from patchplan.report.sheet import control_table, package_table, static_table, steps
+from patchplan.report.sheet import control_table, knob_table, package_table, serial_table, static_table, steps
 from patchplan.report.tables import (
     budget_table,
     coefficient_table,
@@ -66,6 +66,7 @@ def page(
         steps=steps(plan),
         control=control_table(plan),
         static=static_table(plan, start),
+        sheets=[serial_table(plan), knob_table(plan)],
         cautions=words.CAUTIONS,
         problem=plan.problem.text,
         files=files,

@@ -9,7 +9,7 @@ from dataclasses import replace
 from typing import Any
 
 from patchplan.check.records import Verdict
-from patchplan.circuit.records import Circuit, NodeMap
+from patchplan.circuit.records import Circuit, KnobLaw, NodeMap
 from patchplan.equation.problem import Problem
 from patchplan.patch.records import Patch, Stage
 from patchplan.report.codec import decode, encode, rounded
@@ -52,6 +52,7 @@ def plan_data(plan: Plan, files: Sequence[str] = ()) -> dict[str, Any]:
         "sign_stages_lower_bound": plan.patch.sign_stages_lower_bound,
         "coefficients": _coefficients(sizing),
         "parts": _parts(plan.circuit) if plan.circuit else [],
+        "knobs": [_knob(law) for law in plan.circuit.knobs] if plan.circuit else [],
         "choices": encode(plan.choices),
         "considered": encode(plan.considered),
         "problem": plan.problem.text,
@@ -74,7 +75,7 @@ def refusal_data(problem: Problem, reason: str, files: Sequence[str] = ()) -> di
         "time_scale_window": [None, None],
         "time_scale_limits": ["", ""],
         "check": _check(verdict),
-        **{table: [] for table in ("signals", "stages", "coefficients", "parts")},
+        **{table: [] for table in ("signals", "stages", "coefficients", "parts", "knobs")},
         "counts": {},
         "sign_stages": 0,
         "sign_stages_lower_bound": 0,
@@ -228,6 +229,27 @@ def _coefficients(sizing: Sizing) -> list[dict[str, Any]]:
 
 def _parts(circuit: Circuit) -> list[dict[str, Any]]:
     return [encode(part) for part in circuit.parts]
+
+
+def _knob(law: KnobLaw) -> dict[str, Any]:
+    """Potentiometer, range, travel and law of a knob; settings are shares of the travel from end a."""
+    names = ("setting", "knob", "parameter")
+    return {
+        "name": law.knob,
+        "parameter": law.parameter,
+        "ref": law.ref,
+        "stage": law.stage,
+        "from": rounded(law.wanted[0]),
+        "to": rounded(law.wanted[1]),
+        "covers": [rounded(end) for end in law.covers],
+        "covers_at_least": [rounded(end) for end in law.covers_least],
+        "setting": rounded(law.setting),
+        "bend_percent": rounded(100 * law.bend),
+        "law": [
+            {name: None if number is None else rounded(number) for name, number in zip(names, point, strict=True)}
+            for point in law.points
+        ],
+    }
 
 
 def _check(verdict: Verdict) -> dict[str, Any]:

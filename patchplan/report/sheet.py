@@ -6,14 +6,15 @@ from collections.abc import Mapping
 
 import numpy as np
 
-from patchplan.circuit.records import GROUND, Circuit
+from patchplan.circuit.dials import STRAIGHT
+from patchplan.circuit.records import GROUND, Circuit, KnobLaw
 from patchplan.circuit.wiring import LOGIC, OPERATE, line_of
 from patchplan.patch.records import Stage
 from patchplan.quantity import engineering
 from patchplan.report import words
 from patchplan.report.plan_json import transfer_gains
 from patchplan.report.records import Plan
-from patchplan.report.tables import Table
+from patchplan.report.tables import Table, value_text
 
 #: What a node may be off in hold by offsets and the meter; common practice, no source [V].
 _HOLD_TOLERANCE_VOLTS = 0.05
@@ -98,6 +99,44 @@ def package_table(plan: Plan) -> Table:
         )
     rows = tuple((package, models[package], ", ".join(listed)) for package, listed in pins.items())
     return Table("Packages, pin by pin", ("package", "type", "pin and net"), rows, note=words.PIN_NOTE)
+
+
+def serial_table(plan: Plan) -> Table:
+    """Parts on hand that are single pieces: each has its place."""
+    assert plan.circuit is not None
+    rows = tuple(
+        (p.serial, p.ref, value_text(p), f"{p.nets[0]} to {p.nets[1]}") for p in plan.circuit.parts if p.serial
+    )
+    return Table("Parts by serial number", ("serial", "place", "value", "nets"), rows, note=words.SERIAL_NOTE)
+
+
+def knob_table(plan: Plan) -> Table:
+    """Law of every potentiometer: what its knob stands at along its travel."""
+    assert plan.circuit is not None
+    laws = plan.circuit.knobs
+    headers = ("travel", *(f"{law.ref}: {_scale_of(law)}" for law in laws))
+    marks = [point[0] for point in laws[0].points] if laws else []
+    rows = tuple((f"{100 * mark:.0f} %", *(_mark(law, i) for law in laws)) for i, mark in enumerate(marks))
+    told = [
+        words.KNOB_NOTE.format(
+            ref=law.ref, low=law.wanted[0], high=law.wanted[1], knob=law.knob,
+            at=f"{100 * law.setting:.1f}",
+            shape=words.LINEAR if law.bend < STRAIGHT else words.BENT.format(bend=words.percent(100 * law.bend)),
+        )
+        for law in laws
+    ]  # fmt: skip
+    return Table("Dials", headers, rows, frozenset(range(1, len(headers))), " ".join([*told, words.DIAL_NOTE]))
+
+
+def _scale_of(law: KnobLaw) -> str:
+    """What a dial is marked with: the parameter where all marks inside its range have one."""
+    return law.parameter if any(point[2] is not None for point in law.points) else law.knob
+
+
+def _mark(law: KnobLaw, index: int) -> str:
+    _, knob, parameter = law.points[index]
+    value = parameter if _scale_of(law) == law.parameter and law.parameter else knob
+    return "beyond" if value is None else words.plain(value, 4)
 
 
 def static_table(plan: Plan, start: Mapping[str, float]) -> Table:

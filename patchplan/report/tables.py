@@ -141,7 +141,10 @@ def value_text(part: Part) -> str:
     if part.kind not in VALUE_UNITS or not part.value:
         return ""
     tolerance = f" {percent(100 * part.tolerance)}" if part.tolerance else ""
-    return engineering(part.value, VALUE_UNITS[part.kind][0]) + tolerance
+    unit = VALUE_UNITS[part.kind][0]
+    if part.marked:
+        return f"{engineering(part.marked, unit)}, measured {engineering(part.value, unit, 6)}{tolerance}"
+    return engineering(part.value, unit) + tolerance
 
 
 def budget_table(plan: Plan) -> Table:
@@ -202,7 +205,7 @@ def parts_csv(circuit: Circuit) -> str:
     """parts.csv: one row a part, values in SI units."""
     headers = (
         "ref", "kind", "value", "unit", "tolerance_percent", "model", "nets", "stage", "package", "section", "pins",
-        "closed", "control_line", "setting",
+        "closed", "control_line", "setting", "serial", "marked",
     )  # fmt: skip
     return csv_text(headers, map(_part_row, circuit.parts))
 
@@ -227,6 +230,8 @@ def _part_row(part: Part) -> tuple[Any, ...]:
         part.closed,
         line_of(part) if part.kind == "switch" else "",
         f"{part.value:.9g}" if part.kind == "potentiometer" else "",
+        part.serial,
+        f"{part.marked:.9g}" if part.marked else "",
     )
 
 

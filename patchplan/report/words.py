@@ -196,6 +196,16 @@ CONTROL_NOTE = (
     "Times are circuit time, counted from the start of operate. High closes the normally open contacts, low the "
     "normally closed ones. A line is a logic signal from outside; nothing on the board drives it."
 )
+SERIAL_NOTE = (
+    "These are the pieces that were measured or numbered: each belongs where it stands here, and nowhere else."
+)
+KNOB_NOTE = "{ref} sets {knob} from {low:.4g} to {high:.4g}; as planned it stands at {at} % of its travel, {shape}."
+LINEAR = "linear"
+BENT = "up to {bend} of the travel off a straight line"
+DIAL_NOTE = (
+    "Travel is counted from the end at which the table begins. It is a little longer than the range, so that tracks at "
+    "both ends of their tolerance cover the range."
+)
 PIN_NOTE = "Confirm the pin numbers with the maker's data sheet. Names in capitals are control lines and spare pins."
 STATIC_NOTE = (
     "Integrators stand at their start values; summers, inverters and multipliers follow from them. The allowance "
