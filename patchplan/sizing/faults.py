@@ -18,6 +18,10 @@ from patchplan.sizing.values import Values, wanted_products
 Array = NDArray[np.float64]
 #: A coefficient further off than this was not in reach of the parts.
 OUT_OF_REACH = 0.1
+_MORE = {
+    False: "Wider resistor_limits or capacitor_limits, a finer series",
+    True: "More parts or other values in the stock, wider resistor_limits or capacitor_limits,",
+}
 
 
 def find_faults(
@@ -60,8 +64,8 @@ def find_faults(
     worst, ratio = max(off, key=lambda pair: pair[0])
     return (
         f"The search found no values for {len(off)} of {len(model.ratios)} coefficients, the worst of them "
-        f"{100 * worst:.0f} % off at {_place(stages[ratio.stage], ratio)}. Wider resistor_limits or capacitor_limits, "
-        f"a finer series or --think high would mend it.",
+        f"{100 * worst:.0f} % off at {_place(stages[ratio.stage], ratio)}. {_MORE[target.stocked]} or --think high "
+        f"would mend it.",
     )
 
 

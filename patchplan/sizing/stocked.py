@@ -187,11 +187,14 @@ def _searched(board: _Board, think: str, seed: int) -> Values | None:
         if found[0] < enough and not measured:
             break
     attempts.sort(key=lambda found: found[0])
-    best = [_finish(board, state) for _, state in attempts[:3]]
+    if think != "high" and not measured:
+        for cost, state, menu in attempts[:3]:
+            _fewer_values(board, state, menu, max(cost, enough))
+    best = [_finish(board, state) for _, state, _ in attempts[:3]]
     return min(best, key=lambda v: merit(board.effect, -np.log1p(np.maximum(v.errors, -1 + 1e-9))), default=None)
 
 
-def _attempt(board: _Board, number: int, random: np.random.Generator) -> tuple[float, State] | None:
+def _attempt(board: _Board, number: int, random: np.random.Generator) -> tuple[float, State, Menu] | None:
     """Assign and descend from one starting point: the middle first, then scattered ones."""
     model = board.model
     theta = model.centre
@@ -208,11 +211,28 @@ def _attempt(board: _Board, number: int, random: np.random.Generator) -> tuple[f
     menu = _place_rest(board, state, wanted)
     if menu is None:
         return None
-    return _settled(board, state, menu), state
+    return _settled(board, state, menu), state, menu
+
+
+def _fewer_values(board: _Board, state: State, menu: Menu, allowed: float) -> None:
+    """Give slots that alone hold a value one that others hold, in place, as long as the cost stays allowed."""
+    for slot in range(len(board.names)):
+        uses = (state.holds > 0).sum(axis=0)
+        before = float(state.y[slot]), state.parts[slot]
+        if len(before[1]) > 1 or uses[before[1][0]] > 1:
+            continue
+        left = state.left(board.shelf)
+        for move in np.flatnonzero(menu.slot == slot).tolist():
+            (value, *more) = menu.parts[move]
+            if not more and uses[value] and left[value] and value != before[1][0]:
+                state.put(slot, float(menu.value[move]), (value,))
+                if _cost(board, state) <= allowed:
+                    break
+                state.put(slot, *before)
 
 
 def _settled(board: _Board, state: State, menu: Menu) -> float:
-    """Descend in place; the loop errors left, and what staying inside the bounds of theta costs."""
+    """Descend in place; what is left, see :func:`_cost`."""
     effect = board.loops.basis.T @ (board.loops.shape @ board.incidence)
     for _ in range(2):
         offset = board.constant - _shift(board, state.y)
@@ -221,6 +241,11 @@ def _settled(board: _Board, state: State, menu: Menu) -> float:
             return board.loops.errors(board.incidence @ y - offset)
 
         descend_counted(state, menu, effect, errors, board.shelf)
+    return _cost(board, state)
+
+
+def _cost(board: _Board, state: State) -> float:
+    """Loop errors, and what staying inside the bounds of theta costs."""
     residual = board.incidence @ state.y - board.constant + _shift(board, state.y)
     left = board.loops.errors(residual)
     return float(np.sqrt(left @ left)) + board.loops.outside(residual, board.model.low, board.model.high)
