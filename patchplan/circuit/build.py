@@ -57,24 +57,12 @@ def build_circuit(
     """
     if patch.counts().get("multiplier"):
         check_multiplier(build, catalogue)
-    held = build.run != "free"
-    switched = switched_volts(patch, sizing, target, float(form.system.duration))
-    switch = switch_for(build, catalogue) if held or switched else None
-    toggled = [s for s in patch.stages if (held and s.kind == "integrator") or s.name in switched]
-    toggled.sort(key=lambda stage: stage.kind == "source")
-    places = assign_places(
-        patch, catalogue.op_amps[target.op_amp.name], catalogue.multipliers[target.multiplier.name], switch, toggled
-    )
-    board = Board(
-        patch, sizing, target, places, switch, reference_for(build, catalogue), held, switched,
-        ledger=Ledger.of(target), dials=find_dials(patch, sizing, target, form.system.adjustable),
-    )  # fmt: skip
+    board = _empty_board(form, patch, sizing, target, build, catalogue)
     for stage in patch.stages:
         add_stage(board, stage)
-    for part in decoupling(places, [p.ref for p in board.parts if p.kind == "reference"]):
+    for part in decoupling(board.places, [p.ref for p in board.parts if p.kind == "reference"]):
         board.put(part)
     parts = with_pins(board.parts, catalogue)
-    notes = (*board.notes, *places.notes, *spare_switches(parts, catalogue), *_load_notes(board, catalogue))
     return Circuit(
         parts=parts,
         nodes=_node_maps(form, patch, sizing),
@@ -86,11 +74,27 @@ def build_circuit(
         duration=float(form.system.duration) * sizing.time_scale,
         run=build.run,
         sources={name: _with_waveform(source, stand_ins or {}) for name, source in patch.sources.items()},
-        notes=notes,
-        start={} if held else _start_volts(patch, sizing),
+        notes=(*board.notes, *board.places.notes, *spare_switches(parts, catalogue), *_load_notes(board, catalogue)),
+        start={} if board.held else _start_volts(patch, sizing),
         wiring=wiring_of(parts, catalogue),
         knobs=tuple(board.knobs),
     )
+
+
+def _empty_board(form: Form, patch: Patch, sizing: Sizing, target: Target, build: Build, catalogue: Catalogue) -> Board:
+    """Places, stock and dials, before anything is laid down."""
+    held = build.run != "free"
+    switched = switched_volts(patch, sizing, target, float(form.system.duration))
+    switch = switch_for(build, catalogue) if held or switched else None
+    toggled = [s for s in patch.stages if held and s.kind == "integrator"]
+    toggled += [s for s in patch.stages if s.name in switched]
+    places = assign_places(
+        patch, catalogue.op_amps[target.op_amp.name], catalogue.multipliers[target.multiplier.name], switch, toggled
+    )
+    return Board(
+        patch, sizing, target, places, switch, reference_for(build, catalogue), held, switched,
+        ledger=Ledger.of(target), dials=find_dials(patch, sizing, target, form.system.adjustable),
+    )  # fmt: skip
 
 
 def replace_part(circuit: Circuit, ref: str, **changes: Any) -> Circuit:

@@ -79,8 +79,8 @@ class Target:
 
     ``resistors`` and ``capacitors`` are rising values inside the limits [ohm], [F]; ``reference`` is in volts;
     ``switch_on`` is the operate switch's resistance [ohm], 0 where the run has no hold. The other parts of the
-    catalogue that would do on this supply are there for advice only. ``resistor_piles`` and ``capacitor_piles`` are the parts on hand, None where any number of each value can be had; then the tolerances are
-    those of the worst of them.
+    catalogue that would do on this supply are there for advice only. ``resistor_piles`` and ``capacitor_piles`` are the
+    parts on hand, None where any number of each value can be had; else the tolerances are those of the worst of them.
     """
 
     resistors: tuple[float, ...]

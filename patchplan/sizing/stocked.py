@@ -9,9 +9,8 @@ from __future__ import annotations
 
 from collections import Counter
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from math import log
-from typing import TypeAlias
 
 import numpy as np
 from numpy.typing import NDArray
@@ -19,53 +18,21 @@ from numpy.typing import NDArray
 from patchplan.patch.records import Patch
 from patchplan.sizing.losses import added_logs
 from patchplan.sizing.model import Model
-from patchplan.sizing.pieces import Menu, Shelf, State, assigned, descend_counted, menu_of, t_options
+from patchplan.sizing.pieces import Menu, State, assigned, descend_counted, menu_of, t_options
 from patchplan.sizing.records import Target
-from patchplan.sizing.search import Effect, Loops, find_loops, loop_errors, merit, split_rest
-from patchplan.sizing.speed import COMFORTABLE
-from patchplan.sizing.stock import PLENTY, counts, matched_pair, missing_sentence, without
-from patchplan.sizing.values import START_FEEDBACK, Values, capacitor_merit, pick_feedback, wanted_products
+from patchplan.sizing.search import Effect, loop_errors, merit, split_rest
+from patchplan.sizing.slots import EASY, Name, Slots, find_slots
+from patchplan.sizing.speed_errors import COMFORTABLE
+from patchplan.sizing.stock import PLENTY, missing_sentence
+from patchplan.sizing.values import Values, capacitor_merit, pick_feedback, wanted_products
 
 Array = NDArray[np.float64]
 #: By how hard to think: attempts, and the predicted error that is good enough, as a fraction of peak.
 ATTEMPTS = {"low": (20, 2e-3), "normal": (250, 5e-4), "high": (2000, 5e-5)}
 #: Boards with more slots than this take fewer attempts, down to one.
 MANY_SLOTS = 25
-#: Slots that only need some value take one near this [ohm]; the first of a name counts.
-EASY = {"hold": 2e4, "ready": 1e4, "Rf": 2e4, "S2": START_FEEDBACK}
 #: A row further off than this was not in reach of the stock, see :data:`patchplan.sizing.faults.OUT_OF_REACH`.
 FAR = 0.1
-Name: TypeAlias = tuple[str, int | str]
-
-
-@dataclass(frozen=True)
-class _Board:
-    """What all attempts share.
-
-    Attributes
-    ----------
-    names, capacitive
-        The slots, and whether each holds a capacitor.
-    incidence
-        Shape ``(n_rows, n_slots)``; zero columns for slots that only need some value.
-    shelf
-        The values on hand and their counts, less the pairs.
-    pairs
-        Stage -> the resistors of an inverter on the reference; "" is one that a step may need yet.
-    """
-
-    model: Model
-    target: Target
-    names: tuple[Name, ...]
-    capacitive: NDArray[np.bool_]
-    incidence: Array
-    matrix: Array
-    constant: Array
-    effect: Effect
-    loops: Loops
-    comfortable: Mapping[str, float]
-    shelf: Shelf
-    pairs: Mapping[str, tuple[float, float]]
 
 
 def choose_stocked(
@@ -83,7 +50,7 @@ def choose_stocked(
     Parameters as for :func:`patchplan.sizing.trial.choose_values`. Measured parts are searched to the end, as their
     values leave no other error.
     """
-    board = _board(model, patch, target, effect, comfortable)
+    board = find_slots(model, patch, target, effect, comfortable)
     found = _searched(board, think, seed)
     if found is not None and np.abs(found.errors).max(initial=0.0) <= FAR:
         return found
@@ -97,7 +64,7 @@ def choose_stocked(
     return found or replace(wished, missing=missing)
 
 
-def _missing(wished: Values, board: _Board) -> tuple[str, ...]:
+def _missing(wished: Values, board: Slots) -> tuple[str, ...]:
     sentences = []
     for kind, unit, piles in (
         ("resistor", "Ω", board.target.resistor_piles),
@@ -111,68 +78,7 @@ def _missing(wished: Values, board: _Board) -> tuple[str, ...]:
     return tuple(s for s in sentences if s)
 
 
-def _board(model: Model, patch: Patch, target: Target, effect: Effect, comfortable: Mapping[str, float]) -> _Board:
-    names: dict[Name, int] = {}
-    entries: list[tuple[int, int, float]] = []
-
-    def slot(stage: str, what: int | str) -> int:
-        return names.setdefault((stage, what), len(names))
-
-    for row, ratio in enumerate(model.ratios):
-        if ratio.kind == "start":
-            entries += [(row, slot(ratio.stage, "S2"), 1.0), (row, slot(ratio.stage, "S1"), -1.0)]
-            continue
-        entries.append((row, slot(ratio.stage, ratio.wire), 1.0))
-        if ratio.kind == "integrator":
-            entries.append((row, slot(ratio.stage, "C"), 1.0))
-        elif ratio.stage not in model.feedback:
-            entries.append((row, slot(ratio.stage, "Rf"), -1.0))
-    for stage in patch.stages:
-        if stage.kind == "integrator":
-            slot(stage.name, "C")
-            if target.switch_on and not stage.start:
-                slot(stage.name, "hold")
-        elif stage.kind == "summer" and not stage.knob:
-            slot(stage.name, "Rf")
-        elif stage.bipolar:
-            slot(stage.name, 0), slot(stage.name, "Rf")
-    incidence = np.zeros((len(model.ratios), len(names)))
-    for row, column, sign in entries:
-        incidence[row, column] = sign
-    matrix = np.zeros((len(model.ratios), len(model.low)))
-    for row, ratio in enumerate(model.ratios):
-        for column, value in ratio.want.slope.items():
-            matrix[row, column] += value
-    pairs = _reference_pairs(patch, target)
-    rest = without(target, Counter(r for pair in pairs.values() for r in pair))
-    have = [counts(rest.resistors, rest.resistor_piles), counts(rest.capacitors, rest.capacitor_piles)]
-    return _Board(
-        model, target, tuple(names), np.array([what == "C" for _, what in names], dtype=bool), incidence, matrix,
-        np.array([r.want.constant for r in model.ratios]), effect, find_loops(matrix, effect), comfortable,
-        Shelf(
-            np.array([*have[0], *have[1]]), np.array([*have[0].values(), *have[1].values()]),
-            np.repeat([False, True], [len(have[0]), len(have[1])]),
-        ),
-        pairs,
-    )  # fmt: skip
-
-
-def _reference_pairs(patch: Patch, target: Target) -> dict[str, tuple[float, float]]:
-    """Resistors as equal as can be for every inverter on the reference, whose scale is not free."""
-    if target.resistor_piles is None:
-        return {}
-    stages = [s.name for s in patch.stages if s.kind == "inverter" and s.signal == "1"]
-    if not stages and any(s.kind == "source" and not patch.sources[s.signal].external for s in patch.stages):
-        stages = [""]
-    found: dict[str, tuple[float, float]] = {}
-    for stage in stages:
-        pair = matched_pair(without(target, Counter(r for p in found.values() for r in p)), EASY["ready"])
-        if pair is not None:
-            found[stage] = pair
-    return found
-
-
-def _searched(board: _Board, think: str, seed: int) -> Values | None:
+def _searched(board: Slots, think: str, seed: int) -> Values | None:
     """The best of several attempts; None where there are fewer pieces than slots."""
     random = np.random.default_rng(seed)
     most, enough = ATTEMPTS[think]
@@ -194,7 +100,7 @@ def _searched(board: _Board, think: str, seed: int) -> Values | None:
     return min(best, key=lambda v: merit(board.effect, -np.log1p(np.maximum(v.errors, -1 + 1e-9))), default=None)
 
 
-def _attempt(board: _Board, number: int, random: np.random.Generator) -> tuple[float, State, Menu] | None:
+def _attempt(board: Slots, number: int, random: np.random.Generator) -> tuple[float, State, Menu] | None:
     """Assign and descend from one starting point: the middle first, then scattered ones."""
     model = board.model
     theta = model.centre
@@ -214,7 +120,7 @@ def _attempt(board: _Board, number: int, random: np.random.Generator) -> tuple[f
     return _settled(board, state, menu), state, menu
 
 
-def _fewer_values(board: _Board, state: State, menu: Menu, allowed: float) -> None:
+def _fewer_values(board: Slots, state: State, menu: Menu, allowed: float) -> None:
     """Give slots that alone hold a value one that others hold, in place, as long as the cost stays allowed."""
     for slot in range(len(board.names)):
         uses = (state.holds > 0).sum(axis=0)
@@ -231,7 +137,7 @@ def _fewer_values(board: _Board, state: State, menu: Menu, allowed: float) -> No
                 state.put(slot, *before)
 
 
-def _settled(board: _Board, state: State, menu: Menu) -> float:
+def _settled(board: Slots, state: State, menu: Menu) -> float:
     """Descend in place; what is left, see :func:`_cost`."""
     effect = board.loops.basis.T @ (board.loops.shape @ board.incidence)
     for _ in range(2):
@@ -244,14 +150,14 @@ def _settled(board: _Board, state: State, menu: Menu) -> float:
     return _cost(board, state)
 
 
-def _cost(board: _Board, state: State) -> float:
+def _cost(board: Slots, state: State) -> float:
     """Loop errors, and what staying inside the bounds of theta costs."""
     residual = board.incidence @ state.y - board.constant + _shift(board, state.y)
     left = board.loops.errors(residual)
     return float(np.sqrt(left @ left)) + board.loops.outside(residual, board.model.low, board.model.high)
 
 
-def _place_anchors(board: _Board, state: State, wanted: Array, noise: Callable[[tuple[int, ...]], Array]) -> bool:
+def _place_anchors(board: Slots, state: State, wanted: Array, noise: Callable[[tuple[int, ...]], Array]) -> bool:
     """Capacitors, feedback resistors and those that hold start values; whether there are enough."""
     rows: dict[str, list[int]] = {}
     for row, ratio in enumerate(board.model.ratios):
@@ -277,7 +183,7 @@ def _place_anchors(board: _Board, state: State, wanted: Array, noise: Callable[[
     return ready and assigned(state, board.shelf, others, costs + noise(costs.shape), ~board.shelf.capacitive)
 
 
-def _place_rest(board: _Board, state: State, wanted: Array) -> Menu | None:
+def _place_rest(board: Slots, state: State, wanted: Array) -> Menu | None:
     """Legs and the other resistors, and the menu of every slot around what it should hold; None where too few."""
     centre, at = state.y.copy(), dict[Name, int]()
     at.update(((r.stage, r.wire), row) for row, r in enumerate(board.model.ratios))
@@ -311,7 +217,7 @@ def _place_rest(board: _Board, state: State, wanted: Array) -> Menu | None:
 
 
 def _wanted_log(
-    board: _Board, state: State, stage: str, what: int | str, wanted: Array, at: Mapping[Name, int],
+    board: Slots, state: State, stage: str, what: int | str, wanted: Array, at: Mapping[Name, int],
     column: Mapping[Name, int],
 ) -> float:  # fmt: skip
     """log of the resistor that a slot should hold beside the anchor of its stage."""
@@ -323,7 +229,7 @@ def _wanted_log(
     return product + (float(state.y[column[stage, "Rf"]]) if (stage, "Rf") in column else 0.0)
 
 
-def _shift(board: _Board, y: Array) -> Array:
+def _shift(board: Slots, y: Array) -> Array:
     """What switches and bandwidth add to each row, shape ``(n_rows,)``."""
     column = {name: i for i, name in enumerate(board.names)}
     ones = np.ones(len(board.model.ratios))
@@ -337,7 +243,7 @@ def _shift(board: _Board, y: Array) -> Array:
     return added_logs(board.model.ratios, board.target, ohm, farad)
 
 
-def _finish(board: _Board, state: State) -> Values:
+def _finish(board: Slots, state: State) -> Values:
     """Split what is left over the scale factors and name the parts."""
     residual = board.incidence @ state.y - board.constant + _shift(board, state.y)
     theta, worst = split_rest(board.matrix, residual, board.effect, board.model.low, board.model.high)
