@@ -28,7 +28,7 @@ class Layout:
     free: dict[str, int]
     nets: tuple[str, ...]
     driven: dict[str, int]
-    driven_rows: Array
+    driven_rows: Matrix
     resistors: tuple[tuple[str, str, float], ...]
     capacitors: tuple[Part, ...]
     op_amps: tuple[Part, ...]
@@ -162,9 +162,11 @@ def _floating(
 
 def _driven_rows(
     circuit: Circuit, driven: dict[str, int], drivers: list[Part], n_capacitors: int, n_states: int, n_columns: int
-) -> Array:
-    """Voltages of the driven nets over states and inputs, shape ``(n_driven, n_columns)``."""
-    rows = np.zeros((len(driven), n_columns))
+) -> Matrix:
+    """Voltages of the driven nets over states and inputs, sparse, shape ``(n_driven, n_columns)``."""
+    from scipy.sparse import dok_array
+
+    rows = dok_array((len(driven), n_columns))
     taken = {GROUND}
     state, source = n_capacitors, n_states
     for part in drivers:
@@ -180,4 +182,4 @@ def _driven_rows(
         rows[driven[net], column] = part.value if part.kind == "reference" else 1.0
         if part.kind == "source" and net in circuit.nodes:
             rows[driven[net], n_columns - 1] = circuit.nodes[net].offset_volts
-    return rows
+    return rows.tocsr()

@@ -18,6 +18,8 @@ from patchplan.circuit.records import Circuit, Part
 Array = NDArray[np.float64]
 #: Above this many states the matrices are kept sparse; below it dense products are faster (measured).
 DENSE_LIMIT = 150
+#: Columns solved for at a time, so that no dense array holds them all.
+_BLOCK = 64
 
 
 @dataclass(frozen=True)
@@ -125,10 +127,12 @@ def build_network(circuit: Circuit, mode: str = "operate", high: Container[str] 
     Modified nodal analysis (Ho, Ruehli and Brennan 1975) with capacitors as voltage sources of known voltage. A
     positive bias current flows from the net into the input. Decoupling capacitors are left out, rails being stiff.
     """
+    from scipy.sparse import vstack
+
     layout = layout_of(circuit, mode, high)
     solution = _solve(layout)
     n_free = len(layout.free)
-    voltage = np.concatenate([solution[:n_free], layout.driven_rows])
+    voltage = vstack([solution[:n_free], layout.driven_rows]).tocsr()
     rows = {net: i for i, net in enumerate(layout.nets)}
     current = solution[n_free:]
     rate = _rate_rows(circuit, layout, rows, voltage, current)
@@ -161,25 +165,21 @@ def build_network(circuit: Circuit, mode: str = "operate", high: Container[str] 
     )
 
 
-def _parted(matrix: Array, n_states: int) -> tuple[Matrix, Matrix]:
-    """The columns of the states and those of the inputs."""
-    left, right = np.ascontiguousarray(matrix[:, :n_states]), np.ascontiguousarray(matrix[:, n_states:])
-    if n_states <= DENSE_LIMIT:
-        return left, right
-    from scipy.sparse import csr_array
-
-    return csr_array(left), csr_array(right)
+def _parted(matrix: Matrix, n_states: int) -> tuple[Matrix, Matrix]:
+    """The columns of the states and those of the inputs, dense on small boards."""
+    parts = matrix[:, :n_states], matrix[:, n_states:]
+    return parts if n_states > DENSE_LIMIT else (parts[0].toarray(), parts[1].toarray())
 
 
-def _solve(layout: Layout) -> Array:
-    """Free nets' voltages, then capacitors' currents, over states and inputs."""
-    from scipy.sparse import coo_array
+def _solve(layout: Layout) -> Matrix:
+    """Free nets' voltages, then capacitors' currents, over states and inputs; sparse, as stages hardly share nets."""
+    from scipy.sparse import coo_array, csr_array, hstack
     from scipy.sparse.linalg import splu
 
     free, driven, n_free, n_c = layout.free, layout.driven, len(layout.free), len(layout.capacitors)
     size = n_free + n_c
     if size == 0:
-        return np.zeros((0, layout.n_columns))
+        return csr_array((0, layout.n_columns))
     entries: list[tuple[int, int, float]] = []
     outside: list[tuple[int, int, float]] = []
 
@@ -206,21 +206,25 @@ def _solve(layout: Layout) -> Array:
         i, j, value = zip(*items, strict=True) if items else ((), (), ())
         return coo_array((np.array(value, float), (np.array(i, int), np.array(j, int))), shape=(size, columns)).tocsc()
 
-    right = matrix(own, layout.n_columns).toarray() - matrix(outside, len(driven)) @ layout.driven_rows
-    return np.asarray(splu(matrix(entries, size)).solve(right))
+    right = (matrix(own, layout.n_columns) - matrix(outside, len(driven)) @ layout.driven_rows).tocsc()
+    factors = splu(matrix(entries, size).tocsc())
+    firsts = range(0, layout.n_columns, _BLOCK)
+    return hstack([csr_array(factors.solve(right[:, i : i + _BLOCK].toarray())) for i in firsts]).tocsr()
 
 
-def _rate_rows(circuit: Circuit, layout: Layout, rows: dict[str, int], voltage: Array, current: Array) -> Array:
-    def volts(parts: tuple[Part, ...], pin: int) -> Array:
+def _rate_rows(circuit: Circuit, layout: Layout, rows: dict[str, int], voltage: Matrix, current: Matrix) -> Matrix:
+    from scipy.sparse import diags_array, eye_array, vstack
+
+    def volts(parts: tuple[Part, ...], pin: int) -> Matrix:
         return voltage[[rows[p.nets[pin]] for p in parts]]
 
     amps, times = layout.op_amps, layout.multipliers
     farads = np.array([p.value for p in layout.capacitors])
-    pole = np.eye(len(times), layout.n_columns, layout.n_states - len(times))
-    return np.concatenate([
-        current / farads[:, None],
+    pole = eye_array(len(times), layout.n_columns, k=layout.n_states - len(times))
+    return vstack([
+        diags_array(1.0 / farads) @ current,
         circuit.op_amp.gain_bandwidth * (volts(amps, 0) - volts(amps, 1)),
         circuit.multiplier.bandwidth * (volts(times, 4) - pole),
         volts(times, 0) - volts(times, 1),
         volts(times, 2) - volts(times, 3),
-    ])  # fmt: skip
+    ]).tocsr()  # fmt: skip
