@@ -39,8 +39,8 @@ class Modes:
     vectors: Complex
     inverse: Complex
 
-    def run(self, state: Array, times: Array, stretch: Stretch) -> Array | None:
-        """States at ``times``, shape ``(n_times, n_states)``; None where the board is not linear over the stretch.
+    def run(self, state: Array, times: Array, stretch: Stretch, tolerance: float) -> tuple[Array, str] | None:
+        """States at ``times``, shape ``(n_times, n_states)``, and ""; None where the board is not linear over them.
 
         Parameters
         ----------
@@ -50,6 +50,8 @@ class Modes:
             Rising, without equal ones [circuit s].
         stretch
             The inputs between two jumps.
+        tolerance
+            Not needed: the run is exact.
 
         Notes
         -----
@@ -61,9 +63,9 @@ class Modes:
         if grid is None:
             return None
         states = self._states(state, grid, stretch)
-        if not self._is_linear(states, stretch.over(grid)):
+        if not stays_linear(self.model, states, stretch.over(grid)):
             return None
-        return np.asarray(states[np.searchsorted(grid, times)])
+        return np.asarray(states[np.searchsorted(grid, times)]), ""
 
     def _states(self, state: Array, grid: Array, stretch: Stretch) -> Array:
         step = np.diff(grid)
@@ -84,23 +86,29 @@ class Modes:
             modes[row + 1] = kept * modes[row] + added
         return np.asarray((modes @ self.vectors.T).real)
 
-    def _is_linear(self, states: Array, inputs: Array) -> bool:
-        net, poles = self.model.network, self.model.poles
-        outputs = states[:, poles]
-        if not np.isfinite(states).all() or (outputs > net.high).any() or (outputs < net.low).any():
-            return False
-        drive = net.rate[poles] @ states.T + net.rate_input[poles] @ inputs
-        return bool((np.abs(drive) < _SLEW_SHARE * net.slew[:, None]).all())
+
+def stays_linear(model: Model, states: Array, inputs: Array) -> bool:
+    """Whether no output of a run is at its swing and no op amp near its slew rate.
+
+    Parameters
+    ----------
+    states, inputs
+        Shapes ``(n_times, n_states)`` and ``(n_inputs, n_times)``.
+    """
+    net, poles = model.network, model.poles
+    outputs = states[:, poles]
+    if not np.isfinite(states).all() or (outputs > net.high).any() or (outputs < net.low).any():
+        return False
+    drive = net.rate[poles] @ states.T + net.rate_input[poles] @ inputs
+    return bool((np.abs(drive) < _SLEW_SHARE * net.slew[:, None]).all())
 
 
 def modes_of(model: Model) -> Modes | None:
-    """Modes of a board without multipliers; None where it has some, is large, or its modes are not to be trusted."""
+    """Modes of a board without multipliers; None where it has some, or its modes are not to be trusted."""
     net = model.network
-    if len(net.product) or model.sparse or not model.size:
+    if len(net.product) or not model.size:
         return None
-    middle = np.zeros(model.size)
-    middle[model.poles] = (net.low + net.high) / 2.0
-    rates, vectors = np.linalg.eig(model.jacobian(middle, model.push(np.zeros(net.rate_input.shape[1])), slewing=False))
+    rates, vectors = np.linalg.eig(model.unlimited())
     if np.linalg.cond(vectors) > _CONDITION:
         return None
     return Modes(model, rates.astype(complex), vectors.astype(complex), np.linalg.inv(vectors).astype(complex))

@@ -99,6 +99,12 @@ class Model:
             out = out + vstack([csr_array((size - len(net.product), size)), products])
         return (diags_array(slope) @ out - diags_array(own)).tocsc()
 
+    def unlimited(self) -> Matrix:
+        """The Jacobian of a board without multipliers while no output is at its swing and nothing slews."""
+        net, middle = self.network, np.zeros(self.size)
+        middle[self.poles] = (net.low + net.high) / 2.0
+        return self.jacobian(middle, self.push(np.zeros(net.rate_input.shape[1])), slewing=False)
+
     def rest(self, state: Array, inputs: Array, held: NDArray[np.bool_]) -> Array:
         """Where the states come to rest while some of them are held, shape ``(n_states,)`` [V].
 

@@ -12,6 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from patchplan.check.drive import Stretch, drive_of, high_lines
+from patchplan.check.implicit import Implicit, implicit_of
 from patchplan.check.layout import Matrix
 from patchplan.check.linear import Modes, modes_of
 from patchplan.check.model import Model
@@ -92,9 +93,9 @@ def simulate(
 
     Notes
     -----
-    Boards without multipliers that stay clear of their limits are run by modes, exact in time. All others by LSODA
-    (Petzold 1983) with the exact Jacobian up to 150 states, by the variable-order BDF of Shampine and Reichelt (1997)
-    with a sparse Jacobian above.
+    Boards without multipliers that stay clear of their limits are run by modes, exact in time; above 150 states by a
+    sparse implicit method of order 9. All others by LSODA (Petzold 1983) with the exact Jacobian up to 150 states, by
+    the variable-order BDF of Shampine and Reichelt (1997) with a sparse Jacobian above.
     """
     board = idealised(circuit, gain=gain, bandwidth=bandwidth, slew=slew, bias=bias, switches=switches,
                       multiplier=multiplier)  # fmt: skip
@@ -128,7 +129,7 @@ class _Running:
     """The board while its control lines stand; the maps give the voltages of ``nets``."""
 
     model: Model
-    modes: Modes | None
+    linear: Modes | Implicit | None
     nets: tuple[str, ...]
     voltage: Matrix
     voltage_input: Matrix
@@ -139,7 +140,8 @@ def _running(board: Circuit, high: frozenset[str]) -> _Running:
     model = Model(network)
     rows = _rows_shown(board, network.nets)
     nets = tuple(network.nets[i] for i in rows)
-    return _Running(model, modes_of(model), nets, network.voltage[rows], network.voltage_input[rows])
+    linear = implicit_of(model) if model.sparse else modes_of(model)
+    return _Running(model, linear, nets, network.voltage[rows], network.voltage_input[rows])
 
 
 def _rows_within(wanted: Array, begin: float, end: float, last: float) -> slice:
@@ -163,9 +165,8 @@ def _run(now: _Running, stretch: Stretch, state: Array, times: Array, tolerance:
     if not len(state):
         return np.zeros((len(times), 0)), ""
     unique, back = np.unique(times, return_inverse=True)
-    states, failure = now.modes.run(state, unique, stretch) if now.modes is not None else None, ""
-    if states is None:
-        states, failure = _integrate(now.model, stretch, state, unique, tolerance)
+    found = now.linear.run(state, unique, stretch, tolerance) if now.linear is not None else None
+    states, failure = found or _integrate(now.model, stretch, state, unique, tolerance)
     return states[back[: np.searchsorted(back, len(states))]], failure
 
 

@@ -12,6 +12,8 @@ Array = NDArray[np.float64]
 
 #: Stages of the steps of `linear`: order 9 at the ends of a step.
 STAGES = 5
+#: Numbers worked on at a time.
+_BLOCK = 1_000_000
 
 
 @cache
@@ -103,8 +105,15 @@ class Pieces:
     def at(self, wanted: Array) -> Array:
         """Values at any times of the run, shape ``(n, n_wanted)``."""
         step = np.clip(np.searchsorted(self.starts, wanted, side="right") - 1, 0, len(self.starts) - 1)
-        weights = weights_at((wanted - self.starts[step]) / self.lengths[step])
-        out: Array = np.einsum("ts,tsn->nt", weights, self.points[step])
+        return self._combined(weights_at((wanted - self.starts[step]) / self.lengths[step]), step)
+
+    def _combined(self, weights: Array, step: NDArray[np.int_]) -> Array:
+        """Sums of weights times the points of steps, ``(n, n_wanted)``; in blocks, as the points are many."""
+        out = np.empty((self.points.shape[2], len(step)))
+        block = max(1, _BLOCK // self.points[0].size)
+        for first in range(0, len(step), block):
+            here = slice(first, first + block)
+            out[:, here] = np.einsum("ts,tsn->nt", weights[here], self.points[step[here]])
         return out
 
     def integral(self, wanted: Array) -> Array:
@@ -113,5 +122,5 @@ class Pieces:
         before = np.concatenate((np.zeros((1, whole.shape[1])), np.cumsum(whole, axis=0)[:-1]))
         step = np.clip(np.searchsorted(self.starts, wanted, side="right") - 1, 0, len(self.starts) - 1)
         weights = weights_at((wanted - self.starts[step]) / self.lengths[step], -1) * self.lengths[step, None]
-        out: Array = before[step].T + np.einsum("ts,tsn->nt", weights, self.points[step])
+        out: Array = before[step].T + self._combined(weights, step)
         return out

@@ -89,7 +89,13 @@ class _Stepper:
 
 
 def solve_linear(
-    matrix: Any, start: Array, forcing: Forcing | None, edges: Array, *, tolerance: float = 1e-9
+    matrix: Any,
+    start: Array,
+    forcing: Forcing | None,
+    edges: Array,
+    *,
+    tolerance: float = 1e-9,
+    largest: float = np.inf,
 ) -> Pieces:
     """Integrate x' = A x + f(t), steps chosen among halvings of each stretch.
 
@@ -105,6 +111,8 @@ def solve_linear(
         Ends of the stretches; f is smooth inside each.
     tolerance
         Error allowed inside a step as a part of each state's peak; the ends of steps are far better (order 9).
+    largest
+        The run ends with the first step that goes beyond this.
 
     Raises
     ------
@@ -112,7 +120,7 @@ def solve_linear(
         The solution left the range of floating point numbers; the argument is the time.
     """
     with np.errstate(over="ignore", invalid="ignore"):
-        return _solved(_Stepper(matrix), np.array(start, float), forcing, edges, tolerance)
+        return _solved(_Stepper(matrix), np.array(start, float), forcing, edges, tolerance, largest)
 
 
 class _Ahead:
@@ -139,7 +147,9 @@ class _Ahead:
         return np.asarray(self.block[index - self.first])
 
 
-def _solved(stepper: _Stepper, x: Array, forcing: Forcing | None, edges: Array, tolerance: float) -> Pieces:
+def _solved(
+    stepper: _Stepper, x: Array, forcing: Forcing | None, edges: Array, tolerance: float, largest: float
+) -> Pieces:
     slope, middle = weights_at(np.array([0.5]), 1)[0], weights_at(np.array([0.5]))[0]
     places = np.append(step_points()[1:], 0.5)
     peak = np.abs(x)
@@ -170,6 +180,8 @@ def _solved(stepper: _Stepper, x: Array, forcing: Forcing | None, edges: Array, 
             lengths.append(h)
             points.append(piece)
             x, peak, index = inner[-1], peak_here, index + 1
+            if np.abs(inner).max(initial=0.0) > largest:
+                return Pieces(np.array(starts), np.array(lengths), np.array(points))
             # The error inside a step falls by 64 on halving: a step may double once it is well below that.
             if error < 1 / 100 and level > 0 and index % 2 == 0:
                 level, index = level - 1, index // 2
