@@ -29,7 +29,9 @@ RUNS, TOO_DEAR = 2, 1.3
 #: Blocks whose forms are weighed, and the largest System in which they are: each form takes a patch and a sensitivity.
 MOST_BLOCKS, MOST_STATES = 4, 120
 #: Nodes of the search for signs in a patch that is only counted.
-_SIGN_NODES = 100
+_SIGN_NODES = 1
+
+_LEFT = f"Not weighed: there are more than {MOST_BLOCKS} blocks, or more than {MOST_STATES} states."
 
 Forms = tuple[tuple[str, str], ...]
 
@@ -39,11 +41,14 @@ def consider(problem: Problem, system: System) -> tuple[Considered, ...]:
 
     Empty where no block has a choice: nothing is solved then.
     """
-    blocks = find_blocks(system).blocks[:MOST_BLOCKS] if len(system.states) <= MOST_STATES else ()
+    blocks = find_blocks(system).blocks
     if not blocks:
         return ()
-    reach = find_reach(system, problem.ranges, problem.build)
-    return tuple(_weighed(problem, system, reach, block, form) for block in blocks for form in FORMS)
+    most = MOST_BLOCKS if len(system.states) <= MOST_STATES else 0
+    left = [Considered(b.name, b.order, AS_WRITTEN, reason=_LEFT) for b in blocks[most:]]
+    reach = find_reach(system, problem.ranges, problem.build) if most else None
+    weighed = [_weighed(problem, system, reach, b, form) for b in blocks[:most] for form in FORMS if reach]
+    return (*weighed, *left)
 
 
 def _weighed(problem: Problem, system: System, reach: Reach, block: Block, name: str) -> Considered:

@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from fractions import Fraction
 from functools import lru_cache
+from math import lcm
 from typing import TypeAlias
 
 import numpy as np
@@ -14,6 +15,7 @@ Matrix: TypeAlias = tuple[Vector, ...]
 
 #: Newton steps that take an eigenvalue to the last bit of a float, its residual being exact.
 _POLISH = 4
+_BITS = 256
 #: A part of a root below this share of its size is what the last step left.
 _NOTHING = 1e-15
 
@@ -21,6 +23,13 @@ _NOTHING = 1e-15
 def short(value: Fraction | float) -> Fraction:
     """The nearest float as a Fraction, so that numbers do not grow without end."""
     return Fraction(float(value))
+
+
+def long(value: Fraction) -> Fraction:
+    """The same to 256 bits: far more digits than any condition of a matrix takes away, far fewer than powers have."""
+    top, bottom = value.numerator, value.denominator
+    shift = max(0, _BITS - top.bit_length() + bottom.bit_length())
+    return Fraction((top << shift) // bottom, 1 << shift)
 
 
 def dot(left: Sequence[Fraction], right: Sequence[Fraction]) -> Fraction:
@@ -45,20 +54,30 @@ def observability(output: Vector, matrix: Matrix) -> Matrix:
 
 
 def solved(matrix: Matrix, right: Matrix) -> Matrix | None:
-    """X of ``matrix @ X = right``, None where the matrix is singular."""
-    n = len(matrix)
-    rows = [[*a, *b] for a, b in zip(matrix, right, strict=True)]
+    """X of ``matrix @ X = right``, None where the matrix is singular.
+
+    Elimination on integers, in which every division comes out even (Bareiss 1968, Sylvester's identity and multistep
+    integer-preserving Gaussian elimination); Fractions would be shortened at every step.
+    """
+    n, before = len(matrix), 1
+    rows = [_whole((*a, *b)) for a, b in zip(matrix, right, strict=True)]
     for k in range(n):
         pivot = max(range(k, n), key=lambda i: abs(rows[i][k]))
         if not rows[pivot][k]:
             return None
         rows[k], rows[pivot] = rows[pivot], rows[k]
-        rows[k] = [x / rows[k][k] for x in rows[k]]
+        lead = rows[k]
         for i in range(n):
-            if i != k and rows[i][k]:
+            if i != k:
                 factor = rows[i][k]
-                rows[i] = [x - factor * y for x, y in zip(rows[i], rows[k], strict=True)]
-    return tuple(tuple(row[n:]) for row in rows)
+                rows[i] = [(lead[k] * x - factor * y) // before for x, y in zip(rows[i], lead, strict=True)]
+        before = lead[k]
+    return tuple(tuple(Fraction(x, row[k]) for x in row[n:]) for k, row in enumerate(rows))
+
+
+def _whole(row: Sequence[Fraction]) -> list[int]:
+    common = lcm(*(x.denominator for x in row))
+    return [x.numerator * (common // x.denominator) for x in row]
 
 
 def transposed(matrix: Matrix) -> Matrix:

@@ -13,13 +13,15 @@ import numpy as np
 
 from patchplan.equation.system import Row, Term, row_of
 from patchplan.form.blocks import Block
-from patchplan.form.exact import Matrix, Vector, observability, share_a_root, short, solved
+from patchplan.form.exact import Matrix, Vector, long, observability, share_a_root, short, solved
 from patchplan.form.sections import Section, cascade, fractions
 
 #: The form of the file: a chain of derivatives, or the observer form of a block in s.
 AS_WRITTEN = "companion"
 #: Stands for the drive in the rows of a realisation.
 DRIVE = "(drive)"
+#: Above this order nobody builds a full matrix.
+MOST_FULL = 8
 #: Entries of a full matrix below this share of its largest are rounding.
 _DUST = 1e-13
 
@@ -95,7 +97,7 @@ def _changed(block: Block, made: Realisation) -> Realisation | str:
     """Fill in T: both systems' outputs and their derivatives are the same combinations of states and drive."""
     matrix, _, over, _ = made.open_rows()
     seen = observability(over[made.outlet.name], matrix)
-    change = solved(seen, block.seen)
+    change = solved(*(tuple(tuple(map(long, row)) for row in rows) for rows in (seen, block.seen)))
     if change is None:
         return "Rounded to floats, a zero lies on a pole."
     return replace(made, change=tuple(tuple(map(short, row)) for row in change))
@@ -268,6 +270,8 @@ def _schwarz(denominator: Vector) -> tuple[Fraction, ...] | None:
 
 def _balanced(block: Block, numerator: Vector, denominator: Vector) -> Realisation | str:
     """States that are as easily reached as seen (Moore 1981; computed after Laub, Heath, Paige and Ward 1987)."""
+    if block.order > MOST_FULL:
+        return f"Each of its {block.order} states would take a wire from every other one."
     start = _loops(block, numerator, denominator)
     start = start if isinstance(start, Realisation) else _cascade(block, numerator, denominator)
     matrix, inlet, over, share = start.open_rows()

@@ -27,7 +27,7 @@ class Rewritten:
         The equations as written, with every new state and sum as one more signal: what these do over a run is found
         from the problem itself.
     notes
-        A sentence for each block.
+        A sentence for each block, and for each that has to stay as written.
     """
 
     system: System
@@ -48,7 +48,8 @@ def with_forms(system: System, forms: Mapping[str, str]) -> Rewritten:
     ValueError
         Where there is no such block, or it can't take the form.
     """
-    blocks = {block.name: block for block in find_blocks(system).blocks} if forms else {}
+    found = find_blocks(system)
+    blocks = {block.name: block for block in found.blocks}
     changes = []
     for name, form in forms.items():
         if form == AS_WRITTEN:
@@ -59,7 +60,8 @@ def with_forms(system: System, forms: Mapping[str, str]) -> Rewritten:
         if isinstance(made, str):
             raise ValueError(f"{name} can't be built as {form}. {made}")
         changes.append((blocks[name], made))
-    return rewrite(system, changes)
+    made_over = rewrite(system, changes)
+    return replace(made_over, notes=(*found.notes, *made_over.notes))
 
 
 def rewrite(system: System, changes: Iterable[tuple[Block, Realisation]]) -> Rewritten:
@@ -68,20 +70,23 @@ def rewrite(system: System, changes: Iterable[tuple[Block, Realisation]]) -> Rew
     Start values follow; states of the block that others need or that are watched become sums of the new ones, or one of
     the new ones where that is the same.
     """
-    extended, notes = system, []
-    written = system
+    written = extended = system
+    put_in: dict[str, tuple[Term, ...]] = {}
+    notes = []
     for block, made in changes:
         made = _with_known_names(block, made)
         inner = _drive(block, made)
         outputs = _outputs(block, made)
+        kept = {name: terms for name, terms in outputs.items() if _is_kept(name, system, block)}
+        put_in |= {name: terms for name, terms in outputs.items() if name not in kept}
         extended = _extended(extended, block, made, inner)
-        written = _replaced(written, block, made, inner, outputs)
-        notes.append(_note(block, made))
+        written = _replaced(written, block, made, inner, kept)
+        notes.append(f"{block.name} is built in the form {made.form} ({made.said}) instead of the companion form.")
+    if put_in:
+        # At the end, as the drive of one block may hold what another one gives.
+        rows, signals = ([_put(row, put_in) for row in part] for part in (written.rows, written.signals))
+        written = replace(written, rows=tuple(rows), signals=_in_order(signals))
     return Rewritten(written, extended, tuple(notes))
-
-
-def _note(block: Block, made: Realisation) -> str:
-    return f"{block.name} is built in the form {made.form} ({made.said}) instead of the companion form."
 
 
 def _with_known_names(block: Block, made: Realisation) -> Realisation:
@@ -156,11 +161,9 @@ def _extended(
 
 def _replaced(
     system: System, block: Block, made: Realisation, inner: tuple[tuple[Term, ...], Row | None],
-    outputs: Mapping[str, tuple[Term, ...]],
+    kept: Mapping[str, tuple[Term, ...]],
 ) -> System:  # fmt: skip
     drive, own = inner
-    kept = {name for name in outputs if _is_kept(name, system, block)}
-    put_in = {name: terms for name, terms in outputs.items() if name not in kept}
     origin = next(row.origin for row in system.rows if row.name == block.states[0])
 
     def inside(row: Row) -> Row:
@@ -169,21 +172,20 @@ def _replaced(
             for d in drive
         ]  # fmt: skip
         terms += [t for t in row.terms if t.factors[0][0] != DRIVE]
-        return _put(row_of(row.name, terms, origin), put_in)
+        return row_of(row.name, terms, origin)
 
     starts = [s.start for n in block.states for s in system.states if s.name == n]
     states = [State(n, short(dot(row, starts))) for n, row in zip(made.states, made.change, strict=True)]
     rows = [inside(row) for row in made.rows]
     added = [*([own] if own else []), *map(inside, made.signals)]
-    added += [row_of(name, outputs[name], origin) for name in block.needed if name in kept]
+    added += [row_of(name, terms, origin) for name, terms in kept.items()]
     signals = [
-        _taken(row, block, inside(made.outlet).terms) if row.name == block.signal else _put(row, put_in)
-        for row in system.signals
+        _taken(row, block, inside(made.outlet).terms) if row.name == block.signal else row for row in system.signals
     ]
     return replace(
         system,
         states=_at_place(system.states, [s.name for s in system.states], block.states, states),
-        rows=_at_place(tuple(_put(r, put_in) for r in system.rows), [r.name for r in system.rows], block.states, rows),
+        rows=_at_place(system.rows, [r.name for r in system.rows], block.states, rows),
         signals=_in_order([*added, *signals]),
     )
 

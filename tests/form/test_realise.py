@@ -13,7 +13,7 @@ from patchplan.form.exact import roots
 from patchplan.form.realise import AS_WRITTEN, FORMS, Realisation, realise
 from patchplan.form.rewrite import rewrite, with_forms
 from patchplan.form.sections import cascade
-from tests.equation.simulated import built
+from tests.equation.simulated import built, simulate
 
 W0 = 2 * np.pi * 500
 #: Block in s, numerator and denominator for scipy.
@@ -206,3 +206,61 @@ def test_unknown_blocks_and_forms_are_refused():
     assert with_forms(system, {"y": AS_WRITTEN}) == rewrite(system, ())
     with pytest.raises(ValueError, match="x is the output of no linear block; there are y"):
         with_forms(system, {"x": "cascade"})
+
+
+def test_an_input_s_derivative_leaves_a_block_too():
+    """y''' + 3 y'' + 5 y' + 2 y = 2 u' + 3 u: a chain with a path in front of it."""
+    equation = "y''' + 3*y'' + 5*y' + 2*y = 2*u' + 3*u"
+    (block,) = find_blocks(built([equation], inputs='u = "sin(t)"', start=START)).blocks
+    assert (block.numerator, block.denominator) == ((3, 2, 0, 0), (2, 5, 3, 1))
+
+
+TWO = ["x''' = -2*x'' - 3*x' - 2*x + 0.5*y'' + u", "y''' = -y'' - 2*y' - y + 0.3*x' - 0.2*x^2*y' + 0.5*x''"]
+STARTS = 'x = 0.4\n"x\'" = 0\n"x\'\'" = 0.1\ny = 0\n"y\'" = -0.5\n"y\'\'" = 0.2'
+
+
+@pytest.mark.parametrize("forms", [("cascade", "ladder"), ("ladder", "balanced"), ("two-integrator loops", "parallel")])
+def test_two_blocks_that_drive_each_other_move_as_before(forms):
+    """Each takes derivatives of the other, one of them in a product; scipy solves both Systems."""
+    system = built(TWO, inputs='u = "cos(t)"', start=STARTS, duration="3")
+    made = with_forms(system, dict(zip("xy", forms, strict=True)))
+    times = np.linspace(0, 3, 20)
+    wanted, found, told = (simulate(s, times) for s in (system, made.system, made.extended))
+    for name in ("x", "y"):
+        assert np.allclose(found[name], wanted[name], atol=1e-6)
+    for name in {s.name for s in made.system.states} - {s.name for s in system.states}:
+        assert np.allclose(found[name], told[name], atol=1e-6 * max(1, np.abs(told[name]).max()))
+
+
+@pytest.mark.parametrize("seed", range(25))
+def test_drawn_blocks_keep_their_transfer_function(seed):
+    """Third to eighth order, poles over a decade and a half, any number of zeros, with and without a direct path."""
+    random = np.random.default_rng(seed)
+    order = int(random.integers(3, 9))
+
+    def drawn(count, damped):
+        made = np.ones(1)
+        while count:
+            size = 10 ** random.uniform(-0.75, 0.75)
+            if count == 1 or random.random() < 0.3:
+                part = [1, size * (1 if damped else random.choice((-1, 1)))]
+            else:
+                part = [1, size * random.uniform(0.1 if damped else 0.0, 1.9), size**2]
+            count -= len(part) - 1
+            made = np.polymul(made, part)
+        return made
+
+    def text(polynomial):
+        return "(" + " + ".join(f"{c}*s^{len(polynomial) - 1 - k}" for k, c in enumerate(polynomial.tolist())) + ")"
+
+    denominator, numerator = drawn(order, damped=True), drawn(int(random.integers(0, order + 1)), damped=False)
+    written = f"y = {text(numerator)}/{text(denominator)}*u".replace("+ -", "- ")
+    (block,) = find_blocks(built([written], inputs='u = "cos(t)"')).blocks
+    w = np.geomspace(1e-2, 1e2, 61)
+    wanted = signal.freqs(numerator, denominator, w)[1]
+    made = {form: realise(block, form) for form in FORMS[1:]}
+    assert sum(isinstance(m, Realisation) for m in made.values()) >= 2
+    for form, realisation in made.items():
+        if isinstance(realisation, Realisation):
+            found = response(*floats(realisation), w)
+            assert np.abs(found - wanted).max() < 1e-9 * np.abs(wanted).max(), form
