@@ -140,7 +140,7 @@ def plan_with(
 def form_of(problem: Problem, choices: Choices, written: Rewritten, reach: Reach, target: Target) -> Form:
     """The Form that the choices ask for."""
     swing = min(-target.op_amp.low, target.op_amp.high)
-    form = find_form(written.system, reach, problem.terminals, offsets=choices.offsets, swing=swing)
+    form = find_form(written.system, reach, problem.terminals, offsets=choices.offsets, swing=swing, sums=written.sums)
     return replace(form, notes=(*written.notes, *form.notes))
 
 

@@ -131,7 +131,7 @@ def _bounded(patch: Patch, form: Form, reach: Reach) -> dict[str, NodeRange]:
     lows, highs, rates, proved = [], [], [], True
     for case in reach.bounded:
         sums, slopes = node_sums(patch, form, case.names, case.middle.knobs)
-        ends, moving = ends_of(case, sums), ends_of(case, sums[:, 1:] @ slopes)
+        ends, moving = ends_of(case, sums), ends_of(case, slopes)
         lows.append(ends.low)
         highs.append(ends.high)
         rates.append(np.maximum(-moving.low, moving.high) + _steepest_inputs(case, sums))

@@ -58,7 +58,7 @@ def _weighed(problem: Problem, system: System, reach: Reach, block: Block, name:
         return replace(row, reason=made)
     written = with_forms(system, {block.name: name})
     here = retold(reach, written.extended)
-    form = find_form(written.system, here, problem.terminals, offsets=False)
+    form = find_form(written.system, here, problem.terminals, offsets=False, sums=written.sums)
     patch = build_patch(form, hold=problem.build.run != "free", node_limit=_SIGN_NODES)
     sensitivity = find_sensitivity(form, patch, find_ranges(patch, form, here))
     spread = part_spread(within_horizon(sensitivity, linear=system.is_linear), patch, problem.build)

@@ -124,7 +124,7 @@ def test_every_form_is_drawn_as_it_stands_and_bounds_hold_for_every_input(form: 
     problem = block_problem("{ within = [-2, 2] }", duration=40)
     made = with_forms(system_of(problem), {"y": form})
     reach = find_reach(made.extended, {}, problem.build)
-    drawn = find_form(made.system, reach)
+    drawn = find_form(made.system, reach, sums=made.sums)
     patch = build_patch(drawn)
     rows = {row.name: row for row in (*drawn.system.rows, *drawn.system.signals)}
     found = read_back(patch, {row.name for row in drawn.system.signals})

@@ -25,6 +25,7 @@ def find_form(
     *,
     offsets: bool = True,
     swing: float = 10.0,
+    sums: Mapping[str, Mapping[str, Fraction]] | None = None,
 ) -> Form:
     """Choose the variables that the board carries.
 
@@ -38,6 +39,8 @@ def find_form(
         Whether signals far from zero may be carried as a difference from a constant.
     swing
         Volts that an output may reach; a state whose terminal asks for a fair share of it needs no output stage.
+    sums
+        States that the problem does not have, by those that it has.
     """
     terminals = terminals or {}
     apart = {n: t for n, t in terminals.items() if not _fits_state(n, t, reach, swing)}
@@ -45,7 +48,7 @@ def find_form(
     shifts = {renamed.get(n, n): -t.offset / t.volts_per_unit for n, t in terminals.items() if t.offset}
     scales = {renamed.get(n, n): t.volts_per_unit for n, t in terminals.items()}
     notes = [f"{n} keeps {float(t.volts_per_unit):.4g} V per unit from its terminal." for n, t in terminals.items()]
-    form = Form(shifted(system, shifts), shifts, scales)
+    form = Form(shifted(system, shifts), shifts, scales, sums=sums or {})
     if offsets:
         form, more = _with_free_offsets(form, reach)
         notes += more

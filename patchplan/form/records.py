@@ -21,6 +21,8 @@ class Form:
         Name -> offset [problem units]; absent means 0.
     scales
         Name -> volts per unit dictated by a terminal, signed; absent means free.
+    sums
+        States that the problem does not have, each as a sum of its states: name -> weights.
     notes
         Sentences: why an offset was put in, what a terminal asked for.
     """
@@ -29,3 +31,4 @@ class Form:
     offsets: Mapping[str, Fraction] = field(default_factory=dict)
     scales: Mapping[str, Fraction] = field(default_factory=dict)
     notes: tuple[str, ...] = ()
+    sums: Mapping[str, Mapping[str, Fraction]] = field(default_factory=dict)

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from fractions import Fraction
 from typing import TypeVar
 
@@ -28,11 +28,14 @@ class Rewritten:
         from the problem itself.
     notes
         A sentence for each block, and for each that has to stay as written.
+    sums
+        New states by the states as written: name -> weights.
     """
 
     system: System
     extended: System
     notes: tuple[str, ...] = ()
+    sums: Mapping[str, Mapping[str, Fraction]] = field(default_factory=dict)
 
 
 def with_forms(system: System, forms: Mapping[str, str]) -> Rewritten:
@@ -73,6 +76,7 @@ def rewrite(system: System, changes: Iterable[tuple[Block, Realisation]]) -> Rew
     written = extended = system
     put_in: dict[str, tuple[Term, ...]] = {}
     notes = []
+    sums: dict[str, Mapping[str, Fraction]] = {}
     for block, made in changes:
         made = _with_known_names(block, made)
         inner = _drive(block, made)
@@ -81,12 +85,14 @@ def rewrite(system: System, changes: Iterable[tuple[Block, Realisation]]) -> Rew
         put_in |= {name: terms for name, terms in outputs.items() if name not in kept}
         extended = _extended(extended, block, made, inner)
         written = _replaced(written, block, made, inner, kept)
+        weights = zip(made.states, made.change, strict=True)
+        sums |= {n: dict(zip(block.states, row, strict=True)) for n, row in weights if n not in block.states}
         notes.append(f"{block.name} is built in the form {made.form} ({made.said}) instead of the companion form.")
     if put_in:
         # At the end, as the drive of one block may hold what another one gives.
         rows, signals = ([_put(row, put_in) for row in part] for part in (written.rows, written.signals))
         written = replace(written, rows=tuple(rows), signals=_in_order(signals))
-    return Rewritten(written, extended, tuple(notes))
+    return Rewritten(written, extended, tuple(notes), sums)
 
 
 def _with_known_names(block: Block, made: Realisation) -> Realisation:

@@ -22,22 +22,24 @@ def wire_gains(stage: Stage, patch: Patch, knobs: Mapping[str, float]) -> list[f
 
 
 def node_sums(patch: Patch, form: Form, names: Sequence[str], knobs: Mapping[str, float]) -> tuple[Any, Any]:
-    """Every node of a linear patch, and every state's rate, as a sum of 1, the problem's states and its sources.
+    """Every node of a linear patch, and its slope, as a sum of 1, the problem's states and its sources.
 
     Parameters
     ----------
     names
-        States, then sources, in the order of the columns.
+        The problem's states, then its sources, in the order of the columns.
     knobs
         Values of the knobs.
 
     Returns
     -------
-    nodes, rates
-        Sparse, shapes ``(n_stages, 1 + n_names)`` and ``(n_names, 1 + n_names)``: signals in the Form's variables, and
-        rates in rows of the states' places; rows of sources are empty.
+    nodes, slopes
+        Sparse, shape ``(n_stages, 1 + n_names)``, in the Form's variables; slopes without what the sources' own slopes
+        add.
     """
     place = {name: i + 1 for i, name in enumerate(names)}
+    own = {s.signal: len(names) + 1 + i for i, s in enumerate(patch.stages) if s.signal in form.sums}
+    place |= own
     found: dict[str, Row] = {}
     for stage in patch.stages:
         if stage.kind in ("integrator", "source"):
@@ -49,12 +51,17 @@ def node_sums(patch: Patch, form: Form, names: Sequence[str], knobs: Mapping[str
             found[stage.node] = found[stage.wires[0].source]
         elif stage.kind == "summer":
             found[stage.node] = _summed(stage, patch, knobs, found)
-    rates: list[Row] = [{} for _ in names]
+    width = 1 + len(names) + len(patch.stages)
+    rates: list[Row] = [{} for _ in range(width)]
     for stage in patch.stages:
         if stage.kind == "integrator":
-            rates[place[stage.signal] - 1] = _summed(stage, patch, knobs, found)
-    width = len(names) + 1
-    return _sparse([found[s.node] for s in patch.stages], width), _sparse(rates, width)
+            rates[place[stage.signal]] = _summed(stage, patch, knobs, found)
+    # States of the board's own stand in columns behind the problem's, and are put in at the end.
+    told: list[Row] = [{i: 1.0} if i <= len(names) else {} for i in range(width)]
+    for name, column in own.items():
+        told[column] = {place[old]: float(weight) for old, weight in form.sums[name].items()}
+    nodes, known = _sparse([found[s.node] for s in patch.stages], width), _sparse(told, 1 + len(names))
+    return nodes @ known, nodes @ _sparse(rates, width) @ known
 
 
 def _summed(stage: Stage, patch: Patch, knobs: Mapping[str, float], found: Mapping[str, Row]) -> Row:

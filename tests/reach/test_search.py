@@ -7,10 +7,10 @@ from fractions import Fraction
 
 import numpy as np
 
-from patchplan.equation.problem import Parameter
+from patchplan.equation.problem import Build, Parameter
 from patchplan.reach.field import field_of
 from patchplan.reach.followed import Followed
-from patchplan.reach.search import FULL, first_points, steep_corners
+from patchplan.reach.search import FULL, board_factors, first_points, steep_corners
 from tests.systems import knob, system, term
 
 
@@ -38,3 +38,14 @@ def test_products_and_sums_under_a_knob_are_followed():
     x, y = np.array([[1.0, 2.0, 5.0], [3.0, -4.0, 0.5]])
     found = Followed(field).curves(np.array([x, y]), field.weights({"a": 2.0}))
     np.testing.assert_allclose(found, [x * y, 2 * (2 * x - y)])
+
+
+def test_tolerances_of_parts_do_not_touch_changes_of_variables():
+    plain = system({"x": 0, "v": 0}, {"x": [term(1, "v")], "v": [term(-1, "x")]}, signals={"z": [term(3, "x")]})
+    changed = replace(plain, derived=("z",))
+    field = field_of(plain)
+    off, exact = (board_factors(s, field, Build()) for s in (plain, changed))
+    (sums,) = field.signal_blocks
+    assert (off[sums.terms] != 1).all()
+    assert (exact[sums.terms] == 1).all()
+    assert (exact[field.rate_block.terms] == off[field.rate_block.terms]).all()
