@@ -7,6 +7,7 @@ from dataclasses import asdict, dataclass, replace
 
 from patchplan.check.compare import check_circuit
 from patchplan.check.records import Verdict
+from patchplan.check.worst import worst_of_all
 from patchplan.circuit.build import build_circuit
 from patchplan.circuit.catalogue import load_catalogue
 from patchplan.circuit.switched import with_references
@@ -127,13 +128,16 @@ def plan_with(
     )  # fmt: skip
     if sizing.faults:
         return found
+    reach = worst_of_all(reach, form, patch, sizing)
+    warnings = (*form.notes, *reach.warnings, *sizing.notes, *_unset_starts(form, build))
     patch, sizing = with_references(patch, sizing, target, float(form.system.duration))
     circuit = build_circuit(form, patch, sizing, target, build, catalogue, stand_ins=reach.reference.waveforms)
     say("Checking the board")
     verdict = check_circuit(
-        circuit, reach.reference, sensitivity, patch, sizing, target, accept=accept, system=form.system
-    )
-    found = replace(found, patch=patch, sizing=sizing)
+        circuit, reach.reference, sensitivity, patch, sizing, target, accept=accept, system=form.system,
+        others=reach.worst[1:],
+    )  # fmt: skip
+    found = replace(found, reach=reach, patch=patch, sizing=sizing)
     return replace(found, circuit=circuit, verdict=verdict, warnings=(*warnings, *circuit.notes, *verdict.warnings))
 
 

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import replace
 
 import numpy as np
@@ -13,11 +13,12 @@ from patchplan.check.horizon import horizon_of
 from patchplan.check.records import Cause, Curve, NodePeak, SignalError, Verdict
 from patchplan.check.simulate import Traces, simulate
 from patchplan.check.spread import spread_of
+from patchplan.check.worst import other_runs, peaks_over
 from patchplan.circuit.records import DC_LIMIT, Circuit
 from patchplan.equation.system import System
 from patchplan.patch.records import Patch
 from patchplan.quantity import engineering
-from patchplan.reach.records import Reference
+from patchplan.reach.records import Reference, WorstCase
 from patchplan.sensitivity import Sensitivity
 from patchplan.sizing.records import Sizing, Target
 
@@ -53,6 +54,7 @@ def check_circuit(
     system: System,
     accept: float = 5.0,
     budget: bool = True,
+    others: Sequence[WorstCase] = (),
 ) -> Verdict:
     """Simulate the nominal board and compare it with the Reference.
 
@@ -70,6 +72,9 @@ def check_circuit(
         Largest error at which the board follows its equation [% of peak].
     budget
         Whether the causes of error are told apart; it takes one run for each.
+    others
+        Further runs under inputs known only by their bounds: they count in the peaks of all nodes, each in the error
+        of its own signal.
     """
     times = reference.times * circuit.time_scale
     traces = simulate(circuit, times=times, waveforms=reference.waveforms)
@@ -85,11 +90,14 @@ def check_circuit(
         _signal_error(name, _compare(circuit, reference, traces, name, rows), spread.get(name, 0.0))
         for name in circuit.watched
     )
-    nodes = node_peaks(circuit, traces)
+    more = other_runs(circuit, others)
+    signals = tuple(_with_runs(signal, circuit, more) for signal in signals)
+    nodes = peaks_over(circuit, node_peaks(circuit, traces), more)
+    failed = next((t.failure for t in (traces, *(t for _, t in more)) if t.failure), "")
     largest = max((s.max_error_percent for s in signals), default=0.0)
     causes = _budget(circuit, reference, traces, rows) if budget and not traces.failure else ()
     return Verdict(
-        verdict=_word(nodes, traces, largest, accept),
+        verdict=_word(nodes, failed, largest, accept),
         max_error_percent=largest,
         rms_error_percent=max((s.rms_error_percent for s in signals), default=0.0),
         spread_percent=max(spread.values(), default=0.0),
@@ -100,12 +108,25 @@ def check_circuit(
         curves=_curves(circuit, reference, traces),
         times=traces.times,
         volts={net: traces.of(net) for net in circuit.nodes},
-        warnings=_warnings(traces, nodes, horizon, spreads, within, accept, _jumps(circuit, reference)),
+        warnings=_warnings(traces, failed, nodes, horizon, spreads, within, accept, _jumps(circuit, reference)),
     )
 
 
-def _word(nodes: tuple[NodePeak, ...], traces: Traces, largest: float, accept: float) -> str:
-    if traces.failure or not all(n.ok for n in nodes):
+def _with_runs(signal: SignalError, circuit: Circuit, runs: list[tuple[WorstCase, Traces]]) -> SignalError:
+    """The larger of each error over the run that all share and the signal's own worst case."""
+    for case, traces in runs:
+        if case.signal == signal.name:
+            own = _compare(circuit, case.reference, traces, signal.name, len(traces.times))
+            signal = SignalError(
+                signal.name, max(signal.max_error_percent, own.largest), max(signal.rms_error_percent, own.rms),
+                signal.spread_percent, max(signal.stretched_error_percent, own.stretched),
+                max(signal.frequency_error_percent, own.frequency, key=abs),
+            )  # fmt: skip
+    return signal
+
+
+def _word(nodes: tuple[NodePeak, ...], failed: str, largest: float, accept: float) -> str:
+    if failed or not all(n.ok for n in nodes):
         return "overload"
     return "follows" if largest <= accept else "inaccurate"
 
@@ -216,6 +237,7 @@ def _apart(circuit: Circuit, reference: Reference, one: Traces, other: Traces) -
 
 def _warnings(
     traces: Traces,
+    failed: str,
     nodes: tuple[NodePeak, ...],
     horizon: float | None,
     spreads: Mapping[str, Array],
@@ -223,7 +245,7 @@ def _warnings(
     accept: float,
     jumps: list[str],
 ) -> tuple[str, ...]:
-    found = [*traces.warnings, *([traces.failure] if traces.failure else []), *(n.cause for n in nodes if not n.ok)]
+    found = [*traces.warnings, *([failed] if failed else []), *(n.cause for n in nodes if not n.ok)]
     if horizon is not None:
         found.append(
             f"The sensitivity grows exponentially: errors and spread are compared up to {horizon:.4g} of problem time; "

@@ -10,12 +10,15 @@ from numpy.typing import NDArray
 from patchplan.check.records import NodePeak
 from patchplan.check.simulate import Traces
 from patchplan.circuit.records import Circuit
+from patchplan.quantity import engineering
 from patchplan.reach.records import Reference
 
 Array = NDArray[np.float64]
 
 #: A peak may pass its limit by this fraction: the rounding of a reference that stands at the limit.
 _LIMIT_SLACK = 1e-6
+#: A node that is within its limit after this part of the run is over it only at first.
+_FIRST_MOMENTS = 0.1
 #: Stretches of time looked for.
 _LARGEST_STRETCH = 0.1
 _STRETCH_STEPS = 8
@@ -132,10 +135,24 @@ def node_peaks(circuit: Circuit, traces: Traces) -> tuple[NodePeak, ...]:
         volts = traces.of(net)
         row = int(np.argmax(np.abs(volts)))
         peak, time = abs(float(volts[row])), float(traces.times[row])
-        ok = peak <= limit * (1.0 + _LIMIT_SLACK)
-        cause = "" if ok else _cause(circuit, net, peak, limit, time)
-        peaks.append(NodePeak(net, peak, limit, ok, time, cause))
+        over = traces.times[np.abs(volts) > limit * (1.0 + _LIMIT_SLACK)]
+        if not over.size:
+            peaks.append(NodePeak(net, peak, limit, True, time))
+            continue
+        first, last = float(over[0]), float(over[-1])
+        cause = _cause(circuit, net, peak, limit, time) + _at_first(circuit, first, last)
+        peaks.append(NodePeak(net, peak, limit, False, time, cause, first, last))
     return tuple(peaks)
+
+
+def _at_first(circuit: Circuit, first: float, last: float) -> str:
+    """A sentence on a node that is over its limit at the beginning only, "" on others."""
+    if last > _FIRST_MOMENTS * circuit.duration:
+        return ""
+    return (
+        f" It clips only in the first {engineering(last, 's')}, from {engineering(first, 's')} on: the start values or "
+        "a step there need more room than all the rest of the run."
+    )
 
 
 def _cause(circuit: Circuit, net: str, peak: float, limit: float, time: float) -> str:

@@ -25,7 +25,19 @@ class SignalError:
 
 @dataclass(frozen=True, slots=True)
 class NodePeak:
-    """Largest voltage of one node against its limit; ``time`` in circuit seconds, ``cause`` a sentence if not ok."""
+    """Largest voltage of one node against its limit.
+
+    Attributes
+    ----------
+    time
+        When [circuit s].
+    cause
+        A sentence if not ok.
+    over_from, over_until
+        First and last time above the limit [circuit s], 0 where never.
+    during
+        The watched signal whose worst case made the peak, "" for the run that the netlist holds.
+    """
 
     node: str
     peak_volts: float
@@ -33,6 +45,9 @@ class NodePeak:
     ok: bool
     time: float = 0.0
     cause: str = ""
+    over_from: float = 0.0
+    over_until: float = 0.0
+    during: str = ""
 
 
 @dataclass(frozen=True, slots=True)

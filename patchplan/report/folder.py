@@ -9,8 +9,9 @@ from __future__ import annotations
 
 import json
 import os
+import re
 import shutil
-from collections.abc import Collection, Mapping
+from collections.abc import Collection, Iterable, Mapping
 from pathlib import Path
 
 from patchplan.errors import FolderRefused
@@ -156,3 +157,13 @@ def _sweep(folder: Path) -> None:
 
 def _beside(folder: Path, what: str) -> Path:
     return folder.with_name(f".{folder.name}.{what}")
+
+
+def unused_name(stem: str, name: str, suffix: str, taken: Iterable[str]) -> str:
+    """File name for a signal, legal everywhere and unlike the names taken, without regard to case."""
+    base = re.sub(r"[^A-Za-z0-9]+", "_", name.replace("'", "_d")).strip("_")[:40] or "signal"
+    used = {t.lower() for t in taken}
+    number, wish = 2, f"{stem}_{base}.{suffix}"
+    while wish.lower() in used:
+        number, wish = number + 1, f"{stem}_{base}_{number}.{suffix}"
+    return wish

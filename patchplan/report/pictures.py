@@ -3,8 +3,6 @@
 from __future__ import annotations
 
 import io
-import re
-from collections.abc import Iterable
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -14,6 +12,7 @@ from patchplan.check.records import Curve
 from patchplan.circuit.records import NodeMap
 from patchplan.quantity import engineering
 from patchplan.report import style
+from patchplan.report.folder import unused_name
 from patchplan.report.records import Plan
 from patchplan.report.tables import swing_volts, swinging
 from patchplan.report.words import percent, plain
@@ -48,16 +47,6 @@ def pictures(plan: Plan) -> dict[str, str]:
         if plan.verdict.budget:
             drawn["budget.svg"] = _svg(budget_picture(plan))
     return drawn
-
-
-def unused_name(stem: str, name: str, suffix: str, taken: Iterable[str]) -> str:
-    """File name for a signal, legal everywhere and unlike the names taken, without regard to case."""
-    base = re.sub(r"[^A-Za-z0-9]+", "_", name.replace("'", "_d")).strip("_")[:40] or "signal"
-    used = {t.lower() for t in taken}
-    number, wish = 2, f"{stem}_{base}.{suffix}"
-    while wish.lower() in used:
-        number, wish = number + 1, f"{stem}_{base}_{number}.{suffix}"
-    return wish
 
 
 def signal_picture(plan: Plan, curve: Curve, node: NodeMap) -> Figure:

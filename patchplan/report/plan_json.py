@@ -14,6 +14,7 @@ from patchplan.equation.problem import Problem
 from patchplan.patch.records import Patch, Stage
 from patchplan.report.codec import decode, encode, rounded
 from patchplan.report.records import Plan
+from patchplan.report.worst import worst_inputs
 from patchplan.sizing.records import Sizing, StageSizing
 from patchplan.version import __version__
 
@@ -50,6 +51,7 @@ def plan_data(plan: Plan, files: Sequence[str] = ()) -> dict[str, Any]:
         "counts": dict(sorted(plan.patch.counts().items())),
         "sign_stages": plan.patch.sign_stages,
         "sign_stages_lower_bound": plan.patch.sign_stages_lower_bound,
+        "worst_inputs": worst_inputs(plan),
         "coefficients": _coefficients(sizing),
         "parts": _parts(plan.circuit) if plan.circuit else [],
         "knobs": [_knob(law) for law in plan.circuit.knobs] if plan.circuit else [],
@@ -75,7 +77,7 @@ def refusal_data(problem: Problem, reason: str, files: Sequence[str] = ()) -> di
         "time_scale_window": [None, None],
         "time_scale_limits": ["", ""],
         "check": _check(verdict),
-        **{table: [] for table in ("signals", "stages", "coefficients", "parts", "knobs")},
+        **{table: [] for table in ("signals", "stages", "worst_inputs", "coefficients", "parts", "knobs")},
         "counts": {},
         "sign_stages": 0,
         "sign_stages_lower_bound": 0,

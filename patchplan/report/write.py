@@ -11,13 +11,13 @@ from numpy.typing import NDArray
 
 from patchplan.equation.problem import Problem
 from patchplan.report.board import board_of
-from patchplan.report.folder import MANIFEST, replace_folder
+from patchplan.report.folder import MANIFEST, replace_folder, unused_name
 from patchplan.report.page import page
 from patchplan.report.pictures import pictures as draw
-from patchplan.report.pictures import unused_name
 from patchplan.report.plan_json import plan_data, plan_text, refusal_data
 from patchplan.report.records import Plan
 from patchplan.report.tables import csv_text, nodes_csv, parts_csv
+from patchplan.report.worst import worst_files
 
 Array = NDArray[np.float64]
 #: Gives the volts of every net at the start of the run, and the netlist that starts there.
@@ -74,6 +74,7 @@ def plan_folder(plan: Plan, *, pictures: bool = True, board: Board = board_of) -
         "circuit.cir": netlist,
         "waveforms.csv": waveforms_csv(plan),
         **dict(sources.values()),
+        **worst_files(plan),
         **drawn,
     }
     names = [MANIFEST, "report.html", "nodes.csv", *texts]

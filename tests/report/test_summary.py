@@ -10,7 +10,8 @@ import pytest
 
 from patchplan.check.records import Cause, NodePeak
 from patchplan.report import words
-from patchplan.report.pictures import MOST_POINTS, thinned, unused_name
+from patchplan.report.folder import unused_name
+from patchplan.report.pictures import MOST_POINTS, thinned
 from patchplan.report.summary import WIDTH, summary
 from tests.report.test_plan_json import unbuildable
 
