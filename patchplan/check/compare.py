@@ -79,19 +79,16 @@ def check_circuit(
     times = reference.times * circuit.time_scale
     traces = simulate(circuit, times=times, waveforms=reference.waveforms)
     horizon = horizon_of(system, sensitivity, patch, sizing)
-    rows = len(traces.times)
-    if horizon is not None:
-        rows = min(rows, max(int(np.searchsorted(reference.times, horizon, side="right")), 1))
+    rows = _rows_compared(reference, traces, horizon)
     spreads = spread_of(sensitivity, patch, sizing, target)
     within = sensitivity.times <= (np.inf if horizon is None else horizon)
     total = np.sqrt(sum((s**2 for s in spreads.values()), np.zeros(1)))[:, within].max(axis=1)
     spread = dict(zip(sensitivity.watched, (100.0 * total).tolist(), strict=True))
+    more = other_runs(circuit, others)
     signals = tuple(
-        _signal_error(name, _compare(circuit, reference, traces, name, rows), spread.get(name, 0.0))
+        _signal_error(circuit, name, _compare(circuit, reference, traces, name, rows), spread.get(name, 0.0), more)
         for name in circuit.watched
     )
-    more = other_runs(circuit, others)
-    signals = tuple(_with_runs(signal, circuit, more) for signal in signals)
     nodes = peaks_over(circuit, node_peaks(circuit, traces), more)
     failed = next((t.failure for t in (traces, *(t for _, t in more)) if t.failure), "")
     largest = max((s.max_error_percent for s in signals), default=0.0)
@@ -110,19 +107,6 @@ def check_circuit(
         volts={net: traces.of(net) for net in circuit.nodes},
         warnings=_warnings(traces, failed, nodes, horizon, spreads, within, accept, _jumps(circuit, reference)),
     )
-
-
-def _with_runs(signal: SignalError, circuit: Circuit, runs: list[tuple[WorstCase, Traces]]) -> SignalError:
-    """The larger of each error over the run that all share and the signal's own worst case."""
-    for case, traces in runs:
-        if case.signal == signal.name:
-            own = _compare(circuit, case.reference, traces, signal.name, len(traces.times))
-            signal = SignalError(
-                signal.name, max(signal.max_error_percent, own.largest), max(signal.rms_error_percent, own.rms),
-                signal.spread_percent, max(signal.stretched_error_percent, own.stretched),
-                max(signal.frequency_error_percent, own.frequency, key=abs),
-            )  # fmt: skip
-    return signal
 
 
 def _word(nodes: tuple[NodePeak, ...], failed: str, largest: float, accept: float) -> str:
@@ -159,8 +143,19 @@ def _wait(circuit: Circuit) -> float:
     return (_SETTLING / amp.gain_bandwidth + (amp.high - amp.low) / amp.slew) / circuit.time_scale
 
 
-def _signal_error(name: str, error: Difference, spread: float) -> SignalError:
-    return SignalError(name, error.largest, error.rms, spread, error.stretched, error.frequency)
+def _rows_compared(reference: Reference, traces: Traces, horizon: float | None) -> int:
+    end = np.inf if horizon is None else horizon
+    return min(len(traces.times), max(int(np.searchsorted(reference.times, end, side="right")), 1))
+
+
+def _signal_error(
+    circuit: Circuit, name: str, first: Difference, spread: float, runs: list[tuple[WorstCase, Traces]]
+) -> SignalError:
+    """The larger of each error over the run of the Reference and the signal's own worst case."""
+    own = [_compare(circuit, c.reference, t, name, len(t.times)) for c, t in runs if c.signal == name]
+    errors = [first, *own]
+    largest, rms, stretched = (max(getattr(e, part) for e in errors) for part in ("largest", "rms", "stretched"))
+    return SignalError(name, largest, rms, spread, stretched, max((e.frequency for e in errors), key=abs))
 
 
 def _curves(circuit: Circuit, reference: Reference, traces: Traces) -> tuple[Curve, ...]:

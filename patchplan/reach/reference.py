@@ -27,6 +27,8 @@ Array = NDArray[np.float64]
 
 #: A signal beyond this many units is no signal any more.
 _BEYOND = 1e60
+#: A signal that stays within a stated range after this part of the run is outside it only at first.
+_FIRST_MOMENTS = 0.1
 _EXACT = "exact solution of linear equations with known inputs"
 _GAIN = "half the width of each input's bounds times the peak gain over the run, around the response to their middle"
 _ESTIMATED = "the error of the impulse responses is estimated, not bounded"
@@ -192,10 +194,21 @@ def _with_stated(reach: Reach, stated: Mapping[str, tuple[Fraction, Fraction]]) 
             continue
         found = ranges[name]
         ranges[name] = Range(name, float(low), float(high), "stated", 0.0, "stated in the problem file")
-        slack = 1e-9 * float(high - low)
+        slack = Fraction(float(high - low) * 1e-9)
         if found.low < low - slack or found.high > high + slack:
             warnings.append(
                 f"{name} is stated to stay within {float(low):.6g} to {float(high):.6g}, "
                 f"but reaches {found.low:.6g} to {found.high:.6g} ({found.known_by})."
+                f"{_at_first(reach, name, float(low - slack), float(high + slack))}"
             )
     return replace(reach, ranges=ranges, warnings=tuple(warnings))
+
+
+def _at_first(reach: Reach, name: str, low: float, high: float) -> str:
+    """A sentence where the nominal run leaves a stated range at its beginning only."""
+    run = reach.runs[0]
+    values = run.values[reach.reference.names.index(name)]
+    outside = run.times[(values < low) | (values > high)]
+    if not outside.size or outside[-1] > _FIRST_MOMENTS * run.times[-1]:
+        return ""
+    return f" It is outside only at first, from t = {outside[0]:.4g} to {outside[-1]:.4g}."
