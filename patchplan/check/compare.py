@@ -76,8 +76,7 @@ def check_circuit(
         Further runs under inputs known only by their bounds: they count in the peaks of all nodes, each in the error
         of its own signal.
     """
-    times = reference.times * circuit.time_scale
-    traces = simulate(circuit, times=times, waveforms=reference.waveforms)
+    traces = simulate(circuit, times=reference.times * circuit.time_scale, waveforms=reference.waveforms)
     horizon = horizon_of(system, sensitivity, patch, sizing)
     rows = _rows_compared(reference, traces, horizon)
     spreads = spread_of(sensitivity, patch, sizing, target)
@@ -98,15 +97,13 @@ def check_circuit(
         max_error_percent=largest,
         rms_error_percent=max((s.rms_error_percent for s in signals), default=0.0),
         spread_percent=max(spread.values(), default=0.0),
-        horizon=horizon,
-        signals=signals,
-        nodes=nodes,
+        horizon=horizon, signals=signals, nodes=nodes,
         budget=causes,
         curves=_curves(circuit, reference, traces),
         times=traces.times,
         volts={net: traces.of(net) for net in circuit.nodes},
         warnings=_warnings(traces, failed, nodes, horizon, spreads, within, accept, _jumps(circuit, reference)),
-    )
+    )  # fmt: skip
 
 
 def _word(nodes: tuple[NodePeak, ...], failed: str, largest: float, accept: float) -> str:
