@@ -81,8 +81,7 @@ def check_circuit(
     rows = _rows_compared(reference, traces, horizon)
     spreads = spread_of(sensitivity, patch, sizing, target)
     within = sensitivity.times <= (np.inf if horizon is None else horizon)
-    total = np.sqrt(sum((s**2 for s in spreads.values()), np.zeros(1)))[:, within].max(axis=1)
-    spread = dict(zip(sensitivity.watched, (100.0 * total).tolist(), strict=True))
+    spread = dict(zip(sensitivity.watched, (100.0 * _total(spreads, within).max(axis=1)).tolist(), strict=True))
     more = other_runs(circuit, others)
     signals = tuple(
         _signal_error(circuit, name, _compare(circuit, reference, traces, name, rows), spread.get(name, 0.0), more)
@@ -138,6 +137,11 @@ def _wait(circuit: Circuit) -> float:
     """Time that outputs are given to follow a jump [problem time]."""
     amp = circuit.op_amp
     return (_SETTLING / amp.gain_bandwidth + (amp.high - amp.low) / amp.slew) / circuit.time_scale
+
+
+def _total(spreads: Mapping[str, Array], within: NDArray[np.bool_]) -> Array:
+    total: Array = np.sqrt(sum((s**2 for s in spreads.values()), np.zeros(1)))[:, within]
+    return total
 
 
 def _rows_compared(reference: Reference, traces: Traces, horizon: float | None) -> int:
@@ -244,7 +248,7 @@ def _warnings(
             "beyond it only ranges and distributions mean anything."
         )
     found += jumps
-    total = np.sqrt(sum((s**2 for s in spreads.values()), np.zeros(1)))[:, within]
+    total = _total(spreads, within)
     signal, time = np.unravel_index(int(np.argmax(total)), total.shape)
     if 100.0 * total[signal, time] > accept:
         cause = max(spreads, key=lambda c: float(spreads[c][:, within][signal, time]))
