@@ -27,7 +27,7 @@ from patchplan.reach.records import Reach
 from patchplan.reach.reference import find_reach
 from patchplan.report.records import Plan
 from patchplan.sensitivity import Sensitivity, find_sensitivity
-from patchplan.shortlist import Forms, consider, extent, shortlist, told
+from patchplan.shortlist import Forms, as_written, consider, extent, shortlist, told
 from patchplan.sizing.records import Sizing, Target
 from patchplan.sizing.size import size
 
@@ -89,6 +89,9 @@ def plan(
     try:
         considered = consider(problem, system)
         runs = [attempt(Choices(think=think, blocks=forms)) for forms in shortlist(considered)]
+        plain_forms = as_written(considered)
+        if plain_forms not in [run.choices["blocks"] for run in runs] and all(_merit(run)[0] for run in runs):
+            runs.append(attempt(Choices(think=think, blocks=plain_forms)))
         found = min(runs, key=lambda run: _merit(run, extent(run.patch)))
         if set(found.form.offsets) - set(found.form.scales):
             plain = attempt(replace(Choices(**found.choices), offsets=False))

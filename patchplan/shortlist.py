@@ -111,6 +111,11 @@ def shortlist(considered: Iterable[Considered]) -> tuple[Forms, ...]:
     return tuple(tuple(run.items()) for run in runs)
 
 
+def as_written(considered: Iterable[Considered]) -> Forms:
+    """All blocks that were weighed in the form that their equations state."""
+    return tuple((row.block, AS_WRITTEN) for row in considered if row.form == AS_WRITTEN and not row.reason)
+
+
 def _cost(row: Considered) -> float:
     return (row.tolerance_percent or 0.0) * (row.stages + row.wires)
 
@@ -122,7 +127,7 @@ def told(considered: Iterable[Considered], runs: Iterable[Plan], found: Plan) ->
     rows = []
     for row in considered:
         error, spread = known.get((row.block, row.form), (None, None))
-        chosen = forms.get(row.block) == row.form
+        chosen = forms.get(row.block, AS_WRITTEN) == row.form
         rows.append(replace(row, chosen=chosen, error_percent=error, spread_percent=spread))
     return tuple(rows)
 

@@ -19,11 +19,13 @@ from patchplan.form.rewrite import with_forms
 from patchplan.patch.build import build_patch
 from patchplan.patch.read_back import read_back
 from patchplan.patch.records import Patch
-from patchplan.pipeline import Choices, plan_with
+from patchplan.pipeline import Choices, plan, plan_with
 from patchplan.ranges import find_ranges
 from patchplan.reach.reference import find_reach
-from patchplan.report.records import Considered
+from patchplan.report.board import board_of
+from patchplan.report.records import Considered, Plan
 from patchplan.shortlist import consider, shortlist
+from tests.circuit.spice import run_ngspice
 from tests.equation.simulated import problem as read
 
 Array = NDArray[np.float64]
@@ -171,6 +173,44 @@ def test_the_cheapest_form_of_each_block_and_the_closest_rival_are_run() -> None
     assert shortlist(rows[:2]) == ((("a", "cascade"),),)
 
 
+def test_an_elliptic_cascade_is_planned_and_runs_in_a_simulator_from_outside() -> None:
+    """Notches ask for a sum between sections; ngspice runs the netlist."""
+    numerator, denominator = signal.ellip(4, 0.5, 40, 1, analog=True)
+    texts = [
+        " + ".join(f"({c})*s^{len(p) - 1 - k}" for k, c in enumerate(p.tolist())) for p in (numerator, denominator)
+    ]
+    problem = read([f"y = ({texts[0]})/({texts[1]})*u"], inputs='u = "sin(0.8*t)"', duration="20")
+    found = plan_with(problem, Choices(think="low", blocks=(("y", "cascade"),)))
+    assert found.verdict.verdict == "follows"
+    assert "y.s1" in found.reach.reference.names
+    assert found.circuit is not None
+    volts, seconds = run_ngspice(board_of(found)[1], seconds=60)
+    node = found.circuit.nodes[found.circuit.watched["y"]]
+    y = volts[node.node] / (node.sign * node.volts_per_unit)
+    times = seconds / found.circuit.time_scale
+    wanted = signal.lsim((numerator, denominator), np.sin(0.8 * times), times)[1]
+    assert np.abs(y - wanted).max() <= np.abs(wanted).max() * (found.verdict.max_error_percent + 0.5) / 100
+
+
+def test_where_no_other_form_follows_the_one_of_the_file_is_tried_too(monkeypatch: pytest.MonkeyPatch) -> None:
+    problem = chain_problem(duration=6)
+    asked: list[object] = []
+
+    def run(problem: Problem, choices: Choices, **rest: object) -> Plan:
+        asked.append(dict(choices.blocks))
+        made = plan_with(problem, replace(choices, think="low"), accept=5.0, system=system_of(problem))
+        word = "follows" if dict(choices.blocks)["y"] == "companion" else "overload"
+        return replace(made, verdict=replace(made.verdict, verdict=word), choices={**made.choices, "think": "high"})
+
+    monkeypatch.setattr("patchplan.pipeline.plan_with", run)
+    monkeypatch.setattr("patchplan.pipeline.consider", lambda *_: RIVALS)
+    found = plan(problem)
+    assert asked == [{"y": "cascade"}, {"y": "companion"}]
+    assert [row.form for row in found.considered if row.chosen] == ["companion"]
+    assert all(row.error_percent is not None for row in found.considered)
+
+
+RIVALS = (Considered("y", 6, "companion", 7, 13, 8.0), Considered("y", 6, "cascade", 9, 15, 3.0))
 SPRING = """title = "Hardening spring behind a lag"
 equations = ["y''' = -2*y'' - 3*y' - 1.5*y - 0.5*y^3 + u"]
 duration = 12

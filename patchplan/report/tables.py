@@ -88,7 +88,7 @@ def form_table(plan: Plan) -> Table:
 
     rows = tuple(
         (row.block, row.form, str(row.stages or ""), str(row.wires or ""), shown(row.tolerance_percent),
-         shown(row.error_percent), shown(row.spread_percent), "chosen" if row.chosen else row.reason)
+         shown(row.error_percent), shown(row.spread_percent), row.reason or ("chosen" if row.chosen else ""))
         for row in plan.considered
     )  # fmt: skip
     headers = ("block", "form", "stages", "wires", "tolerances", "error", "spread", "")

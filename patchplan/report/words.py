@@ -136,7 +136,7 @@ def made_of(plan: Plan) -> str:
 def forms(plan: Plan) -> tuple[str, ...]:
     """A sentence on each linear block whose form was chosen among several."""
     sentences = []
-    for row in (r for r in plan.considered if r.chosen):
+    for row in (r for r in plan.considered if r.chosen and not r.reason):
         rivals = [r for r in plan.considered if r.block == row.block and r.tolerance_percent is not None]
         written = next(r for r in plan.considered if r.block == row.block)
         spread, other = percent(row.tolerance_percent or 0.0), percent(written.tolerance_percent or 0.0)

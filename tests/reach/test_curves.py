@@ -55,5 +55,5 @@ def test_refined_grid_meets_its_aim():
 def test_a_curve_too_small_for_squares_turns_nowhere():
     """Squares of 1e-200 vanish; the turning point once came out as 0/0."""
     times = np.array([0.0, 1.0])
-    low, high = extremes(times, np.array([[0.0, 0.0]]), np.array([[1e-200, -1e-200]]))
+    low, high = extremes(times, np.array([[0.0, 0.0]]), np.array([[1e-200, -2e-200]]))
     assert np.abs([low, high]).max() <= 1e-199
