@@ -130,8 +130,9 @@ def _bounded(patch: Patch, form: Form, reach: Reach) -> dict[str, NodeRange]:
     """Each node of a linear patch by its own peak gain, at every setting that Reach looked at."""
     lows, highs, rates, proved = [], [], [], True
     for case in reach.bounded:
-        sums, slopes = node_sums(patch, form, case.names, case.middle.knobs)
-        ends, moving = ends_of(case, sums), ends_of(case, slopes)
+        sums = node_sums(patch, form, case.names, case.rows, case.middle.knobs)
+        by_state = sums[:, 1 : 1 + case.slopes.shape[0]]
+        ends, moving = ends_of(case, sums), ends_of(case, by_state @ case.slopes)
         lows.append(ends.low)
         highs.append(ends.high)
         rates.append(np.maximum(-moving.low, moving.high) + _steepest_inputs(case, sums))
@@ -152,7 +153,7 @@ def _bounded(patch: Patch, form: Form, reach: Reach) -> dict[str, NodeRange]:
 def _steepest_inputs(case: Bounded, sums: Any) -> Array:
     """Largest slope that the sources alone give each node, shape ``(n_nodes,)``; inf where one may jump."""
     first = len(case.responses[0].missed)
-    run, count = case.middle, len(case.names)
+    run, count = case.middle, case.slopes.shape[1] - 1
     steepest = np.abs(run.rates[first:count]).max(axis=1)
     jumps = np.flatnonzero(np.diff(run.times) == 0)
     moves = np.abs(np.diff(run.values[first:count], axis=1)[:, jumps]).max(axis=1, initial=0.0)

@@ -21,29 +21,30 @@ def wire_gains(stage: Stage, patch: Patch, knobs: Mapping[str, float]) -> list[f
     return [knob * float(w.coefficient) for w in counted]
 
 
-def node_sums(patch: Patch, form: Form, names: Sequence[str], knobs: Mapping[str, float]) -> tuple[Any, Any]:
-    """Every node of a linear patch, and its slope, as a sum of 1, the problem's states and its sources.
+def node_sums(patch: Patch, form: Form, names: Sequence[str], rows: Any, knobs: Mapping[str, float]) -> Any:
+    """Every node of a linear patch as a sum of 1, the problem's states and its sources, in the Form's variables.
 
     Parameters
     ----------
-    names
-        The problem's states, then its sources, in the order of the columns.
+    names, rows
+        Signals of the problem, and each as such a sum: sparse, shape ``(n_names, n_columns)``.
     knobs
         Values of the knobs.
 
     Returns
     -------
-    nodes, slopes
-        Sparse, shape ``(n_stages, 1 + n_names)``, in the Form's variables; slopes without what the sources' own slopes
-        add.
+    sparse array
+        Shape ``(n_stages, n_columns)``.
     """
-    place = {name: i + 1 for i, name in enumerate(names)}
-    own = {s.signal: len(names) + 1 + i for i, s in enumerate(patch.stages) if s.signal in form.sums}
-    place |= own
+    place = {name: i for i, name in enumerate(names)}
+    known = rows.tocsr()
     found: dict[str, Row] = {}
     for stage in patch.stages:
         if stage.kind in ("integrator", "source"):
-            found[stage.node] = {place[stage.signal]: 1.0, 0: -float(form.offsets.get(stage.signal, 0))}
+            part = slice(*known.indptr[place[stage.signal] :][:2])
+            row = dict(zip(known.indices[part].tolist(), known.data[part].tolist(), strict=True))
+            row[0] = row.get(0, 0.0) - float(form.offsets.get(stage.signal, 0))
+            found[stage.node] = row
     for stage in patch.stages:
         if stage.kind == "reference":
             found[stage.node] = {0: 1.0}
@@ -51,17 +52,7 @@ def node_sums(patch: Patch, form: Form, names: Sequence[str], knobs: Mapping[str
             found[stage.node] = found[stage.wires[0].source]
         elif stage.kind == "summer":
             found[stage.node] = _summed(stage, patch, knobs, found)
-    width = 1 + len(names) + len(patch.stages)
-    rates: list[Row] = [{} for _ in range(width)]
-    for stage in patch.stages:
-        if stage.kind == "integrator":
-            rates[place[stage.signal]] = _summed(stage, patch, knobs, found)
-    # States of the board's own stand in columns behind the problem's, and are put in at the end.
-    told: list[Row] = [{i: 1.0} if i <= len(names) else {} for i in range(width)]
-    for name, column in own.items():
-        told[column] = {place[old]: float(weight) for old, weight in form.sums[name].items()}
-    nodes, known = _sparse([found[s.node] for s in patch.stages], width), _sparse(told, 1 + len(names))
-    return nodes @ known, nodes @ _sparse(rates, width) @ known
+    return _sparse([found[s.node] for s in patch.stages], rows.shape[1])
 
 
 def _summed(stage: Stage, patch: Patch, knobs: Mapping[str, float], found: Mapping[str, Row]) -> Row:

@@ -63,15 +63,18 @@ def bounded_of(system: System, field: Bound, knobs: Mapping[str, float]) -> Boun
     GrowsWithoutBoundError
         With the time.
     """
-    matrix, by_source, _ = linear_parts(field)
+    from scipy.sparse import csr_array, hstack
+
+    matrix, by_source, constant = linear_parts(field)
     names = [s.name for s in system.sources]
     responses = []
     for name, middle, half in free_sources(system):
         place = names.index(name)
         column = by_source[:, [place]].toarray()[:, 0]
         responses.append(_response(matrix, column, float(system.duration), name, place, middle, half))
-    given = field.field.names[: field.field.n_states + field.field.n_sources]
-    return Bounded(given, Run(knobs, *solve_nominal(system, field, Inputs(system))), tuple(responses))
+    slopes = hstack((csr_array(constant[:, None]), matrix, by_source)).tocsr()
+    run = Run(knobs, *solve_nominal(system, field, Inputs(system)))
+    return Bounded(field.field.names, name_rows(field), slopes, run, tuple(responses))
 
 
 def _response(

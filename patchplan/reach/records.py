@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -114,12 +115,18 @@ class Bounded:
     Attributes
     ----------
     names
-        States, then sources.
+        Of the Reference.
+    rows
+        Every name as a sum of 1, the states and the sources: sparse, shape ``(n_names, 1 + n_states + n_sources)``.
+    slopes
+        Rates of the states in the same terms, shape ``(n_states, 1 + n_states + n_sources)``.
     middle
         The run with every such input at the middle of its bounds.
     """
 
     names: tuple[str, ...]
+    rows: Any
+    slopes: Any
     middle: Run
     responses: tuple[Response, ...]
 

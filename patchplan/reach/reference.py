@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 
 from patchplan.equation.problem import Build
 from patchplan.equation.system import System
-from patchplan.reach.bounds import bounded_of, ends_of, free_sources, name_rows
+from patchplan.reach.bounds import bounded_of, ends_of, free_sources
 from patchplan.reach.curves import extremes
 from patchplan.reach.field import Field, field_of
 from patchplan.reach.free import search_waveforms
@@ -113,9 +113,8 @@ def _linear_worst(system: System, numeric: Field) -> Reach:
     bound = numeric.bind(numeric.weights(knobs))
     bounded = [bounded_of(system, bound, knobs)]
     _check_size(bounded[0].middle.times, bounded[0].middle.values)
-    rows = name_rows(bound)
-    found = ends_of(bounded[0], rows)
-    cases = worst_cases(system, bound, bounded[0], rows, found)
+    found = ends_of(bounded[0], bounded[0].rows)
+    cases = worst_cases(system, bound, bounded[0], found)
     known = "proved" if found.proved else "simulated"
     ends = _Ends(found.low, found.high, known, _GAIN if found.proved else f"{_GAIN}; {_ESTIMATED}")
     if system.adjustable:
@@ -166,7 +165,7 @@ def _linear_box(system: System, numeric: Field, ends: _Ends) -> tuple[_Ends, lis
         here = {name: float(v[i]) for name, v in knobs.items()}
         bound = numeric.bind(numeric.weights(here))
         found.append(bounded_of(system, bound, here))
-        tops = ends_of(found[-1], name_rows(bound))
+        tops = ends_of(found[-1], found[-1].rows)
         low, high = np.minimum(low, tops.low), np.maximum(high, tops.high)
     return _Ends(low, high, "simulated", f"{_BOX}; at each, {_GAIN}"), found
 

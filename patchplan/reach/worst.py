@@ -71,16 +71,15 @@ def _signs(response: Response, weights: Array, time: float) -> tuple[Array, floa
     return (low + high) / 2, float(signs[0])
 
 
-def worst_cases(system: System, field: Bound, bounded: Bounded, rows: Any, ends: Ends) -> tuple[WorstCase, ...]:
+def worst_cases(system: System, field: Bound, bounded: Bounded, ends: Ends) -> tuple[WorstCase, ...]:
     """The worst case of each watched signal that a free input moves, for the side on which it goes further.
 
     Parameters
     ----------
-    rows
-        Every name as a sum of 1, states and sources, see :func:`patchplan.reach.bounds.name_rows`.
     ends
-        Of these rows.
+        Of every name.
     """
+    rows = bounded.rows
     names = field.field.names
     free = {name for name, _, _ in free_sources(system)}
     targets = [names.index(name) for name, _ in system.watch if name not in free]
