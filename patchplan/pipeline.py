@@ -12,6 +12,8 @@ from patchplan.circuit.build import build_circuit
 from patchplan.circuit.catalogue import load_catalogue
 from patchplan.circuit.switched import with_references
 from patchplan.circuit.target import check_multiplier, target_of
+from patchplan.compare.records import SpeedCurve
+from patchplan.compare.speed_curve import speed_curve
 from patchplan.equation.explicit import build_system, system_of
 from patchplan.equation.faults import rendered
 from patchplan.equation.problem import Build, Problem
@@ -100,7 +102,15 @@ def plan(
             found = min(found, attempt(replace(Choices(**found.choices), think="high")), key=_merit)
     except ProblemFaults as error:
         raise rendered(error, problem) from None
-    return replace(found, considered=told(considered, [*runs, found], found))
+    return replace(found, considered=told(considered, [*runs, found], found), speed_curve=_curve(found, accept))
+
+
+def _curve(found: Plan, accept: float) -> SpeedCurve:
+    """Error and spread against speed of the plan that was taken."""
+    return speed_curve(
+        found.form, found.patch, found.ranges, found.sensitivity, found.target, found.sizing,
+        run=found.problem.build.run, accept=accept,
+    )  # fmt: skip
 
 
 def plan_with(

@@ -3,13 +3,16 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping
+from collections.abc import Callable, Iterable, Iterator, Mapping
+from typing import TypeVar
 
 from patchplan.circuit.catalogue import Catalogue, PartData
 from patchplan.equation.problem import Build, Stock
 from patchplan.errors import CannotBuild
 from patchplan.sizing.records import MultiplierFigures, OpAmpFigures, Pile, Target
 from patchplan.sizing.series import values_between
+
+Figures = TypeVar("Figures", OpAmpFigures, MultiplierFigures)
 
 #: Limits are ends that count, through rounding too.
 _SLACK = 1e-12
@@ -53,7 +56,21 @@ def target_of(build: Build, catalogue: Catalogue) -> Target:
         switch_leakage=switch.si("leakage") if switch else 0.0,
         resistor_piles=resistors,
         capacitor_piles=capacitors,
+        other_op_amps=tuple(_others(build, catalogue.op_amps.values(), op_amp.name, _op_amp)),
+        other_multipliers=tuple(_others(build, catalogue.multipliers.values(), build.multiplier, _multiplier)),
     )
+
+
+def _others(
+    build: Build, parts: Iterable[PartData], taken: str, make: Callable[[Build, PartData], Figures]
+) -> Iterator[Figures]:
+    """Figures of the other parts of a kind that take the supply and have room for the reference."""
+    low, high = build.supply
+    for part in parts:
+        fits = part.si("supply_min") <= high - low <= part.si("supply_max")
+        room = min(high - part.si("swing_high"), -(low + part.si("swing_low")))
+        if part.name != taken and fits and room >= build.reference:
+            yield make(build, part)
 
 
 def switch_for(build: Build, catalogue: Catalogue) -> PartData:

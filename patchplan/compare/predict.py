@@ -32,8 +32,9 @@ def predicted_error(
     rows = _rows(system, patch, sensitivity, sizing)
     causes = {
         "rounding": _rounding(patch, sensitivity, sizing),
-        "bandwidth": _lag(patch, ranges, sensitivity, sizing, target, products=False),
-        "multiplier bandwidth": _lag(patch, ranges, sensitivity, sizing, target, products=True),
+        "bandwidth": _lag(patch, ranges, sensitivity, sizing, target, "op amps"),
+        "multiplier bandwidth": _lag(patch, ranges, sensitivity, sizing, target, "multipliers"),
+        "slew": _lag(patch, ranges, sensitivity, sizing, target, "slew"),
         "finite gain": _finite_gain(patch, sensitivity, sizing, target),
         "bias current": _bias(patch, sensitivity, sizing, target),
         "DC-limit resistor": _dc_limit(patch, sensitivity, sizing),
@@ -85,10 +86,8 @@ def _rounding(patch: Patch, sensitivity: Sensitivity, sizing: Sizing) -> Array:
     return total
 
 
-def _lag(
-    patch: Patch, ranges: Ranges, sensitivity: Sensitivity, sizing: Sizing, target: Target, *, products: bool
-) -> Array:
-    """What lateness by finite bandwidth does, of the multipliers or of all else; near the slew rate it grows.
+def _lag(patch: Patch, ranges: Ranges, sensitivity: Sensitivity, sizing: Sizing, target: Target, cause: str) -> Array:
+    """What lateness does: by the bandwidth of the op amps, of the multipliers, or what slew adds to both.
 
     The model's op amp slews as tanh: at a share u of its slew rate it is late by atanh(u)/u times as much.
     """
@@ -96,17 +95,15 @@ def _lag(
     late = np.zeros(len(sensitivity.stages))
     for i, name in enumerate(sensitivity.stages):
         stage = stages[name]
-        if (stage.kind == "multiplier") is not products:
-            continue
-        if products:
-            late[i] = 1.0 / target.multiplier.bandwidth
-            slew = target.multiplier.slew
+        multiplies = stage.kind == "multiplier"
+        part = target.multiplier if multiplies else target.op_amp
+        if cause == "slew":
+            share = slew_share(stage, ranges, sizing, part.slew)
+            factor = np.arctanh(share) / share - 1.0 if share > 0.0 else 0.0
         else:
-            gain = 1.0 if stage.kind == "integrator" else _noise_gain(stage, sizing)
-            late[i] = gain / target.op_amp.gain_bandwidth
-            slew = target.op_amp.slew
-        share = slew_share(stage, ranges, sizing, slew)
-        late[i] *= np.arctanh(share) / share if share > 0.0 else 1.0
+            factor = float(multiplies == (cause == "multipliers"))
+        gain = 1.0 if multiplies or stage.kind == "integrator" else _noise_gain(stage, sizing)
+        late[i] = factor * gain / (target.multiplier.bandwidth if multiplies else target.op_amp.gain_bandwidth)
     result: Array = np.einsum("wst,s->wt", sensitivity.lag, late / sizing.time_scale)
     return result
 

@@ -109,3 +109,36 @@ class Comparison:
     title: str
     options: tuple[Option, ...]
     time_unit: str = "s"
+
+
+@dataclass(frozen=True)
+class SpeedCurve:
+    """Predicted error and spread against speed [% of peak] of boards whose values are exact at every speed.
+
+    The values of the plan add their rounding, and may make up for a part of the error.
+
+    Attributes
+    ----------
+    time_scales
+        Rising; the plan's own is one of them.
+    error, spread
+        Largest over watched signals and time: the nominal board's error; the standard deviation between boards.
+    parts, spreads
+        The same by cause, each alone.
+    chosen, real_time
+        (error, spread) at the plan's time scale, and in real time.
+    judgement
+        Real time is ``possible``, ``with other parts`` or ``impossible``.
+    reason
+        A sentence on it.
+    """
+
+    time_scales: tuple[float, ...]
+    error: tuple[float, ...]
+    spread: tuple[float, ...]
+    parts: Mapping[str, tuple[float, ...]]
+    spreads: Mapping[str, tuple[float, ...]]
+    chosen: tuple[float, float]
+    real_time: tuple[float, float]
+    judgement: str
+    reason: str

@@ -8,6 +8,7 @@ from typing import Any
 
 from patchplan.check.records import Verdict
 from patchplan.circuit.records import Circuit
+from patchplan.compare.records import SpeedCurve
 from patchplan.equation.problem import Problem
 from patchplan.equation.system import System
 from patchplan.form.records import Form
@@ -54,7 +55,8 @@ class Plan:
     """Everything found on the way from the problem to the verdict.
 
     ``circuit`` is None where the plan is not buildable; ``verdict`` then says so. ``choices`` names the free decisions
-    taken, for the record; ``considered`` the forms of linear blocks that were weighed.
+    taken, for the record; ``considered`` the forms of linear blocks that were weighed; ``speed_curve`` is made for the
+    plan that is taken in the end only.
     """
 
     problem: Problem
@@ -71,3 +73,4 @@ class Plan:
     choices: Mapping[str, Any] = field(default_factory=dict)
     warnings: tuple[str, ...] = ()
     considered: tuple[Considered, ...] = ()
+    speed_curve: SpeedCurve | None = None

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from math import prod
 
 import numpy as np
@@ -10,10 +10,10 @@ from numpy.typing import NDArray
 
 from patchplan.equation.system import System, Term
 from patchplan.form.records import Form
-from patchplan.patch.records import Patch
+from patchplan.patch.records import Patch, Stage
 from patchplan.ranges import Ranges
 from patchplan.sensitivity import Sensitivity
-from patchplan.sizing.records import StageSizing, Target
+from patchplan.sizing.records import NodeScale, StageSizing, Target
 
 Array = NDArray[np.float64]
 #: A mode slower than this many times the run, inverted, integrates what is pushed into it all through the run.
@@ -99,6 +99,29 @@ def limit_resistor(sizing: StageSizing, target: Target, limit: float) -> float:
     settled = (1.0 + values * conductance) * target.op_amp.offset + values * target.op_amp.bias
     fits = values[settled <= limit / 20]
     return float(fits[-1]) if fits.size else float(values[0])
+
+
+def dc_limited(
+    stage: Stage,
+    sized: StageSizing,
+    scale: NodeScale,
+    sensitivity: Sensitivity,
+    target: Target,
+    time_scale: float,
+    allowed: float,
+) -> StageSizing:
+    """The stage with a DC-limit resistor where its drift exceeds what is allowed and the resistor does less harm."""
+    rate = offset_rate(sized, target)
+    share, _ = drift_share(stage.name, rate, sensitivity, scale.volts_per_unit, time_scale)
+    resistor = limit_resistor(sized, target, scale.limit_volts)
+    leak = np.abs(sensitivity.leak[stage.name]).max(initial=0.0) * time_scale / (resistor * sized.capacitor)
+    return replace(sized, feedback=resistor) if allowed < share and leak < share else sized
+
+
+def limited_stages(form: Form, patch: Patch, ranges: Ranges) -> tuple[str, ...]:
+    """Integrators that get a DC-limit resistor: those that carry a mode near zero in a run without reset."""
+    states = {m.state for m in slow_modes(form, ranges, patch)}
+    return tuple(s.name for s in patch.stages if s.kind == "integrator" and s.signal in states)
 
 
 def content_below(values: Array, times: Array, corner: float) -> float:

@@ -130,6 +130,14 @@ class Leg:
         return last + first * shunt / (first + shunt)
 
     @property
+    def load(self) -> float:
+        """Resistance that the leg is to its source, the summing node at ground [ohm]."""
+        if len(self.resistors) == 1:
+            return self.resistors[0]
+        first, shunt, last = self.resistors
+        return first + shunt * last / (shunt + last)
+
+    @property
     def shares(self) -> tuple[float, ...]:
         """Relative change of the transfer per relative change of each resistor, sizes alone."""
         if len(self.resistors) == 1:
@@ -225,39 +233,6 @@ class SpeedLimit:
 
 
 @dataclass(frozen=True)
-class SpeedCurve:
-    """Predicted error and spread against speed, fractions of peak, of boards whose values are exact at every speed.
-
-    Values that the search chooses add their rounding, and may make up for a part of the error.
-
-    Attributes
-    ----------
-    time_scales
-        Rising.
-    error, spread
-        Largest over watched signals and time: the nominal board's error; the standard deviation between boards.
-    parts, spreads
-        The same by cause, each alone.
-    chosen, real_time
-        (error, spread) at the plan's time scale, and in real time.
-    judgement
-        Real time is ``possible``, ``with other parts`` or ``impossible``.
-    reason
-        A sentence on it.
-    """
-
-    time_scales: tuple[float, ...]
-    error: tuple[float, ...]
-    spread: tuple[float, ...]
-    parts: Mapping[str, tuple[float, ...]]
-    spreads: Mapping[str, tuple[float, ...]]
-    chosen: tuple[float, float]
-    real_time: tuple[float, float]
-    judgement: str
-    reason: str
-
-
-@dataclass(frozen=True)
 class Sizing:
     """Scale factors, speed and values.
 
@@ -279,8 +254,6 @@ class Sizing:
         Sentences for the plan: drift of modes, content below the DC-limit decade, forced choices.
     speed_limits
         Every figure that limits the speed, those at the window's ends among them.
-    speed_curve
-        Error and spread against speed, None where nothing moves.
     """
 
     time_scale: float
@@ -293,4 +266,3 @@ class Sizing:
     faults: tuple[str, ...] = ()
     notes: tuple[str, ...] = field(default=())
     speed_limits: tuple[SpeedLimit, ...] = ()
-    speed_curve: SpeedCurve | None = None

@@ -18,8 +18,9 @@ from patchplan.sensitivity import Sensitivity
 from patchplan.sizing.drift import (
     LIMITED,
     content_below,
+    dc_limited,
     drift_share,
-    limit_resistor,
+    limited_stages,
     offset_rate,
     slow_modes,
 )
@@ -77,7 +78,7 @@ def size(
     given = None if speed == "free" else unit if speed == "real time" else unit / float(speed)
     pace = choose_speed(form, patch, ranges, sensitivity, target, given=given)
     bounds = _speed_bounds(pace, given)
-    limited = _limited_stages(form, patch, ranges) if run == "free" else ()
+    limited = limited_stages(form, patch, ranges) if run == "free" else ()
     model = build_model(form, patch, ranges, target, bounds, _weights(patch, sensitivity))
     effect = _effect(model, patch, sensitivity, pace)
     comfortable = dict.fromkeys(limited, LIMITED)
@@ -92,7 +93,7 @@ def size(
         sized, scale = stages[stage.name], scales[stage.node]
         left = without(target, *taken(patch, stages))
         if left.resistors:
-            stages[stage.name] = _dc_limit(stage, sized, scale, sensitivity, left, time_scale, accept / 100.0)
+            stages[stage.name] = dc_limited(stage, sized, scale, sensitivity, left, time_scale, accept / 100.0)
     sizing = Sizing(
         time_scale,
         pace.window,
@@ -115,29 +116,6 @@ def _speed_bounds(pace: Speed, given: float | None) -> tuple[float, float]:
         if low < high:
             return low, high
     return pace.chosen, pace.chosen
-
-
-def _dc_limit(
-    stage: Stage,
-    sized: StageSizing,
-    scale: NodeScale,
-    sensitivity: Sensitivity,
-    target: Target,
-    time_scale: float,
-    allowed: float,
-) -> StageSizing:
-    """The stage with a DC-limit resistor where its drift exceeds what is allowed and the resistor does less harm."""
-    rate = offset_rate(sized, target)
-    share, _ = drift_share(stage.name, rate, sensitivity, scale.volts_per_unit, time_scale)
-    resistor = limit_resistor(sized, target, scale.limit_volts)
-    leak = np.abs(sensitivity.leak[stage.name]).max(initial=0.0) * time_scale / (resistor * sized.capacitor)
-    return replace(sized, feedback=resistor) if allowed < share and leak < share else sized
-
-
-def _limited_stages(form: Form, patch: Patch, ranges: Ranges) -> tuple[str, ...]:
-    """Integrators that get a DC-limit resistor: those that carry a mode near zero in a run without reset."""
-    states = {m.state for m in slow_modes(form, ranges, patch)}
-    return tuple(s.name for s in patch.stages if s.kind == "integrator" and s.signal in states)
 
 
 def _weights(patch: Patch, sensitivity: Sensitivity) -> dict[tuple[str, int], float]:
@@ -189,7 +167,7 @@ def _stages(
     stages = {s.name: _stage(s, target, model, values) for s in patch.stages if not s.bipolar}
     for stage in (s for s in patch.stages if s.bipolar):
         left = without(target, *taken(patch, stages))
-        stages[stage.name] = _bipolar(stage, patch, left if left.resistors else target, scales)
+        stages[stage.name] = bipolar_sizing(stage, patch, left if left.resistors else target, scales)
     return {s.name: stages[s.name] for s in patch.stages}
 
 
@@ -225,7 +203,7 @@ def _start(stage: Stage, target: Target, values: Values) -> tuple[tuple[float, f
     return (first, second), volts * stage.sign * (1 if stage.start > 0 else -1)
 
 
-def _bipolar(stage: Stage, patch: Patch, target: Target, scales: Mapping[str, NodeScale]) -> StageSizing:
+def bipolar_sizing(stage: Stage, patch: Patch, target: Target, scales: Mapping[str, NodeScale]) -> StageSizing:
     """A knob through zero: full scale as little above the range's end as values and their tolerance allow."""
     knob = patch.knobs[stage.knob or ""]
     most = max(abs(float(knob.low)), abs(float(knob.high)))

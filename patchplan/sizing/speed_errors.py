@@ -129,14 +129,14 @@ def bias_error(
     return (target.op_amp.bias + target.switch_leakage) * total
 
 
-def comfortable_capacitors(gains: Array, target: Target, time_scales: Array) -> Array:
-    """Capacitance [F] that puts the middle of a stage's resistors at :data:`COMFORTABLE`, for each time scale.
+def comfortable_capacitors(gains: Array, target: Target, time_scales: Array, comfortable: float = COMFORTABLE) -> Array:
+    """Capacitance [F] that puts the middle of a stage's resistors at ``comfortable`` [ohm], for each time scale.
 
     It moves from there as far as the largest and smallest resistors ask for.
     """
     if gains.size == 0:
         return np.full(len(time_scales), target.capacitors[len(target.capacitors) // 2])
     middle = float(np.sqrt(gains.min() * gains.max()))
-    wanted = np.maximum(time_scales / (middle * COMFORTABLE), time_scales / (gains.min() * target.resistors[-1]))
+    wanted = np.maximum(time_scales / (middle * comfortable), time_scales / (gains.min() * target.resistors[-1]))
     wanted = np.minimum(wanted, time_scales / (gains.max() * target.resistors[0]))
     return np.asarray(np.clip(wanted, target.capacitors[0], target.capacitors[-1]))

@@ -1,0 +1,109 @@
+"""Whether a board can run in real time: with these parts, with which others, or why not."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import replace
+
+from patchplan.form.records import Form
+from patchplan.patch.records import Patch
+from patchplan.quantity import engineering
+from patchplan.ranges import Ranges
+from patchplan.sensitivity import Sensitivity
+from patchplan.sizing.records import Sizing, SpeedLimit, Target
+from patchplan.sizing.speed_limits import find_limits, ground_of, window_of
+
+#: The largest film capacitor [F], the largest and smallest resistors [ohm] and the smallest capacitor [F] that are of
+#: use around an op amp (common practice, no source).
+FILM, LARGEST_OHM, SMALLEST_OHM, SMALLEST_FARAD = 10e-6, 10e6, 1e3, 100e-12
+
+Wish = tuple[str, Target]
+
+
+def judged(
+    form: Form,
+    patch: Patch,
+    ranges: Ranges,
+    sensitivity: Sensitivity,
+    target: Target,
+    sizing: Sizing,
+    figures: tuple[float, float],
+) -> tuple[str, str]:
+    """Judgement on real time, as of :class:`SpeedCurve`, and a sentence.
+
+    Parameters
+    ----------
+    figures
+        Predicted error and spread in real time [% of peak].
+    """
+    unit = float(form.system.time_unit_seconds)
+    low, high = sizing.window
+    if low <= unit <= high:
+        error, spread = figures
+        return "possible", f"Real time is possible: error {error:.2g} %, spread {spread:.2g} % are predicted."
+    slow = unit > high
+    way = (sizing.window[1], sizing.limits[1]) if slow else (sizing.window[0], sizing.limits[0])
+    best: SpeedLimit | None = None
+    for words, other in _wishes(target, slow=slow):
+        fast_end, slow_end = window_of(find_limits(ground_of(form, patch, ranges, sensitivity, other)))
+        if fast_end.time_scale <= unit <= slow_end.time_scale:
+            return "with other parts", f"Real time is out of reach of these parts ({way[1]}) but possible with {words}."
+        end = slow_end if slow else fast_end
+        if best is None or (end.time_scale > best.time_scale) is slow:
+            best = end
+    least = "more" if slow else "less"
+    text = (
+        f"Real time is impossible: a unit of time would take {engineering(unit, 's')}, and {way[1]} allows no {least} "
+        f"than {engineering(way[0], 's')}"
+    )
+    if best is not None:
+        text += f"; with the best parts known {best.text} allows no {least} than {engineering(best.time_scale, 's')}"
+    return "impossible", text + "."
+
+
+def _wishes(target: Target, *, slow: bool) -> Iterator[Wish]:
+    """Changes of the parts that may help, the smallest first: values, one part, both."""
+    values = list(_slow_values(target) if slow else _fast_values(target))
+    parts = [(f"{a.name} in place of {target.op_amp.name}", replace(target, op_amp=a)) for a in target.other_op_amps]
+    if not slow:
+        parts += [
+            (f"{m.name} in place of {target.multiplier.name}", replace(target, multiplier=m))
+            for m in target.other_multipliers
+        ]
+        parts += [
+            (f"{a.name} and {m.name} in place of {target.op_amp.name} and {target.multiplier.name}",
+             replace(target, op_amp=a, multiplier=m))
+            for a in target.other_op_amps for m in target.other_multipliers
+        ]  # fmt: skip
+    yield from values
+    yield from parts
+    for words, other in values[-1:]:
+        for more, with_part in parts:
+            yield (
+                f"{words} and {more}",
+                replace(with_part, resistors=other.resistors, capacitors=other.capacitors),
+            )
+
+
+def _slow_values(target: Target) -> Iterator[Wish]:
+    resistors, capacitors = target.resistors, target.capacitors
+    large = tuple(sorted({*capacitors, *(10 * c for c in capacitors if capacitors[-1] < 10 * c <= FILM)}))
+    high = tuple(sorted({*resistors, *(10 * r for r in resistors if resistors[-1] < 10 * r <= LARGEST_OHM)}))
+    farad, ohm = f"capacitors up to {engineering(large[-1], 'F')}", f"resistors up to {engineering(high[-1], 'Ω')}"
+    if large != capacitors:
+        yield farad, replace(target, capacitors=large)
+    if high != resistors:
+        yield ohm, replace(target, resistors=high)
+    if large != capacitors and high != resistors:
+        yield f"{farad} and {ohm}", replace(target, capacitors=large, resistors=high)
+
+
+def _fast_values(target: Target) -> Iterator[Wish]:
+    resistors, capacitors = target.resistors, target.capacitors
+    small = tuple(sorted({*capacitors, *(c / 10 for c in capacitors if SMALLEST_FARAD <= c / 10 < capacitors[0])}))
+    low = tuple(sorted({*resistors, *(r / 10 for r in resistors if SMALLEST_OHM <= r / 10 < resistors[0])}))
+    farad, ohm = f"capacitors down to {engineering(small[0], 'F')}", f"resistors down to {engineering(low[0], 'Ω')}"
+    if small != capacitors:
+        yield farad, replace(target, capacitors=small)
+    if small != capacitors and low != resistors:
+        yield f"{farad} and {ohm}", replace(target, capacitors=small, resistors=low)
