@@ -29,7 +29,7 @@ def system(
     sources: Sequence[Source] = (),
     knobs: Sequence[Knob] = (),
     watch: Sequence[str] = (),
-    duration: int | str = 20,
+    duration: Fraction | int | str = 20,
 ) -> System:
     """A System from plain mappings, in seconds."""
     made: tuple[Row, ...] = tuple(row_of(n, t) for n, t in rows.items())

@@ -39,8 +39,8 @@ def judged(
     unit = float(form.system.time_unit_seconds)
     low, high = sizing.window
     if low <= unit <= high:
-        error, spread = figures
-        return "possible", f"Real time is possible: error {error:.2g} %, spread {spread:.2g} % are predicted."
+        error, spread = (f"{share:.2g} %" if share < 99.5 else f"{share:.0f} %" for share in figures)
+        return "possible", f"Real time is possible, with an error of {error} and a spread of {spread} as predicted."
     slow = unit > high
     way = (sizing.window[1], sizing.limits[1]) if slow else (sizing.window[0], sizing.limits[0])
     best: SpeedLimit | None = None
@@ -53,11 +53,11 @@ def judged(
             best = end
     least = "more" if slow else "less"
     text = (
-        f"Real time is impossible: a unit of time would take {engineering(unit, 's')}, and {way[1]} allows no {least} "
-        f"than {engineering(way[0], 's')}"
+        f"Real time is impossible: a unit of time would take {engineering(unit, 's')}, and no {least} than "
+        f"{engineering(way[0], 's')} will do ({way[1]})"
     )
     if best is not None:
-        text += f"; with the best parts known {best.text} allows no {least} than {engineering(best.time_scale, 's')}"
+        text += f"; with the best parts known no {least} than {engineering(best.time_scale, 's')} ({best.text})"
     return "impossible", text + "."
 
 

@@ -18,6 +18,7 @@ from patchplan.report.tables import (
     parts_table,
     signal_table,
     source_table,
+    speed_table,
     stage_table,
 )
 
@@ -60,7 +61,7 @@ def page(
         pictures_left_out=len(plan.verdict.curves) - MOST_SIGNALS if drawings else 0,
         tables=[
             signal_table(plan), node_table(plan), source_table(plan, sources), stage_table(plan),
-            coefficient_table(plan), form_table(plan), budget_table(plan), parts_table(plan.circuit),
+            coefficient_table(plan), form_table(plan), budget_table(plan), speed_table(plan), parts_table(plan.circuit),
             package_table(plan),
         ],
         steps=steps(plan),

@@ -14,6 +14,7 @@ from patchplan.quantity import engineering
 from patchplan.report import style
 from patchplan.report.folder import unused_name
 from patchplan.report.records import Plan
+from patchplan.report.speed_picture import speed_picture
 from patchplan.report.tables import swing_volts, swinging
 from patchplan.report.words import percent, plain
 
@@ -31,7 +32,7 @@ MOST_POINTS = 3000
 
 
 def pictures(plan: Plan) -> dict[str, str]:
-    """File name -> SVG text: ``signal_*.svg``, ``nodes.svg`` and ``budget.svg``; empty where nothing was built."""
+    """File name -> SVG text: ``signal_*``, ``nodes``, ``budget`` and ``speed.svg``; empty where nothing was built."""
     circuit = plan.circuit
     if circuit is None:
         return {}
@@ -46,6 +47,8 @@ def pictures(plan: Plan) -> dict[str, str]:
         drawn["nodes.svg"] = _svg(swing_picture(plan))
         if plan.verdict.budget:
             drawn["budget.svg"] = _svg(budget_picture(plan))
+        if plan.speed_curve and any(plan.speed_curve.error):
+            drawn["speed.svg"] = _svg(speed_picture(plan, plan.speed_curve))
     return drawn
 
 

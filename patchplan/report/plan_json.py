@@ -10,6 +10,7 @@ from typing import Any
 
 from patchplan.check.records import Verdict
 from patchplan.circuit.records import Circuit, KnobLaw, NodeMap
+from patchplan.compare.records import SpeedCurve
 from patchplan.equation.problem import Problem
 from patchplan.patch.records import Patch, Stage
 from patchplan.report.codec import decode, encode, rounded
@@ -45,6 +46,8 @@ def plan_data(plan: Plan, files: Sequence[str] = ()) -> dict[str, Any]:
         "time_scale": rounded(sizing.time_scale),
         "time_scale_window": [rounded(end) for end in sizing.window],
         "time_scale_limits": list(sizing.limits),
+        "speed_limits": encode(sizing.speed_limits),
+        "speed_curve": _speed_curve(plan.speed_curve),
         "check": _check(plan.verdict),
         "signals": _signals(plan, plan.circuit) if plan.circuit else [],
         "stages": [_stage(plan, stage) for stage in plan.patch.stages] if plan.circuit else [],
@@ -76,6 +79,8 @@ def refusal_data(problem: Problem, reason: str, files: Sequence[str] = ()) -> di
         "time_scale": None,
         "time_scale_window": [None, None],
         "time_scale_limits": ["", ""],
+        "speed_limits": [],
+        "speed_curve": None,
         "check": _check(verdict),
         **{table: [] for table in ("signals", "stages", "worst_inputs", "coefficients", "parts", "knobs")},
         "counts": {},
@@ -227,6 +232,24 @@ def _coefficients(sizing: Sizing) -> list[dict[str, Any]]:
         }
         for row in sizing.coefficients
     ]
+
+
+def _speed_curve(curve: SpeedCurve | None) -> dict[str, Any] | None:
+    if curve is None:
+        return None
+
+    def figures(pair: tuple[float, float]) -> dict[str, Any]:
+        return {"error_percent": rounded(pair[0]), "spread_percent": rounded(pair[1])}
+
+    return {
+        "time_scales": encode(curve.time_scales),
+        "error_percent": encode(curve.error),
+        "spread_percent": encode(curve.spread),
+        "error_parts": encode(curve.parts),
+        "spread_parts": encode(curve.spreads),
+        "chosen": figures(curve.chosen),
+        "real_time": figures(curve.real_time) | {"judgement": curve.judgement, "reason": curve.reason},
+    }
 
 
 def _parts(circuit: Circuit) -> list[dict[str, Any]]:

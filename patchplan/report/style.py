@@ -24,6 +24,14 @@ DIFFERENCE_LINE: Mapping[str, Any] = {"color": LIGHT["circuit"], "linewidth": 1.
 EDGE_LINE: Mapping[str, Any] = {"color": LIGHT["quiet"], "linewidth": 0.8, "linestyle": "-"}
 ZERO_LINE: Mapping[str, Any] = {"color": LIGHT["quiet"], "linewidth": 0.6, "linestyle": ":"}
 HORIZON_LINE: Mapping[str, Any] = {"color": LIGHT["over"], "linewidth": 0.9, "linestyle": (0, (1, 2))}
+#: Curves against speed: the total, and its causes in turn.
+TOTAL_LINE: Mapping[str, Any] = {"color": LIGHT["circuit"], "linewidth": 2.0, "linestyle": "-"}
+CHOSEN_POINT: Mapping[str, Any] = {"color": LIGHT["ink"], "marker": "o", "markersize": 5.0, "linestyle": ""}
+CAUSE_LINES: tuple[Mapping[str, Any], ...] = tuple(
+    {"color": LIGHT[hue], "linewidth": 1.0, "linestyle": dash}
+    for dash in ((0, (5, 2)), (0, (1, 1.5)))
+    for hue in ("solution", "inside", "over")
+)
 #: Opacity of the sand band behind the curves.
 BAND_OPACITY = 0.35
 
@@ -33,11 +41,15 @@ FAIR_PART = 0.35
 #: Inches.
 PICTURE_WIDTH = 7.4
 SIGNAL_HEIGHT = 4.2
+SPEED_HEIGHT = 5.2
 ROW_HEIGHT = 0.27
 CHART_MARGIN = 1.0
 #: Left and bottom edge, width and height of the panels of a signal's picture, parts of the picture.
 UPPER_PANEL = (0.13, 0.40, 0.74, 0.50)
 LOWER_PANEL = (0.13, 0.12, 0.74, 0.21)
+SPEED_UPPER = (0.12, 0.54, 0.61, 0.39)
+SPEED_LOWER = (0.12, 0.10, 0.61, 0.39)
+SPEED_NAME = -0.15
 #: Left edge and width of a chart, parts of the picture; between them its bottom edge in inches.
 CHART_PANEL = (0.34, 0.55, 0.62)
 #: Places of the names and numbers of the vertical axes, parts of the panel's width.

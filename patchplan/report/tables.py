@@ -147,6 +147,23 @@ def value_text(part: Part) -> str:
     return engineering(part.value, unit) + tolerance
 
 
+def speed_table(plan: Plan) -> Table:
+    """Every figure that limits the speed, those that set the window's ends first."""
+    unit = float(plan.system.time_unit_seconds)
+    rows = tuple(
+        (limit.end, limit.stage, limit.part, limit.figure, engineering(limit.value, limit.unit),
+         engineering(limit.time_scale, "s"), plain(unit / limit.time_scale))
+        for limit in plan.sizing.speed_limits if limit.time_scale > 0 and limit.figure
+    )  # fmt: skip
+    note = (
+        "The first row of each end sets it. A bandwidth, bias current, offset or gain is at its limit where it alone "
+        "costs 1 % of peak, all stages together; the stage is the one that adds most. A slew rate is at its limit at "
+        "half its figure."
+    )
+    headers = ("end", "stage", "part", "figure", "value", f"1 {plan.system.time_unit} takes", "times real time")
+    return Table("Limits of the speed", headers, rows, frozenset({4, 5, 6}), note)
+
+
 def budget_table(plan: Plan) -> Table:
     """Where the error comes from, largest first."""
     rows = tuple(

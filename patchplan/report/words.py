@@ -103,7 +103,7 @@ def _more_room(plan: Plan, node: str) -> str:
 
 
 def speed(plan: Plan) -> tuple[str, ...]:
-    """How fast the board runs, and the window of speeds: one or two sentences."""
+    """How fast the board runs, the window of speeds, and whether real time lies in it: up to three sentences."""
     sizing, unit = plan.sizing, plan.system.time_unit
     second = float(plan.system.time_unit_seconds)
     if not sizing.time_scale > 0:
@@ -113,7 +113,10 @@ def speed(plan: Plan) -> tuple[str, ...]:
     slow, fast = (second / end if end else math.inf for end in (sizing.window[1], sizing.window[0]))
     window = f"{_times(slow)} to {_times(fast)} times real time would do."
     ends = (f"Slow end: {_sentence(sizing.limits[1])}", f"Fast end: {_sentence(sizing.limits[0])}")
-    return first, " ".join((window, *ends))
+    judged = plan.speed_curve.reason if plan.speed_curve else ""
+    if math.isclose(sizing.time_scale, second) and plan.speed_curve and plan.speed_curve.judgement == "possible":
+        judged = ""
+    return tuple(s for s in (first, " ".join((window, *ends)), judged) if s)
 
 
 def made_of(plan: Plan) -> str:

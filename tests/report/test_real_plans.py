@@ -10,6 +10,7 @@ import pytest
 
 from patchplan.check.simulate import simulate
 from patchplan.check.start import hold_state
+from patchplan.report.pictures import pictures
 from patchplan.report.plan_json import plan_data, plan_text, rebuild
 from patchplan.report.write import plan_folder
 from tests.report.test_plan_json import SCHEMA
@@ -31,6 +32,26 @@ def test_plan_holds_to_the_schema(data):
     jsonschema.validate(data, SCHEMA)
     assert data["signals"]
     assert data["parts"]
+
+
+def test_speed_limits_and_curve_of_plan_json(plan, data):
+    window, curve = data["time_scale_window"], data["speed_curve"]
+    for end, edge, text in zip(("fast", "slow"), window, data["time_scale_limits"], strict=True):
+        first = next(row for row in data["speed_limits"] if row["end"] == end)
+        assert (first["time_scale"], first["text"]) == (pytest.approx(edge), text)
+        assert first["value"] > 0
+    points = len(curve["time_scales"])
+    assert points > 5
+    for shares in (*curve["error_parts"].values(), *curve["spread_parts"].values(), curve["error_percent"]):
+        assert len(shares) == points
+    assert curve["real_time"]["reason"].startswith("Real time is ")
+
+
+def test_the_curve_is_drawn(plan):
+    drawn = pictures(plan)["speed.svg"]
+    assert "error [% of peak]" in drawn
+    assert "this plan" in drawn
+    assert "real time" in drawn
 
 
 def test_circuit_that_came_back_starts_where_the_plan_starts(plan, data):
