@@ -18,7 +18,7 @@ from patchplan.form.exact import Matrix, Vector, dot, observability, solved, tra
 #: Below this order a companion form is a two-integrator loop already, and nothing is left to choose.
 LEAST_ORDER = 3
 #: Beyond this order the exact arithmetic and the search for values would take long; such blocks stay as written.
-MOST_ORDER = 20
+MOST_ORDER = 16
 
 
 @dataclass(frozen=True)
@@ -100,7 +100,7 @@ def find_blocks(system: System) -> Found:
     uses = _uses(system)
     rows = {row.name: row for row in system.rows}
     blocks, notes, taken = [], [], set[str]()
-    # Every tail of a path is a group as well: the longest counts.
+    # A chain may end inside a longer one: the longest counts.
     for states in sorted(_groups(system, rows, uses), key=len, reverse=True):
         if len(states) < LEAST_ORDER or taken.intersection(states):
             continue
@@ -108,17 +108,13 @@ def find_blocks(system: System) -> Found:
         held = sorted({k for s in states for t in rows[s].terms if t.degree == 1 and t.factors[0][0] in states
                        for k in t.knobs})  # fmt: skip
         if held:
-            notes.append(f"{states[0]} keeps the states of its equation, so that {_listed(held)} stays one knob.")
+            notes.append(f"{states[0]} keeps the states of its equation, so that {' and '.join(held)} stays one knob.")
         elif len(states) > MOST_ORDER:
             notes.append(f"{states[0]} keeps the states of its equation: order {len(states)} is above {MOST_ORDER}.")
         else:
             made = _block(system, states, rows, uses)
             blocks += [made] if made else []
     return Found(tuple(blocks), tuple(notes))
-
-
-def _listed(knobs: list[str]) -> str:
-    return " and ".join(knobs)
 
 
 def _uses(system: System) -> dict[str, list[tuple[str, Term]]]:
@@ -145,22 +141,16 @@ def _groups(
         for name, row in rows.items()
         if len(row.terms) == 1 and _link(row.terms[0]) in rows and _link(row.terms[0]) != name
     }
-    behind = set(following.values())
     watched = {name for name, _ in system.watch}
-    for first in rows:
-        if first in behind:
-            continue
+    fed = {name: [p for p in map(_link, row.terms) if p in rows and p not in watched and len(uses[p]) == 1]
+           for name, row in rows.items()}  # fmt: skip
+    behind = {*following.values(), *(p[0] for p in fed.values() if len(p) == 1 and p[0] not in following)}
+    for first in (name for name in rows if name not in behind):
         chain = [first]
         while following.get(chain[-1], first) not in chain:
             chain.append(following[chain[-1]])
-        while True:
-            feeding = [
-                p for p in map(_link, rows[chain[-1]].terms)
-                if p in rows and p not in chain and p not in watched and len(uses[p]) == 1
-            ]  # fmt: skip
-            if len(feeding) != 1:
-                break
-            chain += feeding
+        while len(fed[chain[-1]]) == 1 and fed[chain[-1]][0] not in chain:
+            chain += fed[chain[-1]]
         yield tuple(chain)
 
 
