@@ -29,7 +29,7 @@ from patchplan.reach.records import Reach
 from patchplan.reach.reference import find_reach
 from patchplan.report.records import Plan
 from patchplan.sensitivity import Sensitivity, find_sensitivity
-from patchplan.shortlist import Forms, as_written, consider, extent, shortlist, told
+from patchplan.shortlist import Forms, as_written, consider, handicap, shortlist, told
 from patchplan.sizing.records import Sizing, Target
 from patchplan.sizing.size import size
 
@@ -94,7 +94,7 @@ def plan(
         plain_forms = as_written(considered)
         if plain_forms not in [run.choices["blocks"] for run in runs] and all(_merit(run)[0] for run in runs):
             runs.append(attempt(Choices(think=think, blocks=plain_forms)))
-        found = min(runs, key=lambda run: _merit(run, extent(run.patch)))
+        found = min(runs, key=lambda run: _merit(run, handicap(run)))
         if set(found.form.offsets) - set(found.form.scales):
             plain = attempt(replace(Choices(**found.choices), offsets=False))
             found = found if _merit(found, OFFSET_COST) < _merit(plain) else plain

@@ -28,6 +28,9 @@ from patchplan.sensitivity import Sensitivity, find_sensitivity
 RUNS, TOO_DEAR = 2, 1.3
 #: Blocks whose forms are weighed, and the largest System in which they are: each form takes a patch and a sensitivity.
 MOST_BLOCKS, MOST_STATES = 4, 120
+#: The states of the file mean something to whoever wrote it and can be probed on its board: another form has to be
+#: better by this factor (common practice, no source).
+STRANGE = 1.25
 #: Nodes of the search for signs in a patch that is only counted.
 _SIGN_NODES = 1
 
@@ -67,9 +70,10 @@ def _weighed(problem: Problem, system: System, reach: Reach, block: Block, name:
     return replace(row, stages=stages, wires=wires, tolerance_percent=100 * spread)
 
 
-def extent(patch: Patch) -> int:
-    """How much there is to build: stages and wires."""
-    return sum(1 + len(s.wires) for s in patch.stages if s.kind not in ("reference", "source"))
+def handicap(run: Plan) -> float:
+    """What error and spread of a plan are multiplied by to be compared with those in other forms: see `shortlist`."""
+    size = sum(1 + len(s.wires) for s in run.patch.stages if s.kind not in ("reference", "source"))
+    return size * (STRANGE if any(form != AS_WRITTEN for _, form in run.choices["blocks"]) else 1.0)
 
 
 def part_spread(sensitivity: Sensitivity, patch: Patch, build: Build) -> float:
@@ -94,7 +98,7 @@ def shortlist(considered: Iterable[Considered]) -> tuple[Forms, ...]:
     """What to run: each block's best form, then the one change that costs least; () where nothing is to choose.
 
     What a form costs is its spread times the number of its stages and wires: a board of a third more of these has to
-    be better by a third.
+    be better by a third. Forms other than that of the file count :data:`STRANGE` times.
     """
     ranked: dict[str, list[Considered]] = {}
     for row in considered:
@@ -117,7 +121,7 @@ def as_written(considered: Iterable[Considered]) -> Forms:
 
 
 def _cost(row: Considered) -> float:
-    return (row.tolerance_percent or 0.0) * (row.stages + row.wires)
+    return (row.tolerance_percent or 0.0) * (row.stages + row.wires) * (1.0 if row.form == AS_WRITTEN else STRANGE)
 
 
 def told(considered: Iterable[Considered], runs: Iterable[Plan], found: Plan) -> tuple[Considered, ...]:

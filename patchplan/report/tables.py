@@ -95,7 +95,7 @@ def form_table(plan: Plan) -> Table:
     note = (
         "Stages and wires are those of the whole board. Tolerances: spread of the watched signals by resistors and "
         "capacitors, before values are chosen. Error and spread: of a board planned in that form. What a form costs "
-        "is error and spread times stages and wires."
+        "is error and spread times stages and wires, and a quarter more where it is not the form of the file."
     )
     return Table("Forms considered", headers, rows, frozenset(range(2, 7)), note)
 
