@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
-from functools import lru_cache
+from functools import cached_property, lru_cache
 from math import exp
 
 import numpy as np
@@ -28,6 +28,11 @@ class Choice:
 
     logs: Array
     parts: tuple[tuple[float, ...], ...]
+
+    @cached_property
+    def into(self) -> Array:
+        """Conductance that a summing node sees into each leg, its source at ground [S]."""
+        return np.array([Leg(p).into for p in self.parts])
 
     def near(self, wanted: float, width: float) -> Array:
         """Positions of the values within ``width`` of a wanted log, at least the nearest one."""
@@ -121,6 +126,23 @@ def _networks(resistors: tuple[float, ...]) -> Choice:
     """Networks of three resistors, above the largest single one."""
     parts = networks(resistors)
     return Choice(np.log(np.array([Leg(p).transfer for p in parts])), parts)
+
+
+@lru_cache(maxsize=8)
+def all_legs(resistors: tuple[float, ...]) -> Choice:
+    """Every leg: one resistor, or above the largest a T whose arms are among the smallest that reach so far."""
+    values = np.array(resistors)
+    top, least = 1.03 * values[-1], 0.0
+    found = {round(float(np.log(v)), 12): (float(v),) for v in resistors}
+    for arm in values.tolist():
+        reach = 2 * arm + arm**2 / (2 * values[0])
+        for shunt in values[values <= arm].tolist():
+            transfer = Leg((arm, shunt, arm)).transfer
+            if max(top, least) < transfer <= min(reach, T_REACH * values[-1]):
+                found.setdefault(round(float(np.log(transfer)), 12), (arm, shunt, arm))
+        least = reach
+    logs = sorted(found)
+    return Choice(np.array(logs), tuple(found[x] for x in logs))
 
 
 @lru_cache(maxsize=8)

@@ -1,0 +1,209 @@
+"""Loop errors of many candidate boards at once, and the moves that change them.
+
+A candidate is one place on the grid of every unknown. Loop errors and scale factors are linear in the logs of the values
+apart from what the switches and the op amps' bandwidth add, which all legs of a stage share; both are kept exactly as
+values move.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from patchplan.sizing.loops import Circuits
+from patchplan.sizing.model import Model
+from patchplan.sizing.records import Target
+from patchplan.sizing.values import Choice, Unknowns
+
+Array = NDArray[np.float64]
+Indices = NDArray[np.intp]
+#: Loop errors count by this power: near the largest of them, yet every one still counts.
+POWER = 4
+#: Loop errors below this are as good as none.
+FLOOR = 3e-7
+#: What scale factors outside their bounds cost: e-folds of loop error per unit of their logs.
+OUTSIDE = 40.0
+
+
+@dataclass(frozen=True)
+class Shared:
+    """Legs that share a resistance in common: those of one integrator, or those from one switched source.
+
+    ``capacitor`` is the integrator's column, -1 for a source; ``loops`` and ``fit`` what a log added to all rows does.
+    """
+
+    legs: Indices
+    capacitor: int
+    loops: Array
+    fit: Array
+
+
+@dataclass(frozen=True)
+class Field:
+    """What all candidates share.
+
+    Attributes
+    ----------
+    grids
+        Log values of each unknown, rising.
+    into
+        Conductance into the bus of each value of an unknown that is a leg [S].
+    loops, fit
+        What a unit of each unknown does to the loops, shape ``(n_unknowns, n_loops)``, and to theta.
+    zero, theta_zero
+        Loop errors and theta at y = 0 without shift.
+    shared
+        Groups; ``groups`` gives the places of an unknown's groups.
+    low, high
+        Bounds of theta.
+    weight
+        Of each loop, shape ``(n_loops,)``.
+    """
+
+    grids: tuple[Array, ...]
+    into: tuple[Array, ...]
+    loops: Array
+    fit: Array
+    zero: Array
+    theta_zero: Array
+    shared: tuple[Shared, ...]
+    groups: tuple[tuple[int, ...], ...]
+    low: Array
+    high: Array
+    weight: Array
+    switch_on: float
+    slow: float
+
+    def energy(self, errors: Array, theta: Array) -> Array:
+        """Log of the weighted loop errors' norm, and what it costs to be out of bounds; the last axis goes."""
+        size = ((self.weight * errors) ** POWER).sum(axis=-1) + FLOOR**POWER
+        out = np.maximum(np.maximum(self.low - theta, theta - self.high), 0.0).sum(axis=-1)
+        return np.asarray(np.log(size) / POWER + OUTSIDE * out)
+
+
+@dataclass
+class Crowd:
+    """Candidates: places on the grids, and what follows from them (first axis: candidate)."""
+
+    field: Field
+    place: Indices
+    y: Array
+    sums: Array
+    errors: Array
+    theta: Array
+
+    @classmethod
+    def at(cls, field: Field, place: Indices) -> Crowd:
+        """Candidates at given places, shape ``(n_candidates, n_unknowns)``."""
+        y = np.stack([grid[place[:, u]] for u, grid in enumerate(field.grids)], axis=1)
+        sums = np.zeros((len(place), len(field.shared)))
+        errors, theta = field.zero + y @ field.loops, field.theta_zero + y @ field.fit
+        for g, group in enumerate(field.shared):
+            sums[:, g] = sum(field.into[u][place[:, u]] for u in group.legs)
+            shift = _shift(field, group, sums[:, g], y[:, group.capacitor])
+            errors, theta = errors + shift[:, None] * group.loops, theta + shift[:, None] * group.fit
+        return cls(field, place, y, sums, errors, theta)
+
+    def energy(self) -> Array:
+        """Energy of every candidate."""
+        return self.field.energy(self.errors, self.theta)
+
+    def change(self, columns: Sequence[int], places: Sequence[Indices]) -> tuple[Array, Array]:
+        """Loop errors and theta if unknowns move to places of shape ``(n_candidates, n_options)`` each."""
+        field = self.field
+        errors, theta = self.errors[:, None, :], self.theta[:, None, :]
+        sums: dict[int, Array] = {}
+        moved: dict[int, Array] = {}
+        for u, where in zip(columns, places, strict=True):
+            value = field.grids[u][where]
+            step = (value - self.y[:, u, None])[..., None]
+            errors, theta = errors + step * field.loops[u], theta + step * field.fit[u]
+            moved[u] = value
+            for g in field.groups[u]:
+                before = sums.get(g, self.sums[:, g, None])
+                if u != field.shared[g].capacitor:
+                    before = before + field.into[u][where] - field.into[u][self.place[:, u]][:, None]
+                sums[g] = before
+        for g, total in sums.items():
+            group = field.shared[g]
+            old = self.y[:, group.capacitor, None]
+            new = moved.get(group.capacitor, old) if group.capacitor >= 0 else old
+            step = _shift(field, group, total, new) - _shift(field, group, self.sums[:, g, None], old)
+            errors, theta = errors + step[..., None] * group.loops, theta + step[..., None] * group.fit
+        return errors, theta
+
+    def take(self, columns: Sequence[int], places: Sequence[Indices], changed: tuple[Array, Array], option: Indices) -> None:
+        """Move every candidate to one of its options."""
+        every = np.arange(len(option))
+        self.errors, self.theta = changed[0][every, option], changed[1][every, option]
+        for u, where in zip(columns, places, strict=True):
+            new = where[every, option]
+            for g in self.field.groups[u]:
+                if u != self.field.shared[g].capacitor:
+                    self.sums[:, g] += self.field.into[u][new] - self.field.into[u][self.place[:, u]]
+            self.place[:, u] = new
+            self.y[:, u] = self.field.grids[u][new]
+
+
+def _shift(field: Field, group: Shared, total: Array, capacitor: Array) -> Array:
+    """Log by which a shared on-resistance and finite bandwidth make R*C larger."""
+    slow = field.slow * np.exp(-capacitor) if group.capacitor >= 0 else 0.0
+    return np.asarray(np.log1p(total * (field.switch_on + slow)))
+
+
+def make_field(
+    model: Model,
+    target: Target,
+    unknowns: Unknowns,
+    choices: Sequence[Choice],
+    circuits: Circuits,
+    matrix: Array,
+    constant: Array,
+    weight: Array,
+) -> Field:
+    """Draw up what all candidates share.
+
+    Parameters
+    ----------
+    choices
+        Values of each unknown, the same for all candidates.
+    matrix, constant
+        A and b of the rows.
+    weight
+        Of each loop.
+    """
+    rows = circuits.dense(len(constant))
+    fit = np.linalg.pinv(matrix) if matrix.shape[1] else np.zeros((0, len(constant)))
+    at = {name: c for c, name in enumerate(unknowns.names)}
+    groups: dict[tuple[str, str], list[int]] = {}
+    for row, ratio in enumerate(model.ratios):
+        if ratio.kind == "integrator":
+            groups.setdefault((ratio.stage, "C"), []).append(row)
+        if ratio.switched:
+            groups.setdefault((ratio.switched, "source"), []).append(row)
+    shared = []
+    for (name, what), members in groups.items():
+        legs = np.array([at[model.ratios[r].stage, model.ratios[r].wire] for r in members], dtype=np.intp)
+        capacitor = at[name, "C"] if what == "C" else -1
+        shared.append(Shared(legs, capacitor, rows[members].sum(axis=0), fit[:, members].sum(axis=1)))
+    places = tuple(
+        tuple(g for g, s in enumerate(shared) if u in s.legs or u == s.capacitor) for u in range(len(unknowns.names))
+    )
+    return Field(
+        grids=tuple(c.logs for c in choices),
+        into=tuple(c.into if places[u] else c.logs for u, c in enumerate(choices)),
+        loops=unknowns.incidence.T @ rows,
+        fit=unknowns.incidence.T @ fit.T,
+        zero=-constant @ rows,
+        theta_zero=-fit @ constant,
+        shared=tuple(shared),
+        groups=places,
+        low=model.low,
+        high=model.high,
+        weight=weight,
+        switch_on=target.switch_on,
+        slow=1.0 / target.op_amp.gain_bandwidth,
+    )
