@@ -8,13 +8,15 @@ so that a sweep grows with the number of wires and no dense matrix is made.
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from math import log
 
 import numpy as np
 from numpy.typing import NDArray
 
+from patchplan.sizing.loops import Circuits
 from patchplan.sizing.model import Model
+from patchplan.sizing.realised import residual_of
 from patchplan.sizing.records import Target
 from patchplan.sizing.values import Values, pick_stage_values, resistor, start_ratios, wanted_products
 
@@ -48,7 +50,7 @@ class _Rows:
         return away
 
 
-def choose_large(model: Model, target: Target, *, comfortable: Mapping[str, float]) -> Values:
+def choose_large(model: Model, target: Target, circuits: Circuits, *, comfortable: Mapping[str, float]) -> Values:
     """Values, scale factors and speed of a board with many wires; as ``choose_values``, from several speeds."""
     best: Values | None = None
     for start in _starts(model):
@@ -59,7 +61,9 @@ def choose_large(model: Model, target: Target, *, comfortable: Mapping[str, floa
         if best is None or found.worst < best.worst:
             best = found
     assert best is not None
-    return best
+    residual = residual_of(model, target, best.parts)
+    left = residual - np.array([model.at(r.want, best.theta) - r.want.constant for r in model.ratios])
+    return replace(best, errors=np.expm1(-left), loop_errors=circuits.errors(residual))
 
 
 def _starts(model: Model) -> Iterator[Array]:

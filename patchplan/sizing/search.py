@@ -1,8 +1,4 @@
-"""Purchasable values whose rounding cancels around the loops.
-
-With the logs of the chosen values y and r = B y, only the part of r - b outside the range of A is a real error: scale
-factors and speed take up the rest. The descent moves one value or two at a time and looks at that part alone.
-"""
+"""What errors of rows do to the watched signals, and the scale factors that make what values leave over count least."""
 
 from __future__ import annotations
 
@@ -14,8 +10,6 @@ from numpy.typing import NDArray
 Array = NDArray[np.float64]
 #: Weight of the largest coefficient error against the largest predicted error when the rest is shared out.
 ROW_SHARE = 0.3
-#: Pairs are tried among this many of the best single moves.
-MOST_PAIRED = 300
 
 
 @dataclass(frozen=True)
@@ -40,119 +34,6 @@ class Effect:
         sensitive and on docile problems, and a linear prediction is not trusted with large errors.
         """
         return max(1.0, 0.1 * float(np.abs(self.response).max(initial=0.0)))
-
-
-@dataclass(frozen=True)
-class Loops:
-    """The part of the predicted error that no theta can take away: basis' (shape (r - b) + base).
-
-    Attributes
-    ----------
-    basis
-        Orthonormal, shape ``(n_rows, n_loops)``.
-    shape
-        Square root of the error measure, shape ``(n_rows, n_rows)``.
-    base
-        Shape ``(n_rows,)``.
-    fit
-        Least-squares theta of residuals, shape ``(n_theta, n_rows)``.
-    """
-
-    basis: Array
-    shape: Array
-    base: Array
-    fit: Array
-
-    def outside(self, residual: Array, low: Array, high: Array) -> float:
-        """How far the best theta lies outside its bounds, in logs: about what staying inside costs in error."""
-        theta = self.fit @ (self.shape @ residual + self.base)
-        return float(np.max(np.maximum(low - theta, theta - high), initial=0.0))
-
-    def errors(self, residual: Array) -> Array:
-        """Loop errors of residuals r - b, shape ``(n_loops,)``."""
-        loops: Array = self.basis.T @ (self.shape @ residual + self.base)
-        return loops
-
-
-def find_loops(matrix: Array, effect: Effect) -> Loops:
-    """Loops under the measure (mean square of the predicted error) + (row weight * row errors)^2.
-
-    The second part keeps single coefficients near even where the watched signals hardly show them.
-    """
-    from scipy.linalg import null_space, qr
-
-    points, rows = effect.response.shape
-    stacked = np.vstack([effect.response / np.sqrt(max(points, 1)), effect.row_weight * np.eye(rows)])
-    q, shape = qr(stacked, mode="economic")
-    base = q[:points].T @ (effect.base / np.sqrt(max(points, 1)))
-    basis = null_space((shape @ matrix).T) if matrix.shape[1] else np.eye(rows)
-    return Loops(basis, shape, base, np.linalg.pinv(shape @ matrix))
-
-
-def loop_errors(matrix: Array, residual: Array) -> Array:
-    """Plain relative error of each independent loop, whatever it does to the signals."""
-    from scipy.linalg import null_space
-
-    basis = null_space(matrix.T) if matrix.shape[1] else np.eye(len(residual))
-    errors: Array = basis.T @ residual
-    return errors
-
-
-@dataclass(frozen=True)
-class Menu:
-    """Moves: move k sets the unknowns marked in column k to the log values there.
-
-    Attributes
-    ----------
-    touched, value
-        Shape ``(n_unknowns, n_moves)``. A move of one resistor touches one unknown; a move of a capacitor takes all
-        resistors of its stage along.
-    """
-
-    touched: Array
-    value: Array
-
-
-def descend(loops: Loops, incidence: Array, offset: Array, menu: Menu, start: Array, *, sweeps: int = 200) -> Array:
-    """Descend on the squared loop errors over single and paired moves.
-
-    Parameters
-    ----------
-    incidence
-        B, shape ``(n_rows, n_unknowns)``.
-    offset
-        b less what is fixed, shape ``(n_rows,)``: residual = B y - offset.
-    menu
-        Candidate moves.
-    start
-        Log values to begin from, shape ``(n_unknowns,)``.
-    sweeps
-        Most moves taken.
-
-    Returns
-    -------
-    Array
-        Log values, shape ``(n_unknowns,)``, from which no single or paired move of the menu improves.
-    """
-    effect = loops.basis.T @ (loops.shape @ incidence)
-    y = start.copy()
-    clash = (menu.touched.T @ menu.touched) > 0
-    target = effect @ (menu.touched * menu.value)
-    for _ in range(sweeps if effect.size and menu.value.size else 0):
-        errors = loops.errors(incidence @ y - offset)
-        change = target - effect @ (menu.touched * y[:, None])
-        single = 2.0 * (errors @ change) + np.einsum("lk,lk->k", change, change)
-        likely = np.argsort(single, kind="stable")[:MOST_PAIRED]
-        paired = single[likely][:, None] + single[likely][None, :] + 2.0 * (change[:, likely].T @ change[:, likely])
-        paired[clash[np.ix_(likely, likely)]] = np.inf
-        first, second = divmod(int(np.argmin(paired)), len(likely))
-        alone, together = single[likely[0]], paired[first, second]
-        moves = [likely[0]] if alone <= together else [likely[first], likely[second]]
-        if min(alone, together) > -1e-14:
-            break
-        for move in moves:
-            y = np.where(menu.touched[:, move] > 0, menu.value[:, move], y)
-    return y
 
 
 def split_rest(matrix: Array, residual: Array, effect: Effect, low: Array, high: Array) -> tuple[Array, float]:

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from functools import cached_property, lru_cache
-from math import exp
+from math import exp, log
 
 import numpy as np
 from numpy.typing import NDArray
@@ -20,6 +20,10 @@ Array = NDArray[np.float64]
 FEEDBACK = (5e3, 1e5)
 #: Start networks hold through a feedback resistor near this value [ohm] (common practice, no source).
 START_FEEDBACK = 2e4
+#: How far capacitors and feedback resistors may move from those picked at first, in logs: two steps of E6, six of E24.
+CAPACITOR_WIDTH, FEEDBACK_WIDTH = 0.9, 0.6
+#: Networks of three are offered to legs that are wanted above this share of the largest resistor, in logs.
+NETWORKS_FROM = 0.2
 
 
 @dataclass(frozen=True)
@@ -32,7 +36,7 @@ class Choice:
     @cached_property
     def into(self) -> Array:
         """Conductance that a summing node sees into each leg, its source at ground [S]."""
-        return np.array([Leg(p).into for p in self.parts])
+        return np.array([1.0 / Leg(p).into for p in self.parts])
 
     def near(self, wanted: float, width: float) -> Array:
         """Positions of the values within ``width`` of a wanted log, at least the nearest one."""
@@ -114,6 +118,38 @@ def plain(values: tuple[float, ...]) -> Choice:
     return Choice(np.log(np.array(values)), tuple((v,) for v in values))
 
 
+@lru_cache(maxsize=8)
+def all_legs(resistors: tuple[float, ...]) -> Choice:
+    """One resistor, or above the largest a network of three."""
+    single, long = plain(resistors), _networks(resistors)
+    kept = np.flatnonzero(long.logs > single.logs[-1] + 1e-9)
+    return Choice(np.concatenate([single.logs, long.logs[kept]]), single.parts + tuple(long.parts[k] for k in kept))
+
+
+def choices_of(
+    unknowns: Unknowns, target: Target, picked: Mapping[tuple[str, int | str], float], centre: Array
+) -> tuple[Choice, ...]:
+    """What each unknown may be, near the stage values picked and the logs wanted, shape ``(n_unknowns,)``."""
+    least, most = log(target.resistors[0]), log(target.resistors[-1])
+    legs = [(s, x) for (s, what), x in zip(unknowns.names, centre.tolist(), strict=True) if what not in ("C", "Rf", -1)]
+    tight = {stage for stage, x in legs if x < least + NETWORKS_FROM}
+    long = {stage for stage, x in legs if x > most} - tight
+    choices = []
+    for (stage, what), wanted in zip(unknowns.names, centre.tolist(), strict=True):
+        if isinstance(what, str):
+            series, width = (target.capacitors, CAPACITOR_WIDTH) if what == "C" else (target.resistors, FEEDBACK_WIDTH)
+            # A stage with a network of three keeps the capacitor that needs the least of it, as offsets count by it,
+            # unless it has small resistors, too.
+            width = 0.0 if what == "C" and stage in long else width
+            choices.append(plain(tuple(v for v in series if abs(log(v) - wanted) <= width + 1e-9)))
+        elif what == -1:
+            choices.append(start_ratios(target.resistors))
+        else:
+            reach = most - NETWORKS_FROM
+            choices.append(all_legs(target.resistors) if wanted > reach else plain(target.resistors))
+    return tuple(choices)
+
+
 def resistor(wanted: float, target: Target) -> Choice:
     """One resistor, or a network of three where the wanted transfer resistance is above the largest [ohm]."""
     if wanted <= 1.03 * target.resistors[-1]:
@@ -126,23 +162,6 @@ def _networks(resistors: tuple[float, ...]) -> Choice:
     """Networks of three resistors, above the largest single one."""
     parts = networks(resistors)
     return Choice(np.log(np.array([Leg(p).transfer for p in parts])), parts)
-
-
-@lru_cache(maxsize=8)
-def all_legs(resistors: tuple[float, ...]) -> Choice:
-    """Every leg: one resistor, or above the largest a T whose arms are among the smallest that reach so far."""
-    values = np.array(resistors)
-    top, least = 1.03 * values[-1], 0.0
-    found = {round(float(np.log(v)), 12): (float(v),) for v in resistors}
-    for arm in values.tolist():
-        reach = 2 * arm + arm**2 / (2 * values[0])
-        for shunt in values[values <= arm].tolist():
-            transfer = Leg((arm, shunt, arm)).transfer
-            if max(top, least) < transfer <= min(reach, T_REACH * values[-1]):
-                found.setdefault(round(float(np.log(transfer)), 12), (arm, shunt, arm))
-        least = reach
-    logs = sorted(found)
-    return Choice(np.array(logs), tuple(found[x] for x in logs))
 
 
 @lru_cache(maxsize=8)

@@ -1,14 +1,15 @@
 """Loop errors of many candidate boards at once, and the moves that change them.
 
-A candidate is one place on the grid of every unknown. Loop errors and scale factors are linear in the logs of the values
-apart from what the switches and the op amps' bandwidth add, which all legs of a stage share; both are kept exactly as
-values move.
+A candidate is one place on the grid of every unknown. Loop errors and scale factors are linear in the logs of the
+values, apart from what switches and the op amps' bandwidth add, which all legs of a stage share; both are kept exactly
+as values move.
 """
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass
+from math import log
 
 import numpy as np
 from numpy.typing import NDArray
@@ -26,6 +27,7 @@ POWER = 4
 FLOOR = 3e-7
 #: What scale factors outside their bounds cost: e-folds of loop error per unit of their logs.
 OUTSIDE = 40.0
+_STATE = ("place", "y", "sums", "errors", "theta")
 
 
 @dataclass(frozen=True)
@@ -76,6 +78,11 @@ class Field:
     weight: Array
     switch_on: float
     slow: float
+
+    @property
+    def least(self) -> float:
+        """Energy of a candidate that need not be bettered."""
+        return log(2 * FLOOR)
 
     def energy(self, errors: Array, theta: Array) -> Array:
         """Log of the weighted loop errors' norm, and what it costs to be out of bounds; the last axis goes."""
@@ -135,7 +142,9 @@ class Crowd:
             errors, theta = errors + step[..., None] * group.loops, theta + step[..., None] * group.fit
         return errors, theta
 
-    def take(self, columns: Sequence[int], places: Sequence[Indices], changed: tuple[Array, Array], option: Indices) -> None:
+    def take(
+        self, columns: Sequence[int], places: Sequence[Indices], changed: tuple[Array, Array], option: Indices
+    ) -> None:
         """Move every candidate to one of its options."""
         every = np.arange(len(option))
         self.errors, self.theta = changed[0][every, option], changed[1][every, option]
@@ -147,11 +156,28 @@ class Crowd:
             self.place[:, u] = new
             self.y[:, u] = self.field.grids[u][new]
 
+    def repeated(self, count: int) -> Crowd:
+        """Each candidate so many times."""
+        return Crowd(self.field, *(np.repeat(getattr(self, name), count, axis=0) for name in _STATE))
+
+    def copy(self, other: Crowd, rows: Indices, into: Indices) -> None:
+        """Replace some candidates by those of another crowd."""
+        for name in _STATE:
+            getattr(self, name)[into] = getattr(other, name)[rows]
+
 
 def _shift(field: Field, group: Shared, total: Array, capacitor: Array) -> Array:
     """Log by which a shared on-resistance and finite bandwidth make R*C larger."""
     slow = field.slow * np.exp(-capacitor) if group.capacitor >= 0 else 0.0
     return np.asarray(np.log1p(total * (field.switch_on + slow)))
+
+
+def nearest_place(grid: Array, wanted: Array) -> Indices:
+    """Places of the grid's values nearest to wanted logs."""
+    above = np.clip(np.searchsorted(grid, wanted), 1, max(len(grid) - 1, 1))
+    below = above - 1
+    above = np.minimum(above, len(grid) - 1)
+    return np.asarray(np.where(grid[above] - wanted < wanted - grid[below], above, below))
 
 
 def make_field(
@@ -198,7 +224,8 @@ def make_field(
         loops=unknowns.incidence.T @ rows,
         fit=unknowns.incidence.T @ fit.T,
         zero=-constant @ rows,
-        theta_zero=-fit @ constant,
+        # Where the rows leave theta open it stays near the middle of its bounds.
+        theta_zero=model.centre - fit @ (constant + matrix @ model.centre),
         shared=tuple(shared),
         groups=places,
         low=model.low,
