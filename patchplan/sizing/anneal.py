@@ -7,7 +7,7 @@ errors' norm, so that one schedule serves errors of any size.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -78,16 +78,19 @@ def find_moves(field: Field, names: Sequence[tuple[str, int | str]], ratios: Seq
     return Moves(tuple(leads), tuple(followers), tuple(pairs.values()), tuple(s for s in scales if s[0]))
 
 
-def anneal(crowd: Crowd, moves: Moves, random: np.random.Generator, sweeps: int) -> None:
-    """Move all candidates towards small loop errors, in place."""
+def anneal(
+    crowd: Crowd, moves: Moves, random: np.random.Generator, sweeps: int, enough: Callable[[Indices], bool]
+) -> None:
+    """Move all candidates towards small loop errors, in place, until the best one's places are good enough."""
     heat = [*np.geomspace(HOT, COLD, max(sweeps - LAST, 1)).tolist(), *[0.0] * LAST]
     for number, warmth in enumerate(heat):
-        energy = crowd.energy()
-        if not moves.followers or energy.min(initial=0.0) <= crowd.field.least:
+        if not moves.followers:
             return
-        if number % RENEWED == RENEWED - 1 and warmth:
-            order = np.argsort(energy, kind="stable")
-            count = int(len(order) * SHARE)
+        if number % RENEWED == 0 and warmth:
+            order = np.argsort(crowd.energy(), kind="stable")
+            if enough(crowd.place[order[0]]):
+                return
+            count = int(len(order) * SHARE) if number else 0
             crowd.copy(crowd, order[:count], order[len(order) - count :])
         _sweep(crowd, moves, warmth, random)
 
@@ -100,7 +103,7 @@ def _sweep(crowd: Crowd, moves: Moves, warmth: float, random: np.random.Generato
     for column in random.permutation(moves.followers).tolist():
         _settle(crowd, [column], [_near(crowd, column)], warmth, random)
     for pick in random.permutation(len(moves.pairs))[: len(moves.followers)].tolist():
-        _pair(crowd, *moves.pairs[pick], warmth, random)
+        _pair(crowd, moves.pairs[pick], warmth, random)
 
 
 def _near(crowd: Crowd, column: int) -> Indices:
@@ -115,7 +118,7 @@ def _settle(
 ) -> None:
     """Move each candidate to one of its options for some unknowns, drawn by energy."""
     changed = crowd.change(columns, places)
-    crowd.take(columns, places, changed, _drawn(crowd.field.energy(*changed), warmth, random))
+    crowd.take(columns, places, changed, _drawn(crowd.field.energy(changed), warmth, random))
 
 
 def _drawn(energy: Array, warmth: float, random: np.random.Generator) -> Indices:
@@ -125,9 +128,9 @@ def _drawn(energy: Array, warmth: float, random: np.random.Generator) -> Indices
     return np.asarray(np.argmin(energy, axis=1))
 
 
-def _pair(crowd: Crowd, one: int, other: int, loop: int, warmth: float, random: np.random.Generator) -> None:
+def _pair(crowd: Crowd, pair: tuple[int, int, int], warmth: float, random: np.random.Generator) -> None:
     """Move one unknown, and another to the values on either side of where their loop's error vanishes."""
-    field = crowd.field
+    field, (one, other, loop) = crowd.field, pair
     first = _near(crowd, one)
     step = field.grids[one][first] - crowd.y[:, one, None]
     left = crowd.errors[:, loop, None] + step * field.loops[one, loop]

@@ -21,26 +21,25 @@ from patchplan.sizing.values import Choice, Unknowns
 
 Array = NDArray[np.float64]
 Indices = NDArray[np.intp]
-#: Loop errors count by this power: near the largest of them, yet every one still counts.
+#: Loop errors count by this power, which is built in below: near the largest of them, yet every one still counts.
 POWER = 4
 #: Loop errors below this are as good as none.
 FLOOR = 3e-7
 #: What scale factors outside their bounds cost: e-folds of loop error per unit of their logs.
 OUTSIDE = 40.0
-_STATE = ("place", "y", "sums", "errors", "theta")
+_STATE = ("place", "y", "sums", "state")
 
 
 @dataclass(frozen=True)
 class Shared:
     """Legs that share a resistance in common: those of one integrator, or those from one switched source.
 
-    ``capacitor`` is the integrator's column, -1 for a source; ``loops`` and ``fit`` what a log added to all rows does.
+    ``capacitor`` is the integrator's column, -1 for a source; ``effect`` is what a log added to all rows does.
     """
 
     legs: Indices
     capacitor: int
-    loops: Array
-    fit: Array
+    effect: Array
 
 
 @dataclass(frozen=True)
@@ -53,101 +52,113 @@ class Field:
         Log values of each unknown, rising.
     into
         Conductance into the bus of each value of an unknown that is a leg [S].
-    loops, fit
-        What a unit of each unknown does to the loops, shape ``(n_unknowns, n_loops)``, and to theta.
-    zero, theta_zero
+    effect
+        What a unit of each unknown does to loop errors and theta, shape ``(n_unknowns, n_loops + n_theta)``.
+    zero
         Loop errors and theta at y = 0 without shift.
     shared
         Groups; ``groups`` gives the places of an unknown's groups.
-    low, high
-        Bounds of theta.
+    middle, reach
+        Of the bounds of theta.
     weight
         Of each loop, shape ``(n_loops,)``.
     """
 
     grids: tuple[Array, ...]
     into: tuple[Array, ...]
-    loops: Array
-    fit: Array
+    effect: Array
     zero: Array
-    theta_zero: Array
     shared: tuple[Shared, ...]
     groups: tuple[tuple[int, ...], ...]
-    low: Array
-    high: Array
+    middle: Array
+    reach: Array
     weight: Array
     switch_on: float
     slow: float
+
+    @property
+    def loops(self) -> Array:
+        """What a unit of each unknown does to the loops, shape ``(n_unknowns, n_loops)``."""
+        return self.effect[:, : len(self.weight)]
 
     @property
     def least(self) -> float:
         """Energy of a candidate that need not be bettered."""
         return log(2 * FLOOR)
 
-    def energy(self, errors: Array, theta: Array) -> Array:
+    def energy(self, state: Array) -> Array:
         """Log of the weighted loop errors' norm, and what it costs to be out of bounds; the last axis goes."""
-        size = ((self.weight * errors) ** POWER).sum(axis=-1) + FLOOR**POWER
-        out = np.maximum(np.maximum(self.low - theta, theta - self.high), 0.0).sum(axis=-1)
+        # Squared twice: a general power takes ten times as long.
+        squares = (self.weight * state[..., : len(self.weight)]) ** 2
+        size = np.einsum("...l,...l->...", squares, squares) + FLOOR**POWER
+        beyond = np.abs(state[..., len(self.weight) :] - self.middle) - self.reach
+        out = np.maximum(beyond, 0.0, out=beyond).sum(axis=-1)
         return np.asarray(np.log(size) / POWER + OUTSIDE * out)
 
 
 @dataclass
 class Crowd:
-    """Candidates: places on the grids, and what follows from them (first axis: candidate)."""
+    """Candidates: places on the grids, and what follows from them (first axis: candidate).
+
+    ``state`` holds loop errors and theta, ``sums`` the conductance of each group.
+    """
 
     field: Field
     place: Indices
     y: Array
     sums: Array
-    errors: Array
-    theta: Array
+    state: Array
 
     @classmethod
     def at(cls, field: Field, place: Indices) -> Crowd:
         """Candidates at given places, shape ``(n_candidates, n_unknowns)``."""
         y = np.stack([grid[place[:, u]] for u, grid in enumerate(field.grids)], axis=1)
         sums = np.zeros((len(place), len(field.shared)))
-        errors, theta = field.zero + y @ field.loops, field.theta_zero + y @ field.fit
+        state = field.zero + y @ field.effect
         for g, group in enumerate(field.shared):
             sums[:, g] = sum(field.into[u][place[:, u]] for u in group.legs)
-            shift = _shift(field, group, sums[:, g], y[:, group.capacitor])
-            errors, theta = errors + shift[:, None] * group.loops, theta + shift[:, None] * group.fit
-        return cls(field, place, y, sums, errors, theta)
+            state = state + _shift(field, group, sums[:, g], y[:, group.capacitor])[:, None] * group.effect
+        return cls(field, place, y, sums, state)
+
+    @property
+    def errors(self) -> Array:
+        """Loop errors, shape ``(n_candidates, n_loops)``."""
+        return self.state[:, : len(self.field.weight)]
 
     def energy(self) -> Array:
         """Energy of every candidate."""
-        return self.field.energy(self.errors, self.theta)
+        return self.field.energy(self.state)
 
-    def change(self, columns: Sequence[int], places: Sequence[Indices]) -> tuple[Array, Array]:
-        """Loop errors and theta if unknowns move to places of shape ``(n_candidates, n_options)`` each."""
+    def change(self, columns: Sequence[int], places: Sequence[Indices]) -> Array:
+        """State if unknowns move to places of shape ``(n_candidates, n_options)`` each."""
         field = self.field
-        errors, theta = self.errors[:, None, :], self.theta[:, None, :]
         sums: dict[int, Array] = {}
         moved: dict[int, Array] = {}
+        steps, effects = [], []
         for u, where in zip(columns, places, strict=True):
-            value = field.grids[u][where]
-            step = (value - self.y[:, u, None])[..., None]
-            errors, theta = errors + step * field.loops[u], theta + step * field.fit[u]
-            moved[u] = value
+            moved[u] = field.grids[u][where]
+            steps.append(moved[u] - self.y[:, u, None])
+            effects.append(field.effect[u])
             for g in field.groups[u]:
-                before = sums.get(g, self.sums[:, g, None])
+                total = sums.get(g, self.sums[:, g, None])
                 if u != field.shared[g].capacitor:
-                    before = before + field.into[u][where] - field.into[u][self.place[:, u]][:, None]
-                sums[g] = before
+                    total = total + field.into[u][where] - field.into[u][self.place[:, u]][:, None]
+                sums[g] = total
         for g, total in sums.items():
             group = field.shared[g]
             old = self.y[:, group.capacitor, None]
             new = moved.get(group.capacitor, old) if group.capacitor >= 0 else old
-            step = _shift(field, group, total, new) - _shift(field, group, self.sums[:, g, None], old)
-            errors, theta = errors + step[..., None] * group.loops, theta + step[..., None] * group.fit
-        return errors, theta
+            shift = _shift(field, group, total, new) - _shift(field, group, self.sums[:, g, None], old)
+            steps.append(np.broadcast_to(shift, steps[0].shape))
+            effects.append(group.effect)
+        change: Array = np.stack(steps, axis=-1) @ np.stack(effects)
+        change += self.state[:, None, :]
+        return change
 
-    def take(
-        self, columns: Sequence[int], places: Sequence[Indices], changed: tuple[Array, Array], option: Indices
-    ) -> None:
+    def take(self, columns: Sequence[int], places: Sequence[Indices], changed: Array, option: Indices) -> None:
         """Move every candidate to one of its options."""
         every = np.arange(len(option))
-        self.errors, self.theta = changed[0][every, option], changed[1][every, option]
+        self.state = changed[every, option]
         for u, where in zip(columns, places, strict=True):
             new = where[every, option]
             for g in self.field.groups[u]:
@@ -201,8 +212,9 @@ def make_field(
     weight
         Of each loop.
     """
-    rows = circuits.dense(len(constant))
+    # What a unit of each row's residual does. Where the rows leave theta open it stays near the middle of its bounds.
     fit = np.linalg.pinv(matrix) if matrix.shape[1] else np.zeros((0, len(constant)))
+    rows = np.hstack([circuits.dense(len(constant)), fit.T])
     at = {name: c for c, name in enumerate(unknowns.names)}
     groups: dict[tuple[str, str], list[int]] = {}
     for row, ratio in enumerate(model.ratios):
@@ -213,23 +225,21 @@ def make_field(
     shared = []
     for (name, what), members in groups.items():
         legs = np.array([at[model.ratios[r].stage, model.ratios[r].wire] for r in members], dtype=np.intp)
-        capacitor = at[name, "C"] if what == "C" else -1
-        shared.append(Shared(legs, capacitor, rows[members].sum(axis=0), fit[:, members].sum(axis=1)))
+        shared.append(Shared(legs, at[name, "C"] if what == "C" else -1, rows[members].sum(axis=0)))
     places = tuple(
         tuple(g for g, s in enumerate(shared) if u in s.legs or u == s.capacitor) for u in range(len(unknowns.names))
     )
     return Field(
         grids=tuple(c.logs for c in choices),
         into=tuple(c.into if places[u] else c.logs for u, c in enumerate(choices)),
-        loops=unknowns.incidence.T @ rows,
-        fit=unknowns.incidence.T @ fit.T,
-        zero=-constant @ rows,
-        # Where the rows leave theta open it stays near the middle of its bounds.
-        theta_zero=model.centre - fit @ (constant + matrix @ model.centre),
+        effect=unknowns.incidence.T @ rows,
+        zero=np.concatenate(
+            [-constant @ rows[:, : len(weight)], model.centre - fit @ (constant + matrix @ model.centre)]
+        ),
         shared=tuple(shared),
         groups=places,
-        low=model.low,
-        high=model.high,
+        middle=model.centre,
+        reach=(model.high - model.low) / 2,
         weight=weight,
         switch_on=target.switch_on,
         slow=1.0 / target.op_amp.gain_bandwidth,

@@ -28,11 +28,12 @@ from patchplan.sizing.values import (
 
 Array = NDArray[np.float64]
 #: By how hard to think: most rounds, and the part of the spread between boards below which errors are good enough.
-ROUNDS = {"low": (1, 0.2), "normal": (3, 0.1), "high": (8, 0.005)}
+ROUNDS = {"low": (1, 0.3), "normal": (2, 0.1), "high": (8, 0.005)}
 #: Candidates of a round, and its sweeps over all values; fewer candidates for boards with more ratios than ``ROOMY``.
 CANDIDATES, SWEEPS, ROOMY = 32, 30, 16
-#: The error that is good enough is at most this fraction of peak, however much boards differ.
-MOST_ERROR = 1e-3
+#: The error that is good enough is at most this fraction of peak, however much boards differ, and a loop's at most so
+#: many times that part of its own spread, whether or not a watched signal shows it.
+MOST_ERROR, UNSEEN = 1.5e-3, 3.0
 #: Boards with more ratios than this take only the search that grows no faster than the board.
 LARGE = 150
 #: Candidates of each round that are finished and compared.
@@ -88,7 +89,7 @@ def choose_values(
     found: list[Values] = []
     for number in range(max(1, round(rounds * min(1.0, 2 * ROOMY / max(len(model.ratios), 1))))):
         crowd = Crowd.at(board.field, _starts(board, random, first=number == 0))
-        anneal(crowd, board.moves, random, SWEEPS)
+        anneal(crowd, board.moves, random, SWEEPS, lambda place: _hidden(board, _finish(board, place), share))
         order = np.argsort(crowd.energy(), kind="stable")
         distinct = list({crowd.place[k].tobytes(): k for k in order[::-1]}.values())[::-1]
         found += [_finish(board, crowd.place[k]) for k in distinct[:FINISHED]]
@@ -156,7 +157,7 @@ def _centre(model: Model, unknowns: Unknowns, wanted: Array, picked: Mapping[tup
         if what >= 0:
             ratio *= 1.0 / picked[stage, "C"] if (stage, "C") in picked else picked.get((stage, "Rf"), 1.0)
         centre.append(ratio)
-    return np.log(np.array(centre))
+    return np.asarray(np.log(np.array(centre)))
 
 
 def _finish(board: _Board, place: Indices) -> Values:
@@ -181,7 +182,9 @@ def _hidden(board: _Board, values: Values, share: float) -> bool:
     spread = np.sqrt((((board.effect.response @ board.unknowns.incidence) * sigma) ** 2).sum(axis=1)).max(initial=0.0)
     seen = np.abs(board.effect.response @ _logs(values)).max(initial=0.0)
     loops = np.abs(values.loop_errors).max(initial=0.0)
-    return bool(seen <= min(share * spread, MOST_ERROR) and loops <= share * np.hypot(resistor, capacitor))
+    return bool(
+        seen <= min(share * spread, 10 * share * MOST_ERROR) and loops <= UNSEEN * share * np.hypot(resistor, capacitor)
+    )
 
 
 def _cost(board: _Board, values: Values) -> float:
