@@ -15,8 +15,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from patchplan.sizing.loops import Circuits
+from patchplan.sizing.losses import residual_of
 from patchplan.sizing.model import Model
-from patchplan.sizing.realised import residual_of
 from patchplan.sizing.records import Target
 from patchplan.sizing.values import Values, pick_stage_values, resistor, start_ratios, wanted_products
 

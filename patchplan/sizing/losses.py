@@ -2,11 +2,14 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
+from math import log
+
 import numpy as np
 from numpy.typing import NDArray
 
-from patchplan.sizing.model import Ratio
-from patchplan.sizing.records import Target
+from patchplan.sizing.model import Model, Ratio
+from patchplan.sizing.records import Leg, Target
 
 Array = NDArray[np.float64]
 
@@ -35,3 +38,24 @@ def added_logs(ratios: tuple[Ratio, ...], target: Target, resistance: Array, cap
     shares = [(extra[r.stage] if r.kind == "integrator" else 0.0, extra.get(r.switched, 0.0)) for r in ratios]
     total: Array = np.log1p(np.array(shares).reshape(-1, 2)).sum(axis=1)
     return total
+
+
+def residual_of(model: Model, target: Target, parts: Mapping[tuple[str, int | str], tuple[float, ...]]) -> Array:
+    """What named parts make of every row: log of its product or ratio, losses counted, less b, shape ``(n_rows,)``."""
+    made, ohm, farad = np.zeros((3, len(model.ratios)))
+    for row, ratio in enumerate(model.ratios):
+        made[row] = -ratio.want.constant
+        ohm[row] = farad[row] = 1.0
+        if ratio.kind == "start":
+            first, second = parts[ratio.stage, -1]
+            made[row] += log(second / first)
+            continue
+        leg = Leg(parts[ratio.stage, ratio.wire])
+        ohm[row] = leg.into
+        made[row] += log(leg.transfer)
+        if ratio.kind == "integrator":
+            (farad[row],) = parts[ratio.stage, "C"]
+            made[row] += log(farad[row])
+        elif (ratio.stage, "Rf") in parts:
+            made[row] -= log(parts[ratio.stage, "Rf"][0])
+    return np.asarray(made + added_logs(model.ratios, target, ohm, farad))

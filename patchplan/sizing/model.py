@@ -92,6 +92,15 @@ class Model:
         return affine.constant + sum(v * float(theta[c]) for c, v in affine.slope.items())
 
 
+def matrix_of(model: Model) -> tuple[Array, Array]:
+    """A of shape ``(n_rows, n_theta)`` and b of shape ``(n_rows,)``."""
+    matrix = np.zeros((len(model.ratios), len(model.low)))
+    for row, ratio in enumerate(model.ratios):
+        for column, value in ratio.want.slope.items():
+            matrix[row, column] += value
+    return matrix, np.array([r.want.constant for r in model.ratios])
+
+
 def node_limits(patch: Patch, target: Target) -> dict[str, float]:
     """Volts that each node may reach: the op amp's swing into its load, less where a multiplier takes or makes it."""
     swing = min(-target.op_amp.low, target.op_amp.high)

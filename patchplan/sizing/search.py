@@ -36,6 +36,53 @@ class Effect:
         return max(1.0, 0.1 * float(np.abs(self.response).max(initial=0.0)))
 
 
+@dataclass(frozen=True)
+class Loops:
+    """The part of the predicted error that no theta can take away: basis' (shape (r - b) + base).
+
+    Attributes
+    ----------
+    basis
+        Orthonormal, shape ``(n_rows, n_loops)``.
+    shape
+        Square root of the error measure, shape ``(n_rows, n_rows)``.
+    base
+        Shape ``(n_rows,)``.
+    fit
+        Least-squares theta of residuals, shape ``(n_theta, n_rows)``.
+    """
+
+    basis: Array
+    shape: Array
+    base: Array
+    fit: Array
+
+    def outside(self, residual: Array, low: Array, high: Array) -> float:
+        """How far the best theta lies outside its bounds, in logs: about what staying inside costs in error."""
+        theta = self.fit @ (self.shape @ residual + self.base)
+        return float(np.max(np.maximum(low - theta, theta - high), initial=0.0))
+
+    def errors(self, residual: Array) -> Array:
+        """Loop errors of residuals r - b, shape ``(n_loops,)``."""
+        loops: Array = self.basis.T @ (self.shape @ residual + self.base)
+        return loops
+
+
+def find_loops(matrix: Array, effect: Effect) -> Loops:
+    """Loops under the measure (mean square of the predicted error) + (row weight * row errors)^2.
+
+    The second part keeps single coefficients near even where the watched signals hardly show them.
+    """
+    from scipy.linalg import null_space, qr
+
+    points, rows = effect.response.shape
+    stacked = np.vstack([effect.response / np.sqrt(max(points, 1)), effect.row_weight * np.eye(rows)])
+    q, shape = qr(stacked, mode="economic")
+    base = q[:points].T @ (effect.base / np.sqrt(max(points, 1)))
+    basis = null_space((shape @ matrix).T) if matrix.shape[1] else np.eye(rows)
+    return Loops(basis, shape, base, np.linalg.pinv(shape @ matrix))
+
+
 def split_rest(matrix: Array, residual: Array, effect: Effect, low: Array, high: Array) -> tuple[Array, float]:
     """Theta inside its bounds that shares the rest out, and the largest predicted error of a watched signal.
 

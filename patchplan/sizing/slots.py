@@ -11,12 +11,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from patchplan.patch.records import Patch
-from patchplan.sizing.model import Model
+from patchplan.sizing.model import Model, matrix_of
 from patchplan.sizing.pieces import Shelf
 from patchplan.sizing.records import Target
 from patchplan.sizing.search import Effect, Loops, find_loops
 from patchplan.sizing.stock import counts, matched_pair, without
-from patchplan.sizing.trial import matrix_of
 from patchplan.sizing.values import START_FEEDBACK
 
 Array = NDArray[np.float64]

@@ -16,11 +16,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from patchplan.patch.records import Patch
+from patchplan.sizing.loops import find_circuits
 from patchplan.sizing.losses import added_logs
 from patchplan.sizing.model import Model
 from patchplan.sizing.pieces import Menu, State, assigned, descend_counted, menu_of, t_options
 from patchplan.sizing.records import Target
-from patchplan.sizing.search import Effect, loop_errors, merit, split_rest
+from patchplan.sizing.search import Effect, merit, split_rest
 from patchplan.sizing.slots import EASY, Name, Slots, find_slots
 from patchplan.sizing.speed_errors import COMFORTABLE
 from patchplan.sizing.stock import PLENTY, missing_sentence
@@ -254,4 +255,4 @@ def _finish(board: Slots, state: State) -> Values:
             held[stage, -1] = held.pop((stage, "S1")) + held.pop((stage, "S2"))
     for stage, (leg, feedback) in board.pairs.items():
         held |= {(stage, 0): (leg,), (stage, "Rf"): (feedback,)}
-    return Values(held, theta, worst, loop_errors(board.matrix, residual), errors)
+    return Values(held, theta, worst, find_circuits(board.model).errors(residual), errors)

@@ -12,8 +12,8 @@ from patchplan.sizing.anneal import Moves, anneal, find_moves
 from patchplan.sizing.crowd import Crowd, Field, Indices, make_field, nearest_place
 from patchplan.sizing.large import choose_large, settled_start
 from patchplan.sizing.loops import Circuits, find_circuits
-from patchplan.sizing.model import Model
-from patchplan.sizing.realised import residual_of
+from patchplan.sizing.losses import residual_of
+from patchplan.sizing.model import Model, matrix_of
 from patchplan.sizing.records import Target
 from patchplan.sizing.search import Effect, merit, split_rest
 from patchplan.sizing.values import (
@@ -35,7 +35,7 @@ CANDIDATES, SWEEPS, ROOMY = 32, 30, 16
 #: many times that part of its own spread, whether or not a watched signal shows it.
 MOST_ERROR, UNSEEN = 1.5e-3, 3.0
 #: Boards with more ratios than this take only the search that grows no faster than the board.
-LARGE = 150
+LARGE = 70
 #: Candidates of each round that are finished and compared.
 FINISHED = 4
 #: Where the first candidate of a round begins in theta: its middle; the others are scattered this share of the bounds.
@@ -109,15 +109,6 @@ def _board(
     field = make_field(model, target, unknowns, choices, circuits, matrix, constant, _loop_weights(circuits, effect))
     moves = find_moves(field, unknowns.names, model.ratios, matrix)
     return _Board(model, target, unknowns, choices, matrix, effect, circuits, field, moves, comfortable)
-
-
-def matrix_of(model: Model) -> tuple[Array, Array]:
-    """A of shape ``(n_rows, n_theta)`` and b of shape ``(n_rows,)``."""
-    matrix = np.zeros((len(model.ratios), len(model.low)))
-    for row, ratio in enumerate(model.ratios):
-        for column, value in ratio.want.slope.items():
-            matrix[row, column] += value
-    return matrix, np.array([r.want.constant for r in model.ratios])
 
 
 def _loop_weights(circuits: Circuits, effect: Effect) -> Array:
