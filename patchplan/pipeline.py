@@ -22,6 +22,7 @@ from patchplan.errors import ProblemFaults
 from patchplan.form.offsets import find_form
 from patchplan.form.records import Form
 from patchplan.form.rewrite import Rewritten, with_forms
+from patchplan.horizon import within_horizon
 from patchplan.patch.build import build_patch
 from patchplan.patch.records import Patch
 from patchplan.ranges import Ranges, find_ranges
@@ -32,6 +33,7 @@ from patchplan.sensitivity import Sensitivity, find_sensitivity
 from patchplan.shortlist import Forms, as_written, consider, handicap, shortlist, told
 from patchplan.sizing.records import Sizing, Target
 from patchplan.sizing.size import size
+from patchplan.sizing.trimming import find_trimming, with_trimmers
 
 #: A plan with offsets has more wires and must better the plan without by this factor in error and spread together.
 OFFSET_COST = 1.25
@@ -174,9 +176,12 @@ def sized(
 ) -> Sizing:  # fmt: skip
     """Values for one Target."""
     speed = build.speed if choices.speed is None else choices.speed
-    return size(
-        form, patch, ranges, sensitivity, target, speed=speed, run=build.run, think=choices.think, accept=accept
-    )
+    # Trimmed boards differ so little that rounding shows.
+    think = "high" if build.trim and choices.think == "normal" else choices.think
+    sizing = size(form, patch, ranges, sensitivity, target, speed=speed, run=build.run, think=think, accept=accept)
+    near = within_horizon(sensitivity, linear=form.system.is_linear)
+    trimming = find_trimming(form, patch, ranges, near, sizing, target, accept=accept, fitted=build.trim)
+    return with_trimmers(patch, near, replace(sizing, trimming=trimming))
 
 
 def not_buildable(faults: tuple[str, ...]) -> Verdict:

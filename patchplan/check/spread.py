@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Container
-from math import hypot, sqrt
+from math import sqrt
 
 import numpy as np
 from numpy.typing import NDArray
@@ -12,7 +12,8 @@ from patchplan.circuit.switched import switched_volts
 from patchplan.patch.records import Patch, Stage
 from patchplan.sensitivity import Sensitivity
 from patchplan.sizing.records import Sizing, StageSizing, Target
-from patchplan.sizing.stock import tolerance_of
+from patchplan.sizing.tolerances import tolerance_columns
+from patchplan.sizing.trimming import trimmed_by
 
 Array = NDArray[np.float64]
 
@@ -23,7 +24,7 @@ def spread_of(sensitivity: Sensitivity, patch: Patch, sizing: Sizing, target: Ta
     Parameters
     ----------
     sensitivity, patch, sizing, target
-        The plan; a tolerance t is taken as uniform, sigma = t / sqrt(3).
+        The plan; a tolerance t is taken as uniform, sigma = t / sqrt(3). Trimmers on the board take up what they can.
 
     Returns
     -------
@@ -31,42 +32,20 @@ def spread_of(sensitivity: Sensitivity, patch: Patch, sizing: Sizing, target: Ta
         ``resistors``, ``capacitors``, ``reference``, ``offsets``, ``multipliers``. Causes are independent.
     """
     resistor = target.resistor_tolerance / sqrt(3)
-
-    def ohm_sigma(value: float) -> float:
-        return tolerance_of(value, target.resistor_piles, target.resistor_tolerance) / sqrt(3)
-
-    columns: dict[str, list[Array]] = {
-        "resistors": [], "capacitors": [], "reference": [], "offsets": [], "multipliers": []
-    }  # fmt: skip
+    columns = tolerance_columns(sensitivity, patch, sizing, target) | {"reference": [], "offsets": []}
     wires = {key: i for i, key in enumerate(sensitivity.wires)}
     stages = {name: i for i, name in enumerate(sensitivity.stages)}
     for stage in patch.stages:
         if stage.kind in ("reference", "source") or stage.name not in stages:
             continue
-        own = [
-            sensitivity.coefficient[:, wires[key]] for i in range(len(stage.wires)) if (key := (stage.name, i)) in wires
-        ]
         rate = sensitivity.rate[:, stages[stage.name]]
         volts = sizing.scales[stage.node].volts_per_unit
         if stage.kind == "multiplier":
-            columns["multipliers"] += [target.multiplier.scale_error * x for x in own]
             columns["multipliers"].append(target.multiplier.offset / volts * rate)
             continue
         sized = sizing.stages[stage.name]
-        for leg, response in zip(sized.legs, own, strict=False):
-            off = [share * ohm_sigma(ohm) for share, ohm in zip(leg.shares, leg.resistors, strict=True)]
-            columns["resistors"].append(hypot(*off) * response)
-        shared = np.sum(own, axis=0) if own else np.zeros_like(rate)
-        if stage.kind == "integrator":
-            farads = tolerance_of(sized.capacitor, target.capacitor_piles, target.capacitor_tolerance)
-            columns["capacitors"].append(farads / sqrt(3) * shared)
-        else:
-            columns["resistors"].append(ohm_sigma(sized.feedback) * shared)
         drift = target.op_amp.offset * _offset_gain(stage, sized, sizing.time_scale) / volts
         columns["offsets"].append(drift * _leaked(sensitivity.times, stage, sized, sizing.time_scale) * rate)
-        if sized.start is not None and sized.start[0]:
-            start = sensitivity.start[stage.name] * sized.start_volts / volts
-            columns["resistors"].append(hypot(*map(ohm_sigma, sized.start)) * start)
     steps = _steps(sensitivity, patch, sizing, target)
     low = _through(sensitivity, patch, wires, {node for node, volts in steps.items() if volts < 0.0})
     high = _through(sensitivity, patch, wires, {node for node, volts in steps.items() if volts > 0.0})
@@ -75,7 +54,8 @@ def spread_of(sensitivity: Sensitivity, patch: Patch, sizing: Sizing, target: Ta
     reference = _reference(sensitivity, patch, sizing, wires) + low + high
     columns["reference"].append(target.reference_tolerance / sqrt(3) * reference)
     shape = sensitivity.coefficient.shape[::2]
-    return {cause: np.sqrt(sum((x**2 for x in list_), np.zeros(shape))) for cause, list_ in columns.items()}
+    trimmed = trimmed_by(sizing.trimming, sensitivity, patch, sizing)
+    return {cause: np.sqrt(sum((trimmed(x) ** 2 for x in list_), np.zeros(shape))) for cause, list_ in columns.items()}
 
 
 def _reference(sensitivity: Sensitivity, patch: Patch, sizing: Sizing, wires: dict[tuple[str, int], int]) -> Array:

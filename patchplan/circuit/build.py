@@ -17,6 +17,7 @@ from patchplan.circuit.records import Circuit, NodeMap, Part
 from patchplan.circuit.stages import REFERENCE_AMPERE, Board, add_stage
 from patchplan.circuit.switched import switched_volts
 from patchplan.circuit.target import check_multiplier, reference_for, switch_for
+from patchplan.circuit.trimmers import find_trims
 from patchplan.circuit.wiring import spare_switches, wiring_of, with_pins
 from patchplan.equation.problem import Build, Recording
 from patchplan.equation.system import Source
@@ -94,6 +95,7 @@ def _empty_board(form: Form, patch: Patch, sizing: Sizing, target: Target, build
     return Board(
         patch, sizing, target, places, switch, reference_for(build, catalogue), held, switched,
         ledger=Ledger.of(target), dials=find_dials(patch, sizing, target, form.system.adjustable),
+        trims=find_trims(patch, sizing, target) if sizing.trimming and sizing.trimming.fitted else {},
     )  # fmt: skip
 
 

@@ -13,6 +13,7 @@ from patchplan.circuit.knobs import TRACK_TOLERANCE, Dial
 from patchplan.circuit.ledger import Ledger
 from patchplan.circuit.packages import Place, Places
 from patchplan.circuit.records import DC_LIMIT, GROUND, KnobLaw, Part
+from patchplan.circuit.trimmers import TRIMMER, Trim
 from patchplan.patch.records import Patch, Stage
 from patchplan.sizing.records import Leg, Sizing, StageSizing, Target
 
@@ -52,6 +53,7 @@ class Board:
     ledger: Ledger = field(default_factory=Ledger)
     dials: Mapping[str, Fitted] = field(default_factory=dict)
     knobs: list[KnobLaw] = field(default_factory=list)
+    trims: Mapping[tuple[str, int], Trim] = field(default_factory=dict)
     numbers: Counter[str] = field(default_factory=Counter)
 
     @cached_property
@@ -147,7 +149,11 @@ def _op_amp(board: Board, stage: Stage) -> None:
 
 def _legs(board: Board, stage: Stage, legs: tuple[Leg, ...], into: str) -> None:
     for index, (wire, leg) in enumerate(zip(stage.wires, legs, strict=True), 1):
-        _leg(board, stage, wire.source, leg, into, index)
+        trim = board.trims.get((stage.name, index - 1))
+        if trim is None:
+            _leg(board, stage, wire.source, leg, into, index)
+        else:
+            _trimmed(board, stage, wire.source, into, trim, f"{stage.node}_tr{index}")
 
 
 def _leg(board: Board, stage: Stage, source: str, leg: Leg, into: str, index: int) -> None:
@@ -157,6 +163,16 @@ def _leg(board: Board, stage: Stage, source: str, leg: Leg, into: str, index: in
     middle = f"{stage.node}_t{index}"
     for a, b, value in zip((source, middle, middle), (middle, GROUND, into), leg.resistors, strict=True):
         board.resistor(stage, a, b, value)
+
+
+def _trimmed(board: Board, stage: Stage, source: str, into: str, trim: Trim, middle: str) -> None:
+    """A fixed resistor and a trimmer in series; the unused end of its track is tied to the wiper."""
+    if trim.fixed:
+        board.resistor(stage, source, middle, trim.fixed)
+    nets = (middle if trim.fixed else source, into, into)
+    board.put(
+        Part("", "potentiometer", nets, trim.setting, TRACK_TOLERANCE, stage.name, model=TRIMMER, total=trim.track)
+    )
 
 
 def _integrator(board: Board, stage: Stage) -> None:
@@ -179,8 +195,14 @@ def _start_network(board: Board, stage: Stage, sized: StageSizing) -> None:
     from_reference, from_output = sized.start
     middle = f"{stage.node}_ic"
     _switch(board, stage, (f"{stage.node}_inv", middle), "hold", board.places.hold[stage.name])
-    if from_reference:
-        board.resistor(stage, _reference_node(board, -sized.start_volts), middle, from_reference)
+    trim, reference = (
+        board.trims.get((stage.name, -1)),
+        _reference_node(board, -sized.start_volts) if from_reference else "",
+    )
+    if trim is not None:
+        _trimmed(board, stage, reference, middle, trim, f"{stage.node}_tri")
+    elif from_reference:
+        board.resistor(stage, reference, middle, from_reference)
     board.resistor(stage, stage.node, middle, from_output)
 
 

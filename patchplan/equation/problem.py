@@ -156,6 +156,8 @@ class Build:
     multiplier: str = "AD633"
     #: "free", "real time", or how many times faster than the problem the circuit runs.
     speed: str | float = "free"
+    #: Whether the board gets trimmers for what tolerances do.
+    trim: bool = False
     resistor_stock: Stock | None = None
     capacitor_stock: Stock | None = None
 

@@ -46,7 +46,7 @@ def read_build(reading: Reading, part_names: Mapping[str, Collection[str]] | Non
         "capacitor_limits": lambda r, k, v: _limits(r, k, v, _FARADS),
         "resistor_tolerance": Reading.tolerance, "capacitor_tolerance": Reading.tolerance,
         "op_amp": lambda r, k, v: _part(r, k, v, part_names), "multiplier": lambda r, k, v: _part(r, k, v, part_names),
-        "speed": _speed,
+        "speed": _speed, "trim": _flag,
     }  # fmt: skip
     found: dict[str, Any] = {
         key: read(reading, f"build.{key}", table[key]) for key, read in readers.items() if key in table
@@ -173,6 +173,13 @@ def _speed(reading: Reading, key: str, given: Any) -> str | float | None:
         reading.fault(key, f"Unknown speed {shown(given)}.", f"Write {wanted}.")
         return None
     return _positive(reading, key, given, wanted, ())
+
+
+def _flag(reading: Reading, key: str, given: Any) -> bool | None:
+    if isinstance(given, bool):
+        return given
+    reading.fault(key, f"This is {kind_of(given)}.", "Write true or false.")
+    return None
 
 
 def _pairs(reading: Reading, given: Any) -> None:

@@ -21,6 +21,7 @@ from patchplan.report.tables import (
     speed_table,
     stage_table,
 )
+from patchplan.report.trimming import trimming_table
 
 _TEMPLATE = Path(__file__).with_name("page.html")
 
@@ -67,7 +68,7 @@ def page(
         steps=steps(plan),
         control=control_table(plan),
         static=static_table(plan, start),
-        sheets=[serial_table(plan), knob_table(plan)],
+        sheets=[trimming_table(plan), serial_table(plan), knob_table(plan)],
         cautions=words.CAUTIONS,
         problem=plan.problem.text,
         files=files,

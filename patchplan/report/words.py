@@ -199,6 +199,15 @@ CONTROL_NOTE = (
     "Times are circuit time, counted from the start of operate. High closes the normally open contacts, low the "
     "normally closed ones. A line is a logic signal from outside; nothing on the board drives it."
 )
+TRIM_NOTE = (
+    "Set them from the top down, each until the signal stands as told in a run from its start. Resistors, capacitors "
+    "and multiplier scales alone spread boards by {before} without trimmers and by {after} once all stand."
+)
+TRIM_ONCE = " Once is enough: what is set later hardly moves what was set before."
+TRIM_ROUNDS = " Go through them {rounds} times: what is set later moves a little what was set before."
+TRIM_WISH = " The board has none of them; trim = true under [build] fits them."
+TRIM_START = "in hold"
+TRIM_TIME = "at {time} of circuit time"
 SERIAL_NOTE = (
     "These are the pieces that were measured or numbered: each belongs where it stands here, and nowhere else."
 )

@@ -17,6 +17,7 @@ from patchplan.report.pictures import pictures as draw
 from patchplan.report.plan_json import plan_data, plan_text, refusal_data
 from patchplan.report.records import Plan
 from patchplan.report.tables import csv_text, nodes_csv, parts_csv
+from patchplan.report.trimming import trimming_data
 from patchplan.report.worst import worst_files
 
 Array = NDArray[np.float64]
@@ -80,7 +81,7 @@ def plan_folder(plan: Plan, *, pictures: bool = True, board: Board = board_of) -
     names = [MANIFEST, "report.html", "nodes.csv", *texts]
     copies = problem_files(plan, names)
     names += copies
-    data = plan_data(plan, names)
+    data = plan_data(plan, names) | {"trimming": trimming_data(plan)}
     texts |= {
         MANIFEST: plan_text(data),
         "report.html": page(plan, start, drawn, {source: name for source, (name, _) in sources.items()}, names),

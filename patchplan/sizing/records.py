@@ -6,6 +6,8 @@ from collections.abc import Mapping
 from dataclasses import dataclass, field
 from math import hypot
 
+from patchplan.sizing.trim_records import Trimming
+
 
 @dataclass(frozen=True, slots=True)
 class OpAmpFigures:
@@ -254,6 +256,8 @@ class Sizing:
         Sentences for the plan: drift of modes, content below the DC-limit decade, forced choices.
     speed_limits
         Every figure that limits the speed, those at the window's ends among them.
+    trimming
+        Trimmers that the board has, or that would lower its spread; None where that was not looked at.
     """
 
     time_scale: float
@@ -266,3 +270,4 @@ class Sizing:
     faults: tuple[str, ...] = ()
     notes: tuple[str, ...] = field(default=())
     speed_limits: tuple[SpeedLimit, ...] = ()
+    trimming: Trimming | None = None
