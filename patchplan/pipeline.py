@@ -31,12 +31,15 @@ from patchplan.reach.reference import find_reach
 from patchplan.report.records import Plan
 from patchplan.sensitivity import Sensitivity, find_sensitivity
 from patchplan.shortlist import Forms, as_written, consider, handicap, shortlist, told
+from patchplan.sizing.crowding import crowding
 from patchplan.sizing.records import Sizing, Target
 from patchplan.sizing.size import size
 from patchplan.sizing.trimming import find_trimming, with_trimmers
 
 #: A plan with offsets has more wires and must better the plan without by this factor in error and spread together.
 OFFSET_COST = 1.25
+#: A plan with more multipliers must better the one with fewer by this factor.
+MULTIPLIER_COST = 1.5
 #: Branch-and-bound nodes that the search for the fewest sign stages may take.
 SIGN_NODES = {"low": 100, "normal": 500, "high": 20000}
 
@@ -55,12 +58,18 @@ class Choices:
         How long to search: low, normal or high.
     blocks
         Form of linear blocks, as (name of the output, form); blocks that are not named stay as written.
+    factoring
+        Whether sums may be taken out as factors where that saves multipliers.
+    summers
+        Inputs of integrators, as ``x<-x*y``, in front of which a summer stands because of a resistor limit.
     """
 
     offsets: bool = True
     speed: str | float | None = None
     think: str = "normal"
     blocks: Forms = ()
+    factoring: bool = True
+    summers: tuple[str, ...] = ()
 
 
 def plan(
@@ -100,6 +109,12 @@ def plan(
         if set(found.form.offsets) - set(found.form.scales):
             plain = attempt(replace(Choices(**found.choices), offsets=False))
             found = found if _merit(found, OFFSET_COST) < _merit(plain) else plain
+        if found.patch.factors:
+            plain = attempt(replace(Choices(**found.choices), factoring=False))
+            found = plain if _merit(plain, MULTIPLIER_COST) < _merit(found) else found
+        summers = crowding(found.patch, found.sizing) if found.sizing.faults else ()
+        if summers:
+            found = min(found, attempt(replace(Choices(**found.choices), summers=summers)), key=_merit)
         if found.verdict.verdict == "inaccurate" and think == "normal":
             found = min(found, attempt(replace(Choices(**found.choices), think="high")), key=_merit)
     except ProblemFaults as error:
@@ -165,7 +180,13 @@ def form_of(problem: Problem, choices: Choices, written: Rewritten, reach: Reach
 
 def drawn(build: Build, choices: Choices, form: Form, reach: Reach) -> tuple[Patch, Ranges, Sensitivity]:
     """What follows from a Form alone, whatever the parts."""
-    patch = build_patch(form, hold=build.run != "free", node_limit=SIGN_NODES[choices.think])
+    patch = build_patch(
+        form,
+        hold=build.run != "free",
+        node_limit=SIGN_NODES[choices.think],
+        factoring=choices.factoring,
+        summers=choices.summers,
+    )
     ranges = find_ranges(patch, form, reach)
     return patch, ranges, find_sensitivity(form, patch, ranges)
 

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Collection, Iterable, Mapping
+from collections.abc import Collection, Iterable, Mapping, Sequence
 from dataclasses import dataclass, field, replace
 from fractions import Fraction
 from typing import TypeAlias
@@ -10,12 +10,12 @@ from typing import TypeAlias
 from patchplan.equation.system import Knob, Monomial, Row, System, Term, level_of
 from patchplan.equation.tree import Origin
 from patchplan.form.records import Form
-from patchplan.patch.naming import Names
+from patchplan.patch.factors import factored
+from patchplan.patch.naming import REFERENCE, Names, key_of, sum_text
 from patchplan.patch.products import plan_products
 from patchplan.patch.records import Patch, Stage, Wire
 from patchplan.patch.signs import Link, Signs, choose_signs
 
-REFERENCE = "1"
 _LETTERS = {"integrator": "I", "summer": "S", "inverter": "N", "multiplier": "M", "source": "V"}
 #: Key of what is taken, coefficient, place in the file.
 _Input: TypeAlias = tuple[str, Fraction, Origin | None]
@@ -38,7 +38,9 @@ class _Draft:
         return self.knob is not None and self.knob.low < 0 < self.knob.high
 
 
-def build_patch(form: Form, *, hold: bool = True, node_limit: int = 2000) -> Patch:
+def build_patch(
+    form: Form, *, hold: bool = True, node_limit: int = 2000, factoring: bool = True, summers: Collection[str] = ()
+) -> Patch:
     """Draw the patch of a Form.
 
     Parameters
@@ -49,57 +51,74 @@ def build_patch(form: Form, *, hold: bool = True, node_limit: int = 2000) -> Pat
         Whether start values are set from the reference (a run that is reset); they then ask for its polarities.
     node_limit
         Of the search for the fewest sign stages.
+    factoring
+        Whether sums may be taken out as factors where that saves multipliers.
+    summers
+        Inputs of integrators, as ``x<-x*y``, that a summer takes first; all of one integrator share the summer.
     """
-    drafts = _drafts(form.system)
+    drafts, factors = _drafts(form.system, factoring)
+    _put_in_front(drafts, summers)
     signs = _signs(form, drafts, hold, node_limit)
-    return _assemble(form, drafts, signs, hold)
+    return replace(_assemble(form, drafts, signs, hold), factors=factors)
 
 
-def _drafts(system: System) -> dict[str, _Draft]:
-    """All stages but those that only turn a sign, by key, sources first."""
-    knobs = {k.name: k for k in system.knobs}
+def _drafts(system: System, factoring: bool) -> tuple[dict[str, _Draft], tuple[str, ...]]:
+    """All stages but those that only turn a sign, by key, sources first; and keys of sums taken out as factors."""
     rows, knob_stages = _take_out_knobs((*system.rows, *system.signals))
+    drafts = _given(system, (*rows, *(row for row, _ in knob_stages)))
+    if factoring:
+        changed, sums = factored([*rows, *(row for row, _ in knob_stages)])
+        rows = changed[: len(rows)]
+        knob_stages = [(row, knob) for row, (_, knob) in zip(changed[len(rows) :], knob_stages, strict=True)]
+    else:
+        sums = []
+    _draw(system, drafts, rows, knob_stages, sums)
+    return drafts, tuple(row.name for row in sums)
+
+
+def _given(system: System, rows: Iterable[Row]) -> dict[str, _Draft]:
+    """Reference, and sources that the rows use or that are watched."""
+    needed = {n for row in rows for t in row.terms for n, _ in t.factors} | {name for name, _ in system.watch}
+    drafts = {REFERENCE: _Draft(REFERENCE, "reference")}
+    return drafts | {s.name: _Draft(s.name, "source") for s in system.sources if s.name in needed}
+
+
+def _draw(
+    system: System,
+    drafts: dict[str, _Draft],
+    rows: Sequence[Row],
+    knob_stages: Sequence[tuple[Row, str]],
+    sums: Sequence[Row],
+) -> None:
+    """Add integrators, multipliers and summers."""
+    knobs = {k.name: k for k in system.knobs}
     states = {s.name: s for s in system.states}
-    terms = [t for r in (*rows, *(row for row, _ in knob_stages)) for t in r.terms]
-    used = {n for t in terms for n, _ in t.factors}
-    drafts: dict[str, _Draft] = {REFERENCE: _Draft(REFERENCE, "reference")}
-    watched = {name for name, _ in system.watch}
-    for source in system.sources:
-        if source.name in used or source.name in watched:
-            drafts[source.name] = _Draft(source.name, "source")
-    needed = [t.factors for t in terms if t.degree > 1]
+    terms = [t for r in (*rows, *(row for row, _ in knob_stages), *sums) for t in r.terms]
     for row in rows[: len(system.rows)]:
         drafts[row.name] = _Draft(row.name, "integrator", _inputs(row), states[row.name].start, origin=row.origin)
-    for made, left, right in plan_products(needed):
-        pair: list[_Input] = [(_key(left), Fraction(1), None), (_key(right), Fraction(1), None)]
-        drafts[_key(made)] = _Draft(_key(made), "multiplier", pair)
+    for made, left, right in plan_products(t.factors for t in terms):
+        pair: list[_Input] = [(key_of(left), Fraction(1), None), (key_of(right), Fraction(1), None)]
+        drafts[key_of(made)] = _Draft(key_of(made), "multiplier", pair)
     for row, knob in knob_stages:
         drafts[row.name] = _Draft(row.name, "summer", _inputs(row), knob=knobs[knob], origin=row.origin)
-    for row in rows[len(system.rows) :]:
+    for row in (*sums, *rows[len(system.rows) :]):
         drafts[row.name] = _Draft(row.name, "summer", _inputs(row), origin=row.origin)
     for draft in [d for d in drafts.values() if d.bipolar]:
         _feed_both_ends(draft, drafts)
-    return drafts
+
+
+def _put_in_front(drafts: dict[str, _Draft], summers: Collection[str]) -> None:
+    """Let a summer take the inputs named, so that the integrator sees them with fewer and less different gains."""
+    for draft in [d for d in drafts.values() if d.kind == "integrator"]:
+        taken = [part for part in draft.inputs if f"{draft.key}<-{part[0]}" in summers]
+        if taken:
+            key = f"front of {draft.key}"
+            drafts[key] = _Draft(key, "summer", taken, origin=draft.origin)
+            draft.inputs = [*(part for part in draft.inputs if part not in taken), (key, Fraction(1), draft.origin)]
 
 
 def _inputs(row: Row) -> list[_Input]:
-    return [(_key(t.factors), t.coefficient, t.origin) for t in row.terms]
-
-
-def _key(factors: Monomial) -> str:
-    """Unique text of what a node carries; a single signal keeps its name."""
-    return "*".join(n if p == 1 else f"{n}^{p}" for n, p in factors) or REFERENCE
-
-
-def _sum_text(terms: Iterable[Term]) -> str:
-    """Readable and exact: ``y - 3/2*z``."""
-    text = ""
-    for term in terms:
-        size = abs(term.coefficient)
-        parts = ([] if size == 1 and term.factors else [str(size)]) + ([_key(term.factors)] if term.factors else [])
-        joint = " - " if term.coefficient < 0 else " + "
-        text += (joint if text else joint.strip(" +")) + "*".join(parts)
-    return text
+    return [(key_of(t.factors), t.coefficient, t.origin) for t in row.terms]
 
 
 def _take_out_knobs(rows: Iterable[Row]) -> tuple[list[Row], list[tuple[Row, str]]]:
@@ -125,7 +144,7 @@ def _take_out_knobs(rows: Iterable[Row]) -> tuple[list[Row], list[tuple[Row, str
             lead = terms[0].coefficient
             scaled = tuple(replace(t, coefficient=t.coefficient / lead) for t in terms)
             body = strip(Row("", scaled))
-            key = f"{name}*({_sum_text(body.terms)})"
+            key = f"{name}*({sum_text(body.terms)})"
             stages.setdefault(key, (Row(key, body.terms, terms[0].origin), name))
             plain.append(Term(lead, ((key, 1),), (), terms[0].origin))
         return Row(row.name, tuple(plain), row.origin)
@@ -249,6 +268,8 @@ def _node_wish(draft: _Draft) -> str:
         return "p_" + draft.key
     if draft.kind == "summer" and draft.knob is not None:
         return f"k_{draft.knob.name}"
+    if draft.key.startswith("("):
+        return f"s{draft.key}"
     return draft.key
 
 

@@ -1,13 +1,35 @@
-"""Net names: legal in any SPICE, unique without regard to case."""
+"""Texts of signals, and net names: legal in any SPICE, unique without regard to case."""
 
 from __future__ import annotations
 
 import re
+from collections.abc import Iterable
+
+from patchplan.equation.system import Monomial, Term
+
+#: Key of the board's constant.
+REFERENCE = "1"
 
 #: Names that a simulator or the board itself takes.
 _TAKEN = frozenset({"0", "gnd", "ref", "vcc", "vee", "vdd", "vss", "time", "null"})
 #: Endings that the circuit gives to the inner nets of a stage.
 _INNER = re.compile(r".*_(bus|inv|ic|t\d*|w)$")
+
+
+def key_of(factors: Monomial) -> str:
+    """Unique text of what a node carries; a single signal keeps its name."""
+    return "*".join(n if p == 1 else f"{n}^{p}" for n, p in factors) or REFERENCE
+
+
+def sum_text(terms: Iterable[Term]) -> str:
+    """Readable and exact: ``y - 3/2*z``."""
+    text = ""
+    for term in terms:
+        size = abs(term.coefficient)
+        parts = ([] if size == 1 and term.factors else [str(size)]) + ([key_of(term.factors)] if term.factors else [])
+        joint = " - " if term.coefficient < 0 else " + "
+        text += (joint if text else joint.strip(" +")) + "*".join(parts)
+    return text
 
 
 class Names:

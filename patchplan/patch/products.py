@@ -24,20 +24,33 @@ def times(left: Monomial, right: Monomial) -> Monomial:
     return tuple(sorted(powers.items()))
 
 
-def plan_products(needed: Iterable[Monomial]) -> list[tuple[Monomial, Monomial, Monomial]]:
+def plan_products(
+    needed: Iterable[Monomial], *, most_sets: int = MOST_SETS
+) -> list[tuple[Monomial, Monomial, Monomial]]:
     """Multipliers (product, left, right) that make every needed monomial, each built once and before its use.
 
-    Products of lower degree come first, so that higher ones are split into what is there already; among equals the
-    split of least cascade depth wins, since a product of products loses headroom and adds lag. Where that builds more
-    than the needed products themselves, all smaller sets of helping products are tried, as far as :data:`MOST_SETS`.
+    Products of lower degree come first, so that higher ones are split into what is there already. Where that builds
+    more than the needed products themselves, all sets of helping products that are no larger are tried, up to
+    ``most_sets``. Among equals the plan of least cascade depth wins, since a product of products loses headroom and
+    adds lag.
     """
     wanted = sorted({m for m in needed if degree(m) > 1}, key=lambda m: (degree(m), m))
-    made = _build(wanted)
-    for helping in _helping_sets(wanted, len(made) - len(wanted)):
+    best = _build(wanted)
+    for helping in islice(_helping_sets(wanted, len(best) - len(wanted)), most_sets):
+        if len(wanted) + len(helping) > len(best):
+            break
         trial = _build(sorted({*wanted, *helping}, key=lambda m: (degree(m), m)))
         if len(trial) == len(wanted) + len(helping):
-            return trial
-    return made
+            best = min(best, trial, key=lambda made: (len(made), cascade(made)))
+    return best
+
+
+def cascade(made: Iterable[tuple[Monomial, Monomial, Monomial]]) -> int:
+    """Most multipliers that a signal passes one after the other."""
+    depth: dict[Monomial, int] = {}
+    for monomial, left, right in made:
+        depth[monomial] = 1 + max(depth.get(left, 0), depth.get(right, 0))
+    return max(depth.values(), default=0)
 
 
 def _build(wanted: Iterable[Monomial]) -> list[tuple[Monomial, Monomial, Monomial]]:
@@ -48,12 +61,11 @@ def _build(wanted: Iterable[Monomial]) -> list[tuple[Monomial, Monomial, Monomia
     return made
 
 
-def _helping_sets(wanted: list[Monomial], fewer_than: int) -> Iterator[tuple[Monomial, ...]]:
-    """Sets of products that are not wanted but divide wanted ones, smallest first, fewer than a given number."""
+def _helping_sets(wanted: list[Monomial], most: int) -> Iterator[tuple[Monomial, ...]]:
+    """Sets of products that are not wanted but divide wanted ones, smallest first, no more than a given number."""
     divisors = {d for m in wanted for split in _splits(m) for d in split if degree(d) > 1} - set(wanted)
     ordered = sorted(divisors, key=lambda m: (degree(m), m))
-    sets = chain.from_iterable(combinations(ordered, size) for size in range(1, fewer_than))
-    return islice(sets, MOST_SETS)
+    return chain.from_iterable(combinations(ordered, size) for size in range(1, most + 1))
 
 
 def _make(monomial: Monomial, depth: dict[Monomial, int], made: list[tuple[Monomial, Monomial, Monomial]]) -> None:
