@@ -101,3 +101,24 @@ def test_boards_without_motion_or_integrators_are_written(text, tmp_path):
     found = plan(read_problem(text))
     assert found.verdict.verdict == "follows"
     assert "circuit.cir" in write_plan(found, tmp_path / "plan", pictures=False)
+
+
+COMPETING = """title = "Three species that compete"
+equations = [
+  "a' = a*(1 - a - 1.5*b - 0.5*c)", "b' = b*(1 - 0.5*a - b - 1.5*c)", "c' = c*(1 - 1.5*a - 0.5*b - c)",
+]
+duration = 12
+start = { a = 0.6, b = 0.3, c = 0.2 }
+"""
+
+
+def test_a_factored_form_is_planned_to_the_end_with_half_the_multipliers():
+    """Expanded there are six products; as factors of three sums there is one for each species."""
+    problem = read_problem(COMPETING)
+    found = plan(problem)
+    expanded = plan_with(problem, Choices(factoring=False))
+    assert found.verdict.verdict == "follows"
+    assert found.patch.counts()["multiplier"] == 3
+    assert len(found.patch.factors) == 3
+    assert expanded.patch.counts()["multiplier"] == 6
+    assert not expanded.patch.factors

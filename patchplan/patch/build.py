@@ -7,7 +7,7 @@ from dataclasses import dataclass, field, replace
 from fractions import Fraction
 from typing import TypeAlias
 
-from patchplan.equation.system import Knob, Monomial, Row, System, Term, level_of
+from patchplan.equation.system import Knob, Row, System, Term, level_of
 from patchplan.equation.tree import Origin
 from patchplan.form.records import Form
 from patchplan.patch.factors import factored
@@ -251,7 +251,7 @@ def _assemble(form: Form, drafts: Mapping[str, _Draft], signs: Signs, hold: bool
     sources = {s.name: s for s in system.sources if s.name in drafts}
     turning = len(signs.inverted) + sum(s.signal.startswith("part of ") for s in board.stages)
     knobs = {k.name: k for k in system.knobs}
-    return Patch(_ordered(board.stages), watched, sources, knobs, turning, signs.lower_bound)
+    return Patch(_ordered(board.stages), watched, sources, knobs, turning, signs.lower_bound, not signs.proved)
 
 
 def _reference_used(drafts: Mapping[str, _Draft], hold: bool, switched: Collection[str]) -> bool:

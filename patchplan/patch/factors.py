@@ -14,11 +14,11 @@ from patchplan.patch.naming import sum_text
 from patchplan.patch.products import cascade, degree, plan_products, times
 
 #: Forms weighed in all, forms of one round from which the next one starts, and sums that are tried in one form.
-MOST_FORMS, BEAM, MOST_SUMS = 300, 12, 40
+MOST_FORMS, BEAM, MOST_SUMS = 150, 8, 30
 #: Terms of all forms weighed, which bounds the work on large systems.
 MOST_TERMS = 20_000
 #: Sets of helping products that are tried in one form.
-HELPING_SETS = 100
+HELPING_SETS = 5
 #: Monomial -> coefficient, in canonical order, the first coefficient 1.
 _Sum: TypeAlias = tuple[tuple[Monomial, Fraction], ...]
 

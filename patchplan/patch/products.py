@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Iterator
+from functools import lru_cache
 from itertools import chain, combinations, islice, product
 
 from patchplan.equation.system import Monomial
@@ -11,6 +12,7 @@ from patchplan.equation.system import Monomial
 MOST_SETS = 3000
 
 
+@lru_cache(maxsize=4096)
 def degree(monomial: Monomial) -> int:
     """Number of signals multiplied."""
     return sum(power for _, power in monomial)
@@ -80,17 +82,21 @@ def _make(monomial: Monomial, depth: dict[Monomial, int], made: list[tuple[Monom
 
 def _cost(split: tuple[Monomial, Monomial], depth: dict[Monomial, int]) -> tuple[int, int, tuple[Monomial, Monomial]]:
     """(new multipliers at least, cascade depth, the split itself as the last tie break)."""
-    unmade = {m for m in split if degree(m) > 1 and m not in depth}
-    deepest = max(depth.get(m, degree(m) - 1) for m in split)
-    return sum(degree(m) - 1 for m in unmade), deepest, split
+    left, right = split
+    first, second = degree(left) - 1, degree(right) - 1
+    unmade = (first if left not in depth else 0) + (second if right not in depth and right != left else 0)
+    return unmade, max(depth.get(left, first), depth.get(right, second)), split
 
 
-def _splits(monomial: Monomial) -> Iterator[tuple[Monomial, Monomial]]:
+@lru_cache(maxsize=4096)
+def _splits(monomial: Monomial) -> tuple[tuple[Monomial, Monomial], ...]:
     """All ways to write a monomial as an ordered pair left <= right of smaller ones."""
     names = [name for name, _ in monomial]
     powers = [power for _, power in monomial]
+    found = []
     for taken in product(*(range(p + 1) for p in powers)):
         left = tuple((n, k) for n, k in zip(names, taken, strict=True) if k)
         right = tuple((n, p - k) for n, p, k in zip(names, powers, taken, strict=True) if p - k)
         if left and right and (degree(left), left) <= (degree(right), right):
-            yield left, right
+            found.append((left, right))
+    return tuple(found)

@@ -70,6 +70,8 @@ class Patch:
         Signal asked for -> node that carries it.
     sign_stages_lower_bound
         Fewest sign stages (inverters, inverting summers only there for sign) proved necessary.
+    signs_open
+        Whether the search for the fewest sign stages stopped at its node limit before it knew them.
     factors
         Signals of the summers that make a sum which stands as a factor in products, for fewer multipliers.
     """
@@ -80,6 +82,7 @@ class Patch:
     knobs: Mapping[str, Knob]
     sign_stages: int = 0
     sign_stages_lower_bound: int = 0
+    signs_open: bool = False
     factors: tuple[str, ...] = ()
 
     def by_node(self) -> dict[str, Stage]:

@@ -133,7 +133,16 @@ def made_of(plan: Plan) -> str:
     if plan.circuit is None:
         return sentence + "."
     packages, to_fit = counts_to_fit(plan.circuit.parts)
-    return f"{sentence}; {counted(packages, 'package')}, {counted(to_fit, 'part')}."
+    return f"{sentence}; {counted(packages, 'package')}, {counted(to_fit, 'part')}.{sign_gap(plan)}"
+
+
+def sign_gap(plan: Plan) -> str:
+    """How far the count of sign stages may be from the fewest, where the search stopped before it knew."""
+    count, least = plan.patch.sign_stages, plan.patch.sign_stages_lower_bound
+    if not plan.patch.signs_open or count <= least:
+        return ""
+    more = "" if plan.choices.get("think") == "high" else "; --think high searches on"
+    return f" {count} of the stages only turn signs, at least {least} are needed (a gap of {count / least:.2f}){more}."
 
 
 def forms(plan: Plan) -> tuple[str, ...]:

@@ -6,7 +6,7 @@ from itertools import combinations_with_replacement
 
 import pytest
 
-from patchplan.patch.products import plan_products, times
+from patchplan.patch.products import cascade, plan_products, times
 
 # Lengths of shortest addition chains l(n), OEIS A003313 (from memory): a power x^n needs l(n) multipliers.
 CHAINS = {2: 1, 3: 2, 4: 2, 5: 3, 6: 3, 7: 4, 8: 3, 9: 4, 10: 4, 12: 4, 15: 5, 16: 4}
@@ -63,3 +63,13 @@ def test_each_product_is_made_from_what_is_there(wanted):
         assert times(left, right) == made
         there.add(made)
     assert set(wanted) <= there
+
+
+def test_less_cascade_depth_wins_among_equals():
+    """x^7 in four multipliers: by 2, 3, 5 through four in a row, by 2, 3, 4 through three."""
+    assert cascade(plan_products([power(7)])) == 3
+
+
+def test_cascade_counts_multipliers_in_a_row():
+    x = (("x", 1),)
+    assert cascade([(power(2), x, x), (power(3), power(2), x), (power(4), power(2), power(2))]) == 2

@@ -12,6 +12,7 @@ from patchplan.check.records import Cause, NodePeak
 from patchplan.report import words
 from patchplan.report.folder import unused_name
 from patchplan.report.pictures import MOST_POINTS, thinned
+from patchplan.report.plan_json import plan_data
 from patchplan.report.summary import WIDTH, summary
 from tests.report.test_plan_json import unbuildable
 
@@ -148,3 +149,15 @@ def test_file_names_are_legal_and_differ_without_regard_to_case():
     for name in ("x", "X", "x'", "cos(2*t)", "../../etc"):
         taken.append(unused_name("signal", name, "svg", taken))
     assert taken == ["signal_x.svg", "signal_X_2.svg", "signal_x_d.svg", "signal_cos_2_t.svg", "signal_etc.svg"]
+
+
+def test_a_search_for_signs_that_stopped_says_how_far_it_may_be_off(plan):
+    stopped = replace(plan, patch=replace(plan.patch, sign_stages=6, sign_stages_lower_bound=4, signs_open=True))
+    text = " ".join(summary(stopped).split())
+    assert "6 of the stages only turn signs, at least 4 are needed (a gap of 1.50); --think high searches on." in text
+    high = replace(stopped, choices={**plan.choices, "think": "high"})
+    assert "(a gap of 1.50)." in " ".join(summary(high).split())
+    data = plan_data(stopped)
+    assert (data["sign_stages"], data["sign_stages_lower_bound"], data["sign_stages_gap"]) == (6, 4, 2)
+    assert data["sign_search_stopped"]
+    assert "only turn signs" not in summary(plan)
