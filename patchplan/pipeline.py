@@ -119,7 +119,20 @@ def plan(
             found = min(found, attempt(replace(Choices(**found.choices), think="high")), key=_merit)
     except ProblemFaults as error:
         raise rendered(error, problem) from None
+    found = replace(found, sizing=_with_suggestion(found, accept))
     return replace(found, considered=told(considered, [*runs, found], found), speed_curve=_curve(found, accept))
+
+
+def _with_suggestion(found: Plan, accept: float) -> Sizing:
+    """The sizing with the trimmers that would help, where the board has none."""
+    sizing = found.sizing
+    if found.circuit is None or sizing.trimming is not None:
+        return sizing
+    near = within_horizon(found.sensitivity, linear=found.form.system.is_linear)
+    return replace(
+        sizing,
+        trimming=find_trimming(found.form, found.patch, found.ranges, near, sizing, found.target, accept=accept),
+    )
 
 
 def _curve(found: Plan, accept: float) -> SpeedCurve:
@@ -200,8 +213,10 @@ def sized(
     # Trimmed boards differ so little that rounding shows.
     think = "high" if build.trim and choices.think == "normal" else choices.think
     sizing = size(form, patch, ranges, sensitivity, target, speed=speed, run=build.run, think=think, accept=accept)
+    if not build.trim:
+        return sizing
     near = within_horizon(sensitivity, linear=form.system.is_linear)
-    trimming = find_trimming(form, patch, ranges, near, sizing, target, accept=accept, fitted=build.trim)
+    trimming = find_trimming(form, patch, ranges, near, sizing, target, accept=accept, fitted=True)
     return with_trimmers(patch, near, replace(sizing, trimming=trimming))
 
 
