@@ -18,6 +18,7 @@ from patchplan.equation.explicit import build_system, system_of
 from patchplan.equation.faults import rendered
 from patchplan.equation.problem import Build, Problem
 from patchplan.equation.system import System
+from patchplan.equation.uncertain import uncertain_system
 from patchplan.errors import ProblemFaults
 from patchplan.form.offsets import find_form
 from patchplan.form.records import Form
@@ -41,6 +42,7 @@ OFFSET_COST = 1.25
 #: A plan with more multipliers must better the one with fewer by this factor.
 MULTIPLIER_COST = 1.5
 #: Branch-and-bound nodes that the search for the fewest sign stages may take.
+_LEFT_OUT = "The tolerance of {} is not in the ranges: it changes a function of time or a start from within."
 SIGN_NODES = {"low": 100, "normal": 500, "high": 20000}
 
 
@@ -156,7 +158,9 @@ def plan_with(
     target = target_of(build, catalogue)
     say("Solving the problem")
     written = with_forms(system, dict(choices.blocks))
-    reach = find_reach(written.extended, problem.ranges, build)
+    uncertain, left_out = uncertain_system(problem, system)
+    reach = find_reach(written.extended, problem.ranges, build, uncertain=uncertain)
+    reach = replace(reach, warnings=(*reach.warnings, *(_LEFT_OUT.format(name) for name in left_out)))
     form = form_of(problem, choices, written, reach, target)
     say("Drawing the patch")
     patch, ranges, sensitivity = drawn(build, choices, form, reach)

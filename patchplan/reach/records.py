@@ -48,12 +48,52 @@ class Reference:
 
 @dataclass(frozen=True)
 class Run:
-    """One simulated run of the equation: knob values, times and every signal, shapes as in Reference."""
+    """One simulated run of the equation: knob values, times and every signal, shapes as in Reference.
+
+    ``point`` holds the values of all parameters that were moved for it.
+    """
 
     knobs: Mapping[str, float]
     times: Array
     values: Array
     rates: Array
+    point: Mapping[str, float] = field(default_factory=dict)
+
+
+@dataclass(frozen=True, slots=True)
+class WorstPoint:
+    """Values of the parameters at which one signal went furthest, and how far [problem units]."""
+
+    name: str
+    value: float
+    parameters: Mapping[str, float]
+
+
+@dataclass(frozen=True)
+class Box:
+    """The search over adjustable and uncertain parameters.
+
+    Attributes
+    ----------
+    corners, sampled, climbed
+        Runs at corners (and ends of axes), at points of a low-discrepancy sample, and around the worst so far.
+    all_corners
+        Whether every corner was run; of many parameters only some are.
+    worst
+        Of every name.
+    """
+
+    parameters: tuple[str, ...]
+    corners: int
+    sampled: int
+    climbed: int
+    all_corners: bool
+    worst: tuple[WorstPoint, ...] = ()
+
+    @property
+    def runs(self) -> int:
+        """All runs."""
+        return self.corners + self.sampled + self.climbed
 
 
 @dataclass(frozen=True, slots=True)
@@ -173,3 +213,4 @@ class Reach:
     warnings: tuple[str, ...] = ()
     bounded: tuple[Bounded, ...] = ()
     worst: tuple[WorstCase, ...] = ()
+    box: Box | None = None

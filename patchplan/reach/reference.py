@@ -12,14 +12,22 @@ from numpy.typing import NDArray
 from patchplan.equation.problem import Build
 from patchplan.equation.system import System
 from patchplan.reach.bounds import bounded_of, ends_of, free_sources
+from patchplan.reach.box import knobs_of, search_boxes
 from patchplan.reach.curves import extremes
 from patchplan.reach.field import Field, field_of
 from patchplan.reach.free import search_waveforms
 from patchplan.reach.inputs import Inputs, Stored
 from patchplan.reach.length import check_length
 from patchplan.reach.nominal import solve_nominal
-from patchplan.reach.records import Bounded, Range, Reach, Reference, Run
-from patchplan.reach.search import coarse_grid, first_points, knobs_at, search_box, spread_of_boards
+from patchplan.reach.records import Bounded, Box, Range, Reach, Reference, Run
+from patchplan.reach.search import (
+    box_of,
+    coarse_grid,
+    first_points,
+    knobs_at,
+    parameters_at,
+    spread_of_boards,
+)
 from patchplan.reach.solve import GrowsWithoutBoundError, grows_without_bound
 from patchplan.reach.worst import driven, worst_cases
 
@@ -33,7 +41,7 @@ _EXACT = "exact solution of linear equations with known inputs"
 _GAIN = "half the width of each input's bounds times the peak gain over the run, around the response to their middle"
 _ESTIMATED = "the error of the impulse responses is estimated, not bounded"
 _BOARDS = "the margin is how far boards with parts within tolerance go beyond the nominal one"
-_BOX = "simulated over corners and a sample of the adjustable parameters"
+_BOX = "simulated over corners and a sample of the adjustable and uncertain parameters"
 _SEARCHED = (
     "simulated with the worst input waveforms that a search found; other waveforms within the bounds may go further"
 )
@@ -51,9 +59,16 @@ class _Ends:
     above: Array | float = 0.0
     runs: tuple[Run, ...] = ()
     warnings: tuple[str, ...] = field(default=())
+    box: Box | None = None
 
 
-def find_reach(system: System, stated: Mapping[str, tuple[Fraction, Fraction]], build: Build) -> Reach:
+def find_reach(
+    system: System,
+    stated: Mapping[str, tuple[Fraction, Fraction]],
+    build: Build,
+    *,
+    uncertain: System | None = None,
+) -> Reach:
     """Solve the problem as written and find how far every state, source and signal goes.
 
     Parameters
@@ -64,6 +79,8 @@ def find_reach(system: System, stated: Mapping[str, tuple[Fraction, Fraction]], 
         Ranges that the problem file states; they win, a run that exceeds one is a warning.
     build
         Tolerances of the parts, for the margin of simulated ranges.
+    uncertain
+        The equations with uncertain parameters left open within their tolerance; None where there are none.
 
     Raises
     ------
@@ -73,14 +90,14 @@ def find_reach(system: System, stated: Mapping[str, tuple[Fraction, Fraction]], 
     numeric = field_of(system)
     check_length(system, numeric)
     try:
-        return _with_stated(_reach(system, numeric, build), stated)
+        return _with_stated(_reach(system, numeric, build, uncertain), stated)
     except GrowsWithoutBoundError as error:
-        raise grows_without_bound(error.time) from None
+        raise grows_without_bound(error) from None
 
 
-def _reach(system: System, numeric: Field, build: Build) -> Reach:
+def _reach(system: System, numeric: Field, build: Build, uncertain: System | None) -> Reach:
     if free_sources(system) and system.is_linear:
-        return _linear_worst(system, numeric)
+        return _linear_worst(system, numeric, uncertain)
     knobs = system.knob_values()
     bound = numeric.bind(numeric.weights(knobs))
     stand_ins: dict[str, Stored] = {}
@@ -97,9 +114,9 @@ def _reach(system: System, numeric: Field, build: Build) -> Reach:
     ends = _Ends(low, high, "proved", _EXACT)
     if worst is not None:
         ends = replace(worst, low=np.minimum(low, worst.low), high=np.maximum(high, worst.high))
-    if not system.is_linear or system.adjustable:
-        ends = _simulated(system, numeric, build, inputs, nominal, ends)
-    return Reach(reference, _ranges(system, numeric, ends), (nominal, *ends.runs), ends.warnings)
+    if not system.is_linear or system.adjustable or uncertain is not None:
+        ends = _simulated(system, numeric, build, inputs, nominal, ends, uncertain)
+    return Reach(reference, _ranges(system, numeric, ends), (nominal, *ends.runs), ends.warnings, box=ends.box)
 
 
 def _check_size(times: Array, values: Array) -> None:
@@ -107,7 +124,7 @@ def _check_size(times: Array, values: Array) -> None:
         raise GrowsWithoutBoundError(float(times[np.argmax(np.abs(values).max(axis=0) > _BEYOND)]))
 
 
-def _linear_worst(system: System, numeric: Field) -> Reach:
+def _linear_worst(system: System, numeric: Field, uncertain: System | None) -> Reach:
     """Ranges under every waveform within the bounds, and the runs with the worst of them."""
     knobs = system.knob_values()
     bound = numeric.bind(numeric.weights(knobs))
@@ -117,12 +134,12 @@ def _linear_worst(system: System, numeric: Field) -> Reach:
     cases = worst_cases(system, bound, bounded[0], found)
     known = "proved" if found.proved else "simulated"
     ends = _Ends(found.low, found.high, known, _GAIN if found.proved else f"{_GAIN}; {_ESTIMATED}")
-    if system.adjustable:
-        ends, more = _linear_box(system, numeric, ends)
+    if system.adjustable or uncertain is not None:
+        ends, more = _linear_box(system, numeric, ends, uncertain)
         bounded += more
     reference = cases[0].reference
     nominal = Run(knobs, reference.times, reference.values, reference.rates)
-    return Reach(reference, _ranges(system, numeric, ends), (nominal,), cases[0].said, tuple(bounded), cases)
+    return Reach(reference, _ranges(system, numeric, ends), (nominal,), cases[0].said, tuple(bounded), cases, ends.box)
 
 
 def _searched_worst(
@@ -140,34 +157,43 @@ def _searched_worst(
     return _Ends(found.low, found.high, "simulated", _SEARCHED, warnings=said), found.stand_ins
 
 
-def _simulated(system: System, numeric: Field, build: Build, inputs: Inputs, nominal: Run, ends: _Ends) -> _Ends:
-    """Widen by the adjustable box and by boards within tolerance."""
+def _simulated(
+    system: System, numeric: Field, build: Build, inputs: Inputs, nominal: Run, ends: _Ends, uncertain: System | None
+) -> _Ends:
+    """Widen by the box of the parameters and by boards within tolerance."""
     grid = coarse_grid(system, numeric, inputs, nominal.times)
     peaks = np.abs(nominal.values[: numeric.n_states]).max(axis=1)
     boards = spread_of_boards(system, numeric, build, inputs, grid, peaks)
     alone = extremes(nominal.times, nominal.values, nominal.rates)
     below, above = np.maximum(alone[0] - boards.low, 0.0), np.maximum(boards.high - alone[1], 0.0)
     how = [ends.reason] if ends.known_by == "simulated" else []
-    low, high, runs = ends.low, ends.high, ends.runs
-    if system.adjustable:
-        box = search_box(system, numeric, inputs, grid, peaks)
-        low, high, runs = np.minimum(low, box.low), np.maximum(high, box.high), box.runs
+    found = replace(ends, known_by="simulated", below=below, above=above, warnings=(*ends.warnings, *boards.warnings))
+    if system.adjustable or uncertain is not None:
+        box = search_boxes(system, numeric, uncertain, inputs, grid, peaks)
+        found = replace(
+            found, low=np.minimum(ends.low, box.low), high=np.maximum(ends.high, box.high), runs=box.runs, box=box.box,
+            warnings=(*found.warnings, *box.warnings),
+        )  # fmt: skip
         how.append(_BOX)
-    reason = "; ".join([*(how or ["simulated"]), _BOARDS])
-    return _Ends(low, high, "simulated", reason, below, above, runs, (*ends.warnings, *boards.warnings))
+    return replace(found, reason="; ".join([*(how or ["simulated"]), _BOARDS]))
 
 
-def _linear_box(system: System, numeric: Field, ends: _Ends) -> tuple[_Ends, list[Bounded]]:
-    """Peak gains at the corners and a sample of the adjustable box."""
-    knobs = knobs_at(system, first_points(system))
-    low, high, found = ends.low, ends.high, []
-    for i in range(len(next(iter(knobs.values())))):
-        here = {name: float(v[i]) for name, v in knobs.items()}
-        bound = numeric.bind(numeric.weights(here))
-        found.append(bounded_of(system, bound, here))
+def _linear_box(system: System, numeric: Field, ends: _Ends, uncertain: System | None) -> tuple[_Ends, list[Bounded]]:
+    """Peak gains at the corners and a sample of the box of the parameters."""
+    wide = system if uncertain is None or field_of(uncertain).names != numeric.names else uncertain
+    opened = numeric if wide is system else field_of(wide)
+    points = first_points(wide)
+    knobs, low, high, found = knobs_at(wide, points), [ends.low], [ends.high], []
+    where = parameters_at(wide, points)
+    for i, point in enumerate(where):
+        bound = opened.bind(opened.weights({name: float(v[i]) for name, v in knobs.items()}))
+        found.append(bounded_of(wide, bound, knobs_of(system, point)))
         tops = ends_of(found[-1], found[-1].rows)
-        low, high = np.minimum(low, tops.low), np.maximum(high, tops.high)
-    return _Ends(low, high, "simulated", f"{_BOX}; at each, {_GAIN}"), found
+        low.append(tops.low)
+        high.append(tops.high)
+    box = box_of(wide, numeric.names, np.stack(low[1:], axis=1), np.stack(high[1:], axis=1), where)
+    reason = f"{_BOX}; at each, {_GAIN}"
+    return _Ends(np.min(low, axis=0), np.max(high, axis=0), "simulated", reason, box=box), found
 
 
 def _ranges(system: System, numeric: Field, ends: _Ends) -> dict[str, Range]:

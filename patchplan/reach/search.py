@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
-from dataclasses import dataclass
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, replace
 from fractions import Fraction
 from itertools import product
 
@@ -19,7 +19,7 @@ from patchplan.reach.field import DENSE_LIMIT, Bound, Field
 from patchplan.reach.followed import Followed
 from patchplan.reach.inputs import Inputs
 from patchplan.reach.nominal import LEAST_POINTS, linear_pieces, start_of, tabulate, uniform_grid
-from patchplan.reach.records import Run
+from patchplan.reach.records import Box, Run, WorstPoint
 from patchplan.reach.solve import GrowsWithoutBoundError, floors, solve
 
 Array = NDArray[np.float64]
@@ -222,6 +222,7 @@ class Excursion:
     high: Array
     runs: tuple[Run, ...] = ()
     warnings: tuple[str, ...] = ()
+    box: Box | None = None
 
 
 def search_box(system: System, field: Field, inputs: Inputs, times: Array, peaks: Array) -> Excursion:
@@ -239,17 +240,26 @@ def search_box(system: System, field: Field, inputs: Inputs, times: Array, peaks
     random = np.random.default_rng(SEED)
     followed, effort = Followed(field), effort_for(system)
     points = seen = first_points(system)
+    tried: list[Mapping[str, float]] = []
     heights = np.zeros((0, 0))
     ends: list[tuple[Array, Array]] = []
     runs: list[Run] = []
     for i in range(effort.rounds + 1):
         knobs = knobs_at(system, points)
         weights = field.weights(knobs)
-        batch = solve_batch(system, field, weights, inputs, times, peaks)
+        where = parameters_at(system, points)
+        try:
+            batch = solve_batch(system, field, weights, inputs, times, peaks)
+        except GrowsWithoutBoundError:
+            raise _named(system, field, weights, inputs, times, peaks, where) from None
         ends.append(batch.extremes())
+        tried += where
         here = _heights(batch, ends[-1], followed, weights, knobs)
         heights = here if i == 0 else np.hstack((heights, here))
-        runs += [batch.run(j, {k: float(v[j]) for k, v in knobs.items()}) for j in range(len(points))]
+        runs += [
+            replace(batch.run(j, {k: float(v[j]) for k, v in knobs.items()}), point=where[j])
+            for j in range(len(points))
+        ]
         most = max(KEPT, int(KEPT_NUMBERS / batch.values[:, 0].size))
         if len(runs) > most:
             kept = sorted(list(dict.fromkeys([*_most_worst(heights).tolist(), *range(len(runs))]))[:most])
@@ -260,7 +270,42 @@ def search_box(system: System, field: Field, inputs: Inputs, times: Array, peaks
                 points = np.concatenate((points, steep_corners(seen, heights)[: effort.climbers[1]]))
             seen = np.concatenate((seen, points))
     low, high = (np.hstack(e) for e in zip(*ends, strict=True))
-    return Excursion(low.min(axis=1), high.max(axis=1), tuple(runs))
+    box = box_of(system, field.names, low, high, tried)
+    return Excursion(low.min(axis=1), high.max(axis=1), tuple(runs), box=box)
+
+
+def parameters_at(system: System, points: Array) -> list[Mapping[str, float]]:
+    """Values of the adjustable parameters at points of the unit box."""
+    ends = [(p.name, float(p.low or 0), float(p.high or 0)) for p in system.adjustable]
+    return [{n: a + (b - a) * float(s) for (n, a, b), s in zip(ends, point, strict=True)} for point in points]
+
+
+def box_of(system: System, names: Sequence[str], low: Array, high: Array, tried: list[Mapping[str, float]]) -> Box:
+    """What was tried, and where each name went furthest; ``low`` and ``high`` of shape ``(n_names, n_runs)``."""
+    worst = []
+    for i, name in enumerate(names):
+        up = high[i].max() >= -low[i].min()
+        j = int(high[i].argmax() if up else low[i].argmin())
+        worst.append(WorstPoint(name, float((high if up else low)[i, j]), tried[j]))
+    effort, count = effort_for(system), len(system.adjustable)
+    first, size = len(first_points(system)), effort.sample[count > 1]
+    return Box(
+        tuple(p.name for p in system.adjustable), first - size, size, len(tried) - first,
+        count <= effort.corners_up_to, tuple(worst),
+    )  # fmt: skip
+
+
+def _named(
+    system: System, field: Field, weights: Array, inputs: Inputs, times: Array, peaks: Array,
+    where: list[Mapping[str, float]],
+) -> GrowsWithoutBoundError:  # fmt: skip
+    """The first of the runs that grows without bound, alone."""
+    for j, point in enumerate(where):
+        try:
+            solve_batch(system, field, weights[:, [j]], inputs, times, peaks)
+        except GrowsWithoutBoundError as error:
+            return GrowsWithoutBoundError(error.time, point)
+    return GrowsWithoutBoundError(float(times[-1]))
 
 
 def _heights(

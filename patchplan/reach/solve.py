@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import warnings
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from itertools import pairwise
 from typing import Any
 
@@ -22,19 +22,25 @@ _STEPS = 20000
 
 
 class GrowsWithoutBoundError(Exception):
-    """A run left every bound, or could not be carried on, at ``time``."""
+    """A run left every bound, or could not be carried on, at ``time``; ``point`` has the parameters moved for it."""
 
-    def __init__(self, time: float) -> None:
+    def __init__(self, time: float, point: Mapping[str, float] | None = None) -> None:
         super().__init__(time)
-        self.time = time
+        self.time, self.point = time, point or {}
 
 
-def grows_without_bound(time: float) -> ProblemFaults:
+def grows_without_bound(error: GrowsWithoutBoundError) -> ProblemFaults:
     """The error for a problem whose solution ends before its run does."""
+    setting = ", ".join(f"{name} = {value:.6g}" for name, value in error.point.items())
+    if setting:
+        remedy = "Narrow the range of an adjustable parameter so that it stays clear of this, or shorten the duration."
+        return ProblemFaults(
+            [Fault(f"The solution grows without bound at t = {error.time:.4g} where {setting}.", remedy, "duration")]
+        )
     return ProblemFaults(
         [
             Fault(
-                f"The solution grows without bound at t = {time:.4g}.",
+                f"The solution grows without bound at t = {error.time:.4g}.",
                 "Shorten the duration, or check signs, parameters and start values.",
                 "duration",
             )

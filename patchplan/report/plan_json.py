@@ -14,6 +14,7 @@ from patchplan.compare.records import SpeedCurve
 from patchplan.equation.problem import Problem
 from patchplan.patch.records import Patch, Stage
 from patchplan.report.codec import decode, encode, rounded
+from patchplan.report.ranges_told import ranges_data, ranges_sentence
 from patchplan.report.records import Plan
 from patchplan.report.worst import worst_inputs
 from patchplan.sizing.records import Sizing, StageSizing
@@ -56,6 +57,7 @@ def plan_data(plan: Plan, files: Sequence[str] = ()) -> dict[str, Any]:
         "sign_stages_lower_bound": plan.patch.sign_stages_lower_bound,
         "sign_search_stopped": plan.patch.signs_open,
         "sign_stages_gap": plan.patch.sign_stages - plan.patch.sign_stages_lower_bound,
+        "ranges": ranges_data(plan),
         "worst_inputs": worst_inputs(plan),
         "coefficients": _coefficients(sizing),
         "parts": _parts(plan.circuit) if plan.circuit else [],
@@ -85,6 +87,7 @@ def refusal_data(problem: Problem, reason: str, files: Sequence[str] = ()) -> di
         "speed_curve": None,
         "check": _check(verdict),
         **{table: [] for table in ("signals", "stages", "worst_inputs", "coefficients", "parts", "knobs")},
+        "ranges": {},
         "counts": {},
         "sign_stages": 0,
         "sign_stages_lower_bound": 0,
@@ -143,7 +146,8 @@ def warnings_of(plan: Plan) -> tuple[str, ...]:
 
 def notes_of(plan: Plan) -> tuple[str, ...]:
     """What the stages decided and why, each sentence once."""
-    return tuple(dict.fromkeys((*plan.form.notes, *plan.sizing.notes, *(plan.circuit.notes if plan.circuit else ()))))
+    told = (*plan.form.notes, ranges_sentence(plan), *plan.sizing.notes, *(plan.circuit.notes if plan.circuit else ()))
+    return tuple(note for note in dict.fromkeys(told) if note)
 
 
 def transfer_gains(plan: Plan, stage: Stage) -> tuple[float, ...]:

@@ -1,0 +1,75 @@
+"""Where the ranges come from: how much was run, the worst point, and the margin."""
+
+from __future__ import annotations
+
+from typing import Any
+
+from patchplan.reach.records import Box, WorstPoint
+from patchplan.report.codec import rounded
+from patchplan.report.records import Plan
+from patchplan.report.words import counted
+
+
+def ranges_data(plan: Plan) -> dict[str, Any]:
+    """The ``ranges`` table of plan.json."""
+    box = plan.reach.box
+    points = {point.name: point for point in box.worst} if box else {}
+    rows = [
+        {
+            "name": found.name,
+            "known_by": found.known_by,
+            "reason": found.reason,
+            "margin_units": rounded(found.margin),
+            "worst_units": rounded(points[found.name].value) if found.name in points else None,
+            "worst_at": _numbers(points[found.name]) if found.name in points else {},
+        }
+        for found in plan.reach.ranges.values()
+    ]
+    counts = {part: getattr(box, part) if box else 0 for part in ("runs", "corners", "sampled", "climbed")}
+    return {
+        "sentence": ranges_sentence(plan),
+        "parameters": list(box.parameters) if box else [],
+        **counts,
+        "all_corners": box.all_corners if box else True,
+        "worst_points": rows,
+    }
+
+
+def ranges_sentence(plan: Plan) -> str:
+    """How the ranges over adjustable and uncertain parameters were found, "" where there are none."""
+    box = plan.reach.box
+    if box is None:
+        return ""
+    corners = f"all {box.corners} corners" if box.all_corners else f"{box.corners} ends of axes and some corners"
+    tried = f"{corners}, {box.sampled} points of a sample, {box.climbed} around the worst"
+    sentence = f"Ranges hold over {', '.join(box.parameters)} by {counted(box.runs, 'run')}: {tried}."
+    worst = _worst(plan, box)
+    if worst is not None:
+        at = ", ".join(f"{name} = {value:.4g}" for name, value in worst.parameters.items())
+        sentence += f" The node of {worst.name} goes furthest of its limit, to {worst.value:.4g} at {at}."
+    return sentence + _margin(plan)
+
+
+def _worst(plan: Plan, box: Box) -> WorstPoint | None:
+    """Of the signals that have a node of their own, the point at which one takes the most of its limit."""
+    nodes = {s.signal: s.node for s in plan.patch.stages if s.kind in ("integrator", "summer")}
+    best, most = None, 0.0
+    for point in box.worst:
+        scale = plan.sizing.scales.get(nodes.get(point.name, ""))
+        if scale is not None and abs(point.value) * scale.volts_per_unit / scale.limit_volts > most:
+            best, most = point, abs(point.value) * scale.volts_per_unit / scale.limit_volts
+    return best
+
+
+def _margin(plan: Plan) -> str:
+    shares = [r.margin / r.peak for r in plan.reach.ranges.values() if r.peak]
+    if not any(shares):
+        return ""
+    return (
+        f" Up to {100 * max(shares):.2g} % of peak is margin: how far boards with parts within tolerance go beyond the "
+        "nominal one."
+    )
+
+
+def _numbers(point: WorstPoint) -> dict[str, float | None]:
+    return {name: rounded(value) for name, value in point.parameters.items()}
