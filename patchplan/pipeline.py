@@ -114,7 +114,7 @@ def plan(
         if found.patch.factors:
             plain = attempt(replace(Choices(**found.choices), factoring=False))
             found = plain if _merit(plain, MULTIPLIER_COST) < _merit(found) else found
-        summers = crowding(found.patch, found.sizing) if found.sizing.faults else ()
+        summers = crowding(found.patch, found.sizing, found.target) if found.sizing.faults else ()
         if summers:
             found = min(found, attempt(replace(Choices(**found.choices), summers=summers)), key=_merit)
         if found.verdict.verdict == "inaccurate" and think == "normal":

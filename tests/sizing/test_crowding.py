@@ -29,7 +29,7 @@ def test_a_board_that_resistors_cannot_span_gets_a_summer():
     found = plan(problem)
     assert without.verdict.verdict == "not_buildable"
     assert "a gain" in without.sizing.faults[0]
-    assert crowding(without.patch, without.sizing) == ("x<-y*z",) == found.choices["summers"]
+    assert crowding(without.patch, without.sizing, without.target) == ("x<-y*z",) == found.choices["summers"]
     assert found.verdict.verdict == "follows"
     assert found.patch.counts()["summer"] == 1
 
@@ -38,6 +38,8 @@ def test_no_summer_where_values_are_in_reach():
     tame = CROSSING.replace('"5k", "100k"', '"2k", "1M"').replace("-0.02*x", "-x")
     found = plan_with(read_problem(tame), Choices())
     assert not found.sizing.faults
-    assert crowding(found.patch, found.sizing) == ()
+    assert crowding(found.patch, found.sizing, found.target) == ()
     wrong = tuple(replace(c, realised=0.0) for c in found.sizing.coefficients if c.at == "x<-x")
-    assert crowding(found.patch, replace(found.sizing, coefficients=wrong)) == ("x<-y*z",)
+    off = replace(found.sizing, coefficients=wrong)
+    assert crowding(found.patch, off, found.target) == ()
+    assert crowding(found.patch, off, replace(found.target, resistors=(1e4, 2e4))) == ("x<-y*z",)
