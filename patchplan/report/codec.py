@@ -22,8 +22,10 @@ def encode(value: Any) -> Any:
     Exact rationals become "p/q", floats keep 9 digits ("inf" as a string), mappings are sorted by key, fields outside
     equality (origins) are left out.
     """
+    if value is None or isinstance(value, (str, int)):
+        return value
     if is_dataclass(value):
-        return {f.name: encode(getattr(value, f.name)) for f in fields(value) if f.compare}
+        return {name: encode(getattr(value, name)) for name in _compared(type(value))}
     if isinstance(value, Mapping):
         return {key: encode(value[key]) for key in sorted(value)}
     if isinstance(value, tuple):
@@ -33,6 +35,11 @@ def encode(value: Any) -> Any:
     if isinstance(value, float):
         return rounded(value) if math.isfinite(value) else str(float(value))
     return value
+
+
+@cache
+def _compared(kind: Any) -> tuple[str, ...]:
+    return tuple(f.name for f in fields(kind) if f.compare)
 
 
 def decode(hint: Any, data: Any) -> Any:

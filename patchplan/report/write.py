@@ -21,6 +21,8 @@ from patchplan.report.trimming import trimming_data
 from patchplan.report.worst import worst_files
 
 Array = NDArray[np.float64]
+#: Most numbers in waveforms.csv, about 10 MB.
+MOST_NUMBERS = 1_000_000
 #: Gives the volts of every net at the start of the run, and the netlist that starts there.
 Board = Callable[[Plan], tuple[Mapping[str, float], str]]
 
@@ -136,7 +138,10 @@ def _waveform(plan: Plan, name: str) -> tuple[Array, Array]:
 
 
 def waveforms_csv(plan: Plan) -> str:
-    """waveforms.csv: volts of every signal node, and each watched signal by equation and by circuit."""
+    """waveforms.csv: volts of every signal node, and each watched signal by equation and by circuit.
+
+    Where that is more than :data:`MOST_NUMBERS`, every second, third ... row is written, and both rows of jumps.
+    """
     verdict, unit = plan.verdict, plan.system.time_unit
     times = verdict.times / plan.sizing.time_scale
     columns = {"circuit_time_s": verdict.times, f"problem_time_{unit}": times}
@@ -144,6 +149,11 @@ def waveforms_csv(plan: Plan) -> str:
     for curve in verdict.curves:
         columns[f"{curve.name} equation"] = np.interp(times, curve.times, curve.reference)
         columns[f"{curve.name} circuit"] = np.interp(times, curve.times, curve.circuit)
+    every = -(-len(times) * len(columns) // MOST_NUMBERS)
+    if every > 1:
+        jumps = np.flatnonzero(np.diff(times) == 0.0)
+        kept = np.unique(np.concatenate((np.arange(0, len(times), every), jumps, jumps + 1, [len(times) - 1])))
+        columns = {name: column[kept] for name, column in columns.items()}
     return _columns_csv(columns)
 
 

@@ -13,6 +13,7 @@ import numpy as np
 import pytest
 
 from patchplan.equation.problem import Input, Recording
+from patchplan.report import write
 from patchplan.report.write import plan_folder, problem_files, write_plan
 from tests.report.test_plan_json import unbuildable
 
@@ -90,6 +91,19 @@ def test_waveforms_hold_volts_and_units(plan, files):
     assert float(row["problem_time_s"]) == pytest.approx(float(row["circuit_time_s"]) * 100)
     assert float(row["v(x)"]) == pytest.approx(20 * float(row["x circuit"]), rel=1e-6)
     assert float(row["x equation"]) == pytest.approx(0.45 * np.cos(2 * 1.37 + 0.7), rel=1e-3)
+
+
+def test_waveforms_of_a_large_board_are_thinned_but_keep_jumps(plan, monkeypatch):
+    count = plan.verdict.times.size
+    times = plan.verdict.times.copy()
+    times[500] = times[501]
+    jumping = replace(plan, verdict=replace(plan.verdict, times=times))
+    monkeypatch.setattr(write, "MOST_NUMBERS", count * 2)
+    found = [float(r["circuit_time_s"]) for r in rows(write.waveforms_csv(jumping).encode())]
+    assert found[0] == times[0]
+    assert found[-1] == pytest.approx(times[-1], rel=1e-8)
+    assert found.count(pytest.approx(times[501], rel=1e-8)) == 2
+    assert len(found) < count / 2
 
 
 def test_parts_list_has_one_row_a_part_in_si_units(plan, files):
