@@ -24,8 +24,8 @@ def encode(value: Any) -> Any:
     """
     if value is None or isinstance(value, (str, int)):
         return value
-    if is_dataclass(value):
-        return {name: encode(getattr(value, name)) for name in _compared(type(value))}
+    if is_dataclass(value) and not isinstance(value, type):
+        return {name: encode(getattr(value, name)) for name in _compared(value.__class__)}
     if isinstance(value, Mapping):
         return {key: encode(value[key]) for key in sorted(value)}
     if isinstance(value, tuple):
@@ -38,7 +38,7 @@ def encode(value: Any) -> Any:
 
 
 @cache
-def _compared(kind: Any) -> tuple[str, ...]:
+def _compared(kind: type[Any]) -> tuple[str, ...]:
     return tuple(f.name for f in fields(kind) if f.compare)
 
 
