@@ -19,8 +19,9 @@ from patchplan.equation.faults import rendered
 from patchplan.equation.problem import Build, Problem
 from patchplan.equation.system import System
 from patchplan.equation.uncertain import uncertain_system
-from patchplan.errors import ProblemFaults
+from patchplan.errors import Fault, ProblemFaults
 from patchplan.form.offsets import find_form
+from patchplan.form.realise import FORMS
 from patchplan.form.records import Form
 from patchplan.form.rewrite import Rewritten, with_forms
 from patchplan.horizon import within_horizon
@@ -102,13 +103,16 @@ def plan(
         return plan_with(problem, choices, accept=accept, progress=progress, system=system)
 
     try:
-        considered = consider(problem, system)
-        runs = [attempt(Choices(think=think, blocks=forms)) for forms in shortlist(considered)]
+        build = problem.build
+        considered = () if build.forms else consider(problem, system)
+        likely = (asked_forms(build, system),) if build.forms else shortlist(considered)
+        runs = [attempt(Choices(offsets=build.offsets is not False, think=think, blocks=forms)) for forms in likely]
         plain_forms = as_written(considered)
-        if plain_forms not in [run.choices["blocks"] for run in runs] and all(_merit(run)[0] for run in runs):
-            runs.append(attempt(Choices(think=think, blocks=plain_forms)))
+        others = [run.choices["blocks"] for run in runs]
+        if not build.forms and plain_forms not in others and all(_merit(run)[0] for run in runs):
+            runs.append(attempt(replace(Choices(**runs[0].choices), blocks=plain_forms)))
         found = min(runs, key=lambda run: _merit(run, handicap(run)))
-        if set(found.form.offsets) - set(found.form.scales):
+        if build.offsets is None and set(found.form.offsets) - set(found.form.scales):
             plain = attempt(replace(Choices(**found.choices), offsets=False))
             found = found if _merit(found, OFFSET_COST) < _merit(plain) else plain
         if found.patch.factors:
@@ -158,9 +162,7 @@ def plan_with(
     target = target_of(build, catalogue)
     say("Solving the problem")
     written = with_forms(system, dict(choices.blocks))
-    uncertain, left_out = uncertain_system(problem, system)
-    reach = find_reach(written.extended, problem.ranges, build, uncertain=uncertain)
-    reach = replace(reach, warnings=(*reach.warnings, *(_LEFT_OUT.format(name) for name in left_out)))
+    reach = reach_of(problem, system, written)
     form = form_of(problem, choices, written, reach, target)
     say("Drawing the patch")
     patch, ranges, sensitivity = drawn(build, choices, form, reach)
@@ -186,6 +188,29 @@ def plan_with(
     )  # fmt: skip
     found = replace(found, reach=reach, patch=patch, sizing=sizing)
     return replace(found, circuit=circuit, verdict=verdict, warnings=(*warnings, *circuit.notes, *verdict.warnings))
+
+
+def asked_forms(build: Build, system: System) -> Forms:
+    """The forms of linear blocks that the file asks for.
+
+    Raises
+    ------
+    ProblemFaults
+        Where there is no such block, or it can't take the form.
+    """
+    try:
+        with_forms(system, dict(build.forms))
+    except ValueError as error:
+        remedy = f"Name the output of a linear block and one of {', '.join(FORMS)}."
+        raise ProblemFaults([Fault(str(error), remedy, "build.forms")]) from None
+    return build.forms
+
+
+def reach_of(problem: Problem, system: System, written: Rewritten) -> Reach:
+    """Ranges of all signals, over the plant's own uncertainty too, for boards within the build's tolerances."""
+    uncertain, left_out = uncertain_system(problem, system)
+    reach = find_reach(written.extended, problem.ranges, problem.build, uncertain=uncertain)
+    return replace(reach, warnings=(*reach.warnings, *(_LEFT_OUT.format(name) for name in left_out)))
 
 
 def form_of(problem: Problem, choices: Choices, written: Rewritten, reach: Reach, target: Target) -> Form:

@@ -29,7 +29,7 @@ def cheapest_first(options: Iterable[Option], wish: Wish) -> list[Option]:
 
 
 def _cost(option: Option) -> tuple[float, ...]:
-    tolerance = option.combination.build.resistor_tolerance
+    tolerance = option.build.resistor_tolerance
     return option.packages, option.parts, -tolerance, option.supply_current, option.error_percent
 
 

@@ -1,10 +1,9 @@
-"""Combinations of parts, values, speed and form, and the figures of each."""
+"""Combinations of parts, values, speed and form, each a Build, and their figures."""
 
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, field
-from typing import Any
+from dataclasses import dataclass
 
 from patchplan.check.records import Cause
 from patchplan.equation.problem import Build
@@ -39,27 +38,13 @@ class Axes:
 
 
 @dataclass(frozen=True)
-class Form:
-    """A way to carry the equations: its name for people, "" for the usual one, and what it asks of ``Choices``."""
-
-    name: str = ""
-    choices: Mapping[str, Any] = field(default_factory=dict)
-
-
-@dataclass(frozen=True)
-class Combination:
-    """One build: its wishes and the form of the equations."""
-
-    build: Build
-    form: Form = Form()
-
-
-@dataclass(frozen=True)
 class Option:
     """One combination with its figures.
 
     Attributes
     ----------
+    build
+        The wishes of the combination, form of the equations included.
     error_percent
         Predicted error of the nominal board [% of peak], and ``causes`` of it, largest first.
     spread_percent
@@ -76,7 +61,7 @@ class Option:
         Why it cannot be built, "" where it can; the figures then say nothing.
     """
 
-    combination: Combination
+    build: Build
     error_percent: float = 0.0
     spread_percent: float = 0.0
     parts: int = 0

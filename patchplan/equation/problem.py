@@ -160,6 +160,10 @@ class Build:
     trim: bool = False
     resistor_stock: Stock | None = None
     capacitor_stock: Stock | None = None
+    #: Whether signals far from zero are carried as a difference; None leaves it to the planner.
+    offsets: bool | None = None
+    #: Form of linear blocks, as (name of the output, form); () leaves it to the planner.
+    forms: tuple[tuple[str, str], ...] = ()
 
 
 @dataclass(frozen=True)

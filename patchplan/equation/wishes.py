@@ -46,7 +46,7 @@ def read_build(reading: Reading, part_names: Mapping[str, Collection[str]] | Non
         "capacitor_limits": lambda r, k, v: _limits(r, k, v, _FARADS),
         "resistor_tolerance": Reading.tolerance, "capacitor_tolerance": Reading.tolerance,
         "op_amp": lambda r, k, v: _part(r, k, v, part_names), "multiplier": lambda r, k, v: _part(r, k, v, part_names),
-        "speed": _speed, "trim": _flag,
+        "speed": _speed, "trim": _flag, "offsets": _flag, "forms": _forms,
     }  # fmt: skip
     found: dict[str, Any] = {
         key: read(reading, f"build.{key}", table[key]) for key, read in readers.items() if key in table
@@ -180,6 +180,14 @@ def _flag(reading: Reading, key: str, given: Any) -> bool | None:
         return given
     reading.fault(key, f"This is {kind_of(given)}.", "Write true or false.")
     return None
+
+
+def _forms(reading: Reading, key: str, given: Any) -> tuple[tuple[str, str], ...] | None:
+    if not isinstance(given, dict):
+        reading.fault(key, f"This is {kind_of(given)}.", 'Write { y = "cascade" }: output of a block and its form.')
+        return None
+    found = [(name, reading.string(f"{key}.{name}", form, "the form's name")) for name, form in given.items()]
+    return tuple((name, form) for name, form in found if form is not None)
 
 
 def _pairs(reading: Reading, given: Any) -> None:

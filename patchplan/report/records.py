@@ -8,7 +8,7 @@ from typing import Any
 
 from patchplan.check.records import Verdict
 from patchplan.circuit.records import Circuit
-from patchplan.compare.records import SpeedCurve
+from patchplan.compare.records import Option, SpeedCurve
 from patchplan.equation.problem import Problem
 from patchplan.equation.system import System
 from patchplan.form.records import Form
@@ -74,3 +74,20 @@ class Plan:
     warnings: tuple[str, ...] = ()
     considered: tuple[Considered, ...] = ()
     speed_curve: SpeedCurve | None = None
+
+
+@dataclass(frozen=True)
+class Picked:
+    """The cheapest option whose plan, checked in full, meets a wish.
+
+    Attributes
+    ----------
+    option, plan
+        None where there is no such option among those checked.
+    refuted
+        Options that were predicted to meet the wish and whose plans, checked in full, do not.
+    """
+
+    option: Option | None
+    plan: Plan | None
+    refuted: tuple[tuple[Option, Plan], ...] = ()

@@ -6,14 +6,14 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from patchplan.compare.front import cheapest_first, excess, marked, nearest
-from patchplan.compare.records import Combination, Option, Wish
+from patchplan.compare.records import Option, Wish
 from patchplan.equation.problem import Build
 
 FEW = st.sampled_from([0.0, 0.5, 1.0, 2.0])
 OPTIONS = st.lists(
     st.builds(
         Option,
-        st.builds(Combination, st.builds(Build, resistor_tolerance=st.sampled_from([0.01, 0.001]))),
+        st.builds(Build, resistor_tolerance=st.sampled_from([0.01, 0.001])),
         FEW, FEW, st.integers(3, 5), st.integers(1, 2), FEW,
         fault=st.sampled_from(["", "", "", "No part takes this supply."]),
     ),
@@ -45,8 +45,8 @@ def test_the_cheapest_meets_the_wish_and_none_that_does_has_fewer_packages_or_pa
     for first in ranked[:1]:
         least = min((o.packages, o.parts) for o in fits)
         assert (first.packages, first.parts) == least
-        coarsest = max(o.combination.build.resistor_tolerance for o in fits if (o.packages, o.parts) == least)
-        assert first.combination.build.resistor_tolerance == coarsest
+        coarsest = max(o.build.resistor_tolerance for o in fits if (o.packages, o.parts) == least)
+        assert first.build.resistor_tolerance == coarsest
 
 
 @given(OPTIONS)
