@@ -15,8 +15,14 @@ from typing import TYPE_CHECKING, Any
 from patchplan.version import __version__
 
 if TYPE_CHECKING:
+    from patchplan.builds import options as options
+    from patchplan.builds import pick as pick
     from patchplan.check.records import Verdict as Verdict
     from patchplan.circuit.records import Circuit as Circuit
+    from patchplan.compare.records import Axes as Axes
+    from patchplan.compare.records import Comparison as Comparison
+    from patchplan.compare.records import Option as Option
+    from patchplan.compare.records import Wish as Wish
     from patchplan.equation.problem import Problem as Problem
     from patchplan.equation.reader import read_problem as read_problem
     from patchplan.equation.system import System as System
@@ -29,6 +35,7 @@ if TYPE_CHECKING:
     from patchplan.pipeline import Choices as Choices
     from patchplan.pipeline import plan as plan
     from patchplan.pipeline import plan_with as plan_with
+    from patchplan.report.records import Picked as Picked
     from patchplan.report.records import Plan as Plan
     from patchplan.report.write import write_plan as write_plan
     from patchplan.sizing.records import Sizing as Sizing
@@ -39,8 +46,15 @@ _HOME = {
     "plan": "pipeline",
     "plan_with": "pipeline",
     "Choices": "pipeline",
+    "options": "builds",
+    "pick": "builds",
     "write_plan": "report.write",
     "Plan": "report.records",
+    "Picked": "report.records",
+    "Axes": "compare.records",
+    "Comparison": "compare.records",
+    "Option": "compare.records",
+    "Wish": "compare.records",
     "Problem": "equation.problem",
     "System": "equation.system",
     "Form": "form.records",

@@ -60,6 +60,50 @@ def plan(
 
 
 @app.command()
+def options(
+    file: Annotated[Path, typer.Argument(help="Problem file (TOML).", metavar="FILE")],
+    accept: Annotated[str, typer.Option(help="Pick the cheapest build within this error [% of peak].")] = "",
+    spread: Annotated[str, typer.Option(help="And within this spread between boards [% of peak].")] = "",
+    op_amp: Annotated[list[str] | None, typer.Option(help="Op amp to compare; may be repeated, as all below.")] = None,
+    series: Annotated[list[str] | None, typer.Option(help="Series of the resistors, such as E96.")] = None,
+    tolerance: Annotated[
+        list[str] | None, typer.Option(help="Tolerance of resistors (and capacitors), such as 1%,2%.")
+    ] = None,
+    supply: Annotated[list[str] | None, typer.Option(help="12 for rails of -12 V and 12 V, or -5,12.")] = None,
+    speed: Annotated[list[str] | None, typer.Option(help='free, "real time", or how many times faster.')] = None,
+    into: Annotated[Path | None, typer.Option(help="Folder; default outputs/<name of FILE>_options.")] = None,
+    plan_into: Annotated[Path | None, typer.Option(help="Write the full plan of the pick to this folder.")] = None,
+    as_json: Annotated[bool, typer.Option("--json", help="Print options.json and nothing else.")] = False,
+    quiet: Annotated[bool, typer.Option("--quiet", help="Print nothing but faults.")] = False,
+    no_pictures: Annotated[bool, typer.Option("--no-pictures", help="Draw nothing.")] = False,
+    trust_paths: Annotated[bool, typer.Option("--trust-paths", help="Let FILE name files outside its folder.")] = False,
+    think: Annotated[Think, typer.Option(help="How long to search the values of the pick.")] = Think.normal,
+) -> None:
+    """Compare builds of one problem: error, spread, parts, packages and supply current, and pick one.
+
+    Without axes a grid of about thirty is made from the catalogue. Exit code 0: done; 1: no build meets --accept, or
+    none can be built; 2: bad input.
+    """
+    folder = into or Path("outputs") / f"{file.stem}_options"
+    axes = {"op_amps": op_amp, "series": series, "tolerances": tolerance, "supplies": supply, "speeds": speed}
+
+    def work() -> int:
+        from patchplan.compared import compared
+
+        code, text, files = compared(
+            file, folder, plan_into, accept=accept, spread=spread, axes={k: v or [] for k, v in axes.items()},
+            pictures=not no_pictures, trust_paths=trust_paths, think=think.value, with_words=not (quiet or as_json),
+        )  # fmt: skip
+        if as_json:
+            text = files["options.json"].decode()
+        if as_json or not quiet:
+            typer.echo(text, nl=False)
+        return code
+
+    raise typer.Exit(_guarded(work))
+
+
+@app.command()
 def start(
     file: Annotated[Path, typer.Argument(help="File to write.", metavar="[FILE]")] = Path("problem.toml"),
 ) -> None:

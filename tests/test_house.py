@@ -18,7 +18,7 @@ TESTS = sorted((ROOT / "tests").rglob("*.py"))
 ROWS = (
     ("errors", "quantity", "version"), ("equation",), ("reach",), ("form",), ("patch",), ("ranges",), ("sensitivity",),
     ("horizon",), ("sizing",), ("circuit",), ("check",), ("compare",), ("report",), ("shortlist",), ("pipeline",),
-    ("options",), ("cli",),
+    ("builds",), ("compared",), ("cli",),
 )  # fmt: skip
 ROW_OF = {room: row for row, rooms in enumerate(ROWS) for room in rooms}
 SYMPY_ROOMS = ("equation", "form", "patch")

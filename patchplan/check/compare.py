@@ -34,7 +34,8 @@ _SWITCH_OFF = 1.1
 _SETTLING = 100.0
 #: Spread above which a linear estimate says little but that boards differ [%] (compared with boards drawn at random).
 _ROUGH = 20.0
-_REMEDY = {
+#: What lowers a cause of spread.
+REMEDY = {
     "resistors": "Resistors of a closer tolerance or trimmers would lower it.",
     "capacitors": "Measured capacitors, or capacitors of a closer tolerance, would lower it.",
     "reference": "A closer reference would lower it.",
@@ -256,6 +257,6 @@ def _warnings(
         found.append(
             f"Boards of this design will differ by {share:.{0 if share >= 10 else 1}f} % (one standard deviation"
             f"{', a linear estimate that is rough when so large' if share > _ROUGH else ''}), above the {accept:g} % "
-            f"accepted, mostly by {cause}. {_REMEDY[cause]}"
+            f"accepted, mostly by {cause}. {REMEDY[cause]}"
         )
     return tuple(found)

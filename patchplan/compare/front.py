@@ -23,14 +23,14 @@ def cheapest_first(options: Iterable[Option], wish: Wish) -> list[Option]:
     """Options that meet a wish, cheapest first.
 
     The catalogue has no prices: fewer packages are cheaper, then fewer parts, then a coarser tolerance of the
-    resistors, then less current, then a smaller error.
+    resistors, then of the capacitors, then less current, then a smaller error.
     """
     return sorted((o for o in options if not o.fault and excess(o, wish) <= 1.0), key=_cost)
 
 
 def _cost(option: Option) -> tuple[float, ...]:
-    tolerance = option.build.resistor_tolerance
-    return option.packages, option.parts, -tolerance, option.supply_current, option.error_percent
+    coarse = option.build.resistor_tolerance, option.build.capacitor_tolerance
+    return option.packages, option.parts, -coarse[0], -coarse[1], option.supply_current, option.error_percent
 
 
 def excess(option: Option, wish: Wish) -> float:

@@ -13,8 +13,9 @@ from patchplan.equation.wishes import reference_for_supply
 
 #: Combinations of a grid that the planner makes itself, and op amps in it.
 MOST, MOST_OP_AMPS = 30, 5
-#: Series and tolerance of resistors that are sold together (common practice, no source).
-RESISTORS = (("E24", 0.01), ("E12", 0.01), ("E96", 0.001))
+#: Series and tolerance of resistors that are sold together, and capacitors that go with them (common practice, no
+#: source); None as tolerance of capacitors leaves the file's.
+VALUES: tuple[tuple[str, float, float | None], ...] = (("E24", 0.01, None), ("E12", 0.01, None), ("E96", 0.001, 0.01))
 SUPPLIES = ((-15.0, 15.0), (-12.0, 12.0), (-5.0, 5.0), (-2.5, 2.5))
 #: The planner's own speed divided and multiplied by this make a slower and a faster one; speeds closer to one that is
 #: there than the second figure tell nothing new.
@@ -38,13 +39,13 @@ def product_of(forms: Sequence[Build], axes: Axes, *, reference_stated: bool) ->
         forms,
         axes.supplies or (usual.supply,),
         axes.speeds or (usual.speed,),
-        axes.tolerances or (usual.resistor_tolerance,),
+        axes.tolerances or ((usual.resistor_tolerance, None),),
         axes.series or (usual.resistors,),
         axes.op_amps or (usual.op_amp,),
     )
     made = []
     for form, supply, speed, tolerance, series, op_amp in every:
-        wish = replace(form, op_amp=op_amp, resistors=series, resistor_tolerance=tolerance, speed=speed)
+        wish = _with_values(replace(form, op_amp=op_amp, speed=speed), series, *tolerance)
         made.append(_on_supply(wish, supply, reference_stated))
     return tuple(dict.fromkeys(made))
 
@@ -54,8 +55,8 @@ def grid_of(
 ) -> tuple[Build, ...]:
     """At most :data:`MOST` combinations around the file's own, which comes first.
 
-    Op amps of the catalogue by kinds of resistors; then, with the file's resistors, the op amps on another supply, at
-    other speeds and in other forms.
+    Op amps of the catalogue by kinds of values; then, with the file's values, the op amps on another supply, at other
+    speeds and in other forms.
 
     Parameters
     ----------
@@ -65,14 +66,20 @@ def grid_of(
         Others than the file's.
     """
     usual = forms[0]
-    resistors = dict.fromkeys(((usual.resistors, usual.resistor_tolerance), *RESISTORS))
-    variants = [replace(usual, resistors=r, resistor_tolerance=t) for r, t in list(resistors)[: len(RESISTORS)]]
+    variants = list(dict.fromkeys((usual, *(_with_values(usual, *values) for values in VALUES))))[: len(VALUES)]
     variants += _other_supply(usual, catalogue, reference_stated)
     for speed, form in zip_longest(speeds, forms[1:]):
         variants += [replace(usual, speed=speed)] if speed is not None else []
         variants += [form] if form is not None else []
     made = (replace(v, op_amp=name) for v in variants for name in op_amps_for(v, catalogue))
     return tuple(dict.fromkeys(made))[:MOST]
+
+
+def _with_values(build: Build, series: str, resistor: float, capacitor: float | None) -> Build:
+    capacitor = build.capacitor_tolerance if capacitor is None else capacitor
+    if series != build.resistors:
+        build = replace(build, resistors=series, resistor_stock=None)
+    return replace(build, resistor_tolerance=resistor, capacitor_tolerance=capacitor)
 
 
 def op_amps_for(build: Build, catalogue: Catalogue) -> list[str]:

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 
 from patchplan.circuit.build import build_circuit
@@ -15,7 +17,7 @@ from patchplan.equation.problem import Build
 from patchplan.form.records import Form
 from patchplan.patch.records import Patch
 from patchplan.ranges import Ranges
-from patchplan.reach.records import Reach
+from patchplan.reach.records import Reach, Reference
 from patchplan.sensitivity import Sensitivity
 from patchplan.sizing.records import Sizing, Target
 
@@ -36,6 +38,13 @@ def rated(
     patch, sizing = with_references(patch, sizing, target, float(form.system.duration))
     error, causes = predicted_error(form.system, patch, ranges, sensitivity, sizing, target)
     spread, apart = predicted_spread(form.system, patch, sensitivity, sizing, target)
+    whole = _of_peak(sensitivity, reach.reference)
+    of_peak = None
+    if whole is not sensitivity:
+        of_peak = (
+            predicted_error(form.system, patch, ranges, whole, sizing, target)[0],
+            predicted_spread(form.system, patch, whole, sizing, target)[0],
+        )
     circuit = build_circuit(form, patch, sizing, target, build, catalogue, stand_ins=reach.reference.waveforms)
     packages, parts = counts_to_fit(circuit.parts)
     return Option(
@@ -48,6 +57,24 @@ def rated(
         speed=float(form.system.time_unit_seconds) / sizing.time_scale,
         causes=causes,
         spread_causes=apart,
+        of_peak=of_peak,
+    )
+
+
+def _of_peak(sensitivity: Sensitivity, reference: Reference) -> Sensitivity:
+    """The responses as fractions of each watched signal's whole peak; itself where they are that already."""
+    peaks = np.array([np.abs(reference.of(name)).max() or 1.0 for name in sensitivity.watched])
+    share = (sensitivity.base / peaks)[:, None]
+    if np.allclose(share, 1.0):
+        return sensitivity
+    return replace(
+        sensitivity,
+        base=peaks,
+        coefficient=sensitivity.coefficient * share[:, None],
+        rate=sensitivity.rate * share[:, None],
+        lag=sensitivity.lag * share[:, None],
+        start={name: response * share for name, response in sensitivity.start.items()},
+        leak={name: response * share for name, response in sensitivity.leak.items()},
     )
 
 

@@ -18,7 +18,7 @@ class Axes:
     op_amps, series
         Names; ``series`` of the resistors.
     tolerances
-        Of the resistors, 0.01 for 1 %.
+        Of resistors and of capacitors, (0.01, 0.02) for 1 % and 2 %; None as second leaves the file's.
     supplies
         (low, high) rails [V].
     speeds
@@ -27,7 +27,7 @@ class Axes:
 
     op_amps: tuple[str, ...] = ()
     series: tuple[str, ...] = ()
-    tolerances: tuple[float, ...] = ()
+    tolerances: tuple[tuple[float, float | None], ...] = ()
     supplies: tuple[tuple[float, float], ...] = ()
     speeds: tuple[str | float, ...] = ()
 
@@ -46,9 +46,12 @@ class Option:
     build
         The wishes of the combination, form of the equations included.
     error_percent
-        Predicted error of the nominal board [% of peak], and ``causes`` of it, largest first.
+        Predicted error of the nominal board as the check counts it [% of peak, or of half the swing where a node
+        carries an offset], and ``causes`` of it, largest first.
     spread_percent
-        One standard deviation between boards [% of peak], and ``spread_causes`` of it, largest first.
+        One standard deviation between boards, counted alike, and ``spread_causes`` of it, largest first.
+    of_peak
+        Both in percent of the whole peak, whatever the form; None where that is the same.
     parts
         What has to be fitted: packages, resistors, capacitors and the rest.
     supply_current
@@ -70,13 +73,15 @@ class Option:
     speed: float = 0.0
     causes: tuple[Cause, ...] = ()
     spread_causes: tuple[Cause, ...] = ()
+    of_peak: tuple[float, float] | None = None
     best: bool = False
     fault: str = ""
 
     @property
     def figures(self) -> tuple[float, ...]:
-        """The five figures that are compared; less is better in each."""
-        return (self.error_percent, self.spread_percent, self.parts, self.packages, self.supply_current)
+        """The five figures that are compared, error and spread of the whole peak; less is better in each."""
+        error, spread = self.of_peak or (self.error_percent, self.spread_percent)
+        return (error, spread, self.parts, self.packages, self.supply_current)
 
 
 @dataclass(frozen=True)

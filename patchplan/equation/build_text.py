@@ -23,6 +23,11 @@ def build_lines(before: Build, after: Build) -> dict[str, str]:
         "resistor_tolerance": (
             before.resistor_tolerance, after.resistor_tolerance, f'"{100 * after.resistor_tolerance:.9g}%"'
         ),
+        "capacitor_tolerance": (
+            before.capacitor_tolerance,
+            after.capacitor_tolerance,
+            f'"{100 * after.capacitor_tolerance:.9g}%"',
+        ),
         "op_amp": (before.op_amp, after.op_amp, json.dumps(after.op_amp)),
         "speed": (
             before.speed, after.speed,

@@ -22,8 +22,8 @@ MANIFEST = "plan.json"
 PATIENCE = 20.0
 
 
-def may_write(folder: Path) -> None:
-    """Refuse a folder that holds things which are no plan.
+def may_write(folder: Path, manifest: str = MANIFEST) -> None:
+    """Refuse a folder that holds things which are no plan (or what else has this manifest).
 
     Raises
     ------
@@ -32,14 +32,16 @@ def may_write(folder: Path) -> None:
     """
     if os.path.lexists(folder) and not folder.is_dir():
         raise FolderRefused(f"{folder} is a file, and the plan needs a folder. Name another one with --into.")
-    if folder.is_dir() and any(folder.iterdir()) and plan_files(folder) is None:
+    if folder.is_dir() and any(folder.iterdir()) and plan_files(folder, manifest) is None:
         raise FolderRefused(
-            f"{folder} is not empty and holds no plan ({MANIFEST} of this program is missing in it). "
+            f"{folder} is not empty and holds no {Path(manifest).stem} ({manifest} of this program is missing in it). "
             "Nothing was written. Name another folder with --into, or empty this one."
         )
 
 
-def replace_folder(folder: Path, files: Mapping[str, bytes], *, patience: float = PATIENCE) -> None:
+def replace_folder(
+    folder: Path, files: Mapping[str, bytes], *, patience: float = PATIENCE, manifest: str = MANIFEST
+) -> None:
     """Write a plan folder, in place of an earlier plan if there is one.
 
     Parameters
@@ -50,6 +52,8 @@ def replace_folder(folder: Path, files: Mapping[str, bytes], *, patience: float 
         Name relative to the folder -> content; holds the manifest, whose ``files`` names them all.
     patience
         Longest wait for another run that writes here [s].
+    manifest
+        The file of the folder that says which files are ours.
 
     Raises
     ------
@@ -64,10 +68,10 @@ def replace_folder(folder: Path, files: Mapping[str, bytes], *, patience: float 
     try:
         with FileLock(_beside(folder, "lock"), timeout=patience):
             mend(folder)
-            may_write(folder)
-            _refuse_clashes(folder, files)
+            may_write(folder, manifest)
+            _refuse_clashes(folder, files, manifest)
             try:
-                _build(folder, files)
+                _build(folder, files, manifest)
             except Exception:
                 shutil.rmtree(_beside(folder, "new"), ignore_errors=True)
                 raise
@@ -91,10 +95,10 @@ def mend(folder: Path) -> None:
             shutil.rmtree(leftover)
 
 
-def plan_files(folder: Path) -> frozenset[str] | None:
+def plan_files(folder: Path, manifest: str = MANIFEST) -> frozenset[str] | None:
     """Files that belong to the plan in a folder; None where it holds no plan."""
     try:
-        data = json.loads((folder / MANIFEST).read_text(encoding="utf-8"))
+        data = json.loads((folder / manifest).read_text(encoding="utf-8"))
         if "contract" in data:
             return frozenset(map(str, data["files"]))
     except (OSError, ValueError, TypeError, KeyError):
@@ -102,8 +106,8 @@ def plan_files(folder: Path) -> frozenset[str] | None:
     return None
 
 
-def _refuse_clashes(folder: Path, files: Mapping[str, bytes]) -> None:
-    ours = plan_files(folder) or frozenset()
+def _refuse_clashes(folder: Path, files: Mapping[str, bytes], manifest: str) -> None:
+    ours = plan_files(folder, manifest) or frozenset()
     clashes = [name for name in files if name not in ours and os.path.lexists(folder / name)]
     if clashes:
         raise FolderRefused(
@@ -112,10 +116,10 @@ def _refuse_clashes(folder: Path, files: Mapping[str, bytes]) -> None:
         )
 
 
-def _build(folder: Path, files: Mapping[str, bytes]) -> None:
+def _build(folder: Path, files: Mapping[str, bytes], manifest: str) -> None:
     new = _beside(folder, "new")
     if folder.is_dir():
-        _link_tree(folder, new, plan_files(folder) or frozenset())
+        _link_tree(folder, new, plan_files(folder, manifest) or frozenset())
     for name, content in files.items():
         path = new / name
         path.parent.mkdir(parents=True, exist_ok=True)

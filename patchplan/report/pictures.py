@@ -43,18 +43,18 @@ def pictures(plan: Plan) -> dict[str, str]:
         drawn: dict[str, str] = {}
         for curve in plan.verdict.curves[:MOST_SIGNALS]:
             node = circuit.nodes[circuit.watched[curve.name]]
-            drawn[unused_name("signal", curve.name, "svg", drawn)] = _svg(signal_picture(plan, curve, node))
-        drawn["nodes.svg"] = _svg(swing_picture(plan))
+            drawn[unused_name("signal", curve.name, "svg", drawn)] = svg_text(signal_picture(plan, curve, node))
+        drawn["nodes.svg"] = svg_text(swing_picture(plan))
         if plan.verdict.budget:
-            drawn["budget.svg"] = _svg(budget_picture(plan))
+            drawn["budget.svg"] = svg_text(budget_picture(plan))
         if plan.speed_curve and any(plan.speed_curve.error):
-            drawn["speed.svg"] = _svg(speed_picture(plan, plan.speed_curve))
+            drawn["speed.svg"] = svg_text(speed_picture(plan, plan.speed_curve))
     return drawn
 
 
 def signal_picture(plan: Plan, curve: Curve, node: NodeMap) -> Figure:
     """The circuit over the equation's solution, and their difference below on the same time axis."""
-    figure = _figure(style.SIGNAL_HEIGHT)
+    figure = new_figure(style.SIGNAL_HEIGHT)
     upper = figure.add_axes(style.UPPER_PANEL)
     lower = figure.add_axes(style.LOWER_PANEL, sharex=upper)
     _signal_panel(upper, plan, curve, node)
@@ -247,7 +247,7 @@ def _limits_in_units(node: NodeMap) -> tuple[float, float]:
 def _chart(rows: int, title: str) -> tuple[Figure, Axes]:
     """Figure with one row an entry, the first on top."""
     height = style.CHART_MARGIN + style.ROW_HEIGHT * max(rows, 2)
-    figure = _figure(height)
+    figure = new_figure(height)
     left, bottom, width = style.CHART_PANEL
     axes = figure.add_axes((left, bottom / height, width, (height - style.CHART_MARGIN) / height))
     axes.set_title(title)
@@ -256,13 +256,15 @@ def _chart(rows: int, title: str) -> tuple[Figure, Axes]:
     return figure, axes
 
 
-def _figure(height: float) -> Figure:
+def new_figure(height: float) -> Figure:
+    """An empty picture of the usual width [inch]."""
     from matplotlib.figure import Figure
 
     return Figure(figsize=(style.PICTURE_WIDTH, height))
 
 
-def _svg(figure: Figure) -> str:
+def svg_text(figure: Figure) -> str:
+    """The picture as SVG, the same bytes for the same picture."""
     buffer = io.StringIO()
     figure.savefig(buffer, format="svg", metadata={"Date": None, "Creator": None})
     return buffer.getvalue()

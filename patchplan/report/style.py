@@ -52,6 +52,12 @@ SPEED_LOWER = (0.12, 0.10, 0.61, 0.39)
 SPEED_NAME = -0.15
 #: Left edge and width of a chart, parts of the picture; between them its bottom edge in inches.
 CHART_PANEL = (0.34, 0.55, 0.62)
+#: The panel of a comparison of builds, its legend at the right; forms of its marks, their size and that of the ring
+#: around the pick [points]; how far marks of one count of parts stand apart, part of a count.
+OPTIONS_PANEL = (0.10, 0.12, 0.66, 0.78)
+MARKS = ("o", "s", "^", "D", "v", "P", "X")
+MARK, RING = 5.5, 11.0
+ASIDE = 0.5
 #: Places of the names and numbers of the vertical axes, parts of the panel's width.
 LEFT_NAME, RIGHT_NAME, RIGHT_NUMBERS = -0.11, 1.11, 1.015
 #: Room above and below the curves, part of their swing.

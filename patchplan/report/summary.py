@@ -29,31 +29,32 @@ def summary(plan: Plan, folder: Path | None = None, *, colour: bool = False) -> 
     """
     works = plan.verdict.verdict == "follows"
     told = words.story(plan)
-    blocks = [_painted(words.printable(plan.problem.title), "title", colour)]
-    blocks.append(_painted(_wrapped(told[0]), "good" if works else "bad", colour))
-    blocks += [_wrapped(reason) for reason in words.reasons(plan)]
+    blocks = [painted(words.printable(plan.problem.title), "title", colour)]
+    blocks.append(painted(wrapped(told[0]), "good" if works else "bad", colour))
+    blocks += [wrapped(reason) for reason in words.reasons(plan)]
     remedies = words.remedies(plan)
     if remedies:
-        blocks.append(_wrapped(f"To mend it: {' '.join(remedies)}"))
+        blocks.append(wrapped(f"To mend it: {' '.join(remedies)}"))
     if plan.circuit is not None:
-        blocks += map(_wrapped, (*words.speed(plan), words.made_of(plan), *words.forms(plan)))
-        blocks += ["", *_columns(_first_rows(node_table(plan))), ""]
-        blocks += [_wrapped(s) for s in (words.largest_error(plan),) if s]
-    blocks += [_wrapped(f"Warning: {warning}") for warning in warnings_of(plan)]
+        blocks += map(wrapped, (*words.speed(plan), words.made_of(plan), *words.forms(plan)))
+        blocks += ["", *table_lines(_first_rows(node_table(plan))), ""]
+        blocks += [wrapped(s) for s in (words.largest_error(plan),) if s]
+    blocks += [wrapped(f"Warning: {warning}") for warning in warnings_of(plan)]
     if folder is not None:
         start = "report.html" if plan.circuit is not None else "plan.json"
-        blocks.append(_wrapped(f"Written to {folder} (start with {start})"))
+        blocks.append(wrapped(f"Written to {folder} (start with {start})"))
     return "\n".join(blocks) + "\n"
 
 
 def refusal(title: str, reason: str, folder: Path, *, colour: bool = False) -> str:
     """The same for a problem that the parts rule out before anything is planned."""
-    blocks = [_painted(words.printable(title), "title", colour), _painted(_wrapped(words.NOT_BUILDABLE), "bad", colour)]
-    blocks += [_wrapped(reason), _wrapped(f"Written to {folder} (start with plan.json)")]
+    blocks = [painted(words.printable(title), "title", colour), painted(wrapped(words.NOT_BUILDABLE), "bad", colour)]
+    blocks += [wrapped(reason), wrapped(f"Written to {folder} (start with plan.json)")]
     return "\n".join(blocks) + "\n"
 
 
-def _wrapped(text: str) -> str:
+def wrapped(text: str) -> str:
+    """A sentence in lines of the page's width, indented."""
     options: dict[str, Any] = {"break_on_hyphens": False, "break_long_words": False}
     return textwrap.fill(words.printable(text), WIDTH, initial_indent="  ", subsequent_indent="  ", **options)
 
@@ -68,7 +69,7 @@ def _first_rows(table: Table) -> Table:
     return Table(table.title, table.headers, rows, table.numeric, f"and {left_out} more in nodes.csv")
 
 
-def _columns(table: Table) -> list[str]:
+def table_lines(table: Table) -> list[str]:
     """Lines of a table, cut to the width of the page."""
     cells = [table.headers, *table.rows]
     widths = [max(len(row[i]) for row in cells) for i in range(len(table.headers))]
@@ -90,5 +91,6 @@ def _cut(text: str, width: int) -> str:
     return text if len(text) <= width else text[: width - 1] + "…"
 
 
-def _painted(text: str, role: str, colour: bool) -> str:
+def painted(text: str, role: str, colour: bool) -> str:
+    """Text in the terminal's colour of a role."""
     return f"{TERMINAL[role]}{text}{TERMINAL['end']}" if colour else text

@@ -84,11 +84,15 @@ def remedies(plan: Plan) -> tuple[str, ...]:
         return tuple(dict.fromkeys(_more_room(plan, node.node) for node in verdict.nodes if not node.ok))
     if verdict.verdict != "inaccurate":
         return ()
-    largest = _largest(verdict).cause if verdict.budget else ""
-    ways = [way for cause, way in _REMEDIES if cause in largest][:1]
+    ways = remedy_of(_largest(verdict).cause) if verdict.budget else []
     if build.speed != "free":
         ways.append('Let the planner choose the speed: speed = "free" under [build].')
     return (*ways, "Or accept more with --accept, if the rig can live with it.")
+
+
+def remedy_of(cause: str) -> list[str]:
+    """What lowers a cause of error: one sentence, or none."""
+    return [way for part, way in _REMEDIES if part in cause][:1]
 
 
 def _more_room(plan: Plan, node: str) -> str:
@@ -111,7 +115,7 @@ def speed(plan: Plan) -> tuple[str, ...]:
     takes = f"1 {unit} of the problem takes {engineering(sizing.time_scale, 's')} on the board"
     first = f"Runs {_factor(second / sizing.time_scale)}: {takes}."
     slow, fast = (second / end if end else math.inf for end in (sizing.window[1], sizing.window[0]))
-    window = f"{_times(slow)} to {_times(fast)} times real time would do."
+    window = f"{times_faster(slow)} to {times_faster(fast)} times real time would do."
     ends = (f"Slow end: {_sentence(sizing.limits[1])}", f"Fast end: {_sentence(sizing.limits[0])}")
     judged = plan.speed_curve.reason if plan.speed_curve else ""
     if math.isclose(sizing.time_scale, second) and plan.speed_curve and plan.speed_curve.judgement == "possible":
@@ -254,18 +258,18 @@ def _factor(factor: float) -> str:
     if math.isclose(factor, 1.0, rel_tol=1e-6):
         return "in real time"
     return (
-        f"{_times(factor)} times faster than real time"
+        f"{times_faster(factor)} times faster than real time"
         if factor >= 1
-        else f"{_times(1 / factor)} times slower than real time"
+        else f"{times_faster(1 / factor)} times slower than real time"
     )
 
 
-def _times(factor: float) -> str:
+def times_faster(factor: float) -> str:
     """Factors from 1000 up with blanks between groups, small ones as fractions."""
     if not math.isfinite(factor):
         return "any number of"
     if factor < 0.1:
-        return f"1/{_times(1 / factor)}"
+        return f"1/{times_faster(1 / factor)}"
     rounded = float(f"{factor:.3g}")
     return f"{rounded:,.0f}".replace(",", " ") if rounded >= 1000 else plain(rounded)
 

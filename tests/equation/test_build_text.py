@@ -18,7 +18,7 @@ FILES = {
     "inline": HEAD + 'build = { supply = [-15, 15], run = "free" }\nstart.x = 1\n',
 }
 CHANGES = {
-    "parts": {"op_amp": "OPA2134", "resistors": "E12", "resistor_tolerance": 0.001},
+    "parts": {"op_amp": "OPA2134", "resistors": "E12", "resistor_tolerance": 0.001, "capacitor_tolerance": 0.005},
     "supply": {"supply": (-12.0, 12.0), "reference": 5.0},
     "uneven": {"supply": (-5.0, 12.0), "reference": 2.5, "speed": "real time"},
     "speed and form": {"speed": 0.125, "offsets": False, "forms": (("x", "cascade"), ("y_2", "as written"))},

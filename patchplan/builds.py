@@ -20,10 +20,9 @@ from patchplan.errors import CannotBuild, ProblemFaults
 from patchplan.form.records import Form
 from patchplan.form.rewrite import with_forms
 from patchplan.patch.records import Patch
-from patchplan.pipeline import Choices, asked_forms, drawn, form_of, plan, sized
+from patchplan.pipeline import Choices, asked_forms, drawn, form_of, plan, reach_of, sized
 from patchplan.ranges import Ranges
 from patchplan.reach.records import Reach
-from patchplan.reach.reference import find_reach
 from patchplan.report.records import Picked, Plan
 from patchplan.sensitivity import Sensitivity
 from patchplan.shortlist import consider, shortlist
@@ -164,7 +163,7 @@ class _Shared:
             forms=build.forms,
         )  # fmt: skip
         if key not in self.reaches:
-            self.reaches[key] = find_reach(written.extended, self.problem.ranges, key)
+            self.reaches[key] = reach_of(replace(self.problem, build=key), self.system, written)
         reach = self.reaches[key]
         return reach, form_of(self.problem, choices, written, reach, target)
 
