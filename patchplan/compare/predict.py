@@ -148,7 +148,10 @@ def _own_wires(sensitivity: Sensitivity) -> Mapping[str, list[int]]:
 
 
 def _bias(patch: Patch, sensitivity: Sensitivity, sizing: Sizing, target: Target) -> Array:
-    """Current out of a summing node lifts the output: Ib/C a second at an integrator, Rf*Ib at a summer."""
+    """Current out of a summing node lifts the output: Ib/C a second at an integrator, Rf*Ib at a summer.
+
+    In hold it lifts an integrator's start by Ib times the feedback of the start network.
+    """
     stages = {s.name: s for s in patch.stages}
     total = _zeros(sensitivity)
     for i, name in enumerate(sensitivity.stages):
@@ -156,6 +159,8 @@ def _bias(patch: Patch, sensitivity: Sensitivity, sizing: Sizing, target: Target
         volts = stage.sign * sizing.scales[stage.node].volts_per_unit
         if stage.kind == "integrator":
             total += sensitivity.rate[:, i] * target.op_amp.bias / sized.capacitor * sizing.time_scale / volts
+            if sized.start is not None and name in sensitivity.start:
+                total += sensitivity.start[name] * target.op_amp.bias * sized.start[1] / volts
         elif stage.kind != "multiplier":
             total += sensitivity.rate[:, i] * target.op_amp.bias * sized.feedback / volts
     return total
