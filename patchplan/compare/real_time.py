@@ -47,7 +47,7 @@ def judged(
     for words, other in _wishes(target, slow=slow):
         fast_end, slow_end = window_of(find_limits(ground_of(form, patch, ranges, sensitivity, other)))
         if fast_end.time_scale <= unit <= slow_end.time_scale:
-            return "with other parts", f"Real time is out of reach of these parts ({way[1]}) but possible with {words}."
+            return "with other parts", f"Real time lies outside the window ({way[1]}), and inside with {words}."
         end = slow_end if slow else fast_end
         if best is None or (end.time_scale > best.time_scale) is slow:
             best = end

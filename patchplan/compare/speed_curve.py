@@ -23,7 +23,7 @@ from patchplan.sizing.records import Sizing, Target
 Array = NDArray[np.float64]
 #: Speeds across the window; large boards take fewer, at most this many stages over all speeds, but no fewer than the
 #: least.
-POINTS, MOST_STAGES, LEAST_POINTS = 41, 4000, 9
+POINTS, MOST_STAGES, LEAST_POINTS = 41, 1000, 9
 #: What wiring and sockets add across a capacitor or a feedback resistor [F] (common practice, no source). What they add
 #: from a summing node to ground has no share in first order.
 STRAY = 10e-12

@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 from patchplan.patch.records import Patch, Stage
 from patchplan.sensitivity import Sensitivity
 from patchplan.sizing.drift import LIMITED, dc_limited
-from patchplan.sizing.networks import exact_legs
+from patchplan.sizing.networks import exact_leg
 from patchplan.sizing.records import Leg, NodeScale, Sizing, StageSizing, Target
 from patchplan.sizing.size import LIGHT, bipolar_sizing
 from patchplan.sizing.speed_errors import COMFORTABLE, comfortable_capacitors
@@ -19,7 +19,7 @@ from patchplan.sizing.values import FEEDBACK, START_FEEDBACK
 
 Array = NDArray[np.float64]
 #: Rounds in which switches' and bandwidth's share of R*C is settled; each is some 1e-3 of the one before.
-_ROUNDS = 4
+_ROUNDS = 2
 
 
 def exact_sizing(
@@ -88,24 +88,23 @@ def _stage(
         return bipolar_sizing(stage, patch, target, scales)
     middle = float(np.sqrt(gains.min() * gains.max())) or 1.0
     feedback = float(np.clip(START_FEEDBACK * np.sqrt(middle), *FEEDBACK))
-    legs = exact_legs(feedback / np.maximum(gains, 1e-12), target.resistors)
-    return StageSizing(stage.name, tuple(legs.leg(i) for i in range(len(gains))), feedback=feedback)
+    legs = tuple(exact_leg(feedback / max(gain, 1e-12), target.resistors) for gain in gains.tolist())
+    return StageSizing(stage.name, legs, feedback=feedback)
 
 
 def _integrator(
     stage: Stage, scale: NodeScale, target: Target, time_scale: float, gains: Array, comfortable: float
 ) -> StageSizing:
     capacitor = float(comfortable_capacitors(gains, target, np.array([time_scale]), comfortable)[0])
-    wanted = time_scale / (gains * capacitor)
-    legs = exact_legs(wanted, target.resistors)
+    wanted = (time_scale / (gains * capacitor)).tolist()
+    legs = tuple(exact_leg(ohm, target.resistors) for ohm in wanted)
     for _ in range(_ROUNDS):
-        seen = float((1.0 / legs.into).sum())
+        seen = sum(1.0 / leg.into for leg in legs)
         taken = seen * (target.switch_on + 1.0 / (capacitor * target.op_amp.gain_bandwidth))
-        legs = exact_legs(wanted / (1.0 + taken), target.resistors)
+        legs = tuple(exact_leg(ohm / (1.0 + taken), target.resistors) for ohm in wanted)
     volts = stage.sign * scale.volts_per_unit * float(stage.start)
     start = (START_FEEDBACK * target.reference / abs(volts) if volts else 0.0, START_FEEDBACK)
-    made = tuple(legs.leg(i) for i in range(len(gains)))
-    return StageSizing(stage.name, made, capacitor, start=start if target.switch_on else None, start_volts=volts)
+    return StageSizing(stage.name, legs, capacitor, start=start if target.switch_on else None, start_volts=volts)
 
 
 def _switched(patch: Patch, scales: Mapping[str, NodeScale], target: Target) -> list[str]:
@@ -128,7 +127,7 @@ def _behind_switch(
     taken = target.switch_on * sum(1.0 / leg.load for leg in legs.values())
     found = dict(stages)
     for (name, i), leg in legs.items():
-        less = exact_legs(np.array(leg.transfer / (1.0 + taken)), target.resistors).leg()
+        less = exact_leg(leg.transfer / (1.0 + taken), target.resistors)
         own = found[name].legs
         found[name] = replace(found[name], legs=(*own[:i], less, *own[i + 1 :]))
     return found

@@ -7,7 +7,6 @@ the summing node sees, and the three tolerances add up.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
 from functools import lru_cache
 
 import numpy as np
@@ -49,40 +48,20 @@ def networks(resistors: tuple[float, ...]) -> tuple[tuple[float, float, float], 
     return tuple(zip(first[kept].tolist(), shunt[kept].tolist(), last[kept].tolist(), strict=True))
 
 
-@dataclass(frozen=True)
-class Legs:
-    """Legs of any values as arrays of one shape: a single resistor has no first and an endless shunt [ohm]."""
-
-    first: Array
-    shunt: Array
-    last: Array
-
-    @property
-    def into(self) -> Array:
-        """What the summing node sees, as :attr:`Leg.into`."""
-        return self.last + self.first / (1.0 + self.first / self.shunt)
-
-    @property
-    def spread(self) -> Array:
-        """Relative change per relative change of the resistors, as :attr:`Leg.spread`."""
-        cross = self.first * self.last / self.shunt
-        far = np.where(self.first > 0.0, self.first + cross, 0.0)
-        moved = np.sqrt(far**2 + cross**2 + (self.last + cross) ** 2)
-        return np.asarray(moved / (self.first + self.last + cross))
-
-    def leg(self, *place: int) -> Leg:
-        """One of them."""
-        first, shunt, last = (float(a[place]) for a in (self.first, self.shunt, self.last))
-        return Leg((first, shunt, last) if first else (last,))
-
-
-def exact_legs(transfer: Array, resistors: tuple[float, ...]) -> Legs:
-    """Legs of exactly these transfer resistances, a network wherever one resistor of the series would not reach."""
+def exact_leg(transfer: float, resistors: tuple[float, ...]) -> Leg:
+    """Leg of exactly this transfer resistance, a network where one resistor of the series would not reach."""
     most = resistors[-1]
-    long = transfer > most
-    first = np.clip(FIRST, resistors[0], most)
+    if transfer <= most:
+        return Leg((transfer,))
     # Just above the largest resistor the two in series have to share what is left.
-    first = np.where(long, np.minimum(first, (transfer - most) / 2), 0.0)
-    rest = np.where(long, transfer - most - first, 1.0)
-    shunt = np.where(long, first * most / rest, np.inf)
-    return Legs(first, shunt, np.where(long, most, transfer))
+    first = min(max(FIRST, resistors[0]), most, (transfer - most) / 2)
+    return Leg((first, first * most / (transfer - most - first), most))
+
+
+def exact_into(transfer: Array, resistors: tuple[float, ...]) -> Array:
+    """What the summing node sees into legs of exactly these transfer resistances, any shape [ohm]."""
+    most = resistors[-1]
+    left = np.maximum(transfer - most, 1e-12 * most)
+    first = np.minimum(np.clip(FIRST, resistors[0], most), left / 2)
+    shunt = first * most / (left - first)
+    return np.asarray(np.where(transfer > most, most + first * shunt / (first + shunt), transfer))

@@ -18,10 +18,9 @@ from patchplan.patch.records import Patch
 from patchplan.quantity import engineering
 from patchplan.ranges import Ranges
 from patchplan.sensitivity import Sensitivity
-from patchplan.sizing.networks import exact_legs, largest_transfer
+from patchplan.sizing.networks import exact_into, largest_transfer
 from patchplan.sizing.records import SpeedLimit, Target
 from patchplan.sizing.speed_errors import (
-    bias_error,
     comfortable_capacitors,
     integrator_gains,
     late_stages,
@@ -128,16 +127,17 @@ def _largest(on: Ground) -> Iterator[SpeedLimit]:
 
 
 def _bias(on: Ground) -> Iterator[SpeedLimit]:
-    very_slow = np.array([1e6])
-    one = {name: gains for name, gains in on.gains.items() if name in on.sensitivity.stages}
-    each = {
-        name: float(bias_error(on.patch, on.sensitivity, on.target, on.scales, {name: gains}, very_slow)[0])
-        for name, gains in one.items()
-    }
+    very_slow, bias = np.array([1e6]), on.target.op_amp.bias + on.target.switch_leakage
+    moved = np.abs(on.sensitivity.rate).max(axis=(0, 2), initial=0.0)
+    share = dict(zip(on.sensitivity.stages, moved.tolist(), strict=True))
+    each = {}
+    for name, node in _integrators(on):
+        capacitor = float(comfortable_capacitors(on.gains[name], on.target, very_slow)[0])
+        each[name] = bias / capacitor * 1e6 / on.scales[node] * share[name]
     slow = sum(each.values())
     if slow > 0:
         # At a very slow speed every capacitor sits at its largest, so the error is proportional to the time scale.
-        name, bias = on.target.op_amp.name, on.target.op_amp.bias + on.target.switch_leakage
+        name = on.target.op_amp.name
         text = f"bias current of {name} into the largest capacitor costs {100 * END_ERROR:g} % of peak"
         worst = max(each, key=lambda key: each[key])
         yield SpeedLimit("slow", worst, name, "bias current", bias, "A", 1e6 * END_ERROR / slow, text)
@@ -197,7 +197,7 @@ def network_conductance(on: Ground, time_scales: Array) -> Array:
         if gains.size:
             capacitors = comfortable_capacitors(gains, on.target, time_scales)
             wanted = time_scales / (gains[:, None] * capacitors)
-            seen = 1.0 / exact_legs(wanted, on.target.resistors).into - 1.0 / wanted
+            seen = 1.0 / exact_into(wanted, on.target.resistors) - 1.0 / wanted
             extra[:, column] = seen.sum(axis=0) * time_scales / capacitors
     return extra
 

@@ -94,8 +94,8 @@ def test_a_slow_plant_is_possible_with_larger_values(target: Target) -> None:
     word, sentence = judgement(Fraction(1, 50), target)
     assert word == "with other parts"
     assert sentence == (
-        "Real time is out of reach of these parts (offsets of TL07x through networks of three resistors, at 1 % of "
-        "peak) but possible with capacitors up to 10 µF."
+        "Real time lies outside the window (offsets of TL07x through networks of three resistors, at 1 % of peak), and "
+        "inside with capacitors up to 10 µF."
     )
     larger = replace(target, capacitors=(*target.capacitors, 1e-5))
     assert judgement(Fraction(1, 50), larger)[0] == "possible"
@@ -106,10 +106,10 @@ def test_a_slower_plant_is_possible_with_another_op_amp(target: Target) -> None:
     large = replace(target, capacitors=(*target.capacitors, 1e-5), resistors=(*target.resistors, 1e7))
     word, sentence = judgement(Fraction(1, 5000), large)
     assert word == "with other parts"
-    name = sentence.rpartition("possible with ")[2].split()[0]
+    name = sentence.rpartition("inside with ")[2].split()[0]
     other = next(a for a in target.other_op_amps if a.name == name)
     assert other.offset < target.op_amp.offset
-    assert sentence.endswith(f"possible with {name} in place of TL07x.")
+    assert sentence.endswith(f"inside with {name} in place of TL07x.")
     assert judgement(Fraction(1, 5000), replace(large, op_amp=other))[0] == "possible"
 
 

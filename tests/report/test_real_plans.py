@@ -44,7 +44,7 @@ def test_speed_limits_and_curve_of_plan_json(plan, data):
     assert points > 5
     for shares in (*curve["error_parts"].values(), *curve["spread_parts"].values(), curve["error_percent"]):
         assert len(shares) == points
-    assert curve["real_time"]["reason"].startswith("Real time is ")
+    assert curve["real_time"]["reason"].startswith("Real time ")
 
 
 def test_the_curve_is_drawn(plan):
