@@ -22,6 +22,9 @@ STEP = 0.002
 #: First resistors are near this value [ohm]: light for the node that drives them, and small against the input
 #: resistance and strays of what follows (common practice, no source).
 FIRST = 1e5
+#: First resistors are no smaller than this where the series has larger ones [ohm]: five times the usual rated load
+#: (common practice, no source).
+LIGHTEST = 1e4
 
 
 @lru_cache(maxsize=8)
@@ -38,7 +41,8 @@ def networks(resistors: tuple[float, ...]) -> tuple[tuple[float, float, float], 
     :data:`FIRST`.
     """
     values = np.array(resistors)
-    last, shunt, first = (a.ravel() for a in np.meshgrid(values[-LAST:], values, values, indexing="ij"))
+    light = values[values >= min(LIGHTEST, resistors[-1])]
+    last, shunt, first = (a.ravel() for a in np.meshgrid(values[-LAST:], values, light, indexing="ij"))
     transfer = first + last + first * last / shunt
     step = np.floor(np.log(transfer / values[-1]) / STEP).astype(int)
     order = np.lexsort((shunt, np.abs(np.log(first / FIRST)), -last, step))
