@@ -207,7 +207,8 @@ def _places(sensitivity: Sensitivity, patch: Patch, sizing: Sizing, flat: Callab
             if wire < 0 or (stage.name, wire) in known:
                 names.append((stage.name, wire, ohms))
                 responses.append(flat(_response(sensitivity, sizing, stage, wire)))
-    return _Places(tuple(names), np.array(responses).reshape(len(names), -1).T)
+    # Networks of three resistors alone leave no place for a trimmer.
+    return _Places(tuple(names), np.array(responses).T if names else np.zeros((0, 0)))
 
 
 def _trimmer(
