@@ -22,8 +22,8 @@ capacitor_tolerance = "1%"
 capacitor_limits = ["1n", "4.7u"]
 """
 #: Largest nominal error and spread of boards [% of peak], with room for other values; measured figures beside them.
-#: The reference case thermal_rc_chain_10 is not among them: single resistors at a given speed leave some 1 % in each of its
-#: twenty loops, to which its far end is more sensitive than to anything that real time costs.
+#: The reference case thermal_rc_chain_10 is not among them: single resistors at a given speed leave some 1 % in each of
+#: its twenty loops, to which its far end is more sensitive than to anything that real time costs.
 SLOW = {
     "dc_motor_speed_PI": (1.0, 1.5),  # 0.18 and 0.69
     "thermal_chain": (0.5, 3.0),  # 0.18 and 1.6: minutes, three networks a stage
