@@ -15,6 +15,7 @@ from patchplan.patch.naming import REFERENCE, Names, key_of, sum_text
 from patchplan.patch.products import plan_products
 from patchplan.patch.records import Patch, Stage, Wire
 from patchplan.patch.signs import Link, Signs, choose_signs
+from patchplan.patch.signs_ties import lag_weight
 
 _LETTERS = {"integrator": "I", "summer": "S", "inverter": "N", "multiplier": "M", "source": "V"}
 #: Key of what is taken, coefficient, place in the file.
@@ -180,7 +181,13 @@ def _signs(form: Form, drafts: Mapping[str, _Draft], hold: bool, node_limit: int
             links.append(Link(source.name, REFERENCE, -1 if level > 0 else 1, is_start=True))
     fixed = {REFERENCE: 1, **{n: (1 if s > 0 else -1) for n, s in form.scales.items() if n in drafts}}
     fixed |= {name: polarity for name, polarity in form.system.watch if polarity and name in drafts}
-    return choose_signs(list(drafts), links, fixed, forced, node_limit=node_limit)
+    inputs = {key: [(k, c) for k, c, _ in draft.inputs] for key, draft in drafts.items()}
+    integrators = frozenset(key for key, draft in drafts.items() if draft.kind == "integrator")
+
+    def weight(target: str, source: str) -> float:
+        return lag_weight(target, source, inputs, integrators)
+
+    return choose_signs(list(drafts), links, fixed, forced, node_limit=node_limit, lag_weight=weight)
 
 
 class _Board:

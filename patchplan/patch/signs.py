@@ -3,11 +3,14 @@
 from __future__ import annotations
 
 from collections import deque
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
 
 from patchplan.patch.signs_graph import Edge, reduced
 from patchplan.patch.signs_search import fewest_removals
+
+#: Nodes up to which ties are settled, and how often each polarity is tried the other way.
+MOST_TIED, TIE_ROUNDS = 60, 3
 
 
 @dataclass(frozen=True, slots=True)
@@ -59,6 +62,7 @@ def choose_signs(
     forced: Iterable[str] = (),
     *,
     node_limit: int = 2000,
+    lag_weight: Callable[[str, str], float] | None = None,
 ) -> Signs:
     """Fewest inverters and inverting summers over all polarities.
 
@@ -92,7 +96,36 @@ def choose_signs(
     kept = [k for k in links if k.source not in inverted | forced and (k.is_start or k.target not in summed)]
     sign, _ = _two_colour(nodes, kept, fixed)
     inverted, summed = _cover([k for k in wrong_links(sign, links) if k.source not in forced])
-    return Signs(sign, inverted | forced, summed, lower + len(forced))
+    found = Signs(sign, inverted | forced, summed, lower + len(forced))
+    return found if lag_weight is None or len(nodes) > MOST_TIED else _calmed(found, links, fixed, forced, lag_weight)
+
+
+def _calmed(
+    found: Signs,
+    links: Sequence[Link],
+    fixed: Mapping[str, int],
+    forced: frozenset[str],
+    lag_weight: Callable[[str, str], float],
+) -> Signs:
+    """As many sign stages, moved to where their lag costs least."""
+    weight = {k: 0.0 if k.is_start else lag_weight(k.target, k.source) for k in links}
+    best, cost = found, _lag_cost(found, links, weight)
+    for name in [n for n in found.sign if n not in fixed] * TIE_ROUNDS:
+        sign = {**best.sign, name: -best.sign[name]}
+        inverted, summed = _cover([k for k in wrong_links(sign, links) if k.source not in forced])
+        trial = Signs(sign, inverted | forced, summed, found.lower_bound)
+        if trial.count <= best.count and _lag_cost(trial, links, weight) < cost * (1 - 1e-9):
+            best, cost = trial, _lag_cost(trial, links, weight)
+    return best
+
+
+def _lag_cost(found: Signs, links: Sequence[Link], weight: Mapping[Link, float]) -> float:
+    """Sum over the sign stages of what their lag costs in the worst loop that they lie in."""
+    cost: dict[tuple[str, str], float] = {}
+    for link in wrong_links(found.sign, links):
+        stage = ("inverter", link.source) if link.source in found.inverted else ("summer", link.target)
+        cost[stage] = max(cost.get(stage, 0.0), weight[link])
+    return sum(cost.values())
 
 
 def wrong_links(sign: Mapping[str, int], links: Iterable[Link]) -> list[Link]:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from fractions import Fraction
 from itertools import product
 
 import numpy as np
@@ -12,8 +13,9 @@ from scipy.sparse.csgraph import maximum_bipartite_matching
 from patchplan.form.records import Form
 from patchplan.patch.build import build_patch
 from patchplan.patch.signs import Link, choose_signs, wrong_links
+from patchplan.patch.signs_ties import lag_weight
 from tests.patch.random_links import three_a_row
-from tests.systems import companion
+from tests.systems import companion, system, term
 
 
 def brute_force(names: list[str], links: list[Link], fixed: dict[str, int], forced: set[str]) -> int:
@@ -118,3 +120,35 @@ def test_search_that_stops_early_states_a_gap():
 def test_same_input_gives_the_same_plan():
     names, links = three_a_row(20, 6)
     assert choose_signs(names, links, {}) == choose_signs(names, links[::-1], {})
+
+
+def test_among_equals_the_stage_stands_in_the_slower_loop():
+    """b, d and c make a loop of rate 1000, c and a one of rate 32; the sign can be turned in either.
+
+    Without weights the second stage is an inverter on c, which lies in the fast loop; a summer in front of c, for what
+    a and d give, is as many stages.
+    """
+    rows = {
+        "a": [term(-1, "a"), term(1, "c"), term(1, "d")],
+        "b": [term(-1, "b"), term(1000, "c"), term(1, "d")],
+        "c": [term(-1000, "a"), term(-1, "c"), term(1000, "d")],
+        "d": [term(-1000, "b"), term(-1, "c"), term(-1, "d")],
+    }
+    made = system(dict.fromkeys(rows, 0), rows)
+    links = [Link(n, t.factors[0][0], 1 if t.coefficient > 0 else -1) for n, terms in rows.items() for t in terms]
+    plain = choose_signs(list(rows), links, {})
+    patch = build_patch(Form(made))
+    assert patch.sign_stages == plain.count == 2
+    assert "c" in plain.inverted
+    assert {s.signal for s in patch.stages if s.kind in ("inverter", "summer")} == {"b", "part of c"}
+
+
+def test_lag_weight_is_rate_times_q_of_the_shortest_loop():
+    one = Fraction(1)
+    inputs = {"x": [("v", one)], "v": [("x", -400 * one), ("v", -2 * one), ("u", one)], "y": [("v", one)]}
+    states = frozenset(inputs)
+    # w = sqrt(400) = 20, mean damping (0 + 2)/2 = 1, so that Q = 20 and the weight 400.
+    assert lag_weight("v", "x", inputs, states) == pytest.approx(400)
+    assert lag_weight("v", "v", inputs, states) == pytest.approx(2)
+    assert lag_weight("y", "v", inputs, states) == 0
+    assert lag_weight("v", "u", inputs, states) == 0
