@@ -27,7 +27,7 @@ def lag_weight(target: str, source: str, inputs: Inputs, integrators: frozenset[
     rate = 1.0
     for here, before in zip(loop, [*loop[1:], loop[0]], strict=True):
         rate *= max((abs(float(c)) for k, c in inputs.get(here, ()) if k == before), default=1.0)
-    rate **= 1 / len(states)
+    rate = float(rate ** (1 / len(states)))
     damping = sum(max(0.0, -float(c)) for n in states for k, c in inputs[n] if k == n) / len(states)
     return rate * (min(rate / damping, _HIGHEST_Q) if damping else _HIGHEST_Q)
 
