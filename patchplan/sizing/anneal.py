@@ -53,8 +53,10 @@ class Moves:
     scales: tuple[tuple[tuple[int, ...], Array], ...]
 
 
-def find_moves(field: Field, names: Sequence[tuple[str, int | str]], ratios: Sequence[Ratio], matrix: Array) -> Moves:
-    """Moves of a board, by the names of its unknowns, its rows and A."""
+def find_moves(
+    field: Field, names: Sequence[tuple[str, int | str]], ratios: Sequence[Ratio], matrix: Array, loops: int
+) -> Moves:
+    """Moves of a board, by the names of its unknowns, its rows and A; pairs within the first ``loops`` measures."""
     at = {name: column for column, name in enumerate(names)}
     legs: dict[str, list[int]] = {}
     for column, (stage, what) in enumerate(names):
@@ -67,7 +69,7 @@ def find_moves(field: Field, names: Sequence[tuple[str, int | str]], ratios: Seq
     ]
     followers = [column for column, (_, what) in enumerate(names) if isinstance(what, int)]
     pairs: dict[tuple[int, int], tuple[int, int, int]] = {}
-    for loop, shares in enumerate(field.loops.T):
+    for loop, shares in enumerate(field.loops.T[:loops]):
         inside = [u for u in followers if abs(shares[u]) > 1e-9]
         for one in inside:
             for other in inside:

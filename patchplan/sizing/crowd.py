@@ -14,7 +14,6 @@ from math import log
 import numpy as np
 from numpy.typing import NDArray
 
-from patchplan.sizing.loops import Circuits
 from patchplan.sizing.model import Model
 from patchplan.sizing.records import Target
 from patchplan.sizing.values import Choice, Unknowns
@@ -196,9 +195,9 @@ def make_field(
     target: Target,
     unknowns: Unknowns,
     choices: Sequence[Choice],
-    circuits: Circuits,
     matrix: Array,
     constant: Array,
+    shares: Array,
     weight: Array,
 ) -> Field:
     """Draw up what all candidates share.
@@ -209,12 +208,13 @@ def make_field(
         Values of each unknown, the same for all candidates.
     matrix, constant
         A and b of the rows.
-    weight
-        Of each loop.
+    shares, weight
+        Of the rows in each loop, shape ``(n_rows, n_loops)``, and of each loop; any measure linear in the rows' errors
+        that theta does not move may stand beside them.
     """
     # What a unit of each row's residual does. Where the rows leave theta open it stays near the middle of its bounds.
     fit = np.linalg.pinv(matrix) if matrix.shape[1] else np.zeros((0, len(constant)))
-    rows = np.hstack([circuits.dense(len(constant)), fit.T])
+    rows = np.hstack([shares, fit.T])
     at = {name: c for c, name in enumerate(unknowns.names)}
     groups: dict[tuple[str, str], list[int]] = {}
     for row, ratio in enumerate(model.ratios):

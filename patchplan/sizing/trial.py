@@ -38,6 +38,9 @@ MOST_ERROR, UNSEEN = 1.5e-3, 3.0
 LARGE = 70
 #: Candidates of each round that are finished and compared.
 FINISHED = 4
+#: Ways in which loop errors move the watched signals together: at most so many, each at least this share of the first;
+#: the first counts this much beside a loop.
+MOST_WAYS, LEAST_WAY, TOGETHER = 6, 0.1, 2.0
 #: Where the first candidate of a round begins in theta: its middle; the others are scattered this share of the bounds.
 SCATTER = 0.35
 
@@ -106,17 +109,31 @@ def _board(
     wanted = wanted_products(model, model.centre)
     picked = pick_stage_values(model, target, wanted, comfortable, lambda: 0)
     choices = choices_of(unknowns, target, picked, _centre(model, unknowns, wanted, picked))
-    field = make_field(model, target, unknowns, choices, circuits, matrix, constant, _loop_weights(circuits, effect))
-    moves = find_moves(field, unknowns.names, model.ratios, matrix)
+    field = make_field(model, target, unknowns, choices, matrix, constant, *_measures(circuits, effect))
+    moves = find_moves(field, unknowns.names, model.ratios, matrix, len(circuits.rows))
     return _Board(model, target, unknowns, choices, matrix, effect, circuits, field, moves, comfortable)
 
 
-def _loop_weights(circuits: Circuits, effect: Effect) -> Array:
-    """How far watched signals move for each loop's error, from a half to one: none is left to itself."""
+def _measures(circuits: Circuits, effect: Effect) -> tuple[Array, Array]:
+    """What the search makes small: every loop's error, and what all of them together do to the watched signals.
+
+    Returns
+    -------
+    tuple of Array
+        Shares of the rows, shape ``(n_rows, n_measures)``, and weights: a loop counts from a half to one by how far it
+        moves a watched signal, so that none is left to itself.
+    """
     shares = circuits.dense(effect.response.shape[1])
     # An error of one loop alone, as the smallest changes of its rows that make it.
-    moved = np.abs(effect.response @ np.linalg.pinv(shares.T)).max(axis=0, initial=0.0)
-    return np.asarray(0.5 + 0.5 * moved / (float(moved.max(initial=0.0)) or 1.0))
+    moved = effect.response @ np.linalg.pinv(shares.T)
+    most = np.abs(moved).max(axis=0, initial=0.0)
+    weight = 0.5 + 0.5 * most / (float(most.max(initial=0.0)) or 1.0)
+    if not moved.size:
+        return shares, weight
+    _, size, ways = np.linalg.svd(moved / np.sqrt(len(moved)), full_matrices=False)
+    kept = np.flatnonzero(size[:MOST_WAYS] > LEAST_WAY * size[0])
+    together = TOGETHER * size[kept] / size[0] * ways[kept].T
+    return np.hstack([shares, shares @ together]), np.concatenate([weight, np.ones(len(kept))])
 
 
 def _starts(board: _Board, random: np.random.Generator, *, first: bool) -> Indices:

@@ -68,7 +68,8 @@ def crowd_of(think_of: int):
     picked = pick_stage_values(model, target, wanted, {}, lambda: 0)
     choices = choices_of(unknowns, target, picked, _centre(model, unknowns, wanted, picked))
     circuits, (matrix, constant) = find_circuits(model), matrix_of(model)
-    field = make_field(model, target, unknowns, choices, circuits, matrix, constant, np.ones(len(circuits.rows)))
+    count, shares = len(circuits.rows), circuits.dense(len(constant))
+    field = make_field(model, target, unknowns, choices, matrix, constant, shares, np.ones(count))
     random = np.random.default_rng(think_of)
     places = np.stack([random.integers(0, len(c.logs), 12) for c in choices], axis=1)
     return model, target, unknowns, choices, circuits, matrix, Crowd.at(field, places)
@@ -78,7 +79,7 @@ def test_moves_keep_the_loop_errors_of_the_parts():
     """After thousands of moves the errors carried along are those of the board's named parts, losses counted."""
     model, target, unknowns, choices, circuits, matrix, crowd = crowd_of(3)
     before = crowd.energy().min()
-    moves = find_moves(crowd.field, unknowns.names, model.ratios, matrix)
+    moves = find_moves(crowd.field, unknowns.names, model.ratios, matrix, len(circuits.rows))
     anneal(crowd, moves, np.random.default_rng(4), 12, lambda place: False)
     assert crowd.energy().min() < before - 3.0
     for place, errors in zip(crowd.place, crowd.errors, strict=True):
