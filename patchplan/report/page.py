@@ -14,6 +14,7 @@ from patchplan.report.tables import (
     budget_table,
     coefficient_table,
     form_table,
+    loop_table,
     node_table,
     parts_table,
     signal_table,
@@ -62,8 +63,8 @@ def page(
         pictures_left_out=len(plan.verdict.curves) - MOST_SIGNALS if drawings else 0,
         tables=[
             signal_table(plan), node_table(plan), source_table(plan, sources), stage_table(plan),
-            coefficient_table(plan), form_table(plan), budget_table(plan), speed_table(plan), parts_table(plan.circuit),
-            package_table(plan),
+            coefficient_table(plan), loop_table(plan), form_table(plan), budget_table(plan), speed_table(plan),
+            parts_table(plan.circuit), package_table(plan),
         ],
         steps=steps(plan),
         control=control_table(plan),

@@ -60,6 +60,11 @@ def plan_data(plan: Plan, files: Sequence[str] = ()) -> dict[str, Any]:
         "ranges": ranges_data(plan),
         "worst_inputs": worst_inputs(plan),
         "coefficients": _coefficients(sizing),
+        "loops": [
+            {"name": loop.name, "error_percent": rounded(100.0 * loop.error), "absorbed": loop.absorbed}
+            for loop in sizing.loops
+        ],
+        "distinct_values": distinct_values(plan.circuit) if plan.circuit else {},
         "parts": _parts(plan.circuit) if plan.circuit else [],
         "knobs": [_knob(law) for law in plan.circuit.knobs] if plan.circuit else [],
         "choices": encode(plan.choices),
@@ -86,9 +91,10 @@ def refusal_data(problem: Problem, reason: str, files: Sequence[str] = ()) -> di
         "speed_limits": [],
         "speed_curve": None,
         "check": _check(verdict),
-        **{table: [] for table in ("signals", "stages", "worst_inputs", "coefficients", "parts", "knobs")},
+        **{table: [] for table in ("signals", "stages", "worst_inputs", "coefficients", "loops", "parts", "knobs")},
         "ranges": {},
         "counts": {},
+        "distinct_values": {},
         "sign_stages": 0,
         "sign_stages_lower_bound": 0,
         "sign_search_stopped": False,
@@ -228,6 +234,11 @@ def units_range(plan: Plan, meaning: NodeMap) -> tuple[float, float]:
         return 1.0, 1.0
     offset = -meaning.offset_volts / (meaning.sign * meaning.volts_per_unit)
     return planned.low + offset, planned.high + offset
+
+
+def distinct_values(circuit: Circuit) -> dict[str, int]:
+    """How many different values the board needs of each passive part that there is a series of."""
+    return {kind: len({p.value for p in circuit.parts if p.kind == kind}) for kind in ("resistor", "capacitor")}
 
 
 def _coefficients(sizing: Sizing) -> list[dict[str, Any]]:

@@ -14,7 +14,7 @@ from patchplan.circuit.build import output_loads
 from patchplan.circuit.records import KINDS, Circuit, NodeMap, Part
 from patchplan.circuit.wiring import line_of
 from patchplan.quantity import engineering
-from patchplan.report.plan_json import transfer_gains, units_range
+from patchplan.report.plan_json import distinct_values, transfer_gains, units_range
 from patchplan.report.records import Plan
 from patchplan.report.words import percent, plain
 
@@ -100,6 +100,16 @@ def form_table(plan: Plan) -> Table:
     return Table("Forms considered", headers, rows, frozenset(range(2, 7)), note)
 
 
+def loop_table(plan: Plan) -> Table:
+    """Every independent loop of the gains and its error; no rows where scale factors take up everything."""
+    loops = plan.sizing.loops
+    rows = tuple((loop.name, "sets the speed" if loop.absorbed else f"{100 * loop.error:+.3f} %") for loop in loops)
+    note = "What no choice of scale factors can take away; ← runs against a wire, ⇢ sets a start value."
+    if any(loop.absorbed for loop in loops):
+        note += " The free speed takes up the time constant of one loop, and the others count relative to that one."
+    return Table("Loops", ("loop", "error"), rows, frozenset({1}), note)
+
+
 def stage_table(plan: Plan) -> Table:
     """Every stage with its output, inputs and values."""
     rows = tuple(_stage_row(plan, index) for index in range(len(plan.patch.stages))) if plan.circuit else ()
@@ -131,7 +141,9 @@ def parts_table(circuit: Circuit) -> Table:
             bought = groups.setdefault((*order, part.kind, value_text(part), part.model), {})
             bought[part.package or part.ref] = None
     rows = tuple((str(len(refs)), *key[2:], _shortened(list(refs))) for key, refs in sorted(groups.items()))
-    return Table("Parts", ("count", "kind", "value", "type", "references"), rows, frozenset({0}))
+    differ = distinct_values(circuit)
+    note = f"{differ['resistor']} different values of resistors, {differ['capacitor']} of capacitors."
+    return Table("Parts", ("count", "kind", "value", "type", "references"), rows, frozenset({0}), note)
 
 
 def value_text(part: Part) -> str:

@@ -28,11 +28,14 @@ class Circuits:
     ----------
     rows
         For each independent loop: row -> its share; shares times rows of A sum to zero.
+    paths
+        The same loops before they are taken relative to the absorbed one.
     absorbed
         The loop whose time constant a free speed takes up: row -> share; empty where there is none.
     """
 
     rows: tuple[Mapping[int, float], ...]
+    paths: tuple[Mapping[int, float], ...]
     absorbed: Mapping[int, float]
 
     def dense(self, count: int) -> Array:
@@ -54,15 +57,12 @@ def find_circuits(model: Model) -> Circuits:
     found = _dependent(rows)
     turns = [sum(v for r, v in shares.items() if model.ratios[r].kind == "integrator") for shares in found]
     if not clock or not any(abs(t) > _ZERO for t in turns):
-        return Circuits(tuple(found), {})
+        return Circuits(tuple(found), tuple(found), {})
     # The loop through most integrators tells the time best: errors of the others then count once at most.
     first = max(range(len(found)), key=lambda i: (round(abs(turns[i]), 6), -i))
-    others = [
-        _combined(shares, found[first], -turn / turns[first])
-        for i, (shares, turn) in enumerate(zip(found, turns, strict=True))
-        if i != first
-    ]
-    return Circuits(tuple(others), found[first])
+    others = [i for i in range(len(found)) if i != first]
+    relative = [_combined(found[i], found[first], -turns[i] / turns[first]) for i in others]
+    return Circuits(tuple(relative), tuple(found[i] for i in others), found[first])
 
 
 def _dependent(rows: Sequence[Mapping[int, float]]) -> list[dict[int, float]]:

@@ -234,6 +234,18 @@ class SpeedLimit:
     text: str
 
 
+@dataclass(frozen=True, slots=True)
+class Loop:
+    """One independent loop of the gains: the nodes it runs through, and the relative error of its gain.
+
+    ``absorbed`` marks the loop whose time constant a free speed takes up; the others count relative to it.
+    """
+
+    name: str
+    error: float
+    absorbed: bool = False
+
+
 @dataclass(frozen=True)
 class Sizing:
     """Scale factors, speed and values.
@@ -250,6 +262,8 @@ class Sizing:
         By stage name.
     loop_errors
         Relative error of each independent loop of the patch: what no choice of scale factors can take away.
+    loops
+        The same with their names, and the loop that a free speed takes up.
     faults
         Sentences on what cannot be built; empty for a usable plan.
     notes
@@ -271,3 +285,4 @@ class Sizing:
     notes: tuple[str, ...] = field(default=())
     speed_limits: tuple[SpeedLimit, ...] = ()
     trimming: Trimming | None = None
+    loops: tuple[Loop, ...] = ()

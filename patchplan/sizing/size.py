@@ -25,6 +25,8 @@ from patchplan.sizing.drift import (
     slow_modes,
 )
 from patchplan.sizing.faults import find_faults, speed_notes
+from patchplan.sizing.loop_names import named_loops
+from patchplan.sizing.loops import find_circuits
 from patchplan.sizing.model import LEAST_USE, MOST_USE, Model, build_model
 from patchplan.sizing.records import Coefficient, Leg, NodeScale, Sizing, StageSizing, Target
 from patchplan.sizing.search import Effect
@@ -94,6 +96,7 @@ def size(
         left = without(target, *taken(patch, stages))
         if left.resistors:
             stages[stage.name] = dc_limited(stage, sized, scale, sensitivity, left, time_scale, accept / 100.0)
+    loops = named_loops(find_circuits(model), model, patch, values.errors)
     sizing = Sizing(
         time_scale,
         pace.window,
@@ -101,9 +104,10 @@ def size(
         scales,
         stages,
         _coefficients(patch, model, values),
-        tuple(float(e) for e in values.loop_errors),
+        tuple(loop.error for loop in loops if not loop.absorbed),
         find_faults(pace, given, unit, model, values, patch, target),
         speed_limits=pace.rows,
+        loops=loops,
     )
     notes = [*speed_notes(pace, given, unit), *_drift_notes(form, patch, ranges, sensitivity, target, sizing)]
     return replace(sizing, notes=(*notes, *_content_notes(sizing, patch, ranges), *_use_notes(form, patch, scales)))

@@ -15,8 +15,8 @@ from patchplan.sizing.loops import find_circuits
 from patchplan.sizing.losses import residual_of
 from patchplan.sizing.model import Affine, Model, Ratio, matrix_of
 from patchplan.sizing.values import choices_of, find_unknowns
-from tests.sizing.test_size import sized
-from tests.systems import lorenz
+from tests.sizing.test_size import gain, sized
+from tests.systems import lorenz, system, term
 
 
 def model_of(rows: list[dict[int, float]], *, clock: int | None = None) -> Model:
@@ -85,3 +85,28 @@ def test_moves_keep_the_loop_errors_of_the_parts():
     for place, errors in zip(crowd.place, crowd.errors, strict=True):
         parts = {n: c.parts[k] for n, c, k in zip(unknowns.names, choices, place, strict=True)}
         np.testing.assert_allclose(np.expm1(-errors), circuits.errors(residual_of(model, target, parts)), atol=1e-9)
+
+
+def oscillator():
+    """x'' + 0.4*x' + x = 0 from x = 1."""
+    return system({"x": 1, "x'": 0}, {"x": [term(1, "x'")], "x'": [term("-2/5", "x'"), term(-1, "x")]})
+
+
+def test_loops_are_named_by_their_nodes():
+    """The loop through both integrators sets the speed; only that of the damping is left."""
+    _, _, sizing = sized(oscillator())
+    assert [(loop.name, loop.absorbed) for loop in sizing.loops] == [("x_d → x_d", False), ("x_d → x → x_d", True)]
+    assert sizing.loop_errors == (sizing.loops[0].error,)
+
+
+def test_a_loop_error_is_what_the_parts_make_of_the_damping():
+    """The damping of x'' + d*x' + x = 0 is R*C of the loop over R*C of its own wire: the loop's error is its error."""
+    patch, target, sizing = sized(oscillator())
+    own, around = [], []
+    for stage in (s for s in patch.stages if s.kind == "integrator"):
+        for index, wire in enumerate(stage.wires):
+            (own if wire.source == stage.node else around).append(gain(stage, index, sizing, target))
+    assert (len(own), len(around)) == (1, 2)
+    realised = own[0] / np.sqrt(np.prod(around))
+    # Finite bandwidth, which the loop counts, slows both stages by a few parts in a million.
+    assert realised == pytest.approx(0.4 * (1 + sizing.loop_errors[0]), rel=2e-5)
