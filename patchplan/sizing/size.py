@@ -83,11 +83,7 @@ def size(
     limited = limited_stages(form, patch, ranges) if run == "free" else ()
     model = build_model(form, patch, ranges, target, bounds, _weights(patch, sensitivity))
     effect = _effect(model, patch, sensitivity, pace)
-    comfortable = dict.fromkeys(limited, LIMITED)
-    if target.stocked:
-        values = choose_stocked(model, patch, target, effect, comfortable=comfortable, think=think)
-    else:
-        values = choose_values(model, target, effect, comfortable=comfortable, think=think)
+    values = _values(model, patch, target, effect, dict.fromkeys(limited, LIMITED), think)
     scales = _node_scales(patch, ranges, model, values)
     time_scale = exp(model.at(model.speed, values.theta))
     stages = _stages(patch, target, model, values, scales)
@@ -111,6 +107,15 @@ def size(
     )
     notes = [*speed_notes(pace, given, unit), *_drift_notes(form, patch, ranges, sensitivity, target, sizing)]
     return replace(sizing, notes=(*notes, *_content_notes(sizing, patch, ranges), *_use_notes(form, patch, scales)))
+
+
+def _values(
+    model: Model, patch: Patch, target: Target, effect: Effect, comfortable: Mapping[str, float], think: str
+) -> Values:
+    """Values of the parts on hand, or of those that can be bought."""
+    if target.stocked:
+        return choose_stocked(model, patch, target, effect, comfortable=comfortable, think=think)
+    return choose_values(model, target, effect, comfortable=comfortable, think=think)
 
 
 def _speed_bounds(pace: Speed, given: float | None) -> tuple[float, float]:
