@@ -10,6 +10,7 @@ from patchplan.builds import options, pick
 from patchplan.compare.records import Axes, Comparison, Wish
 from patchplan.equation.problem import Problem
 from patchplan.equation.reader import read_problem
+from patchplan.errors import ProblemFaults
 from patchplan.pipeline import Choices, plan, plan_with
 from tests.plans import EQUATIONS
 
@@ -140,3 +141,26 @@ def test_a_prediction_too_good_is_refuted_and_the_next_is_tried(problem, compari
 
 def test_nothing_is_planned_where_no_build_meets_the_wish(problem, comparison):
     assert pick(problem, comparison, Wish(1e-9)).refuted == ()
+
+
+LOW_PASS = """title = "low-pass"
+equations = ["y = 1/((s^2 + 0.5*s + 1)*(s + 1)) * u"]
+duration = 12
+[inputs]
+u = "step(t - 1)"
+[build]
+forms = { NAME = "FORM" }
+"""
+
+
+def test_the_form_that_a_file_asks_for_is_taken():
+    found = plan(read_problem(LOW_PASS.replace("NAME", "y").replace("FORM", "cascade")))
+    assert dict(found.choices["blocks"]) == {"y": "cascade"}
+
+
+@pytest.mark.parametrize(("name", "form"), [("z", "cascade"), ("y", "spiral")])
+def test_a_form_that_cannot_be_is_refused_with_its_place(name, form):
+    with pytest.raises(ProblemFaults) as error:
+        options(read_problem(LOW_PASS.replace("NAME", name).replace("FORM", form)))
+    assert "problem.toml:7:9" in error.value.rendered
+    assert "Name the output of a linear block and one of companion, cascade," in error.value.rendered

@@ -148,7 +148,7 @@ def _paired(responses: Array, points: Sequence[int]) -> tuple[list[int], list[in
 
 def _radius(seen: Array) -> float:
     """What is left of an error after one round of setting one after the other, as a factor."""
-    if np.abs(np.diag(seen)).min() < 1e-9 * np.abs(seen).max():
+    if np.abs(np.diag(seen)).min() <= 1e-9 * np.abs(seen).max():
         return np.inf
     return float(np.abs(np.linalg.eigvals(np.linalg.solve(np.tril(seen), np.triu(seen, 1)))).max())
 

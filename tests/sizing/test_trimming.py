@@ -181,3 +181,11 @@ def test_a_track_covers_the_reach_at_the_ends_of_tolerances():
     assert trim.fixed * 1.01 <= 47e3 * 0.92
     assert trim.fixed * 0.99 + trim.track * 0.8 >= 47e3 * 1.08
     assert trim.fixed + trim.setting * trim.track == pytest.approx(47e3)
+
+
+def test_a_moment_at_which_nothing_shows_serves_no_setting():
+    """Before a step both watched responses are 0: no order of setting comes to rest there."""
+    from patchplan.sizing.readings import _radius
+
+    assert _radius(np.zeros((2, 2))) == np.inf
+    assert _radius(np.array([[1.0, 0.5], [0.0, 1.0]])) == 0.0
