@@ -198,10 +198,13 @@ def asked_forms(build: Build, system: System) -> Forms:
     ProblemFaults
         Where there is no such block, or it can't take the form.
     """
+    remedy = f"Name the output of a linear block and one of {', '.join(FORMS)}."
+    for name, form in build.forms:
+        if form not in FORMS:
+            raise ProblemFaults([Fault(f"{form} is no form of a block.", remedy, f"build.forms.{name}")])
     try:
         with_forms(system, dict(build.forms))
     except ValueError as error:
-        remedy = f"Name the output of a linear block and one of {', '.join(FORMS)}."
         raise ProblemFaults([Fault(str(error), remedy, "build.forms")]) from None
     return build.forms
 
