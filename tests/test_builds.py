@@ -68,8 +68,9 @@ def test_the_grid_of_a_raised_signal_has_both_forms():
     assert len(found.options) <= 30
 
 
-def test_the_same_problem_gives_the_same_comparison(problem, comparison):
-    assert options(problem) == comparison
+def test_a_build_has_the_same_figures_whatever_it_is_compared_with(problem, comparison):
+    few = options(problem, axes=Axes(op_amps=("OPA2277", "TL07x"))).options
+    assert [replace(o, best=False) for o in reversed(few)] == [replace(o, best=False) for o in comparison.options[:2]]
 
 
 @pytest.mark.parametrize("text", [FILTER, CYCLE, str(EQUATIONS / "seat_suspension.toml")])
