@@ -11,7 +11,8 @@ from patchplan.equation.system import System
 from patchplan.reach.field import Field
 from patchplan.reach.inputs import Inputs, Stored
 from patchplan.reach.nominal import uniform_grid
-from patchplan.reach.search import SEED, Batch, solve_batch
+from patchplan.reach.points import SEED
+from patchplan.reach.search import Batch, solve_batch
 
 Array = NDArray[np.float64]
 

@@ -76,7 +76,7 @@ class Box:
     Attributes
     ----------
     corners, sampled, climbed
-        Runs at corners (and ends of axes), at points of a low-discrepancy sample, and around the worst so far.
+        Runs at corners (and ends of axes), at points of a Sobol sample, and around the worst so far.
     all_corners
         Whether every corner was run; of many parameters only some are.
     worst

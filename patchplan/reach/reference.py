@@ -19,15 +19,9 @@ from patchplan.reach.free import search_waveforms
 from patchplan.reach.inputs import Inputs, Stored
 from patchplan.reach.length import check_length
 from patchplan.reach.nominal import solve_nominal
+from patchplan.reach.points import first_points, knobs_at, parameters_at
 from patchplan.reach.records import Bounded, Box, Range, Reach, Reference, Run
-from patchplan.reach.search import (
-    box_of,
-    coarse_grid,
-    first_points,
-    knobs_at,
-    parameters_at,
-    spread_of_boards,
-)
+from patchplan.reach.search import box_of, coarse_grid, spread_of_boards
 from patchplan.reach.solve import GrowsWithoutBoundError, grows_without_bound
 from patchplan.reach.worst import driven, worst_cases
 
@@ -41,7 +35,7 @@ _EXACT = "exact solution of linear equations with known inputs"
 _GAIN = "half the width of each input's bounds times the peak gain over the run, around the response to their middle"
 _ESTIMATED = "the error of the impulse responses is estimated, not bounded"
 _BOARDS = "the margin is how far boards with parts within tolerance go beyond the nominal one"
-_BOX = "simulated over corners and a sample of the adjustable and uncertain parameters"
+_BOX = "simulated over corners and a Sobol sample of the adjustable and uncertain parameters"
 _SEARCHED = (
     "simulated with the worst input waveforms that a search found; other waveforms within the bounds may go further"
 )

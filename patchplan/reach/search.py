@@ -4,13 +4,10 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
-from fractions import Fraction
-from itertools import product
 
 import numpy as np
 from numpy.typing import NDArray
 
-from patchplan.equation.constants import constant_value
 from patchplan.equation.problem import Build
 from patchplan.equation.system import System
 from patchplan.reach.batch import march
@@ -19,6 +16,16 @@ from patchplan.reach.field import DENSE_LIMIT, Bound, Field
 from patchplan.reach.followed import Followed
 from patchplan.reach.inputs import Inputs
 from patchplan.reach.nominal import LEAST_POINTS, linear_pieces, start_of, tabulate, uniform_grid
+from patchplan.reach.points import (
+    SEED,
+    climb_points,
+    effort_for,
+    first_points,
+    knobs_at,
+    most_worst,
+    parameters_at,
+    steep_corners,
+)
 from patchplan.reach.records import Box, Run, WorstPoint
 from patchplan.reach.solve import GrowsWithoutBoundError, floors, solve
 
@@ -26,27 +33,10 @@ Array = NDArray[np.float64]
 
 #: Boards of the ensemble.
 BOARDS = 16
-
-
-@dataclass(frozen=True, slots=True)
-class Effort:
-    """How much is tried: all corners up to so many parameters, points of the sample of a box of one and of more
-    parameters, rounds of climbing, least and most points of a round.
-    """
-
-    corners_up_to: int
-    sample: tuple[int, int]
-    rounds: int
-    climbers: tuple[int, int]
-
-
-#: Above `DENSE_LIMIT` states runs are solved one by one.
-FULL, FEW = Effort(7, (16, 64), 3, (32, 48)), Effort(4, (16, 16), 2, (16, 16))
 #: Runs over the box are all kept for the nodes of the patch up to this many numbers, and so many of the worst at least.
 KEPT_NUMBERS, KEPT = 5_000_000, 24
 #: Tolerance of these runs: far below the margins they serve.
 _TOLERANCE = 1e-5
-SEED = 20240229
 
 
 @dataclass(frozen=True)
@@ -135,85 +125,6 @@ def board_factors(system: System, field: Field, build: Build, *, size: float = 1
     return factors
 
 
-def knobs_at(system: System, points: Array) -> dict[str, Array]:
-    """Values of all knobs at points of the adjustable box, ``points`` of shape ``(m, n_adjustable)`` in 0 ... 1."""
-    rows = []
-    for point in points:
-        values = {}
-        for p, s in zip(system.adjustable, point, strict=True):
-            low, high = p.low or Fraction(0), p.high or Fraction(0)
-            values[p.name] = low + (high - low) * Fraction(float(s))
-        rows.append([float(constant_value(k.tree, values)) for k in system.knobs])
-    table = np.array(rows).reshape(len(points), len(system.knobs))
-    return {k.name: table[:, i] for i, k in enumerate(system.knobs)}
-
-
-def effort_for(system: System) -> Effort:
-    """How much is tried for a System."""
-    return FEW if len(system.states) > DENSE_LIMIT else FULL
-
-
-def box_points(count: int, effort: Effort) -> Array:
-    """Corners and a low-discrepancy sample of the unit box; of many parameters the ends of each axis and some corners.
-
-    The sample is the additive sequence of the generalised golden ratio (Roberts 2018, The unreasonable effectiveness of
-    quasirandom sequences); scipy's samplers would bring in all of scipy.stats, which takes longer than the runs.
-    """
-    size = effort.sample[count > 1]
-    if count <= effort.corners_up_to:
-        corners = np.array(list(product((0.0, 1.0), repeat=count)))
-    else:
-        axes = np.full((2 * count, count), 0.5)
-        axes[np.arange(2 * count), np.repeat(np.arange(count), 2)] = np.tile((0.0, 1.0), count)
-        corners = np.concatenate((axes, np.random.default_rng(SEED).choice((0.0, 1.0), (size, count))))
-    ratio = 2.0
-    for _ in range(40):
-        ratio = (1 + ratio) ** (1 / (count + 1))
-    steps = ratio ** -np.arange(1.0, count + 1)
-    sample = (0.5 + np.arange(1, size + 1)[:, None] * steps) % 1.0
-    return np.concatenate((corners, sample))
-
-
-def first_points(system: System) -> Array:
-    """`box_points` of a System; where these leave out corners, also those of each knob that has several parameters."""
-    names, effort = [p.name for p in system.adjustable], effort_for(system)
-    points = [box_points(len(names), effort)]
-    for knob in system.knobs if len(names) > effort.corners_up_to else ():
-        moved = [names.index(p) for p in knob.parameters[: effort.corners_up_to]]
-        corners = np.array(list(product((0.0, 1.0), repeat=len(moved))))
-        points.append(np.full((len(corners), len(names)), 0.5))
-        points[-1][:, moved] = corners
-    return np.concatenate(points)
-
-
-def climb_points(
-    points: Array, heights: Array, count: tuple[int, int], radius: float, random: np.random.Generator
-) -> Array:
-    """New points, ``count`` at least and at most, around those where some row of ``heights`` is largest.
-
-    ``heights`` has the shape ``(n_rows, n_points)``.
-    """
-    worst = _most_worst(heights)
-    chosen = points[worst[np.arange(np.clip(worst.size, *count)) % worst.size]]
-    moved: Array = np.clip(chosen + random.uniform(-radius, radius, chosen.shape), 0.0, 1.0)
-    return moved
-
-
-def steep_corners(points: Array, heights: Array) -> Array:
-    """Corners of the box to which the planes through the rows of ``heights`` rise, for the most rows first."""
-    slopes = np.linalg.lstsq(points - points.mean(axis=0), (heights - heights.mean(axis=1, keepdims=True)).T)[0]
-    corners, uses = np.unique((slopes > 0).T.astype(float), axis=0, return_counts=True)
-    ordered: Array = corners[np.argsort(-uses, kind="stable")]
-    return ordered
-
-
-def _most_worst(heights: Array) -> NDArray[np.intp]:
-    """Places of the largest number of each row, those that serve most rows first."""
-    places, uses = np.unique(heights.argmax(axis=1), return_counts=True)
-    ordered: NDArray[np.intp] = places[np.argsort(-uses, kind="stable")]
-    return ordered
-
-
 @dataclass(frozen=True)
 class Excursion:
     """How far runs go: lowest and highest of each name, ``(n_names,)``; the worst runs; sentences on what failed."""
@@ -262,7 +173,7 @@ def search_box(system: System, field: Field, inputs: Inputs, times: Array, peaks
         ]
         most = max(KEPT, int(KEPT_NUMBERS / batch.values[:, 0].size))
         if len(runs) > most:
-            kept = sorted(list(dict.fromkeys([*_most_worst(heights).tolist(), *range(len(runs))]))[:most])
+            kept = sorted(list(dict.fromkeys([*most_worst(heights).tolist(), *range(len(runs))]))[:most])
             heights, seen, runs = heights[:, kept], seen[kept], [runs[j] for j in kept]
         if i < effort.rounds:
             points = climb_points(seen, heights, effort.climbers, 0.15 / 3**i, random)
@@ -272,12 +183,6 @@ def search_box(system: System, field: Field, inputs: Inputs, times: Array, peaks
     low, high = (np.hstack(e) for e in zip(*ends, strict=True))
     box = box_of(system, field.names, low, high, tried)
     return Excursion(low.min(axis=1), high.max(axis=1), tuple(runs), box=box)
-
-
-def parameters_at(system: System, points: Array) -> list[Mapping[str, float]]:
-    """Values of the adjustable parameters at points of the unit box."""
-    ends = [(p.name, float(p.low or 0), float(p.high or 0)) for p in system.adjustable]
-    return [{n: a + (b - a) * float(s) for (n, a, b), s in zip(ends, point, strict=True)} for point in points]
 
 
 def box_of(system: System, names: Sequence[str], low: Array, high: Array, tried: list[Mapping[str, float]]) -> Box:

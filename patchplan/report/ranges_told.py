@@ -41,7 +41,7 @@ def ranges_sentence(plan: Plan) -> str:
     if box is None:
         return ""
     corners = f"all {box.corners} corners" if box.all_corners else f"{box.corners} ends of axes and some corners"
-    tried = f"{corners}, {box.sampled} points of a sample, {box.climbed} around the worst"
+    tried = f"{corners}, {box.sampled} points of a Sobol sample, {box.climbed} around the worst"
     sentence = f"Ranges hold over {', '.join(box.parameters)} by {counted(box.runs, 'run')}: {tried}."
     worst = _worst(plan, box)
     if worst is not None:

@@ -25,7 +25,7 @@ from patchplan.patch.sums import wire_gains
 from patchplan.pipeline import plan
 from patchplan.reach.field import field_of
 from patchplan.reach.inputs import Inputs
-from patchplan.reach.search import knobs_at
+from patchplan.reach.points import knobs_at
 from tests.cases.convert import FUNCTIONS_OF_STATES, problem_text, read_cases
 
 SETTINGS, WIDTH, SEED = 2000, Fraction(1, 10), 7

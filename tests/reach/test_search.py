@@ -2,15 +2,20 @@
 
 from __future__ import annotations
 
+import subprocess
+import sys
 from dataclasses import replace
 from fractions import Fraction
 
 import numpy as np
+import pytest
+from scipy.stats import qmc
 
 from patchplan.equation.problem import Build, Parameter
 from patchplan.reach.field import field_of
 from patchplan.reach.followed import Followed
-from patchplan.reach.search import FULL, board_factors, first_points, steep_corners
+from patchplan.reach.points import FULL, box_points, first_points, steep_corners
+from patchplan.reach.search import board_factors
 from tests.systems import knob, system, term
 
 
@@ -49,3 +54,27 @@ def test_tolerances_of_parts_do_not_touch_changes_of_variables():
     assert (off[sums.terms] != 1).all()
     assert (exact[sums.terms] == 1).all()
     assert (exact[field.rate_block.terms] == off[field.rate_block.terms]).all()
+
+
+@pytest.mark.parametrize("count", [1, 2, 5])
+def test_the_sample_is_spread_over_the_box(count):
+    corners, sample = 2**count, FULL.sample[count > 1]
+    points = box_points(count, FULL)[corners:]
+    # Every parameter takes the middle of each of as many equal parts as there are points, once.
+    middles = (np.arange(sample) + 0.5) / sample
+    np.testing.assert_allclose(np.sort(points, axis=0), np.repeat(middles[:, None], count, axis=1), rtol=1e-12)
+    # The centred discrepancy of chance is far above (mean of ten draws).
+    chance = [np.random.default_rng(i).uniform(size=points.shape) for i in range(10)]
+    assert qmc.discrepancy(points) < 0.3 * np.mean([qmc.discrepancy(p) for p in chance])
+
+
+def test_only_a_box_brings_in_the_statistics():
+    code = (
+        "import sys\nfrom patchplan.equation.explicit import build_system\nfrom patchplan.equation.problem import Build\n"
+        "from patchplan.equation.reader import read_problem\nfrom patchplan.reach.reference import find_reach\n"
+        "text = 'title = \"T\"\\nequations = [\"x\\' = -x^3 + u\"]\\nduration = 1\\n[start]\\nx = 1\\n[inputs]\\n"
+        "u = { within = [-1, 1] }\\n'\n"
+        "find_reach(build_system(read_problem(text)), {}, Build())\nprint('scipy.stats' in sys.modules)"
+    )
+    done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
+    assert done.stdout.strip() == "False"
