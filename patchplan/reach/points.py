@@ -104,6 +104,55 @@ def climb_points(
     return moved
 
 
+def axis_points(points: Array, heights: Array, most: int, radius: float) -> Array:
+    """Points a step along each axis from those where some row of ``heights`` is largest, ``most`` at most."""
+    steps = radius * np.vstack((np.eye(points.shape[1]), -np.eye(points.shape[1])))
+    near = np.clip(points[most_worst(heights)][:, None] + steps, 0.0, 1.0).reshape(-1, points.shape[1])
+    return _new(points, near[:most])
+
+
+def parabola_points(points: Array, heights: Array, centres: NDArray[np.intp], radius: float) -> Array:
+    """Where parabolas along each axis through the `axis_points` of a row's centre are highest, new points only.
+
+    Parameters
+    ----------
+    centres
+        Place of the point that each row was stepped from.
+    """
+    place = {tuple(point): i for i, point in enumerate(points.tolist())}
+    tops = []
+    for row, centre in zip(heights, centres, strict=True):
+        middle, top = points[centre], points[centre].copy()
+        for axis in range(middle.size):
+            steps, values = [0.0], [row[centre]]
+            for step in (-radius, radius):
+                near = middle.copy()
+                near[axis] = np.clip(near[axis] + step, 0.0, 1.0)
+                found = place.get(tuple(near.tolist()), centre)
+                if found != centre:
+                    steps.append(near[axis] - middle[axis])
+                    values.append(row[found])
+            top[axis] += _top(np.array(steps), np.array(values), 2 * radius)
+        tops.append(np.clip(top, 0.0, 1.0))
+    return _new(points, np.array(tops))
+
+
+def _top(steps: Array, values: Array, furthest: float) -> float:
+    """The highest place within reach of a parabola through up to three points, the first of them at 0."""
+    best = float(steps[values.argmax()])
+    if len(steps) < 3:
+        return best
+    bend, slope, _ = np.polyfit(steps, values, 2)
+    return float(np.clip(-slope / (2 * bend), -furthest, furthest)) if bend < 0 else float(np.sign(best)) * furthest
+
+
+def _new(points: Array, found: Array) -> Array:
+    """Those of the found points that are not there yet, each once."""
+    known = set(map(tuple, points.tolist()))
+    kept = [point for point in dict.fromkeys(map(tuple, found.tolist())) if point not in known]
+    return np.array(kept).reshape(-1, points.shape[1])
+
+
 def steep_corners(points: Array, heights: Array) -> Array:
     """Corners of the box to which the planes through the rows of ``heights`` rise, for the most rows first."""
     slopes = np.linalg.lstsq(points - points.mean(axis=0), (heights - heights.mean(axis=1, keepdims=True)).T)[0]

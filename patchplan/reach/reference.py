@@ -11,17 +11,17 @@ from numpy.typing import NDArray
 
 from patchplan.equation.problem import Build
 from patchplan.equation.system import System
+from patchplan.reach.bounded_box import search_bounded
 from patchplan.reach.bounds import bounded_of, ends_of, free_sources
-from patchplan.reach.box import knobs_of, search_boxes
+from patchplan.reach.box import search_boxes
 from patchplan.reach.curves import extremes
 from patchplan.reach.field import Field, field_of
 from patchplan.reach.free import search_waveforms
 from patchplan.reach.inputs import Inputs, Stored
 from patchplan.reach.length import check_length
 from patchplan.reach.nominal import solve_nominal
-from patchplan.reach.points import first_points, knobs_at, parameters_at
 from patchplan.reach.records import Bounded, Box, Range, Reach, Reference, Run
-from patchplan.reach.search import box_of, coarse_grid, spread_of_boards
+from patchplan.reach.search import coarse_grid, spread_of_boards
 from patchplan.reach.solve import GrowsWithoutBoundError, grows_without_bound
 from patchplan.reach.worst import driven, worst_cases
 
@@ -173,21 +173,10 @@ def _simulated(
 
 
 def _linear_box(system: System, numeric: Field, ends: _Ends, uncertain: System | None) -> tuple[_Ends, list[Bounded]]:
-    """Peak gains at the corners and a sample of the box of the parameters."""
-    wide = system if uncertain is None or field_of(uncertain).names != numeric.names else uncertain
-    opened = numeric if wide is system else field_of(wide)
-    points = first_points(wide)
-    knobs, low, high, found = knobs_at(wide, points), [ends.low], [ends.high], []
-    where = parameters_at(wide, points)
-    for i, point in enumerate(where):
-        bound = opened.bind(opened.weights({name: float(v[i]) for name, v in knobs.items()}))
-        found.append(bounded_of(wide, bound, knobs_of(system, point)))
-        tops = ends_of(found[-1], found[-1].rows)
-        low.append(tops.low)
-        high.append(tops.high)
-    box = box_of(wide, numeric.names, np.stack(low[1:], axis=1), np.stack(high[1:], axis=1), where)
-    reason = f"{_BOX}; at each, {_GAIN}"
-    return _Ends(np.min(low, axis=0), np.max(high, axis=0), "simulated", reason, box=box), found
+    """Widen by peak gains over the box of the parameters."""
+    found, low, high, box = search_bounded(system, numeric, uncertain or system)
+    reason = f"{_BOX}; at each, {_GAIN}; {_ESTIMATED}"
+    return _Ends(np.minimum(ends.low, low), np.maximum(ends.high, high), "simulated", reason, box=box), found
 
 
 def _ranges(system: System, numeric: Field, ends: _Ends) -> dict[str, Range]:

@@ -14,7 +14,7 @@ from scipy.stats import qmc
 from patchplan.equation.problem import Build, Parameter
 from patchplan.reach.field import field_of
 from patchplan.reach.followed import Followed
-from patchplan.reach.points import FULL, box_points, first_points, steep_corners
+from patchplan.reach.points import FULL, axis_points, box_points, first_points, parabola_points, steep_corners
 from patchplan.reach.search import board_factors
 from tests.systems import knob, system, term
 
@@ -23,6 +23,19 @@ def test_planes_rise_to_their_corners():
     points = np.random.default_rng(1).uniform(0, 1, (40, 3))
     heights = np.array([[1.0, -2.0, 3.0], [2.0, -1.0, 1.0], [-1.0, 1.0, 1.0]]) @ points.T + 5
     assert steep_corners(points, heights).tolist() == [[1, 0, 1], [0, 1, 1]]
+
+
+def test_parabolas_find_the_top_of_a_hill():
+    def hill(points):
+        return np.array([1 - (points[:, 0] - 0.63) ** 2 - 2 * (points[:, 1] - 0.41) ** 2, points[:, 0] + points[:, 1]])
+
+    points = np.array([[0.6, 0.5], [1.0, 0.9], [0.1, 0.1]])
+    centres = hill(points).argmax(axis=1)
+    near = np.concatenate((points, axis_points(points, hill(points), 20, 0.1)))
+    found = parabola_points(near, hill(near), centres, 0.1)
+    # The second row is a plane: at the end of the box it stays there, and goes on along the other axis.
+    np.testing.assert_allclose(found, [[0.63, 0.41]], rtol=1e-9)
+    assert [1.0, 1.0] in near.tolist()
 
 
 def test_a_knob_of_several_parameters_gets_its_corners():
@@ -70,9 +83,10 @@ def test_the_sample_is_spread_over_the_box(count):
 
 def test_only_a_box_brings_in_the_statistics():
     code = (
-        "import sys\nfrom patchplan.equation.explicit import build_system\nfrom patchplan.equation.problem import Build\n"
+        "import sys\nfrom patchplan.equation.explicit import build_system\n"
+        "from patchplan.equation.problem import Build\n"
         "from patchplan.equation.reader import read_problem\nfrom patchplan.reach.reference import find_reach\n"
-        "text = 'title = \"T\"\\nequations = [\"x\\' = -x^3 + u\"]\\nduration = 1\\n[start]\\nx = 1\\n[inputs]\\n"
+        'text = \'title = "T"\\nequations = ["x\\\' = -x^3 + u"]\\nduration = 1\\n[start]\\nx = 1\\n[inputs]\\n'
         "u = { within = [-1, 1] }\\n'\n"
         "find_reach(build_system(read_problem(text)), {}, Build())\nprint('scipy.stats' in sys.modules)"
     )
