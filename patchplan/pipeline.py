@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import asdict, dataclass, replace
+from typing import Any
 
 from patchplan.check.compare import check_circuit
 from patchplan.check.records import Verdict
@@ -42,8 +43,8 @@ from patchplan.sizing.trimming import find_trimming, with_trimmers
 OFFSET_COST = 1.25
 #: A plan with more multipliers must better the one with fewer by this factor.
 MULTIPLIER_COST = 1.5
-#: Branch-and-bound nodes that the search for the fewest sign stages may take.
 _LEFT_OUT = "The tolerance of {} is not in the ranges: it changes a function of time or a start from within."
+#: Branch-and-bound nodes that the search for the fewest sign stages may take.
 SIGN_NODES = {"low": 100, "normal": 500, "high": 20000}
 
 
@@ -98,9 +99,14 @@ def plan(
         Where no part of the catalogue serves the wishes (supply, reference).
     """
     system = system or system_of(problem)
+    solved: dict[Forms, Reach] = {}
 
     def attempt(choices: Choices) -> Plan:
-        return plan_with(problem, choices, accept=accept, progress=progress, system=system)
+        forms = choices.blocks
+        if forms not in solved:
+            (progress or _quiet)("Solving the problem")
+            solved[forms] = reach_of(problem, system, with_forms(system, dict(forms)))
+        return plan_with(problem, choices, accept=accept, progress=progress, system=system, reach=solved[forms])
 
     try:
         build = problem.build
@@ -108,25 +114,41 @@ def plan(
         likely = (asked_forms(build, system),) if build.forms else shortlist(considered)
         runs = [attempt(Choices(offsets=build.offsets is not False, think=think, blocks=forms)) for forms in likely]
         plain_forms = as_written(considered)
-        others = [run.choices["blocks"] for run in runs]
-        if not build.forms and plain_forms not in others and all(_merit(run)[0] for run in runs):
+        if not build.forms and plain_forms not in solved and all(_merit(run)[0] for run in runs):
             runs.append(attempt(replace(Choices(**runs[0].choices), blocks=plain_forms)))
-        found = min(runs, key=lambda run: _merit(run, handicap(run)))
-        if build.offsets is None and set(found.form.offsets) - set(found.form.scales):
-            plain = attempt(replace(Choices(**found.choices), offsets=False))
-            found = found if _merit(found, OFFSET_COST) < _merit(plain) else plain
-        if found.patch.factors:
-            plain = attempt(replace(Choices(**found.choices), factoring=False))
-            found = plain if _merit(plain, MULTIPLIER_COST) < _merit(found) else found
-        summers = crowding(found.patch, found.sizing, found.target) if found.sizing.faults else ()
-        if summers:
-            found = min(found, attempt(replace(Choices(**found.choices), summers=summers)), key=_merit)
-        if found.verdict.verdict == "inaccurate" and think == "normal":
-            found = min(found, attempt(replace(Choices(**found.choices), think="high")), key=_merit)
+        found = _bettered(min(runs, key=lambda run: _merit(run, handicap(run))), attempt)
     except ProblemFaults as error:
         raise rendered(error, problem) from None
     found = replace(found, sizing=_with_suggestion(found, accept))
     return replace(found, considered=told(considered, [*runs, found], found), speed_curve=_curve(found, accept))
+
+
+def _bettered(found: Plan, attempt: Callable[[Choices], Plan]) -> Plan:
+    """The plan, or a better one that differs from it in one choice after the other.
+
+    Each choice is tried only where the plan at hand asks for it: it carries offsets, takes sums out as factors, runs
+    into a resistor limit, or is inaccurate.
+    """
+
+    def changed(**choices: Any) -> Plan:
+        return attempt(replace(Choices(**found.choices), **choices))
+
+    if found.problem.build.offsets is None and set(found.form.offsets) - set(found.form.scales):
+        plain = changed(offsets=False)
+        found = found if _merit(found, OFFSET_COST) < _merit(plain) else plain
+    if found.patch.factors:
+        plain = changed(factoring=False)
+        found = plain if _merit(plain, MULTIPLIER_COST) < _merit(found) else found
+    summers = crowding(found.patch, found.sizing, found.target) if found.sizing.faults else ()
+    if summers:
+        found = min(found, changed(summers=summers), key=_merit)
+    if found.verdict.verdict == "inaccurate" and found.choices["think"] == "normal":
+        found = min(found, changed(think="high"), key=_merit)
+    return found
+
+
+def _quiet(step: str) -> None:
+    """No progress is shown."""
 
 
 def _with_suggestion(found: Plan, accept: float) -> Sizing:
@@ -151,18 +173,22 @@ def _curve(found: Plan, accept: float) -> SpeedCurve:
 
 def plan_with(
     problem: Problem, choices: Choices, *, accept: float = 5.0, progress: Callable[[str], None] | None = None,
-    system: System | None = None,
+    system: System | None = None, reach: Reach | None = None,
 ) -> Plan:  # fmt: skip
-    """One straight run with all decisions taken."""
-    say = progress or (lambda step: None)
+    """One straight run with all decisions taken.
+
+    ``system`` and ``reach`` are what an earlier run with the same forms of blocks went by, where they are at hand.
+    """
+    say = progress or _quiet
     build = problem.build
     say("Reading the equations")
     system = system or build_system(problem)
     catalogue = load_catalogue(problem.own_parts)
     target = target_of(build, catalogue)
-    say("Solving the problem")
     written = with_forms(system, dict(choices.blocks))
-    reach = reach_of(problem, system, written)
+    if reach is None:
+        say("Solving the problem")
+        reach = reach_of(problem, system, written)
     form = form_of(problem, choices, written, reach, target)
     say("Drawing the patch")
     patch, ranges, sensitivity = drawn(build, choices, form, reach)
