@@ -16,8 +16,11 @@ from patchplan.reach.search import Batch, solve_batch
 
 Array = NDArray[np.float64]
 
-#: Cells of the run over which a searched waveform holds one level, and rounds of improvement.
-CELLS, ROUNDS = 32, 2
+#: Cells of the run over which a searched waveform holds one level, most rounds of improvement, and the gain below which
+#: they end.
+CELLS, ROUNDS, _GAIN = 32, 6, 1e-4
+#: Watched signals for which waveforms are searched.
+MOST_TARGETS = 4
 
 
 class ManyInputs(Inputs):
@@ -67,15 +70,27 @@ def stored(system: System, levels: Array) -> dict[str, Stored]:
 
 @dataclass(frozen=True)
 class Searched:
-    """What the search found: extremes of every name, and the waveforms that drive the first watched signal furthest."""
+    """What the search found: extremes of every name, and of each target the waveforms that drive it furthest."""
 
     low: Array
     high: Array
-    stand_ins: dict[str, Stored]
+    stand_ins: tuple[dict[str, Stored], ...]
 
 
-def search_waveforms(system: System, field: Field, peaks: Array) -> Searched:
-    """Levels, square and sine waves of many periods, then improvement by trial flips of single cells.
+def targets_of(system: System, field: Field) -> list[int]:
+    """Places of the watched signals for which waveforms are searched."""
+    free = {s.name for s in system.sources if s.waveform is None}
+    places = [field.names.index(name) for name, _ in system.watch if name not in free]
+    return (places or [0])[:MOST_TARGETS]
+
+
+def search_waveforms(system: System, field: Field, weights: Array, peaks: Array) -> Searched:
+    """Levels, square and sine waves of many periods, then improvement by trial flips of single cells for each target.
+
+    Parameters
+    ----------
+    weights
+        Shape ``(n_terms,)``.
 
     Raises
     ------
@@ -84,22 +99,32 @@ def search_waveforms(system: System, field: Field, peaks: Array) -> Searched:
     """
     bounds = [s.within for s in system.sources if s.waveform is None and s.within is not None]
     low, high = np.array([[float(a), float(b)] for a, b in bounds]).T
-    watched = field.names.index(system.watch[0][0]) if system.watch else 0
-    shapes = _first_shapes(len(bounds))
-    best, best_size, lows, highs = shapes[..., 0], -1.0, [], []
-    for round_ in range(2 * ROUNDS + 1):
+    lows, highs, stand_ins = [], [], []
+
+    def ends_under(shapes: Array) -> tuple[Array, Array]:
         levels = ((low + high)[:, None, None] + (high - low)[:, None, None] * shapes) / 2
-        batch = _solve(system, field, levels, peaks)
-        ends = batch.extremes()
+        ends = _solve(system, field, weights, levels, peaks).extremes()
         lows.append(ends[0].min(axis=1))
         highs.append(ends[1].max(axis=1))
-        sizes = np.maximum(np.abs(ends[0][watched]), np.abs(ends[1][watched]))
-        winner = int(sizes.argmax())
-        if sizes[winner] > best_size:
-            best, best_size = shapes[..., winner], float(sizes[winner])
-        shapes = _flips(best) if round_ % 2 == 0 else _composed(best, ends)
-    levels = ((low + high)[:, None] + (high - low)[:, None] * best) / 2
-    return Searched(np.min(lows, axis=0), np.max(highs, axis=0), stored(system, levels))
+        return ends
+
+    first = _first_shapes(len(bounds))
+    begun = ends_under(first)
+    for target in targets_of(system, field):
+        sizes = np.maximum(np.abs(begun[0][target]), np.abs(begun[1][target]))
+        best, size = first[..., sizes.argmax()], float(sizes.max())
+        for _ in range(ROUNDS):
+            flips = _flips(best)
+            ends = ends_under(flips)
+            gains = np.maximum(np.abs(ends[0][target]), np.abs(ends[1][target]))[1:] - size
+            shapes = np.concatenate((_composed(best, ends), _prefixes(best, gains)), axis=2)
+            made = ends_under(shapes)
+            sizes = np.maximum(np.abs(made[0][target]), np.abs(made[1][target]))
+            if sizes.max() <= size * (1 + _GAIN):
+                break
+            best, size = shapes[..., sizes.argmax()], float(sizes.max())
+        stand_ins.append(stored(system, ((low + high)[:, None] + (high - low)[:, None] * best) / 2))
+    return Searched(np.min(lows, axis=0), np.max(highs, axis=0), tuple(stand_ins))
 
 
 def _first_shapes(count: int) -> Array:
@@ -132,8 +157,18 @@ def _composed(best: Array, ends: tuple[Array, Array]) -> Array:
     return shapes.T.reshape(*best.shape, -1)
 
 
-def _solve(system: System, field: Field, levels: Array, peaks: Array) -> Batch:
+def _prefixes(best: Array, gains: Array) -> Array:
+    """The flips that gain, the best 1, 2, 3, 4, 6, 8 ... of them at once; ``gains`` of shape ``(best.size,)``."""
+    order = np.argsort(-gains, kind="stable")[: max(1, int((gains > 0).sum()))]
+    shapes = []
+    for count in (1, 2, 3, 4, 6, 8, 12, 16, 24, 32):
+        flat = best.ravel().copy()
+        flat[order[:count]] = np.where(flat[order[:count]] > 0, -1.0, 1.0)
+        shapes.append(flat.reshape(best.shape))
+    return np.stack(shapes, axis=2)
+
+
+def _solve(system: System, field: Field, weights: Array, levels: Array, peaks: Array) -> Batch:
     inputs = ManyInputs(system, levels)
-    weights = np.repeat(field.weights(system.knob_values())[:, None], levels.shape[2], axis=1)
     times = uniform_grid(inputs.edges, 400)
-    return solve_batch(system, field, weights, inputs, times, peaks)
+    return solve_batch(system, field, np.repeat(weights[:, None], levels.shape[2], axis=1), inputs, times, peaks)

@@ -81,6 +81,8 @@ class Box:
         Whether every corner was run; of many parameters only some are.
     worst
         Of every name.
+    waveforms
+        Waveforms of inputs known only by bounds under which corners and sample were run, 1 where there are none.
     """
 
     parameters: tuple[str, ...]
@@ -89,11 +91,12 @@ class Box:
     climbed: int
     all_corners: bool
     worst: tuple[WorstPoint, ...] = ()
+    waveforms: int = 1
 
     @property
     def runs(self) -> int:
         """All runs."""
-        return self.corners + self.sampled + self.climbed
+        return self.waveforms * (self.corners + self.sampled) + self.climbed
 
 
 @dataclass(frozen=True, slots=True)

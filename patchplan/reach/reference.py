@@ -17,6 +17,7 @@ from patchplan.reach.box import search_boxes
 from patchplan.reach.curves import extremes
 from patchplan.reach.field import Field, field_of
 from patchplan.reach.free import search_waveforms
+from patchplan.reach.free_box import search_free_box
 from patchplan.reach.inputs import Inputs, Stored
 from patchplan.reach.length import check_length
 from patchplan.reach.nominal import solve_nominal
@@ -94,11 +95,12 @@ def _reach(system: System, numeric: Field, build: Build, uncertain: System | Non
         return _linear_worst(system, numeric, uncertain)
     knobs = system.knob_values()
     bound = numeric.bind(numeric.weights(knobs))
-    stand_ins: dict[str, Stored] = {}
+    waveforms: tuple[dict[str, Stored], ...] = ()
     worst: _Ends | None = None
     if free_sources(system):
         middle = solve_nominal(system, bound, Inputs(system))
-        worst, stand_ins = _searched_worst(system, numeric, middle)
+        worst, waveforms = _searched_worst(system, numeric, middle)
+    stand_ins = waveforms[0] if waveforms else {}
     inputs = Inputs(system, stand_ins)
     times, values, rates = solve_nominal(system, bound, inputs)
     reference = Reference(numeric.names, times, values, rates, tuple(inputs.edges[1:-1].tolist()), stand_ins)
@@ -109,7 +111,7 @@ def _reach(system: System, numeric: Field, build: Build, uncertain: System | Non
     if worst is not None:
         ends = replace(worst, low=np.minimum(low, worst.low), high=np.maximum(high, worst.high))
     if not system.is_linear or system.adjustable or uncertain is not None:
-        ends = _simulated(system, numeric, build, inputs, nominal, ends, uncertain)
+        ends = _simulated(system, numeric, build, inputs, nominal, ends, uncertain, waveforms)
     return Reach(reference, _ranges(system, numeric, ends), (nominal, *ends.runs), ends.warnings, box=ends.box)
 
 
@@ -138,22 +140,23 @@ def _linear_worst(system: System, numeric: Field, uncertain: System | None) -> R
 
 def _searched_worst(
     system: System, numeric: Field, middle: tuple[Array, Array, Array]
-) -> tuple[_Ends, dict[str, Stored]]:
+) -> tuple[_Ends, tuple[dict[str, Stored], ...]]:
     bound, duration = numeric.bind(numeric.weights(system.knob_values())), float(system.duration)
     peaks = np.abs(middle[1][: numeric.n_states]).max(axis=1)
     for end in (-1.0, 1.0):
         levels = {n: (np.array([0.0, duration]), np.full(2, mid + end * half)) for n, mid, half in free_sources(system)}
         steady = solve_nominal(system, bound, Inputs(system, levels))
         peaks = np.maximum(peaks, np.abs(steady[1][: numeric.n_states]).max(axis=1))
-    found = search_waveforms(system, numeric, peaks)
+    found = search_waveforms(system, numeric, bound.weights, peaks)
     how = f"the worst case for {system.watch[0][0]} that a search found" if system.watch else "what a search found"
-    said = tuple(driven(name, how, waveform) for name, waveform in found.stand_ins.items())
+    said = tuple(driven(name, how, waveform) for name, waveform in found.stand_ins[0].items())
     return _Ends(found.low, found.high, "simulated", _SEARCHED, warnings=said), found.stand_ins
 
 
 def _simulated(
-    system: System, numeric: Field, build: Build, inputs: Inputs, nominal: Run, ends: _Ends, uncertain: System | None
-) -> _Ends:
+    system: System, numeric: Field, build: Build, inputs: Inputs, nominal: Run, ends: _Ends, uncertain: System | None,
+    waveforms: tuple[dict[str, Stored], ...],
+) -> _Ends:  # fmt: skip
     """Widen by the box of the parameters and by boards within tolerance."""
     grid = coarse_grid(system, numeric, inputs, nominal.times)
     peaks = np.abs(nominal.values[: numeric.n_states]).max(axis=1)
@@ -163,7 +166,10 @@ def _simulated(
     how = [ends.reason] if ends.known_by == "simulated" else []
     found = replace(ends, known_by="simulated", below=below, above=above, warnings=(*ends.warnings, *boards.warnings))
     if system.adjustable or uncertain is not None:
-        box = search_boxes(system, numeric, uncertain, inputs, grid, peaks)
+        if waveforms:
+            box = search_free_box(system, numeric, uncertain, waveforms, nominal.times, peaks)
+        else:
+            box = search_boxes(system, numeric, uncertain, inputs, grid, peaks)
         found = replace(
             found, low=np.minimum(ends.low, box.low), high=np.maximum(ends.high, box.high), runs=box.runs, box=box.box,
             warnings=(*found.warnings, *box.warnings),
