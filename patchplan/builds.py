@@ -174,5 +174,7 @@ class _Shared:
         for known, same, drawing in self.drawings:
             if known is reach and same == form:
                 return drawing
-        self.drawings.append((reach, form, drawn(build, self._choices(build), form, reach)))
+        differential = self.catalogue.multipliers[build.multiplier].differential
+        drawing = drawn(build, self._choices(build), form, reach, differential=differential)
+        self.drawings.append((reach, form, drawing))
         return self.drawings[-1][2]

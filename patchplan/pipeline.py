@@ -191,7 +191,7 @@ def plan_with(
         reach = reach_of(problem, system, written)
     form = form_of(problem, choices, written, reach, target)
     say("Drawing the patch")
-    patch, ranges, sensitivity = drawn(build, choices, form, reach)
+    patch, ranges, sensitivity = drawn(build, choices, form, reach, differential=target.multiplier.differential)
     if patch.counts().get("multiplier"):
         check_multiplier(build, catalogue)
     say("Choosing values")
@@ -249,14 +249,17 @@ def form_of(problem: Problem, choices: Choices, written: Rewritten, reach: Reach
     return replace(form, notes=(*written.notes, *form.notes))
 
 
-def drawn(build: Build, choices: Choices, form: Form, reach: Reach) -> tuple[Patch, Ranges, Sensitivity]:
-    """What follows from a Form alone, whatever the parts."""
+def drawn(
+    build: Build, choices: Choices, form: Form, reach: Reach, *, differential: bool = True
+) -> tuple[Patch, Ranges, Sensitivity]:
+    """What follows from a Form, whatever the parts but for the inputs of multipliers."""
     patch = build_patch(
         form,
         hold=build.run != "free",
         node_limit=SIGN_NODES[choices.think],
         factoring=choices.factoring,
         summers=choices.summers,
+        differential=differential,
     )
     ranges = find_ranges(patch, form, reach)
     return patch, ranges, find_sensitivity(form, patch, ranges)

@@ -16,11 +16,13 @@ from patchplan.report.records import Plan
 from tests.cases.convert import problem_text, read_cases
 
 EQUATIONS = Path(__file__).parents[1] / "equations"
+#: Problems that are for tests alone.
+BOARDS = Path(__file__).parent / "boards"
 CASES = read_cases()
 
 
 class Plans:
-    """Plans by name: a file of ``equations/`` (stem) or a reference case, shared by the workers through a folder."""
+    """Plans by name: a file of ``equations/`` or ``boards/`` (stem) or a reference case; workers share a folder."""
 
     def __init__(self, folder: Path) -> None:
         self.folder = folder
@@ -29,7 +31,8 @@ class Plans:
     def problem_file(self, name: str) -> Path:
         """Problem file of that name; a case's is written first."""
         if name not in CASES:
-            return EQUATIONS / f"{name}.toml"
+            own = BOARDS / f"{name}.toml"
+            return own if own.exists() else EQUATIONS / f"{name}.toml"
         path = self.folder / f"{name}.toml"
         if not path.exists():
             path.write_text(problem_text(CASES[name]), encoding="utf-8")

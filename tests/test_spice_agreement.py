@@ -33,6 +33,7 @@ PLANS = {
     "tank_real_time": "two hours of circuit time, networks of three resistors",
     "integrator": "free-running, DC-limit resistor",
     "torque_filter": "a block in other states than the file's, real time",
+    "single_ended": "multipliers without differential inputs",
     "two_mass_drive": "steps and pulses from the reference, an algebraic signal",
 }
 

@@ -86,7 +86,7 @@ _POSITIVE = frozenset(
 #: Figures that a part of the user's own may lack: no plan hangs on them.
 _OPTIONAL = frozenset({"supply_current"})
 #: Keys of a part table that are no figures.
-_TEXT_KEYS = ("kind", "like", "text", "source")
+_TEXT_KEYS = ("kind", "like", "text", "source", "differential")
 _PREFIXES = {"": 0, **SUFFIXES}
 _SOURCE_OF_OWN = "stated in the problem file"
 _FILE = Path(__file__).with_name("parts.toml")
@@ -115,6 +115,8 @@ class PartData:
         Pin numbers: sections A to D, ``supply`` (high, low) and others.
     operate, hold
         Of a switch: sections that are normally open (closed in operate) and normally closed (closed in hold).
+    differential
+        Of a multiplier: whether each input has a second pin that is taken off.
     """
 
     name: str
@@ -125,6 +127,7 @@ class PartData:
     pins: Mapping[str, tuple[int, ...]] = field(default_factory=dict)
     operate: tuple[str, ...] = ()
     hold: tuple[str, ...] = ()
+    differential: bool = True
 
     def si(self, key: str) -> float:
         """Value of one figure in SI units."""
@@ -153,7 +156,8 @@ def load_catalogue(own_parts: Mapping[str, Mapping[str, Any]] | None = None) -> 
     ----------
     own_parts
         The ``[part.NAME]`` tables: ``kind`` (``"op amp"``, ``"multiplier"``, ``"switch"``, ``"reference"``), optionally
-        ``like`` (a part whose figures hold where none is given), and figures as SI numbers or text with a unit.
+        ``like`` (a part whose figures hold where none is given), figures as SI numbers or text with a unit, and of a
+        multiplier ``differential`` (whether its inputs are, by default true).
 
     Raises
     ------
@@ -225,6 +229,7 @@ def _layout(table: Mapping[str, Any]) -> dict[str, Any]:
         "pins": {k: tuple(v) for k, v in table.get("pins", {}).items()},
         "operate": tuple(table.get("operate", ())),
         "hold": tuple(table.get("hold", ())),
+        "differential": table.get("differential", True),
     }
 
 
@@ -251,12 +256,17 @@ def _own_part(
     if missing and "like" not in table:
         remedy = 'Give them, or write like = "NAME" to take them from a part of the catalogue.'
         faults.append(Fault(f"Figures of {name} are missing: {', '.join(missing)}.", remedy, key))
+    if kind != "multiplier" and "differential" in table:
+        faults.append(Fault("differential is for multipliers alone.", "Take it out.", f"{key}.differential"))
+    elif not isinstance(table.get("differential", True), bool):
+        faults.append(Fault("differential is neither true nor false.", "Write true or false.", f"{key}.differential"))
     if len(faults) > before:
         return None
     text = str(table.get("text", name))
+    differential = table.get("differential", base.differential if base else True)
     if base:
-        return replace(base, name=name, text=text, source=_SOURCE_OF_OWN, figures=figures)
-    return PartData(name, kind, text, _SOURCE_OF_OWN, figures)
+        return replace(base, name=name, text=text, source=_SOURCE_OF_OWN, figures=figures, differential=differential)
+    return PartData(name, kind, text, _SOURCE_OF_OWN, figures, differential=differential)
 
 
 def _base_part(

@@ -57,7 +57,7 @@ def target_of(build: Build, catalogue: Catalogue) -> Target:
         resistor_piles=resistors,
         capacitor_piles=capacitors,
         other_op_amps=tuple(_others(build, catalogue.op_amps.values(), op_amp.name, _op_amp)),
-        other_multipliers=tuple(_others(build, catalogue.multipliers.values(), build.multiplier, _multiplier)),
+        other_multipliers=tuple(_other_multipliers(build, catalogue)),
     )
 
 
@@ -71,6 +71,13 @@ def _others(
         room = min(high - part.si("swing_high"), -(low + part.si("swing_low")))
         if part.name != taken and fits and room >= build.reference:
             yield make(build, part)
+
+
+def _other_multipliers(build: Build, catalogue: Catalogue) -> Iterator[MultiplierFigures]:
+    """Those that the same wiring suits: inputs that are not differential ask for other signs."""
+    least = catalogue.multipliers[build.multiplier].differential
+    parts = [m for m in catalogue.multipliers.values() if m.differential or not least]
+    return _others(build, parts, build.multiplier, _multiplier)
 
 
 def switch_for(build: Build, catalogue: Catalogue) -> PartData:
@@ -148,6 +155,7 @@ def _multiplier(build: Build, part: PartData) -> MultiplierFigures:
         offset=part.si("offset"),
         scale_error=part.si("scale_error"),
         bias=part.si("bias"),
+        differential=part.differential,
     )
 
 

@@ -15,6 +15,7 @@ from patchplan.patch.naming import REFERENCE, Names, key_of, sum_text
 from patchplan.patch.products import plan_products
 from patchplan.patch.records import Patch, Stage, Wire
 from patchplan.patch.signs import Link, Signs, choose_signs
+from patchplan.patch.signs_products import Product, choose_signs_of_products
 from patchplan.patch.signs_ties import lag_weight
 
 _LETTERS = {"integrator": "I", "summer": "S", "inverter": "N", "multiplier": "M", "source": "V"}
@@ -40,8 +41,9 @@ class _Draft:
 
 
 def build_patch(
-    form: Form, *, hold: bool = True, node_limit: int = 2000, factoring: bool = True, summers: Collection[str] = ()
-) -> Patch:
+    form: Form, *, hold: bool = True, node_limit: int = 2000, factoring: bool = True, summers: Collection[str] = (),
+    differential: bool = True,
+) -> Patch:  # fmt: skip
     """Draw the patch of a Form.
 
     Parameters
@@ -56,11 +58,13 @@ def build_patch(
         Whether sums may be taken out as factors where that saves multipliers.
     summers
         Inputs of integrators, as ``x<-x*y``, that a summer takes first; all of one integrator share the summer.
+    differential
+        Whether multipliers have differential inputs, which give a product in either polarity.
     """
     drafts, factors = _drafts(form.system, factoring)
     _put_in_front(drafts, summers)
-    signs = _signs(form, drafts, hold, node_limit)
-    return replace(_assemble(form, drafts, signs, hold), factors=factors)
+    signs = _signs(form, drafts, hold, node_limit, differential)
+    return replace(_assemble(form, drafts, signs, hold, differential), factors=factors)
 
 
 def _drafts(system: System, factoring: bool) -> tuple[dict[str, _Draft], tuple[str, ...]]:
@@ -162,7 +166,7 @@ def _feed_both_ends(draft: _Draft, drafts: dict[str, _Draft]) -> None:
         draft.inputs = [(inner, Fraction(1), draft.origin)]
 
 
-def _signs(form: Form, drafts: Mapping[str, _Draft], hold: bool, node_limit: int) -> Signs:
+def _signs(form: Form, drafts: Mapping[str, _Draft], hold: bool, node_limit: int, differential: bool) -> Signs:
     """Polarity of every node, from the links that inverting stages impose."""
     links, forced = [], []
     for draft in drafts.values():
@@ -182,6 +186,9 @@ def _signs(form: Form, drafts: Mapping[str, _Draft], hold: bool, node_limit: int
     fixed = {REFERENCE: 1, **{n: (1 if s > 0 else -1) for n, s in form.scales.items() if n in drafts}}
     fixed |= {name: polarity for name, polarity in form.system.watch if polarity and name in drafts}
     inputs = {key: [(k, c) for k, c, _ in draft.inputs] for key, draft in drafts.items()}
+    products = [Product(d.key, d.inputs[0][0], d.inputs[1][0]) for d in drafts.values() if d.kind == "multiplier"]
+    if products and not differential:
+        return choose_signs_of_products(list(drafts), links, products, fixed, forced, node_limit=node_limit)
     integrators = frozenset(key for key, draft in drafts.items() if draft.kind == "integrator")
 
     def weight(target: str, source: str) -> float:
@@ -193,9 +200,9 @@ def _signs(form: Form, drafts: Mapping[str, _Draft], hold: bool, node_limit: int
 class _Board:
     """Stages as they are numbered and wired."""
 
-    def __init__(self, drafts: Mapping[str, _Draft], signs: Signs) -> None:
+    def __init__(self, drafts: Mapping[str, _Draft], signs: Signs, differential: bool) -> None:
         names = self._names = Names()
-        self.signs = signs
+        self.signs, self.differential = signs, differential
         self.stages: list[Stage] = []
         self._counts: dict[str, int] = {}
         self.node = {key: "ref" if key == REFERENCE else names.node(_node_wish(d)) for key, d in drafts.items()}
@@ -224,6 +231,8 @@ class _Board:
                 self.sign[front] = -self.sign[at]
                 self.add("summer", front, f"part of {key}", turned)
                 wires.append(Wire(front, Fraction(1)))
+        elif draft.kind == "multiplier":
+            wires = [Wire(node, Fraction(1)) for node in self._factors(draft, at)]
         else:
             wires = [Wire(self.node[k], c, o) for k, c, o in draft.inputs]
             if draft.bipolar:
@@ -231,6 +240,15 @@ class _Board:
         self.add(draft.kind, at, key, wires, draft)
         if key in self.signs.inverted:
             self.add("inverter", self.node[f"-{key}"], key, [Wire(at, Fraction(1))])
+
+    def _factors(self, draft: _Draft, at: str) -> list[str]:
+        """Nodes that a multiplier takes: one of them inverted where its product would have the wrong polarity."""
+        keys = [k for k, _, _ in draft.inputs]
+        nodes = [self.node[k] for k in keys]
+        if not self.differential and self.sign[at] * self.sign[nodes[0]] * self.sign[nodes[1]] < 0:
+            place = 0 if keys[0] in self.signs.inverted else 1
+            nodes[place] = self.node[f"-{keys[place]}"]
+        return nodes
 
     def _wires(self, draft: _Draft, at: str) -> tuple[list[Wire], list[Wire]]:
         """Wires that fit as they are, and those that need an inverting summer in front."""
@@ -246,9 +264,9 @@ class _Board:
         return direct, turned
 
 
-def _assemble(form: Form, drafts: Mapping[str, _Draft], signs: Signs, hold: bool) -> Patch:
+def _assemble(form: Form, drafts: Mapping[str, _Draft], signs: Signs, hold: bool, differential: bool) -> Patch:
     """Number the stages, put in the sign stages and draw the wires."""
-    board = _Board(drafts, signs)
+    board = _Board(drafts, signs, differential)
     switched = {s.name for s in form.system.sources if not s.external and s.name not in form.scales}
     for key, draft in drafts.items():
         if key != REFERENCE or _reference_used(drafts, hold, switched):
@@ -258,7 +276,10 @@ def _assemble(form: Form, drafts: Mapping[str, _Draft], signs: Signs, hold: bool
     sources = {s.name: s for s in system.sources if s.name in drafts}
     turning = len(signs.inverted) + sum(s.signal.startswith("part of ") for s in board.stages)
     knobs = {k.name: k for k in system.knobs}
-    return Patch(_ordered(board.stages), watched, sources, knobs, turning, signs.lower_bound, not signs.proved)
+    return Patch(
+        _ordered(board.stages), watched, sources, knobs, turning, signs.lower_bound, not signs.proved,
+        differential=differential,
+    )  # fmt: skip
 
 
 def _reference_used(drafts: Mapping[str, _Draft], hold: bool, switched: Collection[str]) -> bool:

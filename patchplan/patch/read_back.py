@@ -24,7 +24,8 @@ def read_back(patch: Patch, kept: Collection[str]) -> Mapping[str, Row]:
     Raises
     ------
     ValueError
-        Where a stage does not invert its inputs, or a wire comes from nowhere.
+        Where a stage does not invert its inputs, a multiplier cannot give its product's sign, or a wire comes from
+        nowhere.
     """
     polynomials: dict[str, tuple[Term, ...]] = {}
     rows: dict[str, Row] = {}
@@ -55,6 +56,8 @@ def _terms(
     if missing:
         raise ValueError(f"stage {stage.name} takes {missing[0]}, which no stage drives before it")
     if stage.kind == "multiplier":
+        if not patch.differential and stage.sign * sign[stage.wires[0].source] * sign[stage.wires[1].source] < 0:
+            raise ValueError(f"stage {stage.name} cannot turn the sign of its product")
         left, right = (polynomials[w.source] for w in stage.wires)
         both = [
             Term(a.coefficient * b.coefficient, times(a.factors, b.factors), tuple(sorted(a.knobs + b.knobs)))

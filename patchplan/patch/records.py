@@ -74,6 +74,8 @@ class Patch:
         Whether the search for the fewest sign stages stopped at its node limit before it knew them.
     factors
         Signals of the summers that make a sum which stands as a factor in products, for fewer multipliers.
+    differential
+        Whether multipliers have differential inputs; else the sign of a product is that of its two wires' nodes.
     """
 
     stages: tuple[Stage, ...]
@@ -84,6 +86,7 @@ class Patch:
     sign_stages_lower_bound: int = 0
     signs_open: bool = False
     factors: tuple[str, ...] = ()
+    differential: bool = True
 
     def by_node(self) -> dict[str, Stage]:
         """Stages by the node they drive."""

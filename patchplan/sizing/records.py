@@ -40,7 +40,10 @@ class OpAmpFigures:
 
 @dataclass(frozen=True, slots=True)
 class MultiplierFigures:
-    """Typical figures of the multiplier: W = X*Y/scale; ``limit`` is the full-scale input and output [V]."""
+    """Typical figures of the multiplier: W = X*Y/scale; ``limit`` is the full-scale input and output [V].
+
+    ``differential`` inputs give the product in either polarity.
+    """
 
     name: str
     scale: float
@@ -50,6 +53,7 @@ class MultiplierFigures:
     offset: float
     scale_error: float
     bias: float
+    differential: bool = True
 
 
 @dataclass(frozen=True, slots=True)

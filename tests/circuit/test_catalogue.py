@@ -104,3 +104,17 @@ def test_all_faults_of_own_parts_are_reported_at_once():
     assert faults["part.a.slw"] == "slw is no figure of this kind of part. Did you mean slew?"
     assert "'3 A' is no quantity in V/V" in faults["part.a.gain"]
     assert "missing: supply_min, supply_max, on_resistance, charge_injection." in faults["part.d"]
+
+
+def test_own_multiplier_may_have_no_differential_inputs():
+    own = load_catalogue({"plain": {"kind": "multiplier", "like": "AD633", "differential": False}}).multipliers
+    assert not own["plain"].differential
+    assert own["AD633"].differential
+    with pytest.raises(ProblemFaults) as caught:
+        load_catalogue(
+            {
+                "a": {"kind": "multiplier", "like": "AD633", "differential": "no"},
+                "b": {"kind": "op amp", "like": "TL07x", "differential": True},
+            }
+        )
+    assert [f.key for f in caught.value.faults] == ["part.a.differential", "part.b.differential"]
