@@ -104,12 +104,10 @@ def _program(
     lower = ceil(bound - 2 * _TIE) if bound is not None and np.isfinite(bound) else 0
     if found.x is None:
         return None, lower
-    polarity, inverted, summed = (found.x > 0.5).reshape(3, n).tolist()
-    return Signs(
-        {name: -1 if negative else 1 for name, negative in zip(nodes, polarity, strict=True)},
-        frozenset(name for name, there in zip(nodes, inverted, strict=True) if there),
-        frozenset(name for name, there in zip(nodes, summed, strict=True) if there),
-    ), lower
+    negative, inverted, summed = (
+        frozenset(nodes[i] for i in np.flatnonzero(bits).tolist()) for bits in found.x.reshape(3, n) > 0.5
+    )
+    return Signs({name: -1 if name in negative else 1 for name in nodes}, inverted, summed), lower
 
 
 def _link_rows(link: Link, at: Mapping[str, int]) -> Iterator[_Row]:

@@ -11,7 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from patchplan.sizing.model import Model, Ratio
-from patchplan.sizing.networks import networks
+from patchplan.sizing.networks import largest_transfer, networks
 from patchplan.sizing.records import Leg, Target
 from patchplan.sizing.speed_errors import COMFORTABLE
 
@@ -22,6 +22,8 @@ FEEDBACK = (5e3, 1e5)
 START_FEEDBACK = 2e4
 #: How far capacitors and feedback resistors may move from those picked at first, in logs: two steps of E6, six of E24.
 CAPACITOR_WIDTH, FEEDBACK_WIDTH = 0.9, 0.6
+#: How much more a resistor out of all reach counts than one that a network of three replaces.
+IMPOSSIBLE = 100.0
 #: Networks of three are offered to legs that are wanted above this share of the largest resistor, in logs.
 NETWORKS_FROM = 0.2
 
@@ -182,13 +184,14 @@ def start_ratios(resistors: tuple[float, ...]) -> Choice:
 def capacitor_merit(wanted: Array, target: Target, comfortable: float = COMFORTABLE) -> tuple[Array, NDArray[np.bool_]]:
     """How little each capacitor suits a stage whose R*C products are wanted [s], and where a resistor is out of range.
 
-    Out-of-range resistors count most, then the distance of their middle from ``comfortable`` [ohm]. Both have the shape
-    ``(n_capacitors,)``.
+    Resistors that nothing makes count most, then those that ask for a network of three, then the distance of their
+    middle from ``comfortable`` [ohm]. Both have the shape ``(n_capacitors,)``.
     """
     resistors = wanted[None, :] / np.array(target.capacitors)[:, None]
-    over = np.maximum(np.log(resistors / target.resistors[-1]), 0) + np.maximum(
-        np.log(target.resistors[0] / resistors), 0
-    )
+    long = np.maximum(np.log(resistors / target.resistors[-1]), 0)
+    small = np.maximum(np.log(target.resistors[0] / resistors), 0)
+    beyond = np.maximum(np.log(resistors / largest_transfer(target.resistors)), 0)
+    over = long + IMPOSSIBLE * (small + beyond)
     middle = np.abs(np.log(np.sqrt(resistors.min(axis=1) * resistors.max(axis=1)) / comfortable))
     return 100 * over.sum(axis=1) + middle, np.any(over, axis=1)
 

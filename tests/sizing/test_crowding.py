@@ -4,6 +4,8 @@ from __future__ import annotations
 
 from dataclasses import replace
 
+import pytest
+
 from patchplan.equation.reader import read_problem
 from patchplan.pipeline import Choices, plan, plan_with
 from patchplan.sizing.crowding import crowding
@@ -32,6 +34,16 @@ def test_a_board_that_resistors_cannot_span_gets_a_summer():
     assert crowding(without.patch, without.sizing, without.target) == ("x<-y*z",) == found.choices["summers"]
     assert found.verdict.verdict == "follows"
     assert found.patch.counts()["summer"] == 1
+
+
+@pytest.mark.parametrize("least", ["3k", "5k", "10k"])
+def test_a_network_of_three_spans_what_single_resistors_do_not(least: str) -> None:
+    """Up to 1M the network for x beside a resistor for y*z reaches gains 1000 times those of single resistors."""
+    problem = read_problem(CROSSING.replace('"5k", "100k"', f'"{least}", "1M"'))
+    found = plan_with(problem, Choices())
+    assert not found.sizing.faults
+    assert max(abs(c.error_percent) for c in found.sizing.coefficients) < 0.2
+    assert len(found.sizing.stages["I1"].legs[0].resistors) == 3
 
 
 def test_no_summer_where_values_are_in_reach():
