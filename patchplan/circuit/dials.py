@@ -72,11 +72,8 @@ def _rheostat(
     stage: Stage, patch: Patch, sizing: Sizing, resistors: tuple[float, ...], tolerance: float
 ) -> tuple[Dial, Array, Array]:
     """The dial, and the knob at its marks with a nominal track and a short one."""
-    knob, wire = patch.knobs[stage.knob or ""], stage.wires[0]
-    sized, scales = sizing.stages[stage.name], sizing.scales
-    gain = abs(wire.coefficient) * scales[stage.node].volts_per_unit / scales[wire.source].volts_per_unit
-    # A knob that starts at zero has no feedback at its nominal setting to go by.
-    per_unit = float(sized.feedback / abs(knob.value) if knob.value else sized.legs[0].transfer * gain)
+    knob = patch.knobs[stage.knob or ""]
+    per_unit = sizing.stages[stage.name].feedback / float(knob.size)
     dial = rheostat(per_unit, float(knob.value), (float(knob.low), float(knob.high)), resistors, tolerance)
     sign = -1.0 if knob.low < 0 else 1.0
     marks, short = np.array(MARKS), dial.track * (1 - TRACK_TOLERANCE)

@@ -127,6 +127,16 @@ class Knob:
     low: Fraction
     high: Fraction
 
+    @property
+    def size(self) -> Fraction:
+        """What its stage is laid out for: the magnitude of its value, or that of its far end where the value is 0."""
+        return abs(self.value) or max(abs(self.low), abs(self.high))
+
+    @property
+    def sign(self) -> int:
+        """Sign of its value, or of its range where the value is 0."""
+        return -1 if self.value < 0 or (not self.value and self.low < 0) else 1
+
 
 @dataclass(frozen=True, slots=True)
 class System:

@@ -173,7 +173,7 @@ def _signs(form: Form, drafts: Mapping[str, _Draft], hold: bool, node_limit: int
         if draft.bipolar:
             forced.append(draft.inputs[0][0])
         elif draft.kind in ("integrator", "summer"):
-            turn = -1 if draft.knob is not None and draft.knob.value < 0 else 1
+            turn = draft.knob.sign if draft.knob is not None else 1
             links += [Link(draft.key, k, (turn if c > 0 else -turn)) for k, c, _ in draft.inputs]
         if hold and draft.kind == "integrator" and draft.start:
             links.append(Link(draft.key, REFERENCE, 1 if draft.start > 0 else -1, is_start=True))
@@ -254,7 +254,7 @@ class _Board:
         """Wires that fit as they are, and those that need an inverting summer in front."""
         direct: list[Wire] = []
         turned: list[Wire] = []
-        knob_sign = -1 if draft.knob is not None and draft.knob.value < 0 else 1
+        knob_sign = draft.knob.sign if draft.knob is not None else 1
         for key, coefficient, origin in draft.inputs:
             wire = Wire(self.node[key], coefficient, origin)
             right = coefficient * knob_sign * self.sign[at] * self.sign[wire.source] < 0

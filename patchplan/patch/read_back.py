@@ -66,7 +66,7 @@ def _terms(
         ]
         return row_of("", both).terms
     knob = patch.knobs[stage.knob] if stage.knob else None
-    turn = -1 if knob is not None and knob.value < 0 else 1
+    turn = knob.sign if knob is not None else 1
     wires = stage.wires[:1] if stage.bipolar else stage.wires
     terms: list[Term] = []
     for wire in wires:

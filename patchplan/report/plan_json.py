@@ -174,7 +174,9 @@ def transfer_gains(plan: Plan, stage: Stage) -> tuple[float, ...]:
         return tuple(1.0 / (leg.transfer * values.capacitor * loss) for leg in values.legs)
     if stage.bipolar:
         return _bipolar_gains(plan, stage)
-    return tuple(values.feedback / leg.transfer for leg in values.legs)
+    knob = plan.patch.knobs[stage.knob] if stage.knob else None
+    share = float(abs(knob.value) / knob.size) if knob else 1.0
+    return tuple(share * values.feedback / leg.transfer for leg in values.legs)
 
 
 def _bipolar_gains(plan: Plan, stage: Stage) -> tuple[float, ...]:

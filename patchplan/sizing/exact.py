@@ -63,7 +63,7 @@ def exact_sizing(
 
 def wanted_gains(stage: Stage, patch: Patch, scales: Mapping[str, NodeScale]) -> Array:
     """|a| * S / S_source of each wire: [1/problem time] for integrators, [V/V] for summers."""
-    knob = abs(float(patch.knobs[stage.knob].value)) if stage.knob else 1.0
+    knob = float(patch.knobs[stage.knob].size) if stage.knob else 1.0
     here = scales[stage.node].volts_per_unit
     return np.array([abs(float(w.coefficient)) * knob * here / scales[w.source].volts_per_unit for w in stage.wires])
 

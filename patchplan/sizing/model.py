@@ -217,4 +217,4 @@ def _ratios(
 
 
 def _knob(stage: Stage, patch: Patch) -> float:
-    return abs(float(patch.knobs[stage.knob].value)) if stage.knob else 1.0
+    return float(patch.knobs[stage.knob].size) if stage.knob else 1.0

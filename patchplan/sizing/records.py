@@ -170,7 +170,7 @@ class StageSizing:
         Integrators only [F].
     feedback
         Feedback resistor of a summer or inverter, or the DC-limit resistor of an integrator; 0 for none [ohm].
-        With a knob: the value at the knob's nominal setting.
+        With a knob: the value at the knob's nominal setting, or at its far end where the knob is nominally 0.
     start
         (resistor from the reference, resistor from the output) [ohm]; the first is 0 where the start value is 0;
         None where the stage has no hold (``run = "free"`` and all stages but integrators).

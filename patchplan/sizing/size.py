@@ -244,8 +244,8 @@ def _coefficients(patch: Patch, model: Model, values: Values) -> tuple[Coefficie
             rows.append(Coefficient(f"{stage.node}(0)", wanted, wanted / max(1.0 + error, LEAST_SHARE)))
         else:
             wire = stage.wires[ratio.wire]
-            knob = float(patch.knobs[stage.knob].value) if stage.knob else 1.0
-            wanted = float(wire.coefficient) * knob
+            knob = patch.knobs[stage.knob] if stage.knob else None
+            wanted = float(wire.coefficient * (knob.size * knob.sign if knob else 1))
             rows.append(Coefficient(f"{stage.node}<-{wire.source}", wanted, wanted * (1.0 + error)))
     return tuple(rows)
 

@@ -50,7 +50,7 @@ def integrator_gains(patch: Patch, scales: Mapping[str, float]) -> dict[str, Arr
 
 def summer_gains(stage: Stage, patch: Patch, scales: Mapping[str, float]) -> float:
     """Sum of the gains of a summer or inverter."""
-    knob = abs(float(patch.knobs[stage.knob].value)) if stage.knob else 1.0
+    knob = float(patch.knobs[stage.knob].size) if stage.knob else 1.0
     return sum(abs(float(w.coefficient)) * knob * scales[stage.node] / scales[w.source] for w in stage.wires)
 
 
