@@ -185,8 +185,9 @@ def _conductances(parts: Sequence[Part], closed: str) -> dict[str, float]:
                     if net is not None:
                         sums[net] = sums.get(net, 0.0) + 1 / (part.value + behind.get(far, 0.0))
         elif part.kind == "potentiometer":
-            # A rheostat counts at its setting; a track across two outputs has twice the volts.
-            ohm = part.value * part.total if part.nets[1] == part.nets[2] else part.total / 2
+            # A rheostat counts at its setting, at 0 in full, since it carries its leg's current whatever the setting; a
+            # track across two outputs has twice the volts.
+            ohm = (part.value or 1.0) * part.total if part.nets[1] == part.nets[2] else part.total / 2
             for net in dict.fromkeys((part.nets[0], part.nets[2])):
                 sums[net] = sums.get(net, 0.0) + 1 / max(ohm, 1e-3)
     return sums

@@ -36,9 +36,10 @@ class Stage:
     - reference: signal 1; source: the named Source
 
     Every integrator, summer and inverter inverts: coefficient * sign * (sign of the wire's node) < 0, where a knob
-    counts with the sign of its nominal value, or of its range where that is 0. A knob whose range crosses zero has ``bipolar`` set: then the stage has
-    two wires, the two ends of its potentiometer, which carry the same signal in both polarities; the equation counts
-    the first wire only, and the sign rule does not bind (the potentiometer gives either sign).
+    counts with the sign of its nominal value, or of its range where that is 0. A knob whose range crosses zero has
+    ``bipolar`` set: then the stage has two wires, the two ends of its potentiometer, which carry the same signal in
+    both polarities; the equation counts the first wire only, and the sign rule does not bind (the potentiometer
+    gives either sign).
     """
 
     name: str

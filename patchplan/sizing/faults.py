@@ -9,6 +9,7 @@ from numpy.typing import NDArray
 
 from patchplan.patch.records import Patch, Stage
 from patchplan.quantity import engineering
+from patchplan.sizing.loads import heavy_loads
 from patchplan.sizing.model import Model, Ratio
 from patchplan.sizing.networks import largest_transfer
 from patchplan.sizing.records import Target
@@ -44,6 +45,8 @@ def find_faults(
             f"time, {pace.limits[1]} for at most {engineering(high, 's')}. Faster parts or wider value limits would "
             f"mend it."
         )
+    if not faults:
+        faults += heavy_loads(patch, target)
     off = [(abs(e), r) for e, r in zip(values.errors.tolist(), model.ratios, strict=True) if abs(e) > OUT_OF_REACH]
     if not off or faults:
         return tuple(faults)
