@@ -132,3 +132,12 @@ def test_json_alone_and_quiet(run):
     assert json.loads(done.stdout)["options"][0]["op_amp"] == "TL07x"
     assert listing(Path("outputs/plain_options")) == ["options.csv", "options.json"]
     assert run("--op-amp", "TL07x", "--quiet").stdout == ""
+
+
+def test_parts_of_a_stock_are_not_told_with_tolerances_they_do_not_have(run, tmp_path):
+    lines = ["value,count,tolerance", *(f"{value},40,5%" for value in ("1k", "2.2k", "4.7k", "10k", "22k", "100k"))]
+    (tmp_path / "drawer.csv").write_text("\n".join(lines))
+    (tmp_path / "plain.toml").write_text(OSCILLATOR + '\n[build]\nresistors = "drawer.csv"\n')
+    done = run("--op-amp", "TL07x", "--no-pictures")
+    assert done.exit_code == 0, done.output
+    assert " ".join(("drawer.csv", "stock/2")) in " ".join(done.stdout.split())

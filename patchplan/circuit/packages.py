@@ -84,10 +84,14 @@ def assign_places(
 
 
 def counts_to_fit(parts: Iterable[Part]) -> tuple[int, int]:
-    """Packages, and all that has to be fitted: packages and the parts apart from them; sources are not on the board."""
+    """Packages, and all pieces that have to be fitted, packages included; sources are not on the board.
+
+    A decoupling capacitor is a piece of its own though it names the package that it stands at.
+    """
     fitted = [p for p in parts if p.kind != "source"]
-    packages = {p.package for p in fitted if p.package}
-    return len(packages), len(packages) + sum(not p.package for p in fitted)
+    packages = {p.package or p.ref for p in fitted if p.kind == "reference" or (p.package and p.kind != "decoupling")}
+    apart = sum(p.kind == "decoupling" or not (p.package or p.kind == "reference") for p in fitted)
+    return len(packages), len(packages) + apart
 
 
 def decoupling(places: Places, references: Sequence[str]) -> Iterator[Part]:

@@ -61,12 +61,14 @@ def _marks(axes: Axes, built: list[Option]) -> None:
 
 
 def _front(axes: Axes, built: list[Option]) -> None:
-    """Least error that each count of parts buys."""
+    """Least error that each count of parts buys; no line where more parts buy nothing."""
     least: list[tuple[int, float]] = []
     for option in sorted(built, key=lambda o: (o.parts, o.error_percent)):
         error = max(option.error_percent, LEAST_ERROR)
         if not least or error < least[-1][1]:
             least.append((option.parts, error))
+    if len(least) == 1:
+        return
     end = max(o.parts for o in built) + style.ASIDE
     axes.step(
         [x for x, _ in least] + [end], [y for _, y in least] + [least[-1][1]], where="post", zorder=1, **style.EDGE_LINE

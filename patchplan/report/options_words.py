@@ -198,8 +198,10 @@ def build_name(build: Build) -> str:
 
 
 def tolerance_name(build: Build) -> str:
-    """Of resistors and capacitors: ``1/2 %``."""
-    return f"{100 * build.resistor_tolerance:.2g}/{100 * build.capacitor_tolerance:.2g} %"
+    """Of resistors and capacitors: ``1/2 %``; a stock file states its own: ``stock/2 %``."""
+    resistors = "stock" if build.resistor_stock else f"{100 * build.resistor_tolerance:.2g}"
+    capacitors = "stock" if build.capacitor_stock else f"{100 * build.capacitor_tolerance:.2g}"
+    return f"{resistors}/{capacitors}" + ("" if build.resistor_stock and build.capacitor_stock else " %")
 
 
 def supply_name(supply: tuple[float, float]) -> str:

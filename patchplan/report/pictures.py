@@ -182,8 +182,8 @@ def swing_picture(plan: Plan) -> Figure:
     axes.barh(places, 2 * limit, style.BAND_BAR, -limit, color=style.LIGHT["sand"], alpha=style.BAND_OPACITY)
     axes.barh(places, high - low, style.BAR, low, color=[style.LIGHT["over" if bad else "inside"] for bad in over])
     for place, (edge, used, bad) in enumerate(zip(limit, share, over, strict=True)):
-        text = f" {100 * used:.0f} % of {plain(edge)} V" + (", over" if bad else "")
-        axes.text(edge * max(used, 1.0), place, text, va="center", fontsize=style.SMALL)
+        text = f"{100 * used:.0f} % of {plain(edge)} V" + (", over" if bad else "")
+        _beside(axes, edge * max(used, 1.0), place, text)
     widest = float(np.max(limit * np.maximum(share, 1.0)))
     axes.set_xlim(-1.08 * widest, 1.65 * widest)
     axes.set_yticks(
@@ -193,6 +193,11 @@ def swing_picture(plan: Plan) -> Figure:
     return figure
 
 
+def _beside(axes: Axes, end: float, place: int, text: str) -> None:
+    """Text a little to the right of the end of a bar; SVG drops blanks that would hold it off."""
+    axes.annotate(text, (end, place), (3, 0), textcoords="offset points", va="center", fontsize=style.SMALL)
+
+
 def budget_picture(plan: Plan) -> Figure:
     """Error budget, largest cause first."""
     rows = sorted(plan.verdict.budget, key=lambda cause: -cause.error_percent)[:15]
@@ -200,7 +205,7 @@ def budget_picture(plan: Plan) -> Figure:
     values = [row.error_percent for row in rows]
     axes.barh(range(len(rows)), values, style.BAR, color=style.LIGHT["circuit"])
     for place, value in enumerate(values):
-        axes.text(value, place, " " + percent(value), va="center", fontsize=style.SMALL)
+        _beside(axes, value, place, percent(value))
     axes.set_xlim(0.0, 1.18 * max(values) or 1.0)
     axes.set_yticks(range(len(rows)), [_clipped(row.cause) for row in rows])
     axes.set_xlabel("error [% of peak]")

@@ -48,6 +48,9 @@ def steps(plan: Plan) -> tuple[str, ...]:
         told.append(words.NO_REFERENCE)
     told.append(words.NO_HOLD if wait is None else words.HOLD.format(wait=engineering(wait, "s", 2)))
     told.append((words.OPERATE if wait is not None else words.RUN).format(run=engineering(circuit.duration, "s")))
+    trimming = plan.sizing.trimming
+    if trimming and trimming.fitted and trimming.trimmers:
+        told.append(words.SET_TRIMMERS)
     return tuple(told)
 
 

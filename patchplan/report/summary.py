@@ -13,6 +13,8 @@ from patchplan.report.style import TERMINAL
 from patchplan.report.tables import Table, node_table
 
 WIDTH = 80
+#: Stands for the blank before a percent sign while lines are broken, so that a figure keeps its sign.
+HELD = "\N{NO-BREAK SPACE}%"
 #: Rows of the node table on the terminal; nodes.csv has all.
 MOST_NODES = 16
 
@@ -36,7 +38,7 @@ def summary(plan: Plan, folder: Path | None = None, *, colour: bool = False) -> 
     if remedies:
         blocks.append(wrapped(f"To mend it: {' '.join(remedies)}"))
     if plan.circuit is not None:
-        blocks += map(wrapped, (*words.speed(plan), words.made_of(plan), *words.forms(plan)))
+        blocks += map(wrapped, (*words.speed(plan), words.made_of(plan), *words.forms(plan), *words.trims(plan)))
         blocks += ["", *table_lines(_first_rows(node_table(plan))), ""]
         blocks += [wrapped(s) for s in (words.largest_error(plan),) if s]
     blocks += [wrapped(f"Warning: {warning}") for warning in warnings_of(plan)]
@@ -56,7 +58,9 @@ def refusal(title: str, reason: str, folder: Path, *, colour: bool = False) -> s
 def wrapped(text: str) -> str:
     """A sentence in lines of the page's width, indented."""
     options: dict[str, Any] = {"break_on_hyphens": False, "break_long_words": False}
-    return textwrap.fill(words.printable(text), WIDTH, initial_indent="  ", subsequent_indent="  ", **options)
+    held = words.printable(text).replace(" %", HELD)
+    filled = textwrap.fill(held, WIDTH, initial_indent="  ", subsequent_indent="  ", **options)
+    return filled.replace(HELD, " %")
 
 
 def _first_rows(table: Table) -> Table:

@@ -139,7 +139,8 @@ def parts_table(circuit: Circuit) -> Table:
         if part.kind != "source":
             order = (list(KINDS).index(part.kind), part.total or part.value)
             bought = groups.setdefault((*order, part.kind, value_text(part), part.model), {})
-            bought[part.package or part.ref] = None
+            # A capacitor names the package that it stands at, and is a piece of its own.
+            bought[part.ref if part.kind == "decoupling" else part.package or part.ref] = None
     rows = tuple((str(len(refs)), *key[2:], _shortened(list(refs))) for key, refs in sorted(groups.items()))
     differ = distinct_values(circuit)
     note = f"{differ['resistor']} different values of resistors, {differ['capacitor']} of capacitors."

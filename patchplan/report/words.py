@@ -168,6 +168,19 @@ def forms(plan: Plan) -> tuple[str, ...]:
     return tuple(sentences)
 
 
+def trims(plan: Plan) -> tuple[str, ...]:
+    """What trimmers do, or would do, to the spread: one sentence, or none."""
+    trimming = plan.sizing.trimming
+    if trimming is None or not trimming.trimmers:
+        return ()
+    before, after = percent(100 * trimming.before), percent(100 * trimming.after)
+    which = counted(len(trimming.trimmers), "trimmer")
+    if trimming.fitted:
+        verb = "takes" if len(trimming.trimmers) == 1 else "take"
+        return (f"{which}, set as the bring-up sheet says, {verb} the spread by parts from {before} to {after}.",)
+    return (f"{which} would take the spread by parts from {before} to {after}: trim = true under [build].",)
+
+
 def largest_error(plan: Plan) -> str:
     """The top of the error budget, "" where there is none."""
     if not plan.verdict.budget:
@@ -178,7 +191,9 @@ def largest_error(plan: Plan) -> str:
 
 def story(plan: Plan) -> tuple[str, ...]:
     """The plan told in about five sentences."""
-    return tuple(s for s in (headline(plan), *speed(plan), made_of(plan), *forms(plan), largest_error(plan)) if s)
+    return tuple(
+        s for s in (headline(plan), *speed(plan), made_of(plan), *forms(plan), *trims(plan), largest_error(plan)) if s
+    )
 
 
 CAUTIONS = (
@@ -201,6 +216,7 @@ HOLD = (
     "Keep OPERATE low: the board is in hold. Set sources and other control lines to what they are at time 0, wait "
     "{wait} (ten time constants of the slowest start network), and check the volts below, node by node."
 )
+SET_TRIMMERS = "Set the trimmers in the order of the table of trimming, by runs from the start values."
 NO_HOLD = "This board has no hold: it runs from power-up. Check each node against the limits of its swing."
 OPERATE = (
     "Take OPERATE high and start the sources in the same moment; a run lasts {run}. Compare each watched terminal with "

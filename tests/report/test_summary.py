@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from dataclasses import replace
 from pathlib import Path
 
@@ -13,7 +14,10 @@ from patchplan.report import words
 from patchplan.report.folder import unused_name
 from patchplan.report.pictures import MOST_POINTS, thinned
 from patchplan.report.plan_json import plan_data
+from patchplan.report.sheet import steps
 from patchplan.report.summary import WIDTH, summary
+from patchplan.report.tables import parts_table
+from patchplan.sizing.trim_records import Trimmer, Trimming
 from tests.report.test_plan_json import unbuildable
 
 
@@ -30,6 +34,31 @@ def test_summary_answers_in_order(plan):
     assert places == sorted(places)
 
 
+@pytest.mark.parametrize("name", ["seat_suspension", "lorenz"])
+def test_the_count_of_parts_is_that_of_the_parts_list(plans, name):
+    plan = plans.of(name)
+    listed = sum(int(row[0]) for row in parts_table(plan.circuit).rows)
+    assert f", {listed} parts." in words.made_of(plan)
+    rows = [row for row in parts_table(plan.circuit).rows if row[1] in {"op amp", "multiplier", "switch", "reference"}]
+    assert f" {sum(int(row[0]) for row in rows)} packages," in words.made_of(plan)
+
+
+@pytest.mark.parametrize(
+    ("fitted", "said"),
+    [
+        (True, "1 trimmer, set as the bring-up sheet says, takes the spread by parts from 1.7 % to 0.8 %."),
+        (False, "1 trimmer would take the spread by parts from 1.7 % to 0.8 %: trim = true under [build]."),
+    ],
+)
+def test_the_summary_says_what_trimmers_do(plan, fitted, said):
+    trimmer = Trimmer("INT1", 0, 10e3, 0.1, "x", 1.0, 0.5, "value", 0.01)
+    trimming = Trimming((trimmer,), 5, 0, 1, 0.017, 0.008, fitted)
+    made = replace(plan, sizing=replace(plan.sizing, trimming=trimming))
+    assert said in " ".join(summary(made).split())
+    assert not re.search(r"\d\n *%", summary(made))
+    assert (words.SET_TRIMMERS in steps(made)) is fitted
+
+
 def test_summary_keeps_to_the_width_and_to_plain_text(plan):
     name = "p_1_length_speed_t_th_d_squared_and_more"
     long = replace(
@@ -42,6 +71,8 @@ def test_summary_keeps_to_the_width_and_to_plain_text(plan):
     for shown in (plan, wide, unbuildable(plan)):
         text = summary(shown, Path("outputs/plain"))
         assert max(map(len, text.splitlines())) <= WIDTH
+        assert not any(line.lstrip().startswith("%") for line in text.splitlines())
+        assert "\N{NO-BREAK SPACE}" not in text
         assert "\x1b" not in text
         assert "!" not in text
 
