@@ -122,3 +122,12 @@ def test_a_factored_form_is_planned_to_the_end_with_half_the_multipliers():
     assert len(found.patch.factors) == 3
     assert expanded.patch.counts()["multiplier"] == 6
     assert not expanded.patch.factors
+
+
+def test_a_watched_sum_is_squared_and_multiplied_without_a_summer_of_its_own(plans):
+    """Expanded there are five products, of which load^2 and w*load remain."""
+    found = plans.of("factored")
+    assert found.verdict.verdict == "follows"
+    assert found.patch.counts()["multiplier"] == 2
+    assert found.patch.factors == ("load",)
+    assert sum(s.signal == "load" for s in found.patch.stages if s.kind == "summer") == 1

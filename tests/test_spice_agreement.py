@@ -34,6 +34,7 @@ PLANS = {
     "integrator": "free-running, DC-limit resistor",
     "torque_filter": "a block in other states than the file's, real time",
     "single_ended": "multipliers without differential inputs",
+    "factored": "a watched sum as factor of two products, one of them its square",
     "two_mass_drive": "steps and pulses from the reference, an algebraic signal",
 }
 

@@ -71,14 +71,22 @@ def _drafts(system: System, factoring: bool) -> tuple[dict[str, _Draft], tuple[s
     """All stages but those that only turn a sign, by key, sources first; and keys of sums taken out as factors."""
     rows, knob_stages = _take_out_knobs((*system.rows, *system.signals))
     drafts = _given(system, (*rows, *(row for row, _ in knob_stages)))
+    sums: list[Row] = []
+    reused: list[str] = []
     if factoring:
-        changed, sums = factored([*rows, *(row for row, _ in knob_stages)])
+        before = [*rows, *(row for row, _ in knob_stages)]
+        known = rows[len(system.rows) :]
+        changed, sums = factored(before, known)
+        reused = [row.name for row in known if _multiplied(row.name, [*changed, *sums]) > _multiplied(row.name, before)]
         rows = changed[: len(rows)]
         knob_stages = [(row, knob) for row, (_, knob) in zip(changed[len(rows) :], knob_stages, strict=True)]
-    else:
-        sums = []
     _draw(system, drafts, rows, knob_stages, sums)
-    return drafts, tuple(row.name for row in sums)
+    return drafts, (*(row.name for row in sums), *reused)
+
+
+def _multiplied(name: str, rows: Iterable[Row]) -> int:
+    """Number of products that take a signal."""
+    return sum(t.degree > 1 and any(n == name for n, _ in t.factors) for row in rows for t in row.terms)
 
 
 def _given(system: System, rows: Iterable[Row]) -> dict[str, _Draft]:

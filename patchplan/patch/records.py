@@ -74,7 +74,7 @@ class Patch:
     signs_open
         Whether the search for the fewest sign stages stopped at its node limit before it knew them.
     factors
-        Signals of the summers that make a sum which stands as a factor in products, for fewer multipliers.
+        Signals of the summers whose sums stand as factors in products, for fewer multipliers.
     differential
         Whether multipliers have differential inputs; else the sign of a product is that of its two wires' nodes.
     """

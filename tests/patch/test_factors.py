@@ -44,6 +44,17 @@ FORMS = {
             },
         ), 2, 1, 1
     ),
+    "(x + y)^2": (one_row(term(1, "x", "x"), term(2, "x", "y"), term(1, "y", "y")), 3, 1, 1),
+    "-2*(x - y/3 + 2*z)^2": (
+        one_row(
+            term(-2, "x", "x"), term("-2/9", "y", "y"), term(-8, "z", "z"),
+            term("4/3", "x", "y"), term(-8, "x", "z"), term("8/3", "y", "z"),
+        ), 6, 1, 1
+    ),
+    "w*(x + y)^2": (one_row(term(1, "w", "x", "x"), term(2, "w", "x", "y"), term(1, "w", "y", "y")), 5, 2, 1),
+    "(y + z)^2 + w*(y + z)": (
+        one_row(term(1, "y", "y"), term(2, "y", "z"), term(1, "z", "z"), term(1, "w", "y"), term(1, "w", "z")), 5, 1, 2
+    ),
 }  # fmt: skip
 
 
@@ -69,6 +80,33 @@ def test_three_species_take_a_multiplier_each():
 def test_rows_stay_where_no_multiplier_is_saved(made):
     assert factored(made.rows) == (list(made.rows), [])
     assert build_patch(Form(made)).factors == ()
+
+
+def test_a_watched_sum_serves_as_factor():
+    """Twice the sum that the products want is watched: the board has that summer in any case."""
+    rows = {
+        "x": [term(-1, "x", "y"), term(-3, "x", "z")],
+        "y": [term(-1, "y")],
+        "z": [term(1, "z", "y"), term(3, "z", "z")],
+    }
+    made = system(dict.fromkeys(rows, 1), rows, signals={"load": [term(2, "y"), term(6, "z")]}, watch=["x", "load"])
+    patch = build_patch(Form(made))
+    assert patch.counts()["multiplier"] == 2
+    assert [s.signal for s in patch.stages if s.kind == "summer" and not s.signal.startswith("part of")] == ["load"]
+    assert patch.factors == ("load",)
+    found = read_back(patch, ())
+    assert [found[row.name] for row in made.rows] == list(made.rows)
+
+
+def test_a_watched_square_is_not_its_own_factor():
+    rows = {"x": [term(-1, "x")], "y": [term(-1, "y")]}
+    square = [term(1, "x", "x"), term(2, "x", "y"), term(1, "y", "y")]
+    made = system(
+        dict.fromkeys(rows, 1), rows, signals={"sum": [term(1, "x"), term(1, "y")], "q": square}, watch=["sum", "q"]
+    )
+    patch = build_patch(Form(made))
+    assert patch.counts()["multiplier"] == 1
+    assert patch.factors == ("sum",)
 
 
 TERMS = st.builds(
