@@ -170,6 +170,7 @@ class _Seen:
         self.low: dict[str, float] = {}
         self.high: dict[str, float] = {}
         self.rate: dict[str, float] = {}
+        self.fed = _fed_back(patch)
         nodes = [s.node for s in patch.stages]
         ends = []
         for run in reach.runs:
@@ -196,6 +197,19 @@ class _Seen:
         """Peak of the range over peak of the runs, at least 1."""
         peak = max(abs(self.low[node.node]), abs(self.high[node.node]))
         return max(1.0, node.peak / peak) if peak else 1.0
+
+
+def _fed_back(patch: Patch) -> set[str]:
+    """Nodes from which some integrator follows."""
+    wires = {s.node: [w.source for w in s.wires] for s in patch.stages}
+    left = [source for s in patch.stages if s.kind == "integrator" for source in wires[s.node]]
+    found: set[str] = set()
+    while left:
+        node = left.pop()
+        if node not in found:
+            found.add(node)
+            left += wires[node]
+    return found
 
 
 def _known(stage: Stage, form: Form, reach: Reach) -> Range | None:
@@ -233,6 +247,9 @@ def _widened(stage: Stage, patch: Patch, nodes: Mapping[str, NodeRange], seen: _
     if stage.kind == "inverter":
         return NodeRange(stage.node, inputs[0].low, inputs[0].high, inputs[0].rate, known_by)
     counted = inputs[:1] if stage.bipolar else inputs
+    if stage.knob is not None and len(counted) == 1 and stage.node not in seen.fed:
+        # What the knob makes has no way back to the signal, so that both can be at their largest together.
+        return _combined(stage, patch, nodes, seen)
     if stage.kind == "multiplier" or (stage.knob is not None and len(counted) == 1):
         # By shares: a knob is seldom at its largest where its signal is.
         growth = float(np.prod([seen.growth(n) for n in counted]))

@@ -2,12 +2,13 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from fractions import Fraction
 
 import numpy as np
 import pytest
 
-from patchplan.equation.problem import Build
+from patchplan.equation.problem import Build, Parameter
 from patchplan.equation.syntax import parse_expression
 from patchplan.equation.system import Source
 from patchplan.equation.waveform import Waveform
@@ -110,3 +111,17 @@ def test_a_knob_stage_holds_the_nominal_run():
     patch, reach, ranges = ranges_of(made)
     stage = next(s for s in patch.stages if s.knob == "c")
     np.testing.assert_allclose(ranges.values[stage.node], 2 * reach.reference.of("v"), rtol=1e-12)
+
+
+def test_a_knob_with_no_way_back_and_its_signal_are_largest_together():
+    signals = {"y": [term(1, "x", knobs=["c"]), term(1, "v")]}
+    rates = {"x": [term(1, "v")], "v": [term(-1, "x", knobs=["k"]), term("-1/5", "v")]}
+    knobs = [knob("k", 1, 2, 3), knob("c", 1, 2, 3)]
+    made = system({"x": 0, "v": 1}, rates, signals=signals, knobs=knobs, watch=["y"])
+    box = tuple(Parameter(name, Fraction(2), Fraction(1), Fraction(3)) for name in ("k", "c"))
+    patch, _, ranges = ranges_of(replace(made, adjustable=box))
+    by_knob = {stage.knob: ranges.nodes[stage.node] for stage in patch.stages if stage.knob}
+    x = ranges.nodes[node_of(patch, "x")]
+    assert (by_knob["c"].low, by_knob["c"].high) == pytest.approx((3 * x.low, 3 * x.high), rel=1e-12)
+    # k closes a loop: where it is largest, x is small.
+    assert by_knob["k"].high < 0.8 * 3 * x.high

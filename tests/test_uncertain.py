@@ -15,6 +15,7 @@ from patchplan.errors import ProblemFaults
 from patchplan.pipeline import plan
 from patchplan.reach.reference import find_reach
 from patchplan.report.plan_json import plan_data
+from patchplan.report.summary import summary
 
 # From (1, 0) the swing's first undershoot is exp(-pi z / sqrt(1 - z^2)) with z = c / (2 sqrt(k)): deepest where c is
 # least and k most.
@@ -60,6 +61,9 @@ def test_the_worst_corner_of_a_tolerance_is_in_the_range(c, k):
     if "from" not in c:
         assert "c = 0.4, k = 2.2" in data["sentence"]
     assert data["sentence"] in plan_data(found)["notes"]
+    lines = summary(found).splitlines()
+    assert max(map(len, lines)) <= 80
+    assert data["sentence"] in " ".join(line.strip() for line in lines)
 
 
 def test_a_setting_that_blows_up_is_named():

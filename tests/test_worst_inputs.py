@@ -17,6 +17,7 @@ from patchplan.equation.reader import read_problem
 from patchplan.reach.reference import find_reach
 from patchplan.report.board import board_of
 from patchplan.report.plan_json import plan_data
+from patchplan.report.summary import summary
 from patchplan.report.worst import worst_files
 from tests.circuit.spice import run_ngspice
 
@@ -105,3 +106,12 @@ def test_plan_json_lists_the_worst_inputs(plan):
     assert any(
         "worst case of each of" in warning and "circuit.cir holds that of" in warning for warning in data["warnings"]
     )
+
+
+def test_the_terminal_says_for_what_the_ranges_hold(plan):
+    case = plan.reach.worst[0]
+    wanted = (
+        "Ranges hold for every waveform of floor within bounds, by peak gains; "
+        f"{case.signal} goes to {case.value:.4g} at t = {case.time:.4g}."
+    )
+    assert wanted in " ".join(line.strip() for line in summary(plan).splitlines())

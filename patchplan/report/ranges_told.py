@@ -36,18 +36,36 @@ def ranges_data(plan: Plan) -> dict[str, Any]:
 
 
 def ranges_sentence(plan: Plan) -> str:
-    """How the ranges over adjustable and uncertain parameters were found, "" where there are none."""
-    box = plan.reach.box
+    """How ranges over parameters and inputs that are not known exactly were found, "" where there are none."""
+    box, free = plan.reach.box, _free_inputs(plan)
     if box is None:
-        return ""
+        return free + (_margin(plan) if free else "")
     corners = f"all {box.corners} corners" if box.all_corners else f"{box.corners} ends of axes and some corners"
     tried = f"{corners}, {box.sampled} points of a Sobol sample, {box.climbed} around the worst"
+    if box.waveforms > 1:
+        tried = (
+            f"{corners} and {box.sampled} points of a Sobol sample under each of {box.waveforms} waveforms, "
+            f"{box.climbed} around the worst"
+        )
     sentence = f"Ranges hold over {', '.join(box.parameters)} by {counted(box.runs, 'run')}: {tried}."
     worst = _worst(plan, box)
     if worst is not None:
         at = ", ".join(f"{name} = {value:.4g}" for name, value in worst.parameters.items())
         sentence += f" The node of {worst.name} goes furthest of its limit, to {worst.value:.4g} at {at}."
-    return sentence + _margin(plan)
+    return " ".join(filter(None, (free, sentence))) + _margin(plan)
+
+
+def _free_inputs(plan: Plan) -> str:
+    """A sentence on inputs known only by their bounds."""
+    names = [s.name for s in plan.system.sources if s.waveform is None and s.within is not None]
+    if not names:
+        return ""
+    inputs = names[0] if len(names) == 1 else f"{', '.join(names[:-1])} and {names[-1]}"
+    if not plan.system.is_linear:
+        return f"The worst waveforms of {inputs} within bounds were searched; others may go further."
+    ends = "".join(f"; {case.signal} goes to {case.value:.4g} at t = {case.time:.4g}" for case in plan.reach.worst[:1])
+    held = "hold" if all(r.proved for case in plan.reach.bounded[:1] for r in case.responses) else "are estimated"
+    return f"Ranges {held} for every waveform of {inputs} within bounds, by peak gains{ends}."
 
 
 def _worst(plan: Plan, box: Box) -> WorstPoint | None:

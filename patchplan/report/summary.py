@@ -8,6 +8,7 @@ from typing import Any
 
 from patchplan.report import words
 from patchplan.report.plan_json import warnings_of
+from patchplan.report.ranges_told import ranges_sentence
 from patchplan.report.records import Plan
 from patchplan.report.style import TERMINAL
 from patchplan.report.tables import Table, node_table
@@ -40,7 +41,7 @@ def summary(plan: Plan, folder: Path | None = None, *, colour: bool = False) -> 
     if plan.circuit is not None:
         blocks += map(wrapped, (*words.speed(plan), words.made_of(plan), *words.forms(plan), *words.trims(plan)))
         blocks += ["", *table_lines(_first_rows(node_table(plan))), ""]
-        blocks += [wrapped(s) for s in (words.largest_error(plan),) if s]
+        blocks += [wrapped(s) for s in (words.largest_error(plan), ranges_sentence(plan)) if s]
     blocks += [wrapped(f"Warning: {warning}") for warning in warnings_of(plan)]
     if folder is not None:
         start = "report.html" if plan.circuit is not None else "plan.json"
