@@ -15,7 +15,7 @@ from patchplan.report import style
 from patchplan.report.folder import unused_name
 from patchplan.report.records import Plan
 from patchplan.report.speed_picture import speed_picture
-from patchplan.report.tables import swing_volts, swinging
+from patchplan.report.tables import share_of_limit, swing_volts, swinging
 from patchplan.report.words import percent, plain
 
 if TYPE_CHECKING:
@@ -170,9 +170,9 @@ def swing_picture(plan: Plan) -> Figure:
     """Swing of every node against its limits, those closest to their limit first."""
     rows = [(*swing_volts(plan, node), node.limit_volts, node) for node in swinging(plan)]
     left_out = len(rows) - MOST_ROWS
-    rows = sorted(rows, key=lambda row: -max(-row[0], row[1]) / row[2])[:MOST_ROWS]
+    rows = sorted(rows, key=lambda row: -share_of_limit(plan, row[-1]))[:MOST_ROWS]
     low, high, limit = (np.array(column) for column in tuple(zip(*rows, strict=True))[:3])
-    share = np.maximum(-low, high) / limit
+    share = np.array([share_of_limit(plan, row[-1]) for row in rows])
     failed = {peak.node for peak in plan.verdict.nodes if not peak.ok}
     over = [node.node in failed for *_, node in rows]
     places = range(len(rows))

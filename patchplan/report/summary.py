@@ -71,7 +71,13 @@ def _first_rows(table: Table) -> Table:
     fullest = sorted(table.rows, key=lambda row: -float(row[-1].split()[0]))[:MOST_NODES]
     rows = tuple(row for row in table.rows if row in fullest)
     left_out = len(table.rows) - len(rows)
-    return Table(table.title, table.headers, rows, table.numeric, f"and {left_out} more in nodes.csv")
+    return Table(
+        table.title,
+        table.headers,
+        rows,
+        table.numeric,
+        " ".join((f"and {left_out} more in nodes.csv.", table.note)).strip(),
+    )
 
 
 def table_lines(table: Table) -> list[str]:
@@ -89,7 +95,7 @@ def table_lines(table: Table) -> list[str]:
             for i, (c, w) in enumerate(zip(fitted, widths, strict=True))
         )
         lines.append("  " + "  ".join(placed).rstrip())
-    return lines + ([f"  {table.note}"] if table.note else [])
+    return lines + ([wrapped(table.note)] if table.note else [])
 
 
 def _cut(text: str, width: int) -> str:

@@ -37,11 +37,15 @@ class Table:
     note: str = ""
 
 
+OTHER_RUNS = "Swings: in the run of circuit.cir. Of limit: in the run of the check that takes the node furthest."
+
+
 def node_table(plan: Plan) -> Table:
     """What each node carries: signal, volts per unit, swing and share of its limit."""
     rows = [_node_row(plan, meaning) for meaning in swinging(plan)]
     headers = ("node", "signal", "one unit is", "swings", "of limit")
-    return Table("Nodes", headers, tuple(rows), frozenset({2, 3, 4}))
+    several = any(peak.during for peak in plan.verdict.nodes)
+    return Table("Nodes", headers, tuple(rows), frozenset({2, 3, 4}), OTHER_RUNS if several else "")
 
 
 def swinging(plan: Plan) -> list[NodeMap]:
@@ -52,11 +56,18 @@ def swinging(plan: Plan) -> list[NodeMap]:
 
 def _node_row(plan: Plan, meaning: NodeMap) -> tuple[str, ...]:
     low, high = swing_volts(plan, meaning)
-    share = max(abs(low), abs(high)) / meaning.limit_volts if meaning.limit_volts else 0.0
+    share = share_of_limit(plan, meaning)
     unit = engineering(meaning.sign * meaning.volts_per_unit, "V")
     side = "+" if meaning.offset_volts > 0 else "-"
     offset = f" {side} {plain(abs(meaning.offset_volts))} V" if meaning.offset_volts else ""
     return meaning.node, meaning.signal, unit + offset, f"{low:z.1f} … {high:z.1f} V", f"{100 * share:.0f} %"
+
+
+def share_of_limit(plan: Plan, meaning: NodeMap) -> float:
+    """How much of its limit a node takes in the run of the check that takes it furthest, a fraction."""
+    peaks = [peak.peak_volts for peak in plan.verdict.nodes if peak.node == meaning.node]
+    furthest = max(*map(abs, swing_volts(plan, meaning)), *peaks)
+    return furthest / meaning.limit_volts if meaning.limit_volts else 0.0
 
 
 def swing_volts(plan: Plan, meaning: NodeMap) -> tuple[float, float]:

@@ -54,8 +54,8 @@ def find_faults(
         side, least, limit, end = _outside(pace, given)
         return (
             f"The speed asked for is too {side}: one unit of time would take {engineering(given, 's')} on the board, "
-            f"and no {least} than {engineering(end, 's')} will do ({limit}). The nearest speed that works is speed = "
-            f"{nearest_speed(pace, given, unit)} under [build]; wider value limits would mend it, too.",
+            f"and no {least} than {engineering(end, 's')} will do ({limit}). The nearest inside the window is speed = "
+            f"{nearest_speed(pace, given, unit)} under [build]; {_other_way(limit)} may mend it, too.",
         )
     stages = {s.name: s for s in patch.stages}
     beyond = _beyond(model, values, target)
@@ -70,6 +70,11 @@ def find_faults(
         f"{100 * worst:.0f} % off at {_place(stages[ratio.stage], ratio)}. {_MORE[target.stocked]} or --think high "
         f"would mend it.",
     )
+
+
+def _other_way(limit: str) -> str:
+    """What else moves an end of the window; other values cannot, where an op amp or multiplier sets it."""
+    return "faster op amps or multipliers" if limit.startswith(("bandwidth", "slew")) else "wider value limits"
 
 
 def speed_notes(pace: Speed, given: float | None, unit: float) -> list[str]:

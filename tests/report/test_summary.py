@@ -16,7 +16,7 @@ from patchplan.report.pictures import MOST_POINTS, thinned
 from patchplan.report.plan_json import plan_data
 from patchplan.report.sheet import steps
 from patchplan.report.summary import WIDTH, summary
-from patchplan.report.tables import parts_table
+from patchplan.report.tables import OTHER_RUNS, node_table, parts_table
 from patchplan.sizing.trim_records import Trimmer, Trimming
 from tests.report.test_plan_json import unbuildable
 
@@ -57,6 +57,17 @@ def test_the_summary_says_what_trimmers_do(plan, fitted, said):
     assert said in " ".join(summary(made).split())
     assert not re.search(r"\d\n *%", summary(made))
     assert (words.SET_TRIMMERS in steps(made)) is fitted
+
+
+def test_the_share_of_the_limit_is_that_of_the_worst_run(plan):
+    """One run drives x to half of what another does: the table must not stop at the run of the netlist."""
+    worst = tuple(replace(p, peak_volts=11.4, during="y") if p.node == "x" else p for p in plan.verdict.nodes)
+    assert "x" in [peak.node for peak in worst]
+    other = replace(plan, verdict=replace(plan.verdict, nodes=worst))
+    (row,) = (row for row in node_table(other).rows if row[0] == "x")
+    assert row[-1] == f"{100 * 11.4 / plan.circuit.nodes['x'].limit_volts:.0f} %"
+    assert OTHER_RUNS in " ".join(summary(other).split())
+    assert OTHER_RUNS not in " ".join(summary(plan).split())
 
 
 def test_summary_keeps_to_the_width_and_to_plain_text(plan):

@@ -116,9 +116,17 @@ def test_out_of_reach_is_a_sentence():
     _, _, sizing = sized(made, speed="real time")
     assert sizing.faults == (
         "The speed asked for is too slow: one unit of time would take 1 s on the board, and no more than 33.5 µs will "
-        "do (offsets of TL07x through networks of three resistors, at 1 % of peak). The nearest speed that works is "
-        "speed = 29900 under [build]; wider value limits would mend it, too.",
+        "do (offsets of TL07x through networks of three resistors, at 1 % of peak). The nearest inside the window is "
+        "speed = 29900 under [build]; wider value limits may mend it, too.",
     )
+
+
+def test_an_op_amp_too_slow_is_not_mended_by_values():
+    made = system({"x": 1, "v": 1}, {"x": [term(1, "v")], "v": [term(-1, "x")]}, duration=60)
+    _, _, sizing = sized(made, speed=10.0**9)
+    (fault,) = sizing.faults
+    assert "(bandwidth of TL07x" in fault
+    assert fault.endswith("under [build]; faster op amps or multipliers may mend it, too.")
 
 
 def test_gains_too_far_apart_name_the_input():
