@@ -148,7 +148,7 @@ class Crossing:
     ) -> Array:
         """v_out / v_end_a, resistances in [ohm]."""
         # Source resistance ahead of a T counts more than once.
-        weight = 1.0 if len(self.leg.resistors) == 1 else 1 + self.leg.resistors[2] / self.leg.resistors[1]
+        weight = 1 + self.leg.resistors[2] / self.leg.resistors[1] if self.leg.is_network else 1.0
         whole = end_a + track + end_b
         share = (end_a + settings * track) / whole
         source = share * (1 - share) * whole

@@ -157,10 +157,15 @@ def _legs(board: Board, stage: Stage, legs: tuple[Leg, ...], into: str) -> None:
 
 
 def _leg(board: Board, stage: Stage, source: str, leg: Leg, into: str, index: int) -> None:
-    if len(leg.resistors) == 1:
-        board.resistor(stage, source, into, leg.resistors[0])
-        return
     middle = f"{stage.node}_t{index}"
+    if leg.join == "series":
+        board.resistor(stage, source, middle, leg.resistors[0])
+        board.resistor(stage, middle, into, leg.resistors[1])
+        return
+    if not leg.is_network:
+        for value in leg.resistors:
+            board.resistor(stage, source, into, value)
+        return
     for a, b, value in zip((source, middle, middle), (middle, GROUND, into), leg.resistors, strict=True):
         board.resistor(stage, a, b, value)
 

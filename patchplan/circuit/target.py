@@ -54,6 +54,7 @@ def target_of(build: Build, catalogue: Catalogue) -> Target:
         multiplier=_multiplier(build, _part(catalogue.multipliers, build.multiplier, "multiplier")),
         switch_on=switch.si("on_resistance") if switch else 0.0,
         switch_leakage=switch.si("leakage") if switch else 0.0,
+        pairs=build.pairs,
         resistor_piles=resistors,
         capacitor_piles=capacitors,
         other_op_amps=tuple(_others(build, catalogue.op_amps.values(), op_amp.name, _op_amp)),

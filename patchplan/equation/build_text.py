@@ -29,6 +29,7 @@ def build_lines(before: Build, after: Build) -> dict[str, str]:
             f'"{100 * after.capacitor_tolerance:.9g}%"',
         ),
         "op_amp": (before.op_amp, after.op_amp, json.dumps(after.op_amp)),
+        "pairs": (before.pairs, after.pairs, "true" if after.pairs else "false"),
         "speed": (
             before.speed, after.speed,
             json.dumps(after.speed) if isinstance(after.speed, str) else f"{after.speed:.9g}",

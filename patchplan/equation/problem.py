@@ -156,6 +156,8 @@ class Build:
     multiplier: str = "AD633"
     #: "free", "real time", or how many times faster than the problem the circuit runs.
     speed: str | float = "free"
+    #: Whether two resistors may stand for one value.
+    pairs: bool = False
     #: Whether the board gets trimmers for what tolerances do.
     trim: bool = False
     resistor_stock: Stock | None = None

@@ -18,7 +18,7 @@ RUNS = ("once", "repeat", "free")
 
 #: Fields of a Build that another key fills.
 _FILLED = {"reference_tolerance", "resistor_stock", "capacitor_stock"}
-_KEYS = (*(f.name for f in fields(Build) if f.name not in _FILLED), "pairs")
+_KEYS = tuple(f.name for f in fields(Build) if f.name not in _FILLED)
 _VOLTS = ("V",)
 _OHMS = ("Ω", "Ω", "ohm", "Ohm", "ohms")
 _FARADS = ("F",)
@@ -46,7 +46,7 @@ def read_build(reading: Reading, part_names: Mapping[str, Collection[str]] | Non
         "capacitor_limits": lambda r, k, v: _limits(r, k, v, _FARADS),
         "resistor_tolerance": Reading.tolerance, "capacitor_tolerance": Reading.tolerance,
         "op_amp": lambda r, k, v: _part(r, k, v, part_names), "multiplier": lambda r, k, v: _part(r, k, v, part_names),
-        "speed": _speed, "trim": _flag, "offsets": _flag, "forms": _forms,
+        "speed": _speed, "pairs": _flag, "trim": _flag, "offsets": _flag, "forms": _forms,
     }  # fmt: skip
     found: dict[str, Any] = {
         key: read(reading, f"build.{key}", table[key]) for key, read in readers.items() if key in table
@@ -59,8 +59,11 @@ def read_build(reading: Reading, part_names: Mapping[str, Collection[str]] | Non
         found["reference"] = reference_for_supply(found["supply"])
     if "speed" not in table and reading.data.get("terminals"):
         found["speed"] = "real time"
-    if "pairs" in table:
-        _pairs(reading, table["pairs"])
+    if found.get("pairs") and found["resistor_stock"]:
+        reading.fault(
+            "build.pairs", "Pairs of resistors on hand are not built in this version.",
+            "Write pairs = false, or name a series under resistors.",
+        )  # fmt: skip
     return Build(**{key: value for key, value in found.items() if value is not None})
 
 
@@ -188,10 +191,3 @@ def _forms(reading: Reading, key: str, given: Any) -> tuple[tuple[str, str], ...
         return None
     found = [(name, reading.string(f"{key}.{name}", form, "the form's name")) for name, form in given.items()]
     return tuple((name, form) for name, form in found if form is not None)
-
-
-def _pairs(reading: Reading, given: Any) -> None:
-    if given is True:
-        reading.fault("build.pairs", "Pairs of resistors are not built in this version.", "Write pairs = false.")
-    elif given is not False:
-        reading.fault("build.pairs", f"This is {kind_of(given)}.", "Write true or false.")

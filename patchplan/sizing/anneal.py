@@ -81,10 +81,16 @@ def find_moves(
 
 
 def anneal(
-    crowd: Crowd, moves: Moves, random: np.random.Generator, sweeps: int, enough: Callable[[Indices], bool]
+    crowd: Crowd,
+    moves: Moves,
+    random: np.random.Generator,
+    sweeps: int,
+    enough: Callable[[Indices], bool],
+    *,
+    hot: float = HOT,
 ) -> None:
     """Move all candidates towards small loop errors, in place, until the best one's places are good enough."""
-    heat = [*np.geomspace(HOT, COLD, max(sweeps - LAST, 1)).tolist(), *[0.0] * LAST]
+    heat = [*np.geomspace(hot, COLD, max(sweeps - LAST, 1)).tolist(), *[0.0] * LAST]
     for number, warmth in enumerate(heat):
         if not moves.followers:
             return

@@ -14,9 +14,11 @@ from math import log
 import numpy as np
 from numpy.typing import NDArray
 
+from patchplan.sizing.crowd import nearest_place
 from patchplan.sizing.loops import Circuits
 from patchplan.sizing.losses import residual_of
 from patchplan.sizing.model import Model
+from patchplan.sizing.pairs import legs_with_pairs
 from patchplan.sizing.records import Target
 from patchplan.sizing.values import Values, pick_stage_values, resistor, start_ratios, wanted_products
 
@@ -24,6 +26,8 @@ Array = NDArray[np.float64]
 SWEEPS = 3
 #: How many exact hits on either side of each row's place are tried in one move.
 REACH = 3
+#: A row that is off by no more than this, in logs, gets no pair of resistors.
+UNPAIRED = 1e-3
 #: Most logs compared with the grid in one move: an unknown of many rows, as the speed, tries a part of their hits.
 MOST_COMPARED = 200_000
 #: Speeds that the search begins from: at most this many, and about this many rows settled in all.
@@ -61,7 +65,7 @@ def choose_large(model: Model, target: Target, circuits: Circuits, *, comfortabl
         if best is None or found.worst < best.worst:
             best = found
     assert best is not None
-    residual = residual_of(model, target, best.parts)
+    residual = residual_of(model, target, best.parts, best.joins)
     left = residual - np.array([model.at(r.want, best.theta) - r.want.constant for r in model.ratios])
     return replace(best, errors=np.expm1(-left), loop_errors=circuits.errors(residual))
 
@@ -162,10 +166,16 @@ def _name_parts(
     weights: Array,
 ) -> Values:
     parts: dict[tuple[str, int | str], tuple[float, ...]] = {key: (value,) for key, value in picked.items()}
+    joins: dict[tuple[str, int | str], str] = {}
     left = np.zeros(len(x))
     for row, (ratio, wanted) in enumerate(zip(model.ratios, x, strict=True)):
         choice = start_ratios(target.resistors) if ratio.kind == "start" else resistor(float(np.exp(wanted)), target)
-        position = int(np.argmin(np.abs(choice.logs - wanted)))
+        position = int(nearest_place(choice.logs, wanted))
+        if target.pairs and ratio.kind != "start" and abs(choice.logs[position] - wanted) > UNPAIRED:
+            choice = legs_with_pairs(target.resistors, wanted > choice.logs[-1])
+            position = int(nearest_place(choice.logs, wanted))
+            joins[ratio.stage, ratio.wire] = choice.join(position)
         parts[ratio.stage, ratio.wire] = choice.parts[position]
         left[row] = choice.logs[position] - wanted
-    return Values(parts, theta, float(np.max(weights * np.abs(left), initial=0.0)), left, np.expm1(-left))
+    worst = float(np.max(weights * np.abs(left), initial=0.0))
+    return Values(parts, theta, worst, left, np.expm1(-left), joins={k: v for k, v in joins.items() if v})

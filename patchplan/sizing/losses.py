@@ -47,7 +47,12 @@ def added_logs(
     return total
 
 
-def residual_of(model: Model, target: Target, parts: Mapping[tuple[str, int | str], tuple[float, ...]]) -> Array:
+def residual_of(
+    model: Model,
+    target: Target,
+    parts: Mapping[tuple[str, int | str], tuple[float, ...]],
+    joins: Mapping[tuple[str, int | str], str] | None = None,
+) -> Array:
     """What named parts make of every row: log of its product or ratio, losses counted, less b, shape ``(n_rows,)``."""
     made, ohm, load, farad = np.zeros((4, len(model.ratios)))
     for row, ratio in enumerate(model.ratios):
@@ -57,7 +62,7 @@ def residual_of(model: Model, target: Target, parts: Mapping[tuple[str, int | st
             first, second = parts[ratio.stage, -1]
             made[row] += log(second / first)
             continue
-        leg = Leg(parts[ratio.stage, ratio.wire])
+        leg = Leg(parts[ratio.stage, ratio.wire], (joins or {}).get((ratio.stage, ratio.wire), ""))
         ohm[row], load[row] = leg.into, leg.load
         made[row] += log(leg.transfer)
         if ratio.kind == "integrator":

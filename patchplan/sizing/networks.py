@@ -17,8 +17,9 @@ from patchplan.sizing.records import Leg
 Array = NDArray[np.float64]
 #: Last resistors that are tried: the largest one and the next below it. The larger, the less offsets count.
 LAST = 6
-#: Networks are kept one for each step of this size in the log of the transfer resistance.
-STEP = 0.002
+#: Networks are kept one for each step of this size in the log of the transfer resistance; the finer one serves boards
+#: whose single resistors may be pairs.
+STEP, FINE = 0.002, 0.0002
 #: First resistors are near this value [ohm]: light for the node that drives them, and small against the input
 #: resistance and strays of what follows (common practice, no source).
 FIRST = 1e5
@@ -34,8 +35,8 @@ def largest_transfer(resistors: tuple[float, ...]) -> float:
 
 
 @lru_cache(maxsize=8)
-def networks(resistors: tuple[float, ...]) -> tuple[tuple[float, float, float], ...]:
-    """Networks above the largest resistor, rising in transfer resistance, one for each :data:`STEP` where there is one.
+def networks(resistors: tuple[float, ...], step: float = STEP) -> tuple[tuple[float, float, float], ...]:
+    """Networks above the largest resistor, rising in transfer resistance, one for each step of its log if there is one.
 
     Within a step the larger last resistor wins, as the summing node sees it, then the first resistor nearest to
     :data:`FIRST`.
@@ -44,10 +45,10 @@ def networks(resistors: tuple[float, ...]) -> tuple[tuple[float, float, float], 
     light = values[values >= min(LIGHTEST, resistors[-1])]
     last, shunt, first = (a.ravel() for a in np.meshgrid(values[-LAST:], values, light, indexing="ij"))
     transfer = first + last + first * last / shunt
-    step = np.floor(np.log(transfer / values[-1]) / STEP).astype(int)
-    order = np.lexsort((shunt, np.abs(np.log(first / FIRST)), -last, step))
-    order = order[step[order] >= 0]
-    kept = order[np.flatnonzero(np.diff(step[order], prepend=-1))]
+    steps = np.floor(np.log(transfer / values[-1]) / step).astype(int)
+    order = np.lexsort((shunt, np.abs(np.log(first / FIRST)), -last, steps))
+    order = order[steps[order] >= 0]
+    kept = order[np.flatnonzero(np.diff(steps[order], prepend=-1))]
     kept = kept[np.argsort(transfer[kept], kind="stable")]
     return tuple(zip(first[kept].tolist(), shunt[kept].tolist(), last[kept].tolist(), strict=True))
 

@@ -85,8 +85,9 @@ class Target:
 
     ``resistors`` and ``capacitors`` are rising values inside the limits [ohm], [F]; ``reference`` is in volts;
     ``switch_on`` is the operate switch's resistance [ohm], 0 where the run has no hold. The other parts of the
-    catalogue that would do on this supply are there for advice only. ``resistor_piles`` and ``capacitor_piles`` are the
-    parts on hand, None where any number of each value can be had; else the tolerances are those of the worst of them.
+    catalogue that would do on this supply are there for advice only. ``pairs`` lets two resistors stand for one value.
+    ``resistor_piles`` and ``capacitor_piles`` are the parts on hand, None where any number of each value can be had;
+    else the tolerances are those of the worst of them.
     """
 
     resistors: tuple[float, ...]
@@ -101,6 +102,7 @@ class Target:
     switch_leakage: float
     other_op_amps: tuple[OpAmpFigures, ...] = ()
     other_multipliers: tuple[MultiplierFigures, ...] = ()
+    pairs: bool = False
     resistor_piles: tuple[Pile, ...] | None = None
     capacitor_piles: tuple[Pile, ...] | None = None
 
@@ -112,42 +114,50 @@ class Target:
 
 @dataclass(frozen=True, slots=True)
 class Leg:
-    """How one wire is made: one resistor, or a T of three (in, to ground, out) [ohm].
+    """How one wire is made: one resistor, two that stand for one, or a T of three (in, to ground, out) [ohm].
 
-    ``transfer`` is the resistance that would pass the same current into a virtual ground (switch not counted).
+    ``transfer`` is the resistance that would pass the same current into a virtual ground (switch not counted); ``join``
+    says how two resistors are joined, "series" or "parallel".
     """
 
     resistors: tuple[float, ...]
+    join: str = ""
+
+    @property
+    def is_network(self) -> bool:
+        """Whether the leg is a T of three."""
+        return len(self.resistors) == 3
 
     @property
     def transfer(self) -> float:
-        """Equivalent resistance [ohm]: R, or R1 + R3 + R1*R3/R2 of a T."""
-        if len(self.resistors) == 1:
-            return self.resistors[0]
+        """Equivalent resistance [ohm]: R, that of a pair, or R1 + R3 + R1*R3/R2 of a T."""
+        if not self.is_network:
+            return 1.0 / sum(1.0 / r for r in self.resistors) if self.join == "parallel" else sum(self.resistors)
         first, shunt, last = self.resistors
         return first + last + first * last / shunt
 
     @property
     def into(self) -> float:
         """Resistance that the summing node sees into the leg, its source at ground [ohm]."""
-        if len(self.resistors) == 1:
-            return self.resistors[0]
+        if not self.is_network:
+            return self.transfer
         first, shunt, last = self.resistors
         return last + first * shunt / (first + shunt)
 
     @property
     def load(self) -> float:
         """Resistance that the leg is to its source, the summing node at ground [ohm]."""
-        if len(self.resistors) == 1:
-            return self.resistors[0]
+        if not self.is_network:
+            return self.transfer
         first, shunt, last = self.resistors
         return first + shunt * last / (shunt + last)
 
     @property
     def shares(self) -> tuple[float, ...]:
         """Relative change of the transfer per relative change of each resistor, sizes alone."""
-        if len(self.resistors) == 1:
-            return (1.0,)
+        if not self.is_network:
+            whole = self.transfer
+            return tuple(whole / r if self.join == "parallel" else r / whole for r in self.resistors)
         first, shunt, last = self.resistors
         cross = first * last / shunt
         return (first + cross) / self.transfer, cross / self.transfer, (last + cross) / self.transfer

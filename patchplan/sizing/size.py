@@ -187,7 +187,7 @@ def _stage(stage: Stage, target: Target, model: Model, values: Values) -> StageS
     if stage.kind == "inverter" and (stage.name, 0) not in values.parts:
         both = _nearest(target.resistors, max(1e4, LIGHT * target.op_amp.load))
         return StageSizing(stage.name, (Leg((both,)),), feedback=both)
-    legs = tuple(Leg(values.parts[stage.name, index]) for index in range(len(stage.wires)))
+    legs = tuple(values.leg(stage.name, index) for index in range(len(stage.wires)))
     if stage.kind in ("summer", "inverter"):
         if stage.knob:
             return StageSizing(stage.name, legs, feedback=exp(values.theta[model.feedback[stage.name]]))

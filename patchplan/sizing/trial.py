@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from math import log
 
 import numpy as np
 from numpy.typing import NDArray
@@ -14,6 +15,7 @@ from patchplan.sizing.large import choose_large, settled_start
 from patchplan.sizing.loops import Circuits, find_circuits
 from patchplan.sizing.losses import residual_of
 from patchplan.sizing.model import Model, matrix_of
+from patchplan.sizing.pairs import legs_to_pair, legs_with_pairs
 from patchplan.sizing.records import Target
 from patchplan.sizing.search import Effect, merit, split_rest
 from patchplan.sizing.values import (
@@ -23,6 +25,7 @@ from patchplan.sizing.values import (
     choices_of,
     find_unknowns,
     pick_stage_values,
+    plain,
     wanted_products,
 )
 
@@ -36,6 +39,12 @@ CANDIDATES, SWEEPS, ROOMY = 32, 30, 16
 MOST_ERROR, UNSEEN = 1.5e-3, 3.0
 #: Boards with more ratios than this take only the search that grows no faster than the board.
 LARGE = 70
+#: With pairs: loop errors that are good enough; those aimed at as legs are chosen, and how often that is halved.
+PAIR_LIMIT, PAIR_GOAL, PAIR_TRIES = 8e-4, 1e-3, 5
+#: How far capacitors may move from the middle of those chosen from before, in logs: four steps of E6.
+PAIR_WIDTH = 1.7
+#: Candidates without pairs that are tried, copies of each that settle, and their temperature at first.
+PAIRED, PAIR_CANDIDATES, PAIR_HOT = 6, 12, 0.3
 #: Candidates of each round that are finished and compared.
 FINISHED = 4
 #: Ways in which loop errors move the watched signals together: at most so many, each at least this share of the first;
@@ -56,6 +65,7 @@ class _Board:
     matrix: Array
     effect: Effect
     circuits: Circuits
+    measures: tuple[Array, Array]
     field: Field
     moves: Moves
     comfortable: Mapping[str, float]
@@ -90,15 +100,71 @@ def choose_values(
     random = np.random.default_rng(seed)
     rounds, share = ROUNDS[think]
     found: list[Values] = []
+    places: list[Indices] = []
     for number in range(max(1, round(rounds * min(1.0, 2 * ROOMY / max(len(model.ratios), 1))))):
         crowd = Crowd.at(board.field, _starts(board, random, first=number == 0))
         anneal(crowd, board.moves, random, SWEEPS, lambda place: _hidden(board, _finish(board, place), share))
         order = np.argsort(crowd.energy(), kind="stable")
         distinct = list({crowd.place[k].tobytes(): k for k in order[::-1]}.values())[::-1]
-        found += [_finish(board, crowd.place[k]) for k in distinct[:FINISHED]]
+        places += [crowd.place[k] for k in distinct[:FINISHED]]
+        found += [_finish(board, place) for place in places[len(found) :]]
         if any(_hidden(board, values, share) for values in found):
             break
-    return min(found, key=lambda values: _cost(board, values))
+    if not target.pairs:
+        return min(found, key=lambda values: _cost(board, values))
+    tried = sorted(range(len(found)), key=lambda k: float(np.abs(found[k].loop_errors).max(initial=0.0)))
+    paired = [_paired(board, found[k], places[k], random) for k in tried[:PAIRED]]
+    return min(paired, key=lambda v: (_out_of_line(v) > PAIR_LIMIT, len(v.joins), _cost(board, v)))
+
+
+def _out_of_line(values: Values) -> float:
+    return float(np.abs(values.loop_errors).max(initial=0.0))
+
+
+def _paired(board: _Board, values: Values, place: Indices, random: np.random.Generator) -> Values:
+    """The same board with pairs of resistors in the fewest legs that bring every loop into line."""
+    loops = len(board.circuits.rows)
+    legs = [u for u, (_, what) in enumerate(board.unknowns.names) if isinstance(what, int) and what >= 0]
+    free = [u for u in legs if len(board.choices[u].parts[place[u]]) == 3]
+    legs = [u for u in legs if u not in free]
+    errors = Crowd.at(board.field, place[None]).errors[0, :loops]
+    best, opened = values, 0
+    for halving in range(PAIR_TRIES + 1):
+        if _out_of_line(best) <= PAIR_LIMIT:
+            break
+        chosen = legs_to_pair(errors, board.field.loops[:, :loops], free, legs, PAIR_GOAL / 2**halving)
+        if halving == PAIR_TRIES:
+            best = min(best, _settled_pairs(board, place, [*free, *legs], random), key=_out_of_line)
+        elif len(chosen) > opened:
+            opened = len(chosen)
+            best = min(best, _settled_pairs(board, place, chosen, random), key=_out_of_line)
+    return best
+
+
+def _settled_pairs(board: _Board, place: Indices, legs: list[int], random: np.random.Generator) -> Values:
+    """The best board near one when pairs are allowed in some legs."""
+    wide = _opened(board, legs)
+    logs = [c.logs[k : k + 1] for c, k in zip(board.choices, place, strict=True)]
+    at = np.array([nearest_place(c.logs, x) for c, x in zip(wide.choices, logs, strict=True)])
+    crowd = Crowd.at(wide.field, np.repeat(at.T, PAIR_CANDIDATES, axis=0))
+    anneal(crowd, board.moves, random, SWEEPS, lambda _: False, hot=PAIR_HOT)
+    return _finish(wide, crowd.place[int(np.argmin(crowd.energy()))])
+
+
+def _opened(board: _Board, legs: list[int]) -> _Board:
+    """The board with pairs allowed in some legs, and other capacitors in their stages."""
+    choices, names = list(board.choices), board.unknowns.names
+    for u in legs:
+        choices[u] = legs_with_pairs(board.target.resistors, len(choices[u].parts[-1]) == 3)
+    for c, (stage, what) in enumerate(names):
+        if what == "C" and any(names[u][0] == stage for u in legs):
+            # A lone loop has little else to choose from: pairs leave gaps of 0.3 %.
+            middle = float(choices[c].logs.mean())
+            choices[c] = plain(tuple(v for v in board.target.capacitors if abs(log(v) - middle) <= PAIR_WIDTH))
+    shares, weight = board.measures
+    constant = matrix_of(board.model)[1]
+    field = make_field(board.model, board.target, board.unknowns, choices, board.matrix, constant, shares, weight)
+    return replace(board, choices=tuple(choices), field=field)
 
 
 def _board(
@@ -109,9 +175,10 @@ def _board(
     wanted = wanted_products(model, model.centre)
     picked = pick_stage_values(model, target, wanted, comfortable, lambda: 0)
     choices = choices_of(unknowns, target, picked, _centre(model, unknowns, wanted, picked))
-    field = make_field(model, target, unknowns, choices, matrix, constant, *_measures(circuits, effect))
+    measures = _measures(circuits, effect)
+    field = make_field(model, target, unknowns, choices, matrix, constant, *measures)
     moves = find_moves(field, unknowns.names, model.ratios, matrix, len(circuits.rows))
-    return _Board(model, target, unknowns, choices, matrix, effect, circuits, field, moves, comfortable)
+    return _Board(model, target, unknowns, choices, matrix, effect, circuits, measures, field, moves, comfortable)
 
 
 def _measures(circuits: Circuits, effect: Effect) -> tuple[Array, Array]:
@@ -172,10 +239,12 @@ def _finish(board: _Board, place: Indices) -> Values:
     """Split what is left over the scale factors and name the parts."""
     model = board.model
     parts = {n: c.parts[k] for n, c, k in zip(board.unknowns.names, board.choices, place.tolist(), strict=True)}
-    residual = residual_of(model, board.target, parts)
+    joined = zip(board.unknowns.names, board.choices, place.tolist(), strict=True)
+    joins = {name: join for name, c, k in joined if (join := c.join(k))}
+    residual = residual_of(model, board.target, parts, joins)
     theta, worst = split_rest(board.matrix, residual, board.effect, model.low, model.high)
     errors = np.expm1(-(residual - board.matrix @ theta))
-    return Values(parts, theta, worst, board.circuits.errors(residual), errors)
+    return Values(parts, theta, worst, board.circuits.errors(residual), errors, joins=joins)
 
 
 def _logs(values: Values) -> Array:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from functools import cached_property, lru_cache
 from math import exp, log
 
@@ -11,7 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from patchplan.sizing.model import Model, Ratio
-from patchplan.sizing.networks import largest_transfer, networks
+from patchplan.sizing.networks import STEP, largest_transfer, networks
 from patchplan.sizing.records import Leg, Target
 from patchplan.sizing.speed_errors import COMFORTABLE
 
@@ -30,15 +30,20 @@ NETWORKS_FROM = 0.2
 
 @dataclass(frozen=True)
 class Choice:
-    """What one unknown may be: rising log values, and the parts behind each."""
+    """What one unknown may be: rising log values, the parts behind each, and how a leg's two are joined."""
 
     logs: Array
     parts: tuple[tuple[float, ...], ...]
+    joins: tuple[str, ...] = ()
+
+    def join(self, place: int) -> str:
+        """How the parts of one value are joined, empty but for pairs."""
+        return self.joins[place] if self.joins else ""
 
     @cached_property
     def into(self) -> Array:
         """Conductance that a summing node sees into each leg, its source at ground [S]."""
-        return np.array([1.0 / Leg(p).into for p in self.parts])
+        return np.array([1.0 / Leg(p, self.join(k)).into for k, p in enumerate(self.parts)])
 
     def near(self, wanted: float, width: float) -> Array:
         """Positions of the values within ``width`` of a wanted log, at least the nearest one."""
@@ -67,6 +72,8 @@ class Values:
         Relative error of each row, shape ``(n_rows,)``.
     missing
         Sentences on parts that are not on hand.
+    joins
+        (stage, wire) -> how the two resistors of a pair are joined.
     """
 
     parts: dict[tuple[str, int | str], tuple[float, ...]]
@@ -75,6 +82,11 @@ class Values:
     loop_errors: Array
     errors: Array
     missing: tuple[str, ...] = ()
+    joins: Mapping[tuple[str, int | str], str] = field(default_factory=dict)
+
+    def leg(self, stage: str, wire: int) -> Leg:
+        """How one wire is made."""
+        return Leg(self.parts[stage, wire], self.joins.get((stage, wire), ""))
 
 
 @dataclass(frozen=True)
@@ -121,9 +133,9 @@ def plain(values: tuple[float, ...]) -> Choice:
 
 
 @lru_cache(maxsize=8)
-def all_legs(resistors: tuple[float, ...]) -> Choice:
+def all_legs(resistors: tuple[float, ...], step: float = STEP) -> Choice:
     """One resistor, or above the largest a network of three."""
-    single, long = plain(resistors), _networks(resistors)
+    single, long = plain(resistors), _networks(resistors, step)
     kept = np.flatnonzero(long.logs > single.logs[-1] + 1e-9)
     return Choice(np.concatenate([single.logs, long.logs[kept]]), single.parts + tuple(long.parts[k] for k in kept))
 
@@ -160,9 +172,9 @@ def resistor(wanted: float, target: Target) -> Choice:
 
 
 @lru_cache(maxsize=8)
-def _networks(resistors: tuple[float, ...]) -> Choice:
+def _networks(resistors: tuple[float, ...], step: float = STEP) -> Choice:
     """Networks of three resistors, above the largest single one."""
-    parts = networks(resistors)
+    parts = networks(resistors, step)
     return Choice(np.log(np.array([Leg(p).transfer for p in parts])), parts)
 
 

@@ -101,7 +101,6 @@ TABLE = [
     ("x = 0", "x = 0\n[build]\nresistors = 'stock.csv'", "'stock.csv'", 'There is no file "stock.csv"', "beside"),
     ("x = 0", "x = 0\n[build]\nresistors = 'stock'", "'stock'", '"stock" is no series, and no name of a CSV', "E24"),
     ("x = 0", "x = 0\n[build]\ncapacitors = ['1n']", "['1n']", "a list of 1", "E24"),
-    ("x = 0", "x = 0\n[build]\npairs = true", "true", "not built in this version", "pairs = false"),
     ("x = 0", "x = 0\n[build]\npairs = 1", "1", "This is a number", "true or false"),
     ("x = 0", "x = 0\n[build]\nrun = 'twice'", "'twice'", 'Unknown run "twice"', "once, repeat, free"),
     ("x = 0", "x = 0\n[build]\nspeed = 'fast'", "'fast'", 'Unknown speed "fast"', '"real time"'),
