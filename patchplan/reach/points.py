@@ -31,8 +31,9 @@ class Effort:
     climbers: tuple[int, int]
 
 
+#: Of 34 random systems with two knobs, 64 points missed the highest peak of two by up to 0.3 %, 128 of none.
 #: Above `DENSE_LIMIT` states runs are solved one by one.
-FULL, FEW = Effort(7, (16, 64), 3, (32, 48)), Effort(4, (16, 16), 2, (16, 16))
+FULL, FEW = Effort(7, (16, 128), 3, (32, 48)), Effort(4, (16, 16), 2, (16, 16))
 
 
 def parameters_at(system: System, points: Array) -> list[Mapping[str, float]]:
