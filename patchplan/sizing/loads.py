@@ -6,8 +6,8 @@ from patchplan.patch.records import Patch, Stage
 from patchplan.quantity import engineering
 from patchplan.sizing.records import Target
 
-#: Load of a network of three equal resistors over one of them: none is lighter.
-LIGHTEST_NETWORK = 1.5
+#: Load of a network of three equal resistors, and of two in series, over one of them: none is lighter.
+LIGHTEST_NETWORK, LIGHTEST_PAIR = 1.5, 2.0
 
 
 def heavy_loads(patch: Patch, target: Target) -> list[str]:
@@ -31,7 +31,7 @@ def heavy_loads(patch: Patch, target: Target) -> list[str]:
 
 def _sentence(stage: Stage, inputs: int, *, own: bool, target: Target) -> str:
     most, amp = target.resistors[-1], target.op_amp
-    taken = inputs / LIGHTEST_NETWORK + own
+    taken = (inputs + own) / LIGHTEST_PAIR if target.pairs else inputs / LIGHTEST_NETWORK + own
     if most >= amp.load * taken:
         return ""
     load, needed = most / taken, amp.load * (inputs + own)
