@@ -18,13 +18,17 @@ from patchplan.sizing.trimming import trimmed_by
 Array = NDArray[np.float64]
 
 
-def spread_of(sensitivity: Sensitivity, patch: Patch, sizing: Sizing, target: Target) -> dict[str, Array]:
+def spread_of(
+    sensitivity: Sensitivity, patch: Patch, sizing: Sizing, target: Target, *, like: Sizing | None = None
+) -> dict[str, Array]:
     """Standard deviation between boards by cause, each of shape ``(n_watched, n_times)``, fraction of the error base.
 
     Parameters
     ----------
     sensitivity, patch, sizing, target
         The plan; a tolerance t is taken as uniform, sigma = t / sqrt(3). Trimmers on the board take up what they can.
+    like
+        A board of real parts whose tolerances and trimmers count, where ``sizing`` is one of exact values.
 
     Returns
     -------
@@ -32,7 +36,7 @@ def spread_of(sensitivity: Sensitivity, patch: Patch, sizing: Sizing, target: Ta
         ``resistors``, ``capacitors``, ``reference``, ``offsets``, ``multipliers``. Causes are independent.
     """
     resistor = target.resistor_tolerance / sqrt(3)
-    columns = tolerance_columns(sensitivity, patch, sizing, target) | {"reference": [], "offsets": []}
+    columns = tolerance_columns(sensitivity, patch, sizing, target, like=like) | {"reference": [], "offsets": []}
     wires = {key: i for i, key in enumerate(sensitivity.wires)}
     stages = {name: i for i, name in enumerate(sensitivity.stages)}
     for stage in patch.stages:
@@ -54,7 +58,7 @@ def spread_of(sensitivity: Sensitivity, patch: Patch, sizing: Sizing, target: Ta
     reference = _reference(sensitivity, patch, sizing, wires) + low + high
     columns["reference"].append(target.reference_tolerance / sqrt(3) * reference)
     shape = sensitivity.coefficient.shape[::2]
-    trimmed = trimmed_by(sizing.trimming, sensitivity, patch, sizing)
+    trimmed = trimmed_by((like or sizing).trimming, sensitivity, patch, sizing)
     return {cause: np.sqrt(sum((trimmed(x) ** 2 for x in list_), np.zeros(shape))) for cause, list_ in columns.items()}
 
 

@@ -45,11 +45,20 @@ def predicted_error(
 
 
 def predicted_spread(
-    system: System, patch: Patch, sensitivity: Sensitivity, sizing: Sizing, target: Target
+    system: System,
+    patch: Patch,
+    sensitivity: Sensitivity,
+    sizing: Sizing,
+    target: Target,
+    *,
+    like: Sizing | None = None,
 ) -> tuple[float, tuple[Cause, ...]]:
-    """Standard deviation between boards [% of peak], as the check gives it, and its causes, largest first."""
+    """Standard deviation between boards [% of peak], as the check gives it, and its causes, largest first.
+
+    ``like`` as for :func:`patchplan.check.spread.spread_of`.
+    """
     rows = _rows(system, patch, sensitivity, sizing)
-    causes = spread_of(sensitivity, patch, sizing, target)
+    causes = spread_of(sensitivity, patch, sizing, target, like=like)
     total = np.sqrt(sum((share**2 for share in causes.values()), np.zeros((1, 1))))
     listed = [Cause(name, _largest(share, rows)) for name, share in causes.items() if share.any()]
     return _largest(total, rows), tuple(sorted(listed, key=lambda cause: -cause.error_percent))

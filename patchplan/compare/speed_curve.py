@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import replace
 from math import sqrt
 
 import numpy as np
@@ -19,6 +20,7 @@ from patchplan.sensitivity import Sensitivity
 from patchplan.sizing.drift import limited_stages
 from patchplan.sizing.exact import exact_sizing
 from patchplan.sizing.records import Sizing, Target
+from patchplan.sizing.trimming import trimmed_by
 
 Array = NDArray[np.float64]
 #: Speeds across the window; large boards take fewer, at most this many stages over all speeds, but no fewer than the
@@ -45,12 +47,13 @@ def speed_curve(
     """Predicted error and spread over the window of the speed, and what is to be said of real time.
 
     Every point is a board of exact values with the scale factors of the plan; its error is what
-    :func:`patchplan.compare.predict.predicted_error` gives. To the spread come strays, switch leakage and switches.
+    :func:`patchplan.compare.predict.predicted_error` gives. Tolerances and trimmers are the plan's. To the spread come
+    strays, switch leakage and switches.
 
     Parameters
     ----------
     sizing
-        The plan's: scale factors, window, limits and chosen speed.
+        The plan's: scale factors, window, limits, chosen speed, tolerances of its parts, and trimmers.
     run, accept
         As for :func:`patchplan.sizing.size.size`.
     """
@@ -66,8 +69,8 @@ def speed_curve(
             patch, sizing.scales, target, time_scale, limited=limited, sensitivity=sensitivity, allowed=accept / 100.0
         )
         error, parts = predicted_error(form.system, patch, ranges, sensitivity, board, target)
-        spread, ways = predicted_spread(form.system, patch, sensitivity, board, target)
-        more = loose_ends(patch, sensitivity, board, target)
+        spread, ways = predicted_spread(form.system, patch, sensitivity, board, target, like=sizing)
+        more = loose_ends(patch, sensitivity, replace(board, trimming=sizing.trimming), target)
         totals.append((error, sqrt(spread**2 + sum(share**2 for share in more.values()))))
         for table, found in ((causes, {c.cause: c.error_percent for c in parts}),
                              (spreads, {c.cause: c.error_percent for c in ways} | more)):  # fmt: skip
@@ -104,7 +107,7 @@ def loose_ends(patch: Patch, sensitivity: Sensitivity, sizing: Sizing, target: T
     """What the layout and the switches may add to the spread [% of peak], by cause.
 
     Strays and a switch that is off move all wires of an integrator alike; across a summer's feedback a stray makes it
-    late. Leakage drives an integrator as bias current does, in either direction.
+    late. Leakage drives an integrator as bias current does, in either direction. Trimmers take up what they can.
     """
     stages = {s.name: s for s in patch.stages}
     own: dict[str, list[int]] = {}
@@ -123,7 +126,8 @@ def loose_ends(patch: Patch, sensitivity: Sensitivity, sizing: Sizing, target: T
             ways["switch resistance"].append(SWITCH_OFF * target.switch_on * seen * together)
         elif kind != "multiplier":
             ways["strays"].append(STRAY * sized.feedback / sizing.time_scale * sensitivity.lag[:, i])
-    return {cause: share for cause, rows in ways.items() if (share := _largest(rows))}
+    trimmed = trimmed_by(sizing.trimming, sensitivity, patch, sizing)
+    return {cause: share for cause, rows in ways.items() if (share := _largest([trimmed(row) for row in rows]))}
 
 
 def _largest(rows: Sequence[Array]) -> float:

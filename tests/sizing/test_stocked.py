@@ -169,3 +169,17 @@ def test_a_worse_pile_counts_in_the_spread(tmp_path):
     same = replace(close.problem.build, resistor_stock=None) == replace(loose.problem.build, resistor_stock=None)
     assert same
     assert loose.verdict.spread_percent > close.verdict.spread_percent
+
+
+def test_the_curve_knows_which_parts_are_taken(tmp_path):
+    """Loose parts that stay on the shelf spread no board, at this speed or another."""
+    loose = "2.7k,40,20%,,\n"
+    measured = stock_text("resistors", 1, series="E12", most=3, measured=True)
+    capacitors = stock_text("capacitors", 2, series="E3", most=3, measured=True)
+    made = planned(tmp_path, OSCILLATOR, resistors=measured + loose, capacitors=capacitors)
+    check_counts(made)
+    assert made.circuit is not None
+    assert made.speed_curve is not None
+    assert all(p.tolerance == 0.0 for p in made.circuit.parts if p.kind == "resistor")
+    assert made.speed_curve.chosen[1] == pytest.approx(made.verdict.spread_percent, rel=0.1)
+    assert made.speed_curve.real_time[1] < 1.0

@@ -142,6 +142,14 @@ def test_what_is_fitted_is_told(tmp_path):
         assert row["fixed"] + row["setting"] * row["track"] == pytest.approx(row["ohms"])
 
 
+def test_the_curve_knows_of_the_trimmers(tmp_path):
+    made = planned(tmp_path, OSCILLATOR, trim=True, accept=1.0)
+    assert made.speed_curve is not None
+    assert made.sizing.trimming is not None
+    assert made.verdict.spread_percent < made.sizing.trimming.before * 100 / 3
+    assert made.speed_curve.chosen[1] == pytest.approx(made.verdict.spread_percent, rel=0.1)
+
+
 def test_little_spread_needs_no_trimmers(tmp_path):
     made = planned(tmp_path, STEP, trim=True, accept=50.0)
     assert made.sizing.trimming.trimmers == ()
