@@ -11,7 +11,7 @@ from patchplan.quantity import engineering
 from patchplan.ranges import Ranges
 from patchplan.sensitivity import Sensitivity
 from patchplan.sizing.records import Sizing, SpeedLimit, Target
-from patchplan.sizing.speed_limits import find_limits, ground_of, window_of
+from patchplan.sizing.speed_limits import find_limits, ground_of, hard_ends, window_of
 
 #: The largest film capacitor [F], the largest and smallest resistors [ohm] and the smallest capacitor [F] that are of
 #: use around an op amp (common practice, no source).
@@ -42,23 +42,31 @@ def judged(
         error, spread = (f"{share:.2g} %" if share < 99.5 else f"{share:.0f} %" for share in figures)
         return "possible", f"Real time is possible, with an error of {error} and a spread of {spread} as predicted."
     slow = unit > high
-    way = (sizing.window[1], sizing.limits[1]) if slow else (sizing.window[0], sizing.limits[0])
+    limits = find_limits(ground_of(form, patch, ranges, sensitivity, target))
+    soft, hard = window_of(limits)[slow], hard_ends(limits)[slow]
+    out_of_reach = unit > hard.time_scale if slow else unit < hard.time_scale
+    way = hard if out_of_reach else soft
     best: SpeedLimit | None = None
     for words, other in _wishes(target, slow=slow):
-        fast_end, slow_end = window_of(find_limits(ground_of(form, patch, ranges, sensitivity, other)))
+        others = find_limits(ground_of(form, patch, ranges, sensitivity, other))
+        fast_end, slow_end = window_of(others)
         if fast_end.time_scale <= unit <= slow_end.time_scale:
-            return "with other parts", f"Real time lies outside the window ({way[1]}), and inside with {words}."
-        end = slow_end if slow else fast_end
+            return "with other parts", f"Real time lies outside the window ({soft.text}), and inside with {words}."
+        end = (hard_ends(others) if out_of_reach else (fast_end, slow_end))[slow]
         if best is None or (end.time_scale > best.time_scale) is slow:
             best = end
     least = "more" if slow else "less"
-    text = (
-        f"Real time is impossible: a unit of time would take {engineering(unit, 's')}, and no {least} than "
-        f"{engineering(way[0], 's')} will do ({way[1]})"
+    takes = f"a unit of time would take {engineering(unit, 's')}, and no {least} than"
+    known = (
+        f"; with the best parts known no {least} than {engineering(best.time_scale, 's')} ({best.text})" if best else ""
     )
-    if best is not None:
-        text += f"; with the best parts known no {least} than {engineering(best.time_scale, 's')} ({best.text})"
-    return "impossible", text + "."
+    if not out_of_reach:
+        inside = f"{takes} {engineering(way.time_scale, 's')} lies inside ({way.text}){known}"
+        return "outside", f"Real time is outside the window, where errors are larger: {inside}."
+    return (
+        "impossible",
+        f"Real time is impossible: {takes} {engineering(way.time_scale, 's')} will do ({way.text}){known}.",
+    )
 
 
 def _wishes(target: Target, *, slow: bool) -> Iterator[Wish]:

@@ -118,7 +118,7 @@ class SpeedCurve:
     chosen, real_time
         (error, spread) at the plan's time scale, and in real time.
     judgement
-        Real time is ``possible``, ``with other parts`` or ``impossible``.
+        Real time is ``possible``, ``with other parts``, ``outside`` the window at a larger error, or ``impossible``.
     reason
         A sentence on it.
     """

@@ -16,7 +16,7 @@ from patchplan.circuit.wiring import line_of
 from patchplan.quantity import engineering
 from patchplan.report.plan_json import distinct_values, transfer_gains, units_range
 from patchplan.report.records import Plan
-from patchplan.report.words import percent, plain
+from patchplan.report.words import percent, plain, times_faster
 
 #: Unit of a part's value, for people and in parts.csv.
 VALUE_UNITS = {"resistor": ("Ω", "ohm"), "potentiometer": ("Ω", "ohm"), "capacitor": ("F", "F"),
@@ -175,14 +175,15 @@ def speed_table(plan: Plan) -> Table:
     """Every figure that limits the speed, those that set the window's ends first."""
     unit = float(plan.system.time_unit_seconds)
     rows = tuple(
-        (limit.end, limit.stage, limit.part, limit.figure, engineering(limit.value, limit.unit),
-         engineering(limit.time_scale, "s"), plain(unit / limit.time_scale))
-        for limit in plan.sizing.speed_limits if limit.time_scale > 0 and limit.figure
+        (f"{x.end}, {'hard' if x.hard else 'soft'}", x.stage, x.part, x.figure, engineering(x.value, x.unit),
+         engineering(x.time_scale, "s"), times_faster(unit / x.time_scale))
+        for x in plan.sizing.speed_limits if x.time_scale > 0 and x.figure
     )  # fmt: skip
     note = (
         "The first row of each end sets it. A bandwidth, bias current, offset or gain is at its limit where it alone "
         "costs 1 % of peak, all stages together; the stage is the one that adds most. A slew rate is at its limit at "
-        "half its figure."
+        "half its figure. Beyond these soft limits a board can be built, at a larger error; beyond a hard one no "
+        "values reach."
     )
     headers = ("end", "stage", "part", "figure", "value", f"1 {plan.system.time_unit} takes", "times real time")
     return Table("Limits of the speed", headers, rows, frozenset({4, 5, 6}), note)

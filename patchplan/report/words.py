@@ -107,7 +107,7 @@ def _more_room(plan: Plan, node: str) -> str:
 
 
 def speed(plan: Plan) -> tuple[str, ...]:
-    """How fast the board runs, the window of speeds, and whether real time lies in it: up to three sentences."""
+    """How fast the board runs, the window of speeds, and whether real time lies in it."""
     sizing, unit = plan.sizing, plan.system.time_unit
     second = float(plan.system.time_unit_seconds)
     if not sizing.time_scale > 0:
@@ -115,12 +115,30 @@ def speed(plan: Plan) -> tuple[str, ...]:
     takes = f"1 {unit} of the problem takes {engineering(sizing.time_scale, 's')} on the board"
     first = f"Runs {_factor(second / sizing.time_scale)}: {takes}."
     slow, fast = (second / end if end else math.inf for end in (sizing.window[1], sizing.window[0]))
-    window = f"{times_faster(slow)} to {times_faster(fast)} times real time would do."
-    ends = (f"Slow end: {_sentence(sizing.limits[1])}", f"Fast end: {_sentence(sizing.limits[0])}")
+    kinds = [_kind(plan, "slow", sizing.window[1]), _kind(plan, "fast", sizing.window[0])]
+    window = f"The window is {times_faster(slow)} to {times_faster(fast)} times real time."
+    ends = (
+        f"Slow end, {kinds[0]}: {_sentence(sizing.limits[1])}",
+        f"Fast end, {kinds[1]}: {_sentence(sizing.limits[0])}",
+    )
+    meaning = " ".join(text for kind, text in _KINDS_OF_ENDS if kind in kinds)
     judged = plan.speed_curve.reason if plan.speed_curve else ""
     if math.isclose(sizing.time_scale, second) and plan.speed_curve and plan.speed_curve.judgement == "possible":
         judged = ""
-    return tuple(s for s in (first, " ".join((window, *ends)), judged) if s)
+    return tuple(s for s in (first, " ".join((window, *ends, meaning)), sizing.outside, judged) if s)
+
+
+#: What the two kinds of ends of the window mean.
+_KINDS_OF_ENDS = (
+    ("soft", "Beyond a soft end a board can be built, at a larger error."),
+    ("hard", "Beyond a hard end no values reach."),
+)
+
+
+def _kind(plan: Plan, end: str, time_scale: float) -> str:
+    """Whether an end of the window is hard or soft."""
+    rows = [x for x in plan.sizing.speed_limits if x.end == end and x.time_scale == time_scale]
+    return "hard" if any(x.hard for x in rows) else "soft"
 
 
 def made_of(plan: Plan) -> str:

@@ -50,13 +50,8 @@ def find_faults(
     off = [(abs(e), r) for e, r in zip(values.errors.tolist(), model.ratios, strict=True) if abs(e) > OUT_OF_REACH]
     if not off or faults:
         return tuple(faults)
-    if given is not None and not low <= given <= high:
-        side, least, limit, end = _outside(pace, given)
-        return (
-            f"The speed asked for is too {side}: one unit of time would take {engineering(given, 's')} on the board, "
-            f"and no {least} than {engineering(end, 's')} will do ({limit}). The nearest inside the window is speed = "
-            f"{nearest_speed(pace, given, unit)} under [build]; {_other_way(limit)} may mend it, too.",
-        )
+    if given is not None and not pace.hard[0].time_scale <= given <= pace.hard[1].time_scale:
+        return (_beyond_hard(pace, given, unit),)
     stages = {s.name: s for s in patch.stages}
     beyond = _beyond(model, values, target)
     sentences = [
@@ -72,21 +67,36 @@ def find_faults(
     )
 
 
-def _other_way(limit: str) -> str:
-    """What else moves an end of the window; other values cannot, where an op amp or multiplier sets it."""
-    return "faster op amps or multipliers" if limit.startswith(("bandwidth", "slew")) else "wider value limits"
+def _beyond_hard(pace: Speed, given: float, unit: float) -> str:
+    """That no values reach a speed, and what else is in its way."""
+    fast = given < pace.hard[0].time_scale
+    hard, limit, end = pace.hard[not fast], pace.limits[not fast], pace.window[not fast]
+    side, least = ("fast", "less") if fast else ("slow", "more")
+    nearer = (
+        "" if limit == hard.text
+        else f" The window ends at {engineering(end, 's')} already ({limit}), where errors begin to grow."
+    )  # fmt: skip
+    other = " and faster op amps or multipliers" if limit.startswith(("bandwidth", "slew")) else ""
+    return (
+        f"The speed asked for is too {side}: one unit of time would take {engineering(given, 's')} on the board, and "
+        f"no {least} than {engineering(hard.time_scale, 's')} can be built ({hard.text}).{nearer} The nearest inside "
+        f"the window is speed = {nearest_speed(pace, given, unit)} under [build]; wider value limits{other} may mend "
+        f"it, too."
+    )
 
 
-def speed_notes(pace: Speed, given: float | None, unit: float) -> list[str]:
+def outside_note(pace: Speed, given: float | None, unit: float) -> str:
     """What a speed outside the window runs into; parameters as for :func:`find_faults`."""
     low, high = pace.window
     if given is None or low <= given <= high:
-        return []
-    side, _, limit, end = _outside(pace, given)
-    return [
-        f"The speed asked for, {engineering(given, 's')} per unit of time, lies outside the window. The {side} end is "
-        f"{engineering(end, 's')}, set by {limit}; speed = {nearest_speed(pace, given, unit)} is the nearest inside."
-    ]
+        return ""
+    fast = given < low
+    side, than = ("fast", "less") if fast else ("slow", "more")
+    return (
+        f"Runs outside the window: a unit of time takes {engineering(given, 's')} on the board, {than} than its {side} "
+        f"end of {engineering(pace.window[not fast], 's')} ({pace.limits[not fast]}); {pace.cost}. The nearest inside "
+        f"is speed = {nearest_speed(pace, given, unit)} under [build]."
+    )
 
 
 def nearest_speed(pace: Speed, given: float, unit: float) -> str:
@@ -95,12 +105,6 @@ def nearest_speed(pace: Speed, given: float, unit: float) -> str:
     speed = unit / (pace.window[1] if slow else pace.window[0])
     step = 10.0 ** (floor(log10(speed)) - 2)
     return f"{step * (ceil(speed / step) if slow else floor(speed / step)):.6g}"
-
-
-def _outside(pace: Speed, given: float) -> tuple[str, str, str, float]:
-    """Side, comparative, limit and end of the window beyond which a time scale lies."""
-    low, high = pace.window
-    return ("fast", "less", pace.limits[0], low) if given < low else ("slow", "more", pace.limits[1], high)
 
 
 def _beyond(model: Model, values: Values, target: Target) -> dict[tuple[str, int], str]:

@@ -236,6 +236,8 @@ class SpeedLimit:
         Lowest (``fast``) or highest (``slow``) time scale that it allows.
     text
         What it is in words, for sentences.
+    hard
+        Whether no values reach beyond it; else a board beyond it can be built, at a larger error.
     """
 
     end: str
@@ -246,6 +248,7 @@ class SpeedLimit:
     unit: str
     time_scale: float
     text: str
+    hard: bool = False
 
 
 @dataclass(frozen=True, slots=True)
@@ -284,6 +287,8 @@ class Sizing:
         Sentences for the plan: drift of modes, content below the DC-limit decade, forced choices.
     speed_limits
         Every figure that limits the speed, those at the window's ends among them.
+    outside
+        A sentence where the speed asked for lies outside the window: which limit, at what cost; "" inside.
     trimming
         Trimmers that the board has, or that would lower its spread; None where that was not looked at.
     """
@@ -300,3 +305,4 @@ class Sizing:
     speed_limits: tuple[SpeedLimit, ...] = ()
     trimming: Trimming | None = None
     loops: tuple[Loop, ...] = ()
+    outside: str = ""

@@ -24,7 +24,7 @@ from patchplan.sizing.drift import (
     offset_rate,
     slow_modes,
 )
-from patchplan.sizing.faults import find_faults, speed_notes
+from patchplan.sizing.faults import find_faults, outside_note
 from patchplan.sizing.loop_names import named_loops
 from patchplan.sizing.loops import find_circuits
 from patchplan.sizing.model import LEAST_USE, MOST_USE, Model, build_model
@@ -104,8 +104,10 @@ def size(
         find_faults(pace, given, unit, model, values, patch, target),
         speed_limits=pace.rows,
         loops=loops,
+        outside=outside_note(pace, given, unit),
     )
-    notes = [*speed_notes(pace, given, unit), *_drift_notes(form, patch, ranges, sensitivity, target, sizing)]
+    told = [sizing.outside] if sizing.outside else []
+    notes = [*told, *_drift_notes(form, patch, ranges, sensitivity, target, sizing)]
     return replace(sizing, notes=(*notes, *_content_notes(sizing, patch, ranges), *_use_notes(form, patch, scales)))
 
 

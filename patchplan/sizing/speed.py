@@ -14,7 +14,7 @@ from patchplan.ranges import Ranges
 from patchplan.sensitivity import Sensitivity
 from patchplan.sizing.records import SpeedLimit, Target
 from patchplan.sizing.speed_errors import COMFORTABLE, bias_error, lag_errors, leak_error
-from patchplan.sizing.speed_limits import find_limits, ground_of, network_leak, window_of
+from patchplan.sizing.speed_limits import cost_beyond, find_limits, ground_of, hard_ends, network_leak, window_of
 
 Array = NDArray[np.float64]
 #: A faster plan is preferred while it costs no more than this fraction of peak over the best.
@@ -31,6 +31,7 @@ class Speed:
     ``predicted`` is the error expected from bandwidth and bias current at the chosen speed, as a fraction of peak;
     ``lag`` the error by bandwidth alone, times the time scale, and ``leak`` the one by finite gain at the chosen speed,
     both of shape ``(n_watched, n_times)``; ``rows`` holds every limit.
+    ``hard`` holds the ends beyond which no values reach, ``cost`` what a speed outside the window costs, in words.
     """
 
     window: tuple[float, float]
@@ -39,7 +40,9 @@ class Speed:
     predicted: float
     lag: Array
     leak: Array
-    rows: tuple[SpeedLimit, ...] = ()
+    rows: tuple[SpeedLimit, ...]
+    hard: tuple[SpeedLimit, SpeedLimit]
+    cost: str = ""
 
 
 def choose_speed(
@@ -74,7 +77,10 @@ def choose_speed(
         chosen = float(grid[np.argmax(good)] if good.any() else grid[np.argmin(error)])
     bias = float(bias_error(patch, sensitivity, target, scales, gains, np.array([chosen]))[0])
     leak = leak_error(patch, sensitivity, target, scales, gains) + network_leak(ground, chosen)
-    return Speed((low, high), (fast.text, slow.text), chosen, lag / chosen + bias, late, leak, limits)
+    beyond = None if given is None or low <= given <= high else fast if given < low else slow
+    cost = cost_beyond(ground, beyond, given) if given is not None and beyond is not None else ""
+    texts = (fast.text, slow.text)
+    return Speed((low, high), texts, chosen, lag / chosen + bias, late, leak, limits, hard_ends(limits), cost)
 
 
 def _plain_end(target: Target, gains: Mapping[str, Array]) -> float:

@@ -7,7 +7,7 @@ currents, and what networks of three resistors make of offsets and finite gain.
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from math import pi
 
 import numpy as np
@@ -71,6 +71,29 @@ def window_of(limits: tuple[SpeedLimit, ...]) -> tuple[SpeedLimit, SpeedLimit]:
     return fast, min((x for x in limits if x.end == "slow"), key=lambda x: x.time_scale)
 
 
+def hard_ends(limits: tuple[SpeedLimit, ...]) -> tuple[SpeedLimit, SpeedLimit]:
+    """The limits beyond which no values reach: fast and slow end, at 0 and infinity where there is none."""
+    hard = tuple(x for x in limits if x.hard)
+    open_end = replace(_NO_LIMIT, end="slow", time_scale=np.inf)
+    return window_of((*hard, open_end))
+
+
+def cost_beyond(on: Ground, limit: SpeedLimit, time_scale: float) -> str:
+    """What a board pays that runs beyond a limit, in words."""
+    if limit.hard:
+        return "no values reach there but by a lucky choice of swings"
+    if limit.figure == "slew rate":
+        return f"a node then asks for {100 * SLEW_USE * limit.time_scale / time_scale:.3g} % of the slew rate"
+    if limit.figure in ("offset", "open-loop gain"):
+        costs = _network_costs(on, network_conductance(on, np.array([time_scale])))
+        share = float(costs[limit.figure == "open-loop gain"].max(initial=0.0))
+    else:
+        share = END_ERROR * max(time_scale / limit.time_scale, limit.time_scale / time_scale)
+    return (
+        f"this alone costs about {100 * share:.2g} % of peak there" if share < 1 else "this alone costs all of the peak"
+    )
+
+
 def _tightest(limits: list[SpeedLimit], sign: int) -> list[SpeedLimit]:
     kinds: dict[tuple[str, str], list[SpeedLimit]] = {}
     for limit in limits:
@@ -112,7 +135,7 @@ def _smallest(on: Ground) -> Iterator[SpeedLimit]:
         if gains.size:
             end = float(gains.max()) * product
             text = f"smallest resistor times smallest capacitor, {engineering(product, 's')}, at {name}"
-            yield SpeedLimit("fast", name, "smallest values", "R × C", product, "s", end, text)
+            yield SpeedLimit("fast", name, "smallest values", "R × C", product, "s", end, text, hard=True)
 
 
 def _largest(on: Ground) -> Iterator[SpeedLimit]:
@@ -121,7 +144,7 @@ def _largest(on: Ground) -> Iterator[SpeedLimit]:
         if gains.size:
             end = float(gains.min()) * product
             text = f"largest network of three resistors times largest capacitor, {engineering(product, 's')}, at {name}"
-            yield SpeedLimit("slow", name, "largest values", "R × C", product, "s", end, text)
+            yield SpeedLimit("slow", name, "largest values", "R × C", product, "s", end, text, hard=True)
     if not any(gains.size for gains in on.gains.values()):
         yield SpeedLimit("slow", "", "", "", 0.0, "", 1.0, "no integrator limits it")
 
@@ -151,10 +174,8 @@ def _networks(on: Ground) -> Iterator[SpeedLimit]:
     grid = min(widest) * on.target.resistors[-1] * on.target.capacitors[-1] * np.geomspace(1.0, _LONGEST, _POINTS)
     extra = network_conductance(on, grid)
     amp = on.target.op_amp
-    rates = np.array([_of(on.sensitivity.rate, on, name) / on.scales[node] for name, node in _integrators(on)])
-    leaks = np.array([on.sensitivity.leak[name].ravel() for name, _ in _integrators(on)])
-    offsets = np.sqrt((amp.offset * extra) ** 2 @ rates**2)
-    gain = np.abs((extra / amp.gain) @ leaks)
+    rates, leaks = _responses(on)
+    offsets, gain = _network_costs(on, extra)
     rows: list[tuple[Array, Callable[[int], Array], str, float, str, str]] = [
         (offsets, lambda k: extra[k] * np.abs(rates).max(axis=1), "offset", amp.offset, "V", "offsets"),
         (gain, lambda k: extra[k] * np.abs(leaks).max(axis=1), "open-loop gain", amp.gain, "V/V", "finite gain"),
@@ -172,6 +193,19 @@ def _networks(on: Ground) -> Iterator[SpeedLimit]:
         stage = _integrators(on)[int(np.argmax(shares(at)))][0]
         text = f"{word} of {amp.name} through networks of three resistors, at {100 * END_ERROR:g} % of peak"
         yield SpeedLimit("slow", stage, amp.name, figure, value, unit, float(end), text)
+
+
+def _responses(on: Ground) -> tuple[Array, Array]:
+    """What a volt per second and a leak at each integrator make of the watched signals: shapes ``(n, n_points)``."""
+    rates = np.array([_of(on.sensitivity.rate, on, name) / on.scales[node] for name, node in _integrators(on)])
+    return rates, np.array([on.sensitivity.leak[name].ravel() for name, _ in _integrators(on)])
+
+
+def _network_costs(on: Ground, extra: Array) -> tuple[Array, Array]:
+    """Error by offsets and by finite gain for each row of :func:`network_conductance` [fraction of peak]."""
+    amp = on.target.op_amp
+    rates, leaks = _responses(on)
+    return np.sqrt((amp.offset * extra) ** 2 @ rates**2), np.abs((extra / amp.gain) @ leaks)
 
 
 def network_leak(on: Ground, time_scale: float) -> Array:

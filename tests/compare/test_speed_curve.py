@@ -113,6 +113,16 @@ def test_a_slower_plant_is_possible_with_another_op_amp(target: Target) -> None:
     assert judgement(Fraction(1, 5000), replace(large, op_amp=other))[0] == "possible"
 
 
+def test_beyond_a_soft_end_real_time_is_outside_and_not_impossible(target: Target) -> None:
+    large = replace(target, capacitors=(*target.capacitors, 1e-5), resistors=(*target.resistors, 1e7), other_op_amps=())
+    word, sentence = judgement(Fraction(1, 5000), large)
+    assert word == "outside"
+    assert sentence.startswith(
+        "Real time is outside the window, where errors are larger: a unit of time would take 1 s"
+    )
+    assert "offsets of TL07x through networks of three resistors" in sentence
+
+
 @pytest.mark.parametrize(("rate", "least"), [(Fraction(1, 10**8), "no more"), (Fraction(10**9), "no less")])
 def test_impossible_names_what_is_in_the_way(target: Target, rate: Fraction, least: str) -> None:
     word, sentence = judgement(rate, target)

@@ -115,9 +115,10 @@ def test_out_of_reach_is_a_sentence():
     made = system({"x": 1}, {"x": [term("-1/1000000", "x")]}, duration=2_000_000)
     _, _, sizing = sized(made, speed="real time")
     assert sizing.faults == (
-        "The speed asked for is too slow: one unit of time would take 1 s on the board, and no more than 33.5 µs will "
-        "do (offsets of TL07x through networks of three resistors, at 1 % of peak). The nearest inside the window is "
-        "speed = 29900 under [build]; wider value limits may mend it, too.",
+        "The speed asked for is too slow: one unit of time would take 1 s on the board, and no more than 502 µs can "
+        "be built (largest network of three resistors times largest capacitor, 502 s, at I1). The window ends at 33.5 "
+        "µs already (offsets of TL07x through networks of three resistors, at 1 % of peak), where errors begin to "
+        "grow. The nearest inside the window is speed = 29900 under [build]; wider value limits may mend it, too.",
     )
 
 
@@ -125,8 +126,10 @@ def test_an_op_amp_too_slow_is_not_mended_by_values():
     made = system({"x": 1, "v": 1}, {"x": [term(1, "v")], "v": [term(-1, "x")]}, duration=60)
     _, _, sizing = sized(made, speed=10.0**9)
     (fault,) = sizing.faults
+    assert "can be built (smallest resistor times smallest capacitor" in fault
+    assert "The window ends at" in fault
     assert "(bandwidth of TL07x" in fault
-    assert fault.endswith("under [build]; faster op amps or multipliers may mend it, too.")
+    assert fault.endswith("under [build]; wider value limits and faster op amps or multipliers may mend it, too.")
 
 
 def test_gains_too_far_apart_name_the_input():
@@ -217,10 +220,29 @@ def test_content_below_the_dc_limit_decade_is_told():
 def test_a_speed_outside_the_window_is_told():
     _, _, sizing = sized(van_der_pol(), speed=1e5)
     (note,) = [n for n in sizing.notes if "outside the window" in n]
-    assert note.startswith("The speed asked for, 10 µs per unit of time, lies outside the window. The fast end is ")
-    assert ", set by bandwidth of AD633, which costs 1 % of peak; speed = " in note
+    assert note == sizing.outside
+    assert note.startswith("Runs outside the window: a unit of time takes 10 µs on the board, less than its fast end ")
+    assert "(bandwidth of AD633, which costs 1 % of peak); this alone costs about " in note
+    # Lag is proportional to speed, so that 1 % at the end of the window scales with the distance from it.
+    cost = float(note.partition("costs about ")[2].split()[0])
+    assert cost == pytest.approx(1e5 * sizing.window[0], rel=0.05)
     # The speed that the sentence names is inside, and no note is left.
     nearest = float(note.rpartition("speed = ")[2].split()[0])
     assert sizing.window[0] <= 1 / nearest <= 1.01 * sizing.window[0]
     assert not any("outside the window" in n for n in sized(van_der_pol(), speed=nearest)[2].notes)
     assert not any("outside the window" in n for n in sized(van_der_pol(), speed=100.0)[2].notes)
+
+
+def test_ends_of_the_window_are_hard_or_soft():
+    """Beyond a soft end a board can be built and tells so; beyond a hard one it cannot."""
+    made = system({"x": 1}, {"x": [term("-1/300", "x")]}, duration=1200)
+    soft = sized(made, speed="real time")[2]
+    assert not soft.faults
+    assert soft.outside.startswith("Runs outside the window: ")
+    assert next(x for x in soft.speed_limits if x.end == "slow").hard is False
+    assert [x.figure for x in soft.speed_limits if x.hard] == ["R × C", "R × C"]
+    least = next(x.time_scale for x in soft.speed_limits if x.hard and x.end == "fast")
+    most = next(x.time_scale for x in soft.speed_limits if x.hard and x.end == "slow")
+    for speed in (0.5 / most, 2.0 / least):
+        (fault,) = sized(made, speed=speed)[2].faults
+        assert "can be built (" in fault
