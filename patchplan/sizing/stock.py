@@ -1,4 +1,4 @@
-"""Parts on hand: what a sizing takes of them, what is left, and what is missing."""
+"""Parts on hand: what a sizing takes of them and what is left."""
 
 from __future__ import annotations
 
@@ -7,7 +7,6 @@ from collections.abc import Iterable, Mapping
 from dataclasses import replace
 
 from patchplan.patch.records import Patch
-from patchplan.quantity import engineering
 from patchplan.sizing.records import Pile, Sizing, StageSizing, Target
 
 #: Pieces counted where any number can be had.
@@ -82,30 +81,3 @@ def matched_pair(target: Target, wanted: float) -> tuple[float, float] | None:
 def tolerance_of(value: float, piles: tuple[Pile, ...] | None, usual: float) -> float:
     """Tolerance of a part of this value: that of the worst pile, where parts are counted."""
     return max((p.tolerance for p in piles or () if p.value == value), default=usual)
-
-
-def missing_sentence(kind: str, unit: str, needed: Counter[float], piles: tuple[Pile, ...] | None) -> str | None:
-    """What of one kind has to be added to the stock, None where nothing has.
-
-    Parameters
-    ----------
-    kind
-        "resistor" or "capacitor".
-    needed
-        What a board takes that does work.
-    """
-    if piles is None:
-        return None
-    have = counts(needed, piles)
-    short = [(value, number, have[value]) for value, number in sorted(needed.items()) if number > have[value]]
-    if not short:
-        return None
-    rows = [
-        f"{number} of {engineering(value, unit, 4)} {'are' if number > 1 else 'is'} needed, {there or 'none'} on hand"
-        for value, number, there in short
-    ]
-    more = sum(number - there for _, number, there in short)
-    return (
-        f"The stock has too few {kind}s: {'; '.join(rows)}. With {more} more, of these values or of others near them, "
-        "the board can be built."
-    )

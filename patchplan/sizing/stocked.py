@@ -7,7 +7,6 @@ single and paired moves, exchanges among them, none of which takes more of a val
 
 from __future__ import annotations
 
-from collections import Counter
 from collections.abc import Callable, Mapping
 from dataclasses import replace
 from math import log
@@ -22,9 +21,10 @@ from patchplan.sizing.model import Model
 from patchplan.sizing.pieces import Menu, State, assigned, descend_counted, menu_of, t_options
 from patchplan.sizing.records import Target
 from patchplan.sizing.search import Effect, merit, split_rest
+from patchplan.sizing.shortage import find_shortage, in_reach
 from patchplan.sizing.slots import EASY, Name, Slots, find_slots
 from patchplan.sizing.speed_errors import COMFORTABLE
-from patchplan.sizing.stock import PLENTY, missing_sentence
+from patchplan.sizing.stock import PLENTY
 from patchplan.sizing.values import Values, capacitor_merit, pick_feedback, wanted_products
 
 Array = NDArray[np.float64]
@@ -32,8 +32,6 @@ Array = NDArray[np.float64]
 ATTEMPTS = {"low": (20, 2e-3), "normal": (250, 5e-4), "high": (2000, 5e-5)}
 #: Boards with more slots than this take fewer attempts, down to one.
 MANY_SLOTS = 25
-#: A row further off than this was not in reach of the stock, see :data:`patchplan.sizing.faults.OUT_OF_REACH`.
-FAR = 0.1
 
 
 def choose_stocked(
@@ -51,32 +49,25 @@ def choose_stocked(
     Parameters as for :func:`patchplan.sizing.trial.choose_values`. Measured parts are searched to the end, as their
     values leave no other error.
     """
-    board = find_slots(model, patch, target, effect, comfortable)
-    found = _searched(board, think, seed)
-    if found is not None and np.abs(found.errors).max(initial=0.0) <= FAR:
+    found = _searched(find_slots(model, patch, target, effect, comfortable), think, seed)
+    if found is not None and in_reach(found):
         return found
-    # What would do if any number of each value were on hand: what it takes beyond the stock is missing.
-    plenty = replace(board, shelf=replace(board.shelf, count=np.full_like(board.shelf.count, PLENTY)))
-    wished = _searched(plenty, think, seed)
-    assert wished is not None
-    missing = _missing(wished, board)
-    if missing and np.abs(wished.errors).max(initial=0.0) <= FAR:
+    missing, wished = find_shortage(
+        lambda other: _searched(find_slots(model, patch, other, effect, comfortable), "low", seed), target
+    )
+    if wished is not None:
         return replace(wished, missing=missing)
-    return found or replace(wished, missing=missing)
+    return found or _any_number(find_slots(model, patch, target, effect, comfortable), seed)
 
 
-def _missing(wished: Values, board: Slots) -> tuple[str, ...]:
-    sentences = []
-    for kind, unit, piles in (
-        ("resistor", "Ω", board.target.resistor_piles),
-        ("capacitor", "F", board.target.capacitor_piles),
-    ):
-        needed: Counter[float] = Counter()
-        for (_, what), parts in wished.parts.items():
-            if (what == "C") == (kind == "capacitor"):
-                needed.update(parts)
-        sentences.append(missing_sentence(kind, unit, needed, piles))
-    return tuple(s for s in sentences if s)
+def _any_number(board: Slots, seed: int) -> Values:
+    """Values with any number of every piece on hand, where there are fewer pieces than slots."""
+    plenty = replace(board, shelf=replace(board.shelf, count=np.full_like(board.shelf.count, PLENTY)))
+    found = _searched(plenty, "low", seed)
+    assert found is not None
+    capacitors = int(board.capacitive.sum())
+    text = f"The stock has too few parts: {len(board.names) - capacitors} resistors or more and {capacitors} capacitors"
+    return replace(found, missing=(f"{text} are needed, and more of those on hand alone would not do.",))
 
 
 def _searched(board: Slots, think: str, seed: int) -> Values | None:

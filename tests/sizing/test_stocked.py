@@ -144,6 +144,34 @@ def test_what_is_missing_is_told(tmp_path):
     check_counts(enough)
 
 
+def test_only_what_lacks_is_told(tmp_path):
+    """One measured capacitor for two integrators; a measured resistor lies beside a pile of its marked value."""
+    stock = "value,count,serial,measured\n"
+    ohms = "10k,30,,\n22k,12,,\n47k,10,,\n100k,25,,\n1M,6,,\n10k,1,R1,9.9873k\n10k,1,R2,10.0312k\n"
+    made = planned(tmp_path, OSCILLATOR, resistors=stock + ohms, capacitors=f"{stock}100n,1,C1,101.3n\n")
+    assert made.sizing.faults == (
+        "The stock has too few capacitors: 2 of 100 nF are needed, 1 on hand. With 1 more, of these values or of "
+        "others near them, the board can be built.",
+    )
+    both = "100n,1,C1,101.3n\n100n,1,,\n"
+    assert planned(tmp_path, OSCILLATOR, resistors=stock + ohms, capacitors=stock + both).verdict.verdict == "follows"
+
+
+def test_the_larger_lack_comes_first(tmp_path):
+    """Nothing of both kinds; a measured part is not asked for twice."""
+    stock = "value,count,serial,measured\n"
+    made = planned(
+        tmp_path, OSCILLATOR, resistors=f"{stock}10k,1,R1,9.9873k\n", capacitors=f"{stock}100n,1,C1,101.3n\n"
+    )
+    first, second = made.sizing.faults
+    more = int(first.partition("With ")[2].partition(" more")[0])
+    assert first.startswith(f"The stock has too few resistors: {more + 1} of 10 kΩ are needed, 1 on hand.")
+    assert second.startswith("The stock has too few capacitors: 2 of 100 nF are needed, 1 on hand. With 1 more")
+    capacitors = f"{stock}100n,1,C1,101.3n\n100n,1,,\n"
+    resistors = f"{stock}10k,1,R1,9.9873k\n10k,{more},,\n"
+    assert planned(tmp_path, OSCILLATOR, resistors=resistors, capacitors=capacitors).verdict.verdict == "follows"
+
+
 def test_a_stock_outside_the_limits_is_refused(tmp_path):
     from patchplan.errors import CannotBuild
 
