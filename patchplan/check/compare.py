@@ -30,6 +30,8 @@ _SLEW_SHARE = 0.01
 _MANY_PARTS = 450
 #: How far off a switch's resistance is in the budget (common practice, no source); its nominal value is counted in R.
 _SWITCH_OFF = 1.1
+#: Outputs that never clip reach this many times as far.
+_ROOM = 1e3
 #: Time constants of an op amp, 1/w_t each, that an output is given to follow a jump.
 _SETTLING = 100.0
 #: Spread above which a linear estimate says little but that boards differ [%] (compared with boards drawn at random).
@@ -91,7 +93,8 @@ def check_circuit(
     nodes = peaks_over(circuit, node_peaks(circuit, traces), more)
     failed = next((t.failure for t in (traces, *(t for _, t in more)) if t.failure), "")
     largest = max((s.max_error_percent for s in signals), default=0.0)
-    causes = _budget(circuit, reference, traces, rows) if budget and not traces.failure else ()
+    over = tuple(n.node for n in node_peaks(circuit, traces) if not n.ok)
+    causes = _budget(circuit, reference, traces, rows, over) if budget and not traces.failure else ()
     return Verdict(
         verdict=_word(nodes, failed, largest, accept),
         max_error_percent=largest,
@@ -168,7 +171,29 @@ def _curves(circuit: Circuit, reference: Reference, traces: Traces) -> tuple[Cur
     )
 
 
-def _budget(circuit: Circuit, reference: Reference, nominal: Traces, rows: int) -> tuple[Cause, ...]:
+def _budget(
+    circuit: Circuit, reference: Reference, nominal: Traces, rows: int, over: tuple[str, ...]
+) -> tuple[Cause, ...]:
+    """The budget; where nodes are over their limit, what clipping does comes off first, and the rest is of a board
+    whose outputs reach as far as asked. Without a run of that board nothing can be told apart, and there is none.
+    """
+    if not over:
+        return _causes(circuit, reference, nominal, rows)
+    amp, times = circuit.op_amp, circuit.multiplier
+    roomy = replace(
+        circuit,
+        op_amp=replace(amp, low=_ROOM * amp.low, high=_ROOM * amp.high),
+        multiplier=replace(times, limit=_ROOM * times.limit),
+    )
+    free = simulate(roomy, times=nominal.times[:rows], waveforms=reference.waveforms)
+    if free.failure:
+        return ()
+    where = over[0] if len(over) == 1 else f"{over[0]} and {len(over) - 1} more"
+    clipping = Cause(f"clipping (overload of {where})", _apart(circuit, reference, nominal, free))
+    return tuple(sorted((clipping, *_causes(roomy, reference, free, rows)), key=_by_size))
+
+
+def _causes(circuit: Circuit, reference: Reference, nominal: Traces, rows: int) -> tuple[Cause, ...]:
     """Error of the board without any limit but its rounded values, and what each limit changes.
 
     The operate switches count in R, so that only what they may be off by can do harm: that row stands last.

@@ -32,7 +32,7 @@ class Part:
     Attributes
     ----------
     ref
-        Reference designator: R1, C1, U1A (section A of package U1), U2, S1 ...
+        Reference designator: R1, C1, U1A (section A of package U1), U2, SW1 ...
     value
         Ohm, farad, volts of a reference; volts per unit (signed) of a source; setting 0..1 of a potentiometer
         (resistance between end a and wiper over ``total``); on-resistance of a switch.

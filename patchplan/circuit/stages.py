@@ -21,7 +21,7 @@ DIELECTRIC = "C0G or film"
 #: What a voltage reference gives before it sags [A] (common practice, no source).
 REFERENCE_AMPERE = 10e-3
 _LETTERS = {
-    "resistor": "R", "potentiometer": "RV", "capacitor": "C", "decoupling": "C", "switch": "S",
+    "resistor": "R", "potentiometer": "RV", "capacitor": "C", "decoupling": "C", "switch": "SW",
     "reference": "REF", "source": "SRC",
 }  # fmt: skip
 

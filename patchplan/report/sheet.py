@@ -40,7 +40,8 @@ def steps(plan: Plan) -> tuple[str, ...]:
     low, high = circuit.supply
     references = [p.ref for p in circuit.parts if p.kind == "reference"]
     logic = any(pin.net == LOGIC for pin in circuit.wiring)
-    told = [words.BARE, words.RAILS.format(low=low, high=high, logic=words.LOGIC if logic else ""), words.FIT]
+    told = [words.BARE, *_dials(circuit)]
+    told += [words.RAILS.format(low=low, high=high, logic=words.LOGIC if logic else ""), words.FIT]
     if references:
         tolerance = words.percent(100 * plan.target.reference_tolerance)
         told.append(words.REFERENCE.format(ref=references[0], volts=plan.target.reference, tolerance=tolerance))
@@ -52,6 +53,19 @@ def steps(plan: Plan) -> tuple[str, ...]:
     if trimming and trimming.fitted and trimming.trimmers:
         told.append(words.SET_TRIMMERS)
     return tuple(told)
+
+
+def _dials(circuit: Circuit) -> list[str]:
+    """That the dials are set first, and how that is measured; nothing without dials."""
+    laws = {law.ref: law for law in circuit.knobs}
+    dials = [
+        words.DIAL.format(
+            ref=part.ref, at=f"{100 * laws[part.ref].setting:.1f}", net=part.nets[0],
+            ohm=engineering(laws[part.ref].setting * part.total, "Ω"),
+        )
+        for part in circuit.parts if part.ref in laws
+    ]  # fmt: skip
+    return [words.SET_DIALS.format(dials="; ".join(dials))] if dials else []
 
 
 def control_table(plan: Plan) -> Table:

@@ -45,7 +45,22 @@ def node_table(plan: Plan) -> Table:
     rows = [_node_row(plan, meaning) for meaning in swinging(plan)]
     headers = ("node", "signal", "one unit is", "swings", "of limit")
     several = any(peak.during for peak in plan.verdict.nodes)
-    return Table("Nodes", headers, tuple(rows), frozenset({2, 3, 4}), OTHER_RUNS if several else "")
+    note = " ".join(filter(None, (OTHER_RUNS if several else "", *clipped(plan))))
+    return Table("Nodes", headers, tuple(rows), frozenset({2, 3, 4}), note)
+
+
+def clipped(plan: Plan) -> list[str]:
+    """A sentence on each node that is over its limit and would go further: what the equation asks of it."""
+    told = []
+    meanings = plan.circuit.nodes if plan.circuit else {}
+    for peak in (n for n in plan.verdict.nodes if not n.ok and n.node in meanings and n.node in plan.ranges.values):
+        meaning = meanings[peak.node]
+        values = meaning.sign * meaning.volts_per_unit * plan.ranges.values[peak.node] + meaning.offset_volts
+        needed = float(np.max(np.abs(values), initial=0.0))
+        if needed > 1.001 * peak.peak_volts and not peak.during:
+            share = f"{100 * needed / peak.limit_volts:.0f} % of its limit"
+            told.append(f"{peak.node} is clipped: the equation asks for {plain(needed)} V there, {share}.")
+    return told
 
 
 def swinging(plan: Plan) -> list[NodeMap]:

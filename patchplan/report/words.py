@@ -234,6 +234,11 @@ HOLD = (
     "Keep OPERATE low: the board is in hold. Set sources and other control lines to what they are at time 0, wait "
     "{wait} (ten time constants of the slowest start network), and check the volts below, node by node."
 )
+SET_DIALS = (
+    "With the power off, turn each dial to its planned value before anything is measured or trimmed: {dials}. An "
+    "ohmmeter shows it while the wiper is not connected; later the mark of the dial does."
+)
+DIAL = "{ref} to {at} % of its travel, {ohm} from end a ({net}) to the wiper"
 SET_TRIMMERS = "Set the trimmers in the order of the table of trimming, by runs from the start values."
 NO_HOLD = "This board has no hold: it runs from power-up. Check each node against the limits of its swing."
 OPERATE = (

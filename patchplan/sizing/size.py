@@ -287,7 +287,8 @@ def _use_notes(form: Form, patch: Patch, scales: Mapping[str, NodeScale]) -> lis
         else:
             cause = "switched from the reference" if stage.kind == "source" else "the values leave no better"
         why.setdefault(cause, []).append(f"{stage.node} {100 * use:.0f} %")
-    return [f"Outside 50 to 95 % of the limit, {cause}: {', '.join(nodes)}." for cause, nodes in why.items()]
+    start = "Over all that the ranges cover, tolerances and knobs too, outside 50 to 95 % of the limit"
+    return [f"{start}, {cause}: {', '.join(nodes)}." for cause, nodes in why.items()]
 
 
 def _content_notes(sizing: Sizing, patch: Patch, ranges: Ranges) -> list[str]:

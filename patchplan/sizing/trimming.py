@@ -34,6 +34,8 @@ WORTH_ONE_MORE = 0.8
 MOST_WIRES, MOST_POINTS = 150, 300
 #: What a trimmer's reach exceeds worst-case tolerances by.
 MARGIN = 1.1
+#: A signal that stands below this share of its peak crosses zero there.
+_ZERO = 0.01
 #: Singular values below this share of the largest are none.
 RANK = 1e-6
 
@@ -233,6 +235,6 @@ def _figure(values: Array, index: int) -> str:
         return "start value"
     if index >= len(values) - 2:
         return "final value"
-    if abs(values[index]) < 0.1 * np.abs(values).max(initial=0.0):
+    if abs(values[index]) < _ZERO * np.abs(values).max(initial=0.0):
         return "zero crossing"
     return "peak" if np.abs(values[index]) >= near.max() else "value"

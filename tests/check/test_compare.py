@@ -128,3 +128,19 @@ def test_a_run_that_is_given_up_is_a_result_with_a_sentence(monkeypatch: pytest.
     assert any("given up at" in w for w in found.warnings)
     assert math.isfinite(found.max_error_percent)
     assert found.budget == ()
+
+
+def test_clipping_is_the_cause_where_a_node_clips() -> None:
+    """The values are exact, so that none of the error is rounding, however much the outputs clip."""
+    board = oscillator(cycles=2.0)
+    top = max(abs(n.peak_volts) for n in verdict_on(board, cosine(2.0)).nodes)
+    low = replace(board, op_amp=replace(board.op_amp, low=-0.6 * top, high=0.6 * top),
+                  nodes={k: replace(n, limit_volts=0.6 * top) for k, n in board.nodes.items()})  # fmt: skip
+    found = verdict_on(low, cosine(2.0), budget=True)
+    assert found.verdict == "overload"
+    first = found.budget[0]
+    assert first.cause.startswith("clipping (overload of ")
+    assert first.error_percent == pytest.approx(found.max_error_percent, rel=0.1)
+    sound = {c.cause: c.error_percent for c in verdict_on(board, cosine(2.0), budget=True).budget}
+    for cause in found.budget[1:]:
+        assert cause.error_percent == pytest.approx(sound[cause.cause], abs=0.01)

@@ -33,17 +33,17 @@ R1 resistor v_ref v_ref_n_inv 10000
 U1A op amp 0 v_ref_n_inv v_ref_n 0 TL07x
 R2 resistor v_ref_n_inv v_ref_n 10000
 R3 resistor x_d_n x_bus 99980
-S1 switch x_bus x_inv 20 DG413 operate
+SW1 switch x_bus x_inv 20 DG413 operate
 U1B op amp 0 x_inv x 0 TL07x
 C1 capacitor x_inv x 1e-08 C0G or film
-S2 switch x_inv x_ic 20 DG413 hold
+SW2 switch x_inv x_ic 20 DG413 hold
 R4 resistor v_ref_n x_ic 12500
 R5 resistor x x_ic 10000
 R6 resistor x x_d_bus 99980
-S3 switch x_d_bus x_d_inv 20 DG413 operate
+SW3 switch x_d_bus x_d_inv 20 DG413 operate
 U1C op amp 0 x_d_inv x_d 0 TL07x
 C2 capacitor x_d_inv x_d 1e-08 C0G or film
-S4 switch x_d_inv x_d_ic 20 DG413 hold
+SW4 switch x_d_inv x_d_ic 20 DG413 hold
 R7 resistor x_d x_d_ic 10000
 R8 resistor x_d x_d_n_inv 10000
 U1D op amp 0 x_d_n_inv x_d_n 0 TL07x

@@ -89,3 +89,21 @@ def test_boards_of_other_resistors_stay_inside_the_allowance(plans, name):
         volts = hold_state(replace(plan.circuit, parts=parts), waveforms)
         for node in plan.circuit.nodes:
             assert abs(volts[node] - start[node]) <= allowed[node], node
+
+
+@pytest.mark.parametrize("name", ["seat_suspension", "lorenz"])
+def test_no_stage_is_called_like_a_part(plans, name):
+    plan = plans.of(name)
+    assert not {s.name for s in plan.patch.stages} & {p.ref for p in plan.circuit.parts}
+    assert [p.ref for p in plan.circuit.parts if p.kind == "switch"][:2] == ["SW1", "SW2"]
+
+
+def test_dials_are_set_first_and_measured_by_an_ohmmeter(plans):
+    plan = plans.of("seat_suspension")
+    (law,) = plan.circuit.knobs
+    told = steps(plan)
+    at = next(i for i, step in enumerate(told) if "turn each dial to its planned value" in step)
+    assert at < next(i for i, step in enumerate(told) if step.startswith("Switch on"))
+    track = next(p for p in plan.circuit.parts if p.ref == law.ref)
+    ohm = float(told[at].partition("its travel, ")[2].split()[0]) * 1e3
+    assert ohm == pytest.approx(law.setting * track.total, rel=0.01)

@@ -19,6 +19,7 @@ from patchplan.report.records import Plan
 from patchplan.report.trimming import trimmer_ref, trimming_data
 from patchplan.sizing.readings import moves_for, smallest_set, spread_at
 from patchplan.sizing.trim_records import Trimmer
+from patchplan.sizing.trimming import _figure
 
 OSCILLATOR = """equations = ["x'' = -x"]
 duration = 25.2
@@ -197,3 +198,9 @@ def test_a_moment_at_which_nothing_shows_serves_no_setting():
 
     assert _radius(np.zeros((2, 2))) == np.inf
     assert _radius(np.array([[1.0, 0.5], [0.0, 1.0]])) == 0.0
+
+
+def test_only_a_signal_near_zero_crosses_it():
+    wave = np.cos(np.linspace(0.0, 10.0, 1001))
+    assert _figure(wave, int(np.argmin(np.abs(wave[:300])))) == "zero crossing"
+    assert _figure(wave, int(np.argmin(np.abs(wave[:300] - 0.05)))) == "value"
