@@ -40,7 +40,7 @@ def test_table_files_and_rows_that_cannot_be_built(run):
     assert done.exit_code == 0, done.output
     lines = done.stdout.splitlines()
     assert max(map(len, lines)) <= 80
-    rows = [line for line in lines if re.match(r"  [* ] (TL07x|OPA4140) ", line)]
+    rows = [line for line in lines if re.match(r"  [* ][> ](TL07x|OPA4140) ", line)]
     assert len(rows) == 4
     assert "MCP6004 takes 1.8 V to 6 V" in " ".join(done.stdout.split())
     folder = Path("outputs/plain_options")

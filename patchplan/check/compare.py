@@ -93,8 +93,7 @@ def check_circuit(
     nodes = peaks_over(circuit, node_peaks(circuit, traces), more)
     failed = next((t.failure for t in (traces, *(t for _, t in more)) if t.failure), "")
     largest = max((s.max_error_percent for s in signals), default=0.0)
-    over = tuple(n.node for n in node_peaks(circuit, traces) if not n.ok)
-    causes = _budget(circuit, reference, traces, rows, over) if budget and not traces.failure else ()
+    causes = _budget(circuit, reference, traces, rows) if budget and not traces.failure else ()
     return Verdict(
         verdict=_word(nodes, failed, largest, accept),
         max_error_percent=largest,
@@ -171,12 +170,11 @@ def _curves(circuit: Circuit, reference: Reference, traces: Traces) -> tuple[Cur
     )
 
 
-def _budget(
-    circuit: Circuit, reference: Reference, nominal: Traces, rows: int, over: tuple[str, ...]
-) -> tuple[Cause, ...]:
+def _budget(circuit: Circuit, reference: Reference, nominal: Traces, rows: int) -> tuple[Cause, ...]:
     """The budget; where nodes are over their limit, what clipping does comes off first, and the rest is of a board
     whose outputs reach as far as asked. Without a run of that board nothing can be told apart, and there is none.
     """
+    over = [peak.node for peak in node_peaks(circuit, nominal) if not peak.ok]
     if not over:
         return _causes(circuit, reference, nominal, rows)
     amp, times = circuit.op_amp, circuit.multiplier

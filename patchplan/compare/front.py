@@ -9,6 +9,9 @@ import numpy as np
 
 from patchplan.compare.records import Option, Wish
 
+#: Supply currents this many times apart or less tie.
+EVEN = 1.1
+
 
 def marked(options: Sequence[Option]) -> tuple[Option, ...]:
     """The options with ``best`` set on those that can be built and that no other one dominates."""
@@ -23,14 +26,23 @@ def cheapest_first(options: Iterable[Option], wish: Wish) -> list[Option]:
     """Options that meet a wish, cheapest first.
 
     The catalogue has no prices: fewer packages are cheaper, then fewer parts, then a coarser tolerance of the
-    resistors, then of the capacitors, then less current, then a smaller error.
+    resistors, then of the capacitors, then less current. Currents are estimates: those within :data:`EVEN` of the least
+    of a group tie, and among them the smaller spread goes first, then the smaller error.
     """
-    return sorted((o for o in options if not o.fault and excess(o, wish) <= 1.0), key=_cost)
+    left = sorted((o for o in options if not o.fault and excess(o, wish) <= 1.0), key=_cost)
+    ranked: list[Option] = []
+    while left:
+        first = left[0]
+        tied = [o for o in left if _cost(o)[:-1] == _cost(first)[:-1]
+                and o.supply_current <= EVEN * first.supply_current]  # fmt: skip
+        ranked += sorted(tied, key=lambda o: (o.spread_percent, o.error_percent, o.supply_current))
+        left = left[len(tied) :]
+    return ranked
 
 
 def _cost(option: Option) -> tuple[float, ...]:
     coarse = option.build.resistor_tolerance, option.build.capacitor_tolerance
-    return option.packages, option.parts, -coarse[0], -coarse[1], option.supply_current, option.error_percent
+    return option.packages, option.parts, -coarse[0], -coarse[1], option.supply_current
 
 
 def excess(option: Option, wish: Wish) -> float:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from pathlib import Path
 
 from patchplan.check.compare import REMEDY
@@ -20,7 +21,12 @@ from patchplan.report.tables import Table
 MOST_ROWS = 40
 #: Combinations that cannot be built and are told of one by one.
 MOST_FAULTS = 5
-CHEAPEST = "fewest packages, then fewest parts, then the coarser resistors; the catalogue has no prices"
+CHEAPEST = (
+    "fewest packages, then fewest parts, then the coarser resistors, then less current, then the smaller spread and "
+    "error (currents within 10 % tie); the catalogue has no prices"
+)
+#: Figures in which faults of one kind differ.
+_NUMBER = re.compile(r"\d+(?:\.\d+)?(?: [num]?[sΩF]\b)?")
 
 
 def options_summary(
@@ -43,7 +49,7 @@ def options_summary(
         blocks += [painted(wrapped(said[0]), "good" if met else "bad", colour), *map(wrapped, said[1:])]
     blocks += [*map(wrapped, _told(comparison)), ""]
     built = [o for o in comparison.options if not o.fault]
-    blocks += [*table_lines(options_table(comparison)), ""] if built else []
+    blocks += [*table_lines(options_table(comparison, usual)), ""] if built else []
     blocks += _faults([o for o in comparison.options if o.fault])
     if picked is not None and picked.option is not None:
         lines = build_lines(usual, picked.option.build)
@@ -73,8 +79,16 @@ def _told(comparison: Comparison) -> list[str]:
 def _faults(options: list[Option]) -> list[str]:
     if not options:
         return []
-    lines = [wrapped(f"Cannot be built: {build_name(o.build)}. {o.fault}") for o in options[:MOST_FAULTS]]
-    left_out = len(options) - MOST_FAULTS
+    groups: dict[str, list[Option]] = {}
+    for option in options:
+        groups.setdefault(_NUMBER.sub("#", option.fault), []).append(option)
+    lines = []
+    for alike in list(groups.values())[:MOST_FAULTS]:
+        names = "; ".join(build_name(o.build) for o in alike[:MOST_FAULTS])
+        names += f" and {len(alike) - MOST_FAULTS} more" if len(alike) > MOST_FAULTS else ""
+        whose = " (Figures are those of the first.)" if len({o.fault for o in alike}) > 1 else ""
+        lines.append(wrapped(f"Cannot be built: {names}. {alike[0].fault}{whose}"))
+    left_out = sum(len(alike) for alike in list(groups.values())[MOST_FAULTS:])
     return lines + ([wrapped(f"And {left_out} more, see options.csv.")] if left_out > 0 else [])
 
 
@@ -148,23 +162,28 @@ def wish_name(wish: Wish) -> str:
     return f"an error of {wish.error_percent:g} %{spread}"
 
 
-def options_table(comparison: Comparison) -> Table:
-    """All builds, those that nothing beats first, each kind by rising error."""
+def options_table(comparison: Comparison, usual: Build | None = None) -> Table:
+    """All builds, those that nothing beats first, each kind by rising error; the file's own is marked."""
     built = sorted((o for o in comparison.options if not o.fault), key=lambda o: (not o.best, o.error_percent))
     headers = ("  op amp", "form", "R", "R/C %", "V", "times", "error", "spread", "parts", "pkgs", "mA")
-    rows = [_row(option) for option in built[:MOST_ROWS]]
-    left_out = len(built) - MOST_ROWS
-    note = f"and {left_out} more in options.csv" if left_out > 0 else ""
+    own = [o for o in built if usual is not None and not build_lines(usual, o.build)]
+    shown = built[:MOST_ROWS]
+    # The file's own build is worth a row wherever it ranks.
+    shown += [o for o in own if o not in shown]
+    rows = [_row(option, own=option in own) for option in shown]
+    left_out = len(built) - len(shown)
+    notes = [f"and {left_out} more in options.csv"] if left_out > 0 else []
+    note = "; ".join([*notes, *(["> is the file's own build"] if own else [])])
     if len({form_name(o.build) for o in built}) > 1:
         return Table("Builds", headers, tuple(rows), frozenset(range(3, 11)), note)
     bare = tuple((row[0], *row[2:]) for row in rows)
     return Table("Builds", (headers[0], *headers[2:]), bare, frozenset(range(2, 10)), note)
 
 
-def _row(option: Option) -> tuple[str, ...]:
+def _row(option: Option, *, own: bool) -> tuple[str, ...]:
     build = option.build
     return (
-        f"{'*' if option.best else ' '} {build.op_amp}",
+        f"{'*' if option.best else ' '}{'>' if own else ' '}{build.op_amp}",
         form_name(build).removeprefix("no offsets") or "plain",
         build.resistors,
         tolerance_name(build).removesuffix(" %"),

@@ -59,3 +59,11 @@ def test_the_nearest_misses_the_wish_by_least(options):
         return
     misses = [max(o.error_percent / 0.25, o.spread_percent / 0.75) for o in built]
     assert excess(found, wish) == min(misses)
+
+
+def test_currents_within_a_tenth_tie_and_the_smaller_spread_decides():
+    def option(current: float, spread: float, error: float = 0.5) -> Option:
+        return Option(Build(), error, spread, 10, 2, current)
+
+    worse, better, close, hungry = option(0.0100, 2.0), option(0.0105, 1.0), option(0.0105, 1.0, 0.4), option(0.02, 0.1)
+    assert cheapest_first([hungry, worse, better, close], Wish(1.0)) == [close, better, worse, hungry]
