@@ -5,19 +5,45 @@ from __future__ import annotations
 from collections.abc import Iterator
 from dataclasses import replace
 
+from patchplan.compare.predict import predicted_error, predicted_spread
 from patchplan.form.records import Form
 from patchplan.patch.records import Patch
 from patchplan.quantity import engineering
 from patchplan.ranges import Ranges
 from patchplan.sensitivity import Sensitivity
 from patchplan.sizing.records import Sizing, SpeedLimit, Target
+from patchplan.sizing.size import size
 from patchplan.sizing.speed_limits import find_limits, ground_of, hard_ends, window_of
 
 #: The largest film capacitor [F], the largest and smallest resistors [ohm] and the smallest capacitor [F] that are of
 #: use around an op amp (common practice, no source).
 FILM, LARGEST_OHM, SMALLEST_OHM, SMALLEST_FARAD = 10e-6, 10e6, 1e3, 100e-12
+#: Time scales that differ by less are the same.
+SAME = 1e-9
 
 Wish = tuple[str, Target]
+
+
+def on_hand(
+    form: Form, patch: Patch, ranges: Ranges, sensitivity: Sensitivity, target: Target, sizing: Sizing,
+    *, run: str = "once", accept: float = 5.0,
+) -> tuple[Sizing, tuple[float, float]] | None:  # fmt: skip
+    """The board in real time from parts that are counted, and its predicted error and spread [% of peak].
+
+    It is the plan where that runs in real time or cannot be built, else what a short search finds; it has faults where
+    that is nothing. None where parts are not counted, or real time lies outside the window. Parameters as for
+    :func:`patchplan.compare.speed_curve.speed_curve`.
+    """
+    unit = float(form.system.time_unit_seconds)
+    if not target.stocked or not sizing.window[0] <= unit <= sizing.window[1]:
+        return None
+    board = sizing
+    if abs(sizing.time_scale / unit - 1.0) > SAME and not sizing.faults:
+        parts = (form, patch, ranges, sensitivity, target)
+        board = size(*parts, speed="real time", run=run, think="low", accept=accept)
+        board = replace(board, trimming=sizing.trimming)
+    error, _ = predicted_error(form.system, patch, ranges, sensitivity, board, target)
+    return board, (error, predicted_spread(form.system, patch, sensitivity, board, target)[0])
 
 
 def judged(
@@ -28,6 +54,8 @@ def judged(
     target: Target,
     sizing: Sizing,
     figures: tuple[float, float],
+    *,
+    board: Sizing | None = None,
 ) -> tuple[str, str]:
     """Judgement on real time, as of :class:`SpeedCurve`, and a sentence.
 
@@ -35,10 +63,17 @@ def judged(
     ----------
     figures
         Predicted error and spread in real time [% of peak].
+    board
+        What :func:`on_hand` gives: parts that are counted may not do what the window allows.
     """
     unit = float(form.system.time_unit_seconds)
     low, high = sizing.window
     if low <= unit <= high:
+        if board is not None and board.faults:
+            return "with other parts", (
+                "Real time lies inside the window, but no values for it were found among the parts on hand: others "
+                "would be needed."
+            )
         error, spread = (f"{share:.2g} %" if share < 99.5 else f"{share:.0f} %" for share in figures)
         return "possible", f"Real time is possible, with an error of {error} and a spread of {spread} as predicted."
     slow = unit > high

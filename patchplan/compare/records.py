@@ -116,7 +116,7 @@ class SpeedCurve:
     parts, spreads
         The same by cause, each alone.
     chosen, real_time
-        (error, spread) at the plan's time scale, and in real time.
+        (error, spread) at the plan's time scale, and in real time (where parts are counted: from those).
     judgement
         Real time is ``possible``, ``with other parts``, ``outside`` the window at a larger error, or ``impossible``.
     reason

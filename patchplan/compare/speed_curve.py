@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from patchplan.compare.predict import predicted_error, predicted_spread
-from patchplan.compare.real_time import judged
+from patchplan.compare.real_time import judged, on_hand
 from patchplan.compare.records import SpeedCurve
 from patchplan.form.records import Form
 from patchplan.horizon import within_horizon
@@ -65,19 +65,22 @@ def speed_curve(
     spreads: dict[str, list[float]] = {}
     totals = []
     for time_scale in (*grid, unit):
-        board = exact_sizing(
+        exact = exact_sizing(
             patch, sizing.scales, target, time_scale, limited=limited, sensitivity=sensitivity, allowed=accept / 100.0
         )
-        error, parts = predicted_error(form.system, patch, ranges, sensitivity, board, target)
-        spread, ways = predicted_spread(form.system, patch, sensitivity, board, target, like=sizing)
-        more = loose_ends(patch, sensitivity, replace(board, trimming=sizing.trimming), target)
+        error, parts = predicted_error(form.system, patch, ranges, sensitivity, exact, target)
+        spread, ways = predicted_spread(form.system, patch, sensitivity, exact, target, like=sizing)
+        more = loose_ends(patch, sensitivity, replace(exact, trimming=sizing.trimming), target)
         totals.append((error, sqrt(spread**2 + sum(share**2 for share in more.values()))))
         for table, found in ((causes, {c.cause: c.error_percent for c in parts}),
                              (spreads, {c.cause: c.error_percent for c in ways} | more)):  # fmt: skip
             for cause, share in found.items():
                 table.setdefault(cause, [0.0] * (len(grid) + 1))[len(totals) - 1] = share
     chosen = totals[grid.index(sizing.time_scale)]
-    judgement, reason = judged(form, patch, ranges, sensitivity, target, sizing, totals[-1])
+    held = on_hand(form, patch, ranges, sensitivity, target, sizing, run=run, accept=accept)
+    board, real = held or (None, totals[-1])
+    real = totals[-1] if board is not None and board.faults else real
+    judgement, reason = judged(form, patch, ranges, sensitivity, target, sizing, real, board=board)
     return SpeedCurve(
         grid,
         tuple(error for error, _ in totals[:-1]),
@@ -85,7 +88,7 @@ def speed_curve(
         _without_last(causes),
         _without_last(spreads),
         chosen,
-        totals[-1],
+        real,
         judgement,
         reason,
     )

@@ -112,6 +112,20 @@ def t_options(shelf: Shelf, wanted: float) -> list[tuple[float, tuple[int, ...]]
     return sorted(near, key=lambda option: (abs(option[0] - wanted), option[1]))[:MOST_TS]
 
 
+def pair_options(shelf: Shelf, wanted: float) -> list[tuple[float, tuple[int, ...]]]:
+    """Single resistors and pairs in series or parallel near a wanted log, as log and positions of the values."""
+    places = np.flatnonzero(~shelf.capacitive & (shelf.count > 0))
+    first, second = (places[i] for i in np.triu_indices(len(places)))
+    kept = (first != second) | (shelf.count[first] > 1)
+    one, other = shelf.value[first[kept]], shelf.value[second[kept]]
+    both = list(zip(first[kept].tolist(), second[kept].tolist(), strict=True))
+    made: list[tuple[float, tuple[int, ...]]] = [(log(shelf.value[i]), (int(i),)) for i in places]
+    made += zip(np.log(one + other).tolist(), both, strict=True)
+    made += zip(np.log(one * other / (one + other)).tolist(), both, strict=True)
+    near = [option for option in made if abs(option[0] - wanted) < WIDTH]
+    return sorted(near, key=lambda option: (abs(option[0] - wanted), option[1]))[:MOST_TS]
+
+
 def menu_of(
     shelf: Shelf,
     slots: Sequence[int],

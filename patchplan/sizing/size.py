@@ -108,6 +108,7 @@ def size(
     )
     told = [sizing.outside] if sizing.outside else []
     notes = [*told, *_drift_notes(form, patch, ranges, sensitivity, target, sizing)]
+    notes += _pair_notes(target, stages)
     return replace(sizing, notes=(*notes, *_content_notes(sizing, patch, ranges), *_use_notes(form, patch, scales)))
 
 
@@ -289,6 +290,14 @@ def _use_notes(form: Form, patch: Patch, scales: Mapping[str, NodeScale]) -> lis
         why.setdefault(cause, []).append(f"{stage.node} {100 * use:.0f} %")
     start = "Over all that the ranges cover, tolerances and knobs too, outside 50 to 95 % of the limit"
     return [f"{start}, {cause}: {', '.join(nodes)}." for cause, nodes in why.items()]
+
+
+def _pair_notes(target: Target, stages: Mapping[str, StageSizing]) -> list[str]:
+    """That resistors are paired although nobody asked for it."""
+    number = sum(bool(leg.join) for stage in stages.values() for leg in stage.legs)
+    if target.pairs or not number:
+        return []
+    return [f"Pairs stand for {number} resistors, as single ones of the stock do not give the values."]
 
 
 def _content_notes(sizing: Sizing, patch: Patch, ranges: Ranges) -> list[str]:

@@ -38,6 +38,8 @@ class Slots:
         The values on hand and their counts, less the pairs.
     pairs
         Stage -> the resistors of an inverter on the reference; "" is one that a step may need yet.
+    paired
+        Whether two resistors may stand for one in a leg.
     """
 
     model: Model
@@ -52,6 +54,7 @@ class Slots:
     comfortable: Mapping[str, float]
     shelf: Shelf
     pairs: Mapping[str, tuple[float, float]]
+    paired: bool = False
 
 
 def find_slots(model: Model, patch: Patch, target: Target, effect: Effect, comfortable: Mapping[str, float]) -> Slots:

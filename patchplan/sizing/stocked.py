@@ -9,7 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Mapping
 from dataclasses import replace
-from math import log
+from math import exp, log
 
 import numpy as np
 from numpy.typing import NDArray
@@ -18,7 +18,7 @@ from patchplan.patch.records import Patch
 from patchplan.sizing.loops import find_circuits
 from patchplan.sizing.losses import added_logs
 from patchplan.sizing.model import Model
-from patchplan.sizing.pieces import Menu, State, assigned, descend_counted, menu_of, t_options
+from patchplan.sizing.pieces import Menu, State, assigned, descend_counted, menu_of, pair_options, t_options
 from patchplan.sizing.records import Target
 from patchplan.sizing.search import Effect, merit, split_rest
 from patchplan.sizing.shortage import find_shortage, in_reach
@@ -32,6 +32,11 @@ Array = NDArray[np.float64]
 ATTEMPTS = {"low": (20, 2e-3), "normal": (250, 5e-4), "high": (2000, 5e-5)}
 #: Boards with more slots than this take fewer attempts, down to one.
 MANY_SLOTS = 25
+#: Where single pieces leave a larger predicted error, as a fraction of peak, and pairs less than half of it, two stand
+#: for one.
+COARSE = 0.01
+#: Above the largest resistor by more than this, in logs, networks of three take the place of pairs.
+NEAR_PAIRS = 0.6
 
 
 def choose_stocked(
@@ -49,7 +54,12 @@ def choose_stocked(
     Parameters as for :func:`patchplan.sizing.trial.choose_values`. Measured parts are searched to the end, as their
     values leave no other error.
     """
-    found = _searched(find_slots(model, patch, target, effect, comfortable), think, seed)
+    board = find_slots(model, patch, target, effect, comfortable)
+    found = _searched(replace(board, paired=target.pairs), think, seed)
+    if found is not None and not target.pairs and (found.worst > COARSE or not in_reach(found)):
+        paired = _searched(replace(board, paired=True), think, seed)
+        better = paired is not None and (paired.worst < found.worst / 2 or not in_reach(found))
+        found = paired if better else found
     if found is not None and in_reach(found):
         return found
     missing, wished = find_shortage(
@@ -57,7 +67,7 @@ def choose_stocked(
     )
     if wished is not None:
         return replace(wished, missing=missing)
-    return found or _any_number(find_slots(model, patch, target, effect, comfortable), seed)
+    return found or _any_number(board, seed)
 
 
 def _any_number(board: Slots, seed: int) -> Values:
@@ -188,8 +198,10 @@ def _place_rest(board: Slots, state: State, wanted: Array) -> Menu | None:
             continue
         if (stage, what) in at or what == "S1":
             centre[i] = _wanted_log(board, state, stage, what, wanted, at, column)
-            if what != "S1" and centre[i] > values[-1] + 0.03:
+            if what != "S1" and centre[i] > values[-1] + (NEAR_PAIRS if board.paired else 0.03):
                 ts[i] = t_options(board.shelf, float(centre[i]))
+            elif what != "S1" and board.paired:
+                ts[i] = pair_options(board.shelf, float(centre[i]))
             costs.append(np.abs(values - centre[i]))
         else:
             centre[i] = log(EASY.get(str(what), 4e4))
@@ -241,9 +253,15 @@ def _finish(board: Slots, state: State) -> Values:
     theta, worst = split_rest(board.matrix, residual, board.effect, board.model.low, board.model.high)
     errors = np.expm1(-(residual - board.matrix @ theta))
     held = {name: tuple(float(board.shelf.value[v]) for v in state.parts[i]) for i, name in enumerate(board.names)}
+    # Two in series are more than either, two in parallel less.
+    joins = {
+        name: "series" if exp(state.y[i]) > max(held[name]) else "parallel"
+        for i, name in enumerate(board.names)
+        if len(state.parts[i]) == 2
+    }
     for stage, what in board.names:
         if what == "S1":
             held[stage, -1] = held.pop((stage, "S1")) + held.pop((stage, "S2"))
     for stage, (leg, feedback) in board.pairs.items():
         held |= {(stage, 0): (leg,), (stage, "Rf"): (feedback,)}
-    return Values(held, theta, worst, find_circuits(board.model).errors(residual), errors)
+    return Values(held, theta, worst, find_circuits(board.model).errors(residual), errors, joins=joins)

@@ -62,8 +62,7 @@ def stock_text(kind: str, seed: int, *, series: str, most: int, measured: bool =
     return "\n".join(rows) + "\n"
 
 
-def planned(folder: Path, problem: str, **stocks: str) -> Plan:
-    build = ""
+def planned(folder: Path, problem: str, build: str = "", **stocks: str) -> Plan:
     for kind, text in stocks.items():
         (folder / f"{kind}.csv").write_text(text, encoding="utf-8")
         build += f'{kind} = "{kind}.csv"\n'
@@ -177,6 +176,44 @@ def test_a_stock_outside_the_limits_is_refused(tmp_path):
 
     with pytest.raises(CannotBuild, match=r"resistors\.csv has no resistor between 2000 and 1e\+06"):
         planned(tmp_path, OSCILLATOR, resistors="value,count\n100,50\n")
+
+
+PENDULUM = """equations = ["x'' = -2500*x"]
+duration = 0.19
+[start]
+x = 1.0
+"x'" = 0.0
+"""
+
+
+@pytest.mark.parametrize(("pieces", "possible"), [(7, False), (30, True)])
+def test_what_is_said_of_real_time_is_what_the_stock_gives(tmp_path, pieces, possible):
+    """20 ms of R times C by 10 kohm at 1 uF: two in series, if there are pieces for them."""
+    stocks = {"resistors": f"value,count\n10k,{pieces}\n", "capacitors": "value,count\n1u,2\n"}
+    free = planned(tmp_path, PENDULUM, **stocks)
+    assert free.verdict.verdict == "follows"
+    assert free.speed_curve is not None
+    reason = free.speed_curve.reason
+    assert reason.startswith("Real time is possible" if possible else "Real time lies inside the window, but no values")
+    slow = planned(tmp_path, PENDULUM, 'speed = "real time"\n', **stocks)
+    assert (slow.verdict.verdict == "follows") is possible
+    assert slow.speed_curve is not None
+    assert (slow.speed_curve.judgement == "possible") is possible
+
+
+def test_pairs_give_what_single_pieces_do_not(tmp_path):
+    """11 ms of R times C in real time from 10 and 22 kohm at 1 uF; single pieces leave 21 % of the loop.
+
+    What is left here is the operate switches' share.
+    """
+    stocks = {"resistors": "value,count\n10k,20\n22k,20\n", "capacitors": "value,count\n1u,2\n"}
+    made = planned(tmp_path, PENDULUM.replace("2500", "8264"), 'speed = "real time"\n', **stocks)
+    check_counts(made)
+    assert made.verdict.verdict == "follows"
+    assert max(map(abs, made.sizing.loop_errors)) < 0.005
+    joins = {leg.join for sized in made.sizing.stages.values() for leg in sized.legs}
+    assert joins & {"series", "parallel"}
+    assert any("Pairs stand for" in note for note in made.sizing.notes)
 
 
 def test_few_different_values_where_the_stock_has_many(tmp_path, monkeypatch):
