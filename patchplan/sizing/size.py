@@ -107,8 +107,7 @@ def size(
         outside=outside_note(pace, given, unit),
     )
     told = [sizing.outside] if sizing.outside else []
-    notes = [*told, *_drift_notes(form, patch, ranges, sensitivity, target, sizing)]
-    notes += _pair_notes(target, stages)
+    notes = [*told, *_pair_notes(target, stages), *_drift_notes(form, patch, ranges, sensitivity, target, sizing)]
     return replace(sizing, notes=(*notes, *_content_notes(sizing, patch, ranges), *_use_notes(form, patch, scales)))
 
 
