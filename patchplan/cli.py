@@ -191,4 +191,9 @@ def _guarded(work: Callable[[], int]) -> int:
 
 
 def _complain(text: str) -> None:
+    """Say what is wrong; a sentence of its own in lines of a terminal, one with a place and a caret as it stands."""
+    if "\n" not in text:
+        from textwrap import fill
+
+        text = fill(text, 80, break_long_words=False, break_on_hyphens=False)
     typer.echo(text, err=True)

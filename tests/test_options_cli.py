@@ -123,7 +123,8 @@ def test_no_build_at_all_is_a_failure_with_its_sentences(run):
 def test_bad_input_is_refused_with_a_sentence_and_nothing_is_written(run, arguments, said):
     done = run(*arguments)
     assert done.exit_code == 2
-    assert said in done.stderr
+    assert said in " ".join(done.stderr.split())
+    assert max(map(len, done.stderr.splitlines())) <= 80
     assert listing(Path()) == ["plain.toml"]
 
 

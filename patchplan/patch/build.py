@@ -11,7 +11,7 @@ from patchplan.equation.system import Knob, Row, System, Term, level_of
 from patchplan.equation.tree import Origin
 from patchplan.form.records import Form
 from patchplan.patch.factors import factored
-from patchplan.patch.naming import REFERENCE, Names, key_of, sum_text
+from patchplan.patch.naming import REFERENCE, Names, key_of, shortened, sum_text
 from patchplan.patch.products import plan_products
 from patchplan.patch.records import Patch, Stage, Wire
 from patchplan.patch.signs import Link, Signs, choose_signs
@@ -301,11 +301,11 @@ def _reference_used(drafts: Mapping[str, _Draft], hold: bool, switched: Collecti
 
 def _node_wish(draft: _Draft) -> str:
     if draft.kind == "multiplier":
-        return "p_" + draft.key
+        return shortened("p_" + draft.key)
     if draft.kind == "summer" and draft.knob is not None:
         return f"k_{draft.knob.name}"
     if draft.key.startswith("("):
-        return f"s{draft.key}"
+        return shortened(f"s{draft.key}")
     return draft.key
 
 

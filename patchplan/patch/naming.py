@@ -32,6 +32,13 @@ def sum_text(terms: Iterable[Term]) -> str:
     return text
 
 
+def shortened(wish: str, most: int = 14) -> str:
+    """A wish for a name of a product or sum without its coefficients and cut to ``most``, where it is longer."""
+    if len(wish) <= most:
+        return wish
+    return "_".join(re.findall(r"[A-Za-z0-9]+", re.sub(r"\b\d+(/\d+)?\*", "", wish)))[:most].strip("_")
+
+
 class Names:
     """Hands out unused names; the same requests in the same order give the same names."""
 

@@ -7,7 +7,7 @@ from typing import Any
 from patchplan.reach.records import Box, WorstPoint
 from patchplan.report.codec import rounded
 from patchplan.report.records import Plan
-from patchplan.report.words import counted
+from patchplan.report.words import counted, plain
 
 
 def ranges_data(plan: Plan) -> dict[str, Any]:
@@ -50,8 +50,8 @@ def ranges_sentence(plan: Plan) -> str:
     sentence = f"Ranges hold over {', '.join(box.parameters)} by {counted(box.runs, 'run')}: {tried}."
     worst = _worst(plan, box)
     if worst is not None:
-        at = ", ".join(f"{name} = {value:.4g}" for name, value in worst.parameters.items())
-        sentence += f" The node of {worst.name} goes furthest of its limit, to {worst.value:.4g} at {at}."
+        at = ", ".join(f"{name} = {plain(value, 4)}" for name, value in worst.parameters.items())
+        sentence += f" The node of {worst.name} goes furthest of its limit, to {plain(worst.value, 4)} at {at}."
     return " ".join(filter(None, (free, sentence))) + _margin(plan)
 
 
@@ -63,7 +63,9 @@ def _free_inputs(plan: Plan) -> str:
     inputs = names[0] if len(names) == 1 else f"{', '.join(names[:-1])} and {names[-1]}"
     if not plan.system.is_linear:
         return f"The worst waveforms of {inputs} within bounds were searched; others may go further."
-    ends = "".join(f"; {case.signal} goes to {case.value:.4g} at t = {case.time:.4g}" for case in plan.reach.worst[:1])
+    ends = "".join(
+        f"; {case.signal} goes to {plain(case.value, 4)} at t = {case.time:.4g}" for case in plan.reach.worst[:1]
+    )
     held = "hold" if all(r.proved for case in plan.reach.bounded[:1] for r in case.responses) else "are estimated"
     return f"Ranges {held} for every waveform of {inputs} within bounds, by peak gains{ends}."
 

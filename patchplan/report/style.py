@@ -28,9 +28,15 @@ HORIZON_LINE: Mapping[str, Any] = {"color": LIGHT["over"], "linewidth": 0.9, "li
 TOTAL_LINE: Mapping[str, Any] = {"color": LIGHT["circuit"], "linewidth": 2.0, "linestyle": "-"}
 CHOSEN_POINT: Mapping[str, Any] = {"color": LIGHT["ink"], "marker": "o", "markersize": 5.0, "linestyle": ""}
 CAUSE_LINES: tuple[Mapping[str, Any], ...] = tuple(
-    {"color": LIGHT[hue], "linewidth": 1.0, "linestyle": dash}
-    for dash in ((0, (5, 2)), (0, (1, 1.5)))
-    for hue in ("solution", "inside", "over")
+    {"color": LIGHT[hue], "linewidth": 1.0, "linestyle": (0, dash)}
+    for hue, dash in (
+        ("solution", (5, 2)),
+        ("inside", (1, 1.5)),
+        ("over", (7, 2, 1, 2)),
+        ("solution", (2, 1)),
+        ("inside", (10, 3)),
+        ("over", (4, 1.5, 1, 1.5, 1, 1.5)),
+    )
 )
 #: Opacity of the sand band behind the curves.
 BAND_OPACITY = 0.35

@@ -99,7 +99,11 @@ def table_lines(table: Table) -> list[str]:
 
 
 def _cut(text: str, width: int) -> str:
-    return text if len(text) <= width else text[: width - 1] + "…"
+    """Text without its middle where it is too long: a product and its first factor differ at the end."""
+    if len(text) <= width:
+        return text
+    end = (width - 1) // 2
+    return text[: width - 1 - end] + "…" + text[len(text) - end :]
 
 
 def painted(text: str, role: str, colour: bool) -> str:
