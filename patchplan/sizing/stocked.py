@@ -35,6 +35,8 @@ MANY_SLOTS = 25
 #: Where single pieces leave a larger predicted error, as a fraction of peak, and pairs less than half of it, two stand
 #: for one.
 COARSE = 0.01
+#: Attempts with pairs, whose menus are some three times as long, over those without.
+FEWER_PAIRED = 0.25
 #: Above the largest resistor by more than this, in logs, networks of three take the place of pairs.
 NEAR_PAIRS = 0.6
 
@@ -87,7 +89,8 @@ def _searched(board: Slots, think: str, seed: int) -> Values | None:
     measured = any(p.serial for p in (*(board.target.resistor_piles or ()), *(board.target.capacitor_piles or ())))
     share = min(1.0, MANY_SLOTS / max(len(board.names), 1))
     attempts = []
-    for number in range(max(1, round(most * share**1.5))):
+    fewer = FEWER_PAIRED if board.paired else 1.0
+    for number in range(max(1, round(fewer * most * share**1.5))):
         found = _attempt(board, number, random)
         if found is None:
             break
