@@ -18,7 +18,9 @@ from patchplan.sizing.model import Ratio
 
 Array = NDArray[np.float64]
 #: Temperatures at the start and at the end, in e-folds of loop error; the last sweeps only go down.
-HOT, COLD, LAST = 0.3, 0.02, 2
+HOT, COLD, LAST = 0.3, 0.06, 2
+#: They fall with the number of errors beyond this, as one error then moves the norm of all less.
+FEW = 14
 #: After so many sweeps this share of the candidates is replaced by copies of the best.
 RENEWED, SHARE = 4, 0.25
 #: Steps along its grid that a value may take in one move; on grids of a mean step below ``FINE`` also far ones.
@@ -90,7 +92,8 @@ def anneal(
     hot: float = HOT,
 ) -> None:
     """Move all candidates towards small loop errors, in place, until the best one's places are good enough."""
-    heat = [*np.geomspace(hot, COLD, max(sweeps - LAST, 1)).tolist(), *[0.0] * LAST]
+    scale = min(1.0, FEW / max(crowd.state.shape[1], 1)) ** 1.5
+    heat = [*(scale * np.geomspace(hot, COLD, max(sweeps - LAST, 1))).tolist(), *[0.0] * LAST]
     for number, warmth in enumerate(heat):
         if not moves.followers:
             return

@@ -24,8 +24,6 @@ Indices = NDArray[np.intp]
 POWER = 4
 #: Loop errors below this are as good as none.
 FLOOR = 3e-7
-#: What scale factors outside their bounds cost: e-folds of loop error per unit of their logs.
-OUTSIDE = 40.0
 _STATE = ("place", "y", "sums", "state")
 
 
@@ -86,13 +84,15 @@ class Field:
         return log(2 * FLOOR)
 
     def energy(self, state: Array) -> Array:
-        """Log of the weighted loop errors' norm, and what it costs to be out of bounds; the last axis goes."""
+        """Log of the norm of weighted loop errors and of what theta lies out of bounds; the last axis goes."""
+        count = len(self.weight)
+        off = np.empty(state.shape)
+        np.multiply(state[..., :count], self.weight, out=off[..., :count])
+        # A scale factor that has to stay inside leaves its rows off by as much as it would go beyond.
+        np.maximum(np.abs(state[..., count:] - self.middle) - self.reach, 0.0, out=off[..., count:])
         # Squared twice: a general power takes ten times as long.
-        squares = (self.weight * state[..., : len(self.weight)]) ** 2
-        size = np.einsum("...l,...l->...", squares, squares) + FLOOR**POWER
-        beyond = np.abs(state[..., len(self.weight) :] - self.middle) - self.reach
-        out = np.maximum(beyond, 0.0, out=beyond).sum(axis=-1)
-        return np.asarray(np.log(size) / POWER + OUTSIDE * out)
+        squares = np.square(off, out=off)
+        return np.asarray(np.log(np.einsum("...l,...l->...", squares, squares) + FLOOR**POWER) / POWER)
 
 
 @dataclass

@@ -101,7 +101,7 @@ def choose_values(
     rounds, share = ROUNDS[think]
     found: list[Values] = []
     places: list[Indices] = []
-    for number in range(max(1, round(rounds * min(1.0, 2 * ROOMY / max(len(model.ratios), 1))))):
+    for number in range(max(1, round(rounds * min(1.0, 3 * ROOMY / max(len(model.ratios), 1))))):
         crowd = Crowd.at(board.field, _starts(board, random, first=number == 0))
         anneal(crowd, board.moves, random, SWEEPS, lambda place: _hidden(board, _finish(board, place), share))
         order = np.argsort(crowd.energy(), kind="stable")

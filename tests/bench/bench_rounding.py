@@ -3,13 +3,19 @@
 The hand's way: every node scaled to 80 % of its limit, each integrator one capacitor that puts its resistors near the
 middle of their range, each resistor the nearest value, at the planner's speed. What is left after the
 best fit of all free scale factors and of the speed (minimax, in logs) is what no scaling can take away: the same
-measure as the plan's coefficient errors.
+measure as the plan's coefficient errors. The planner's values are those of ``--think high``: single E24 resistors, E6
+capacitors, the speed free.
+
+``--pairs`` lets two resistors stand for one value and takes given speeds instead: a tenth, half and nine tenths of the
+way through each window in logs, and real time where it lies inside.
 """
 
 from __future__ import annotations
 
 import sys
 import tempfile
+import time
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -17,6 +23,8 @@ from numpy.typing import NDArray
 from scipy.optimize import linprog
 
 from patchplan.report.records import Plan
+from patchplan.sizing.records import Sizing
+from patchplan.sizing.size import size
 from tests.cases.convert import FUNCTIONS_OF_STATES
 from tests.plans import CASES, Plans
 
@@ -109,20 +117,62 @@ def best_fit(plan: Plan, errors: Array, rows: Array) -> float:
     return float(found.fun)
 
 
-def main() -> None:
-    """Print one line a case and the medians."""
-    wanted = sys.argv[1:] or [name for name in CASES if name not in FUNCTIONS_OF_STATES]
-    print(f"{'worst coefficient error, percent':42}{'nearest':>9}{'after fit':>11}{'planned':>9}")
+def searched(plan: Plan, *, pairs: bool, speed: str | float) -> tuple[Sizing, float]:
+    """The plan's problem sized anew at ``--think high``, and the seconds it takes."""
+    target = replace(plan.target, pairs=pairs)
+    run, begin = plan.problem.build.run, time.process_time()
+    sized = size(plan.form, plan.patch, plan.ranges, plan.sensitivity, target, speed=speed, run=run, think="high")
+    return sized, time.process_time() - begin
+
+
+def worst_loop(sized: Sizing) -> float:
+    """Largest error of a loop [%]."""
+    return 100.0 * max(map(abs, sized.loop_errors), default=0.0)
+
+
+def compare_free(plans: Plans, names: list[str]) -> None:
+    """One line a case: nearest values, those after the best fit, the planner's; medians up to 12 wires at the end."""
+    heads = ("wires", "nearest", "after fit", "planned", "ratio", "loop", "seconds")
+    print(f"{'worst errors, percent':38}" + "".join(f"{h:>10}" for h in heads))
     table = []
+    for name in names:
+        plan = plans.of(name)
+        errors, rows = gains(plan)
+        sized, seconds = searched(plan, pairs=False, speed="free")
+        ours = max((abs(c.error_percent) for c in sized.coefficients), default=0.0)
+        near = 100 * float(np.abs(errors).max())
+        row = (len(errors), near, 100 * best_fit(plan, errors, rows), ours, near / ours, worst_loop(sized), seconds)
+        table.append(row)
+        print(f"{name:38}{row[0]:10}" + "".join(f"{v:10.3f}" for v in row[1:]), flush=True)
+    small = np.array([row for row in table if row[0] <= 12])
+    for label, figures in (("median", np.median(small, axis=0)), ("largest", small.max(axis=0))):
+        print(f"{label + ' up to 12 wires':38}{figures[0]:10.0f}" + "".join(f"{v:10.3f}" for v in figures[1:]))
+
+
+def compare_pairs(plans: Plans, names: list[str]) -> None:
+    """One line a case and speed: pairs, legs, worst loop; the largest at the end."""
+    heads = ("speed", "pairs", "legs", "loop", "seconds")
+    print(f"{'worst loop error, percent':38}" + "".join(f"{h:>10}" for h in heads))
+    worst = 0.0
+    for name in names:
+        plan = plans.of(name)
+        (low, high), unit = plan.sizing.window, float(plan.system.time_unit_seconds)
+        speeds = [unit / (low * (high / low) ** share) for share in (0.1, 0.5, 0.9)]
+        for speed in [*speeds, 1.0][: 4 if low <= unit <= high else 3]:
+            sized, seconds = searched(plan, pairs=True, speed=speed)
+            legs = [leg for stage in sized.stages.values() for leg in stage.legs]
+            worst = max(worst, worst_loop(sized))
+            counted = f"{speed:10.4g}{sum(map(bool, (leg.join for leg in legs))):10}{len(legs):10}"
+            print(f"{name:38}{counted}{worst_loop(sized):10.3f}{seconds:10.3f}", flush=True)
+    print(f"{'largest':38}{worst:40.3f}")
+
+
+def main() -> None:
+    """Compare the cases named, or all."""
+    named = [name for name in sys.argv[1:] if name != "--pairs"]
+    names = named or [name for name in CASES if name not in FUNCTIONS_OF_STATES]
     with tempfile.TemporaryDirectory() as folder:
-        plans = Plans(Path(folder))
-        for name in wanted:
-            plan = plans.of(name)
-            errors, rows = gains(plan)
-            ours = max((abs(c.error_percent) for c in plan.sizing.coefficients), default=0.0)
-            table.append((100 * float(np.abs(errors).max()), 100 * best_fit(plan, errors, rows), ours))
-            print(f"{name:42}{table[-1][0]:9.3f}{table[-1][1]:11.3f}{table[-1][2]:9.3f}")
-    print(f"{'median':42}" + "".join(f"{v:{w}.3f}" for v, w in zip(np.median(table, axis=0), (9, 11, 9), strict=True)))
+        (compare_pairs if "--pairs" in sys.argv else compare_free)(Plans(Path(folder)), names)
 
 
 if __name__ == "__main__":
