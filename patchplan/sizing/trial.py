@@ -46,7 +46,10 @@ PAIR_WIDTH = 1.7
 #: Candidates without pairs that are tried, copies of each that settle, and their temperature at first.
 PAIRED, PAIR_CANDIDATES, PAIR_HOT = 6, 12, 0.3
 #: Candidates of each round that are finished and compared.
-FINISHED = 4
+FINISHED = 8
+#: What a different value more may cost in error: little where errors matter, much where tolerances hide them, which is
+#: where at least ``COARSE`` of the spread is good enough.
+PRICE, PRICE_HIDDEN, COARSE = 0.02, 0.3, 0.05
 #: Ways in which loop errors move the watched signals together: at most so many, each at least this share of the first;
 #: the first counts this much beside a loop.
 MOST_WAYS, LEAST_WAY, TOGETHER = 6, 0.1, 2.0
@@ -108,13 +111,15 @@ def choose_values(
         distinct = list({crowd.place[k].tobytes(): k for k in order[::-1]}.values())[::-1]
         places += [crowd.place[k] for k in distinct[:FINISHED]]
         found += [_finish(board, place) for place in places[len(found) :]]
-        if any(_hidden(board, values, share) for values in found):
+        # Without loops scale factors take up everything, in one round as well as in many.
+        if not circuits.rows or any(_hidden(board, values, share) for values in found):
             break
     if not target.pairs:
-        return min(found, key=lambda values: _cost(board, values))
+        good = [values for values in found if _hidden(board, values, share)] if share >= COARSE else []
+        return min(good or found, key=lambda values: _priced(board, values, PRICE_HIDDEN if good else PRICE))
     tried = sorted(range(len(found)), key=lambda k: float(np.abs(found[k].loop_errors).max(initial=0.0)))
     paired = [_paired(board, found[k], places[k], random) for k in tried[:PAIRED]]
-    return min(paired, key=lambda v: (_out_of_line(v) > PAIR_LIMIT, len(v.joins), _cost(board, v)))
+    return min(paired, key=lambda v: (_out_of_line(v) > PAIR_LIMIT, len(v.joins), _priced(board, v, PRICE)))
 
 
 def _out_of_line(values: Values) -> float:
@@ -264,6 +269,8 @@ def _hidden(board: _Board, values: Values, share: float) -> bool:
     )
 
 
-def _cost(board: _Board, values: Values) -> float:
-    """What the watched signals and the coefficients are off."""
-    return merit(board.effect, _logs(values))
+def _priced(board: _Board, values: Values, price: float) -> float:
+    """What the watched signals and the coefficients are off, with a price on every different value to be bought."""
+    resistors = {ohm for (_, what), parts in values.parts.items() if what != "C" for ohm in parts}
+    capacitors = {parts for (_, what), parts in values.parts.items() if what == "C"}
+    return merit(board.effect, _logs(values)) * (1.0 + price) ** (len(resistors) + len(capacitors))
