@@ -8,11 +8,10 @@ import numpy as np
 import pytest
 
 import patchplan
-from patchplan.check.figures import error_base, signal_of
+from patchplan.check.figures import signal_of
 from patchplan.check.simulate import simulate
-from patchplan.check.spread import spread_of
 from patchplan.report.records import Plan
-from tests.check.test_spread import drawn
+from tests.check.test_spread import assert_spread_is_that_of_drawn_boards
 
 #: Time constants of 40 and 60 s: 40 to 60 Mohm at the largest capacitor of 1 uF.
 PROBLEM = """
@@ -26,7 +25,6 @@ b = -5.0
 [build]
 speed = "real time"
 """
-BOARDS = 80
 
 
 @pytest.fixture(scope="module")
@@ -68,19 +66,4 @@ def test_start_values_stand_in_hold(plan: Plan) -> None:
 
 @pytest.mark.parametrize("offsets", [False, True], ids=["tolerances", "offsets"])
 def test_spread_counts_all_three_resistors_and_what_the_summing_node_sees(plan: Plan, *, offsets: bool) -> None:
-    circuit, reference = plan.circuit, plan.reach.reference
-    assert circuit is not None
-    times = np.linspace(0.0, circuit.duration, 61)
-    rng = np.random.default_rng(1)
-    runs = np.array([
-        [signal_of(circuit, run, net) for net in circuit.watched.values()]
-        for run in (simulate(drawn(circuit, rng, offsets=offsets), times=times, tolerance=1e-5) for _ in range(BOARDS))
-    ])  # fmt: skip
-    base = np.array([error_base(circuit, reference, name) for name in circuit.watched])
-    found = runs.std(axis=0) / base[:, None]
-    parts = spread_of(plan.sensitivity, plan.patch, plan.sizing, plan.target)
-    names = ("offsets",) if offsets else ("resistors", "capacitors", "reference")
-    predicted = np.sqrt(sum(parts[name] ** 2 for name in names))
-    rows = [plan.sensitivity.watched.index(name) for name in circuit.watched]
-    # A standard deviation of 80 boards is itself good to 1/sqrt(2*80), 8 %; three of those, and the second order.
-    assert predicted[rows].max(axis=1) == pytest.approx(found.max(axis=1), rel=0.27)
+    assert_spread_is_that_of_drawn_boards(plan, offsets=offsets)

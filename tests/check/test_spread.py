@@ -54,8 +54,8 @@ def drawn(circuit: Circuit, rng: np.random.Generator, *, offsets: bool) -> Circu
     return replace(circuit, parts=tuple(parts))
 
 
-@pytest.mark.parametrize("offsets", [False, True], ids=["tolerances", "offsets"])
-def test_spread_is_that_of_boards_drawn_at_random(plan: Plan, offsets: bool) -> None:
+def assert_spread_is_that_of_drawn_boards(plan: Plan, *, offsets: bool) -> None:
+    """The predicted spread of every watched signal is that of boards drawn at random, each simulated."""
     circuit, reference = plan.circuit, plan.reach.reference
     assert circuit is not None
     times = np.linspace(0.0, circuit.duration, 61)
@@ -72,6 +72,11 @@ def test_spread_is_that_of_boards_drawn_at_random(plan: Plan, offsets: bool) -> 
     rows = [plan.sensitivity.watched.index(name) for name in circuit.watched]
     # A standard deviation of 80 boards is itself good to 1/sqrt(2*80), 8 %; three of those, and the second order.
     assert predicted[rows].max(axis=1) == pytest.approx(found.max(axis=1), rel=0.27)
+
+
+@pytest.mark.parametrize("offsets", [False, True], ids=["tolerances", "offsets"])
+def test_spread_is_that_of_boards_drawn_at_random(plan: Plan, offsets: bool) -> None:
+    assert_spread_is_that_of_drawn_boards(plan, offsets=offsets)
 
 
 def test_a_spread_above_what_is_accepted_is_a_warning_with_its_remedy(plan: Plan) -> None:
